@@ -1,0 +1,1 @@
+"""Data that the library, the command line, the tests and the phantoms share; no code lives here."""

@@ -1,0 +1,1 @@
+"""Distortion densities, one file each."""

@@ -1,0 +1,40 @@
+"""Floor 1: the immutable nouns every stage speaks in.
+
+Coordinates are ``(n, 3) float64, mm, RAS+`` everywhere.  A noun checks cheap truths when it is made and
+repairs nothing silently; its arrays are owned copies and read-only.
+"""
+
+from volmap.types.certificate import Certificate, Gate, Verdict
+from volmap.types.findings import Finding, Level
+from volmap.types.grid import Grid
+from volmap.types.gridfield import GridField
+from volmap.types.landmarks import LandmarkPairs, Landmarks
+from volmap.types.outcome import IterationRecord, Outcome, Status
+from volmap.types.progress import Progress, silent
+from volmap.types.surface import Surface
+from volmap.types.tetmesh import TetMesh
+from volmap.types.volume_map import VolumeMap
+from volmap.types.volumes import ImageVolume, LabelVolume
+
+__all__ = [
+    "Certificate",
+    "Finding",
+    "Gate",
+    "Grid",
+    "GridField",
+    "ImageVolume",
+    "InputError",
+    "IterationRecord",
+    "LabelVolume",
+    "LandmarkPairs",
+    "Landmarks",
+    "Level",
+    "Outcome",
+    "Progress",
+    "Status",
+    "Surface",
+    "TetMesh",
+    "Verdict",
+    "VolumeMap",
+    "silent",
+]
