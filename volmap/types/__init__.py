@@ -5,6 +5,7 @@ repairs nothing silently; its arrays are owned copies and read-only.
 """
 
 from volmap.types.certificate import Certificate, Gate, Verdict
+from volmap.types.errors import InputError
 from volmap.types.findings import Finding, Level
 from volmap.types.grid import Grid
 from volmap.types.gridfield import GridField

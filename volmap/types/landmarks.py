@@ -25,6 +25,11 @@ def _check_roles(roles: tuple[str, ...], n: int) -> tuple[str, ...]:
     return roles
 
 
+def _check_sd(sd: NDArray[np.float64]) -> None:
+    if not (np.isfinite(sd).all() and (sd > 0).all()):
+        raise InputError("sd_mm of a landmark must be above 0", where="sd_mm")
+
+
 @dataclass(frozen=True, eq=False)
 class Landmarks(Frozen):
     """Named points of one scan.
@@ -35,11 +40,14 @@ class Landmarks(Frozen):
     points : (n, 3) float64, mm, RAS+
     roles : tuple of str
         'guide' steers the map, 'check' only measures it; empty means all 'check'.
+    sd_mm : (n,) float64 or None
+        Standard deviation of a point's placement, mm; None when it is not known.
     """
 
     names: tuple[str, ...]
     points: NDArray[np.float64]
     roles: tuple[str, ...] = ()
+    sd_mm: NDArray[np.float64] | None = None
 
     def __post_init__(self) -> None:
         points = self._own("points", np.float64, (None, 3))
@@ -48,6 +56,8 @@ class Landmarks(Frozen):
         if len(self.names) != len(points):
             raise InputError("one name a landmark", found=f"{len(self.names)} for {len(points)}")
         object.__setattr__(self, "roles", _check_roles(self.roles, len(points)))
+        if self.sd_mm is not None:
+            _check_sd(self._own("sd_mm", np.float64, (len(points),)))
 
 
 @dataclass(frozen=True, eq=False)
@@ -84,9 +94,7 @@ class LandmarkPairs(Frozen):
         object.__setattr__(self, "roles", _check_roles(self.roles, len(points)))
         if self.sd_mm is None:
             object.__setattr__(self, "sd_mm", np.ones(len(points)))
-        sd = self._own("sd_mm", np.float64, (len(points),))
-        if not (np.isfinite(sd).all() and (sd > 0).all()):
-            raise InputError("sd_mm of a landmark must be above 0", where="sd_mm")
+        _check_sd(self._own("sd_mm", np.float64, (len(points),)))
 
     def of_role(self, role: str) -> LandmarkPairs:
         """The pairs of one role."""

@@ -1,0 +1,133 @@
+"""Closed triangle surfaces from other programs: STL, PLY, OFF, OBJ and more, read with meshio.
+
+These formats state neither frame nor unit: world millimetres, RAS+, are assumed.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import importlib
+import io
+import os
+import warnings
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from volmap.io.opening import existing_file, shown_name
+from volmap.types.errors import InputError
+
+FORMATS = {".stl": "stl", ".ply": "ply", ".off": "off", ".obj": "obj", ".vtk": "vtk", ".vtu": "vtu",
+           ".msh": "gmsh", ".mesh": "medit", ".wkt": "wkt"}  # fmt: skip
+
+
+def read_closed_surface(
+    path: str | os.PathLike[str],
+) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+    """Read a closed, consistently turned triangle surface.
+
+    Points at exactly the same place become one, and points no triangle uses are left out.
+
+    Returns
+    -------
+    points : (n, 3) float64, mm, RAS+
+    triangles : (m, 3) int64
+        Normals point outward (the enclosed volume is positive).
+
+    Raises
+    ------
+    InputError
+        Format unknown, file damaged, no triangles or other faces beside them, values not finite, open
+        edges, edges shared by more than two triangles or turned both ways, no volume enclosed.
+    """
+    file, where = existing_file(path), shown_name(path)
+    mesh = _parsed(file, where)
+    points, triangles = _triangles(mesh, where)
+    points, triangles = _welded(points, triangles)
+    _require_closed(triangles, where)
+    volume = _enclosed_mm3(points, triangles)
+    if not abs(volume) > 1e-9 * float(np.ptp(points, axis=0).max()) ** 3:
+        raise InputError("the surface encloses no volume", where=where, refused=True)
+    return points, triangles if volume > 0 else np.ascontiguousarray(triangles[:, ::-1])
+
+
+def _parsed(file: Path, where: str) -> Any:
+    kind = FORMATS.get(file.suffix.lower())
+    if kind is None:
+        raise InputError(
+            "is no surface file that can be read", where=where, found=file.suffix or "no suffix",
+            expected=" ".join(FORMATS), remedy="export the surface as STL or PLY",
+        )  # fmt: skip
+    reader = importlib.import_module(f"meshio.{kind}").read
+    silence = io.StringIO()
+    try:
+        with (
+            contextlib.redirect_stdout(silence),
+            contextlib.redirect_stderr(silence),
+            warnings.catch_warnings(),
+            np.errstate(all="ignore"),
+        ):
+            warnings.simplefilter("ignore")
+            return reader(os.fspath(file))
+    except (Exception, SystemExit) as fault:  # a foreign parser meets a broken file in any way at all
+        raise InputError(
+            "the surface file is damaged or not what its name says", where=where,
+            expected=file.suffix.lower().lstrip(".").upper(), remedy="export it again",
+        ) from fault  # fmt: skip
+
+
+def _triangles(mesh: Any, where: str) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+    kinds = sorted({block.type for block in mesh.cells if len(block.data)} - {"vertex", "line"})
+    if kinds != ["triangle"]:
+        raise InputError(
+            "the surface is not of triangles alone", where=where, found=", ".join(kinds) or "no face",
+            remedy="triangulate it first",
+        )  # fmt: skip
+    points = np.asarray(mesh.points, np.float64)
+    blocks = [np.asarray(b.data, np.int64) for b in mesh.cells if b.type == "triangle" and len(b.data)]
+    triangles = np.concatenate(blocks)
+    if points.ndim != 2 or points.shape[1] != 3 or not np.isfinite(points).all():
+        raise InputError("the points are not finite triples", where=where)
+    if triangles.min() < 0 or triangles.max() >= len(points):
+        raise InputError("a triangle names a point that does not exist", where=where)
+    return points, triangles
+
+
+def _welded(
+    points: NDArray[np.float64], triangles: NDArray[np.int64]
+) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+    """One point a place, and no triangle that has lost a corner thereby."""
+    _, first, index = np.unique(points + 0.0, axis=0, return_index=True, return_inverse=True)
+    triangles = first[index.reshape(-1)[triangles]]
+    a, b, c = triangles.T
+    triangles = triangles[(a != b) & (b != c) & (c != a)]
+    used, renumbered = np.unique(triangles, return_inverse=True)
+    return np.ascontiguousarray(points[used]), renumbered.reshape(-1, 3).astype(np.int64)
+
+
+def _require_closed(triangles: NDArray[np.int64], where: str) -> None:
+    if len(triangles) < 4:
+        raise InputError("the surface has too few triangles", where=where, found=str(len(triangles)))
+    edges = triangles[:, [0, 1, 1, 2, 2, 0]].reshape(-1, 2)
+    n = np.int64(triangles.max() + 1)
+    forth, counts = np.unique(edges[:, 0] * n + edges[:, 1], return_counts=True)
+    back = np.unique(edges[:, 1] * n + edges[:, 0])
+    open_edges = int(np.setxor1d(forth, back).size // 2) if (counts == 1).all() else 0
+    if open_edges:
+        raise InputError(
+            "the surface is not closed", where=where, found=f"{open_edges} open edges",
+            expected="each edge shared by two triangles", remedy="close its holes first", refused=True,
+        )  # fmt: skip
+    if (counts > 1).any():
+        raise InputError(
+            "the surface has edges shared by more than two triangles, or triangles turned against their "
+            "neighbours", where=where, found=f"{int((counts > 1).sum())} such edges",
+            expected="each edge shared by two triangles", remedy="repair it first", refused=True,
+        )  # fmt: skip
+
+
+def _enclosed_mm3(points: NDArray[np.float64], triangles: NDArray[np.int64]) -> float:
+    a, b, c = (points[triangles[:, i]] - points.mean(axis=0) for i in range(3))
+    return float(np.einsum("ij,ij->", a, np.cross(b, c)) / 6.0)
