@@ -16,7 +16,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.io.atomic import whole_file
-from volmap.io.opening import existing_file, shown_name
+from volmap.io.opening import shown_name
+from volmap.io.vtk_xml_reading import VtkPiece, read_piece
 from volmap.types.errors import InputError
 from volmap.types.notice import caution
 from volmap.types.surface import Surface
@@ -26,7 +27,7 @@ PathLike = str | os.PathLike[str]
 Arrays = Mapping[str, NDArray[Any]]
 FieldData = Mapping[str, str | float | int | NDArray[Any]]
 FRAME, UNITS = "RAS+ mm", "mm"
-_TET, _TRIANGLE, _APPENDED = 10, 5, 2
+_TET, _APPENDED = 10, 2
 _KEPT_TYPES = {"f": (np.float32, np.float64), "i": (np.int8, np.int16, np.int32, np.int64),
                "u": (np.uint8, np.uint16, np.uint32, np.uint64), "b": ()}  # fmt: skip
 
@@ -115,25 +116,24 @@ def read_mesh(
     InputError
         Not VTU, damaged, other cells than tets, or no whole number `label` above 0 a tet.
     """
-    from vtkmodules.vtkIOXML import vtkXMLUnstructuredGridReader
-
     where = shown_name(path)
-    data = _read(path, vtkXMLUnstructuredGridReader(), "UnstructuredGrid")
-    if not data.GetNumberOfCells() or not data.GetNumberOfPoints():
-        raise InputError("holds no mesh", where=where, expected="tetrahedra")
-    kinds = np.unique(_bridge().vtk_to_numpy(data.GetCellTypesArray()))
+    piece = read_piece(path, "UnstructuredGrid")
+    kinds = np.unique(piece.sections.get("Cells", {}).get("types", ()))
     if kinds.tolist() != [_TET]:
         raise InputError(
-            "holds other cells than tetrahedra", where=where, found=f"VTK cell types {kinds.tolist()}"
+            "does not hold tetrahedra alone",
+            where=where,
+            found=f"VTK cell types {kinds.astype(int).tolist()}",
         )
-    tets = _connectivity(data.GetCells(), 4, where)
-    cell_data = _arrays(data.GetCellData(), where)
+    tets = _connectivity(piece, "Cells", 4, where)
+    point_data = _of_length(piece, "PointData", piece.counts.get("NumberOfPoints", -1), where)
+    cell_data = _of_length(piece, "CellData", len(tets), where)
     labels = _whole(cell_data.pop("label", None), "label", where)
-    point_data, field_data = _arrays(data.GetPointData(), where), _field_data(data.GetFieldData())
     try:
-        return TetMesh(_coordinates(data), tets, labels), point_data, cell_data, field_data
+        mesh = TetMesh(_coordinates(piece, where), tets, labels)
     except InputError as fault:
         raise fault.at(where) from fault
+    return mesh, point_data, cell_data, dict(piece.field_data)
 
 
 def read_surface(path: PathLike) -> Surface:
@@ -144,17 +144,16 @@ def read_surface(path: PathLike) -> Surface:
     InputError
         Not VTP, damaged, other cells than triangles, or no `label_inside` and `label_outside`.
     """
-    from vtkmodules.vtkIOXML import vtkXMLPolyDataReader
-
     where = shown_name(path)
-    data = _read(path, vtkXMLPolyDataReader(), "PolyData")
-    if not data.GetNumberOfPolys() or data.GetNumberOfPolys() != data.GetNumberOfCells():
-        raise InputError("holds no surface of triangles alone", where=where)
-    triangles = _connectivity(data.GetPolys(), 3, where)
-    cell_data = _arrays(data.GetCellData(), where)
+    piece = read_piece(path, "PolyData")
+    others = sum(piece.counts.get(f"NumberOf{kind}", 0) for kind in ("Verts", "Lines", "Strips"))
+    if others or not piece.counts.get("NumberOfPolys", 0):
+        raise InputError("does not hold a surface of triangles alone", where=where)
+    triangles = _connectivity(piece, "Polys", 3, where)
+    cell_data = _of_length(piece, "CellData", len(triangles), where)
     sides = [_whole(cell_data.get(name), name, where) for name in ("label_inside", "label_outside")]
     try:
-        return Surface(_coordinates(data), triangles, np.stack(sides, axis=1))
+        return Surface(_coordinates(piece, where), triangles, np.stack(sides, axis=1))
     except InputError as fault:
         raise fault.at(where) from fault
 
@@ -245,56 +244,36 @@ def _captured() -> Iterator[Any]:
         vtkOutputWindow.SetInstance(usual)
 
 
-def _read(path: PathLike, reader: Any, kind: str) -> Any:
-    file = existing_file(path)
-    where = shown_name(path)
-    with file.open("rb") as stream:
-        first = stream.read(4096)
-    if b"<VTKFile" not in first or f'type="{kind}"'.encode() not in first:
-        raise InputError("is not the VTK XML file it should be", where=where, expected=f"VTKFile of {kind}")
-    with _captured() as said:
-        reader.SetFileName(os.fspath(file))
-        reader.Update()
-        faults = said.GetOutput() or ("damaged" if reader.GetErrorCode() else "")
-    if faults:
-        raise InputError(
-            "the VTK XML file is damaged or cut short", where=where, remedy="write or copy the file again"
-        )
-    return reader.GetOutput()
+def _coordinates(piece: VtkPiece, where: str) -> NDArray[np.float64]:
+    arrays = list(piece.sections.get("Points", {}).values())
+    if len(arrays) != 1 or arrays[0].ndim != 2 or arrays[0].shape[1] != 3:
+        raise InputError("holds no points", where=where)
+    if len(arrays[0]) != piece.counts.get("NumberOfPoints"):
+        raise InputError("the number of points contradicts itself", where=where, found=str(len(arrays[0])))
+    return arrays[0].astype(np.float64)
 
 
-def _coordinates(data: Any) -> NDArray[np.float64]:
-    return np.array(_bridge().vtk_to_numpy(data.GetPoints().GetData()), np.float64)
-
-
-def _connectivity(cells: Any, corners: int, where: str) -> NDArray[np.int64]:
-    flat = np.array(_bridge().vtk_to_numpy(cells.GetConnectivityArray()), np.int64)
-    offsets = np.array(_bridge().vtk_to_numpy(cells.GetOffsetsArray()), np.int64)
-    if not np.array_equal(offsets, np.arange(0, len(flat) + 1, corners)):
+def _connectivity(piece: VtkPiece, section: str, corners: int, where: str) -> NDArray[np.int64]:
+    arrays = piece.sections.get(section, {})
+    flat, offsets = (arrays.get(name, np.empty(0)) for name in ("connectivity", "offsets"))
+    ends = np.arange(corners, corners * len(offsets) + 1, corners)
+    whole = flat.dtype.kind in "iu" and len(flat) == corners * len(offsets)
+    if not whole or not len(flat) or not np.array_equal(offsets, ends):
         raise InputError(f"holds cells that do not have {corners} corners", where=where)
-    return flat.reshape(-1, corners)
+    return flat.astype(np.int64).reshape(-1, corners)
 
 
-def _arrays(attributes: Any, where: str) -> dict[str, NDArray[Any]]:
-    found: dict[str, NDArray[Any]] = {}
-    for i in range(attributes.GetNumberOfArrays()):
-        array = attributes.GetArray(i)
-        if array is None or array.GetName() in found:
-            raise InputError("holds an array that is not numbers, or one twice", where=where)
-        found[str(array.GetName())] = np.array(_bridge().vtk_to_numpy(array))
-    return found
-
-
-def _field_data(attributes: Any) -> dict[str, Any]:
-    found: dict[str, Any] = {}
-    for i in range(attributes.GetNumberOfArrays()):
-        array = attributes.GetAbstractArray(i)
-        if array.IsA("vtkStringArray"):
-            values = [array.GetValue(k) for k in range(array.GetNumberOfValues())]
-            found[str(array.GetName())] = values[0] if len(values) == 1 else values
-        elif attributes.GetArray(i) is not None:
-            found[str(array.GetName())] = np.array(_bridge().vtk_to_numpy(attributes.GetArray(i)))
-    return found
+def _of_length(piece: VtkPiece, section: str, n: int, where: str) -> dict[str, NDArray[Any]]:
+    arrays = dict(piece.sections.get(section, {}))
+    for name, values in arrays.items():
+        if len(values) != n:
+            raise InputError(
+                f"the array {name!r} does not fit the mesh",
+                where=where,
+                found=f"{len(values)} rows",
+                expected=str(n),
+            )
+    return arrays
 
 
 def _whole(values: NDArray[Any] | None, name: str, where: str) -> NDArray[np.int64]:
