@@ -1,0 +1,56 @@
+"""What a certificate is made from."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from volmap.types.gridfield import GridField
+from volmap.types.landmarks import LandmarkPairs
+from volmap.types.surface import Surface
+from volmap.types.volume_map import VolumeMap
+from volmap.types.volumes import LabelVolume
+
+
+@dataclass(frozen=True, eq=False)
+class Evidence:
+    """A map and everything it can be held against.
+
+    Parameters
+    ----------
+    map : VolumeMap
+    source, target : LabelVolume
+    source_surface, target_surface : Surface
+        Label surfaces of the scans' own meshes, in their own worlds, normals from ``sides[:, 0]`` to
+        ``sides[:, 1]``.
+    forward : GridField, optional
+        On SOURCE's grid, pointing into TARGET.
+    backward : GridField, optional
+        On TARGET's grid, pointing into SOURCE.
+    other : VolumeMap, optional
+        The same pair solved on TARGET's mesh: its mesh is TARGET's body, its images lie in SOURCE.
+    checks : LandmarkPairs, optional
+        Of these only the pairs of role 'check' are used.
+    source_mesh_labels, target_mesh_labels : LabelVolume, optional
+        A scan's own mesh drawn on its own grid: what Dice a mesh can score at all.
+    """
+
+    map: VolumeMap
+    source: LabelVolume
+    target: LabelVolume
+    source_surface: Surface
+    target_surface: Surface
+    forward: GridField | None = None
+    backward: GridField | None = None
+    other: VolumeMap | None = None
+    checks: LandmarkPairs | None = None
+    source_mesh_labels: LabelVolume | None = None
+    target_mesh_labels: LabelVolume | None = None
+
+    @property
+    def voxel_mm(self) -> float:
+        """ "One voxel" of a pair as a length: that of the coarser scan, mm."""
+        return max(self.source.grid.voxel_mm, self.target.grid.voxel_mm)
+
+    def name_of(self, label: int) -> str:
+        """Name of a label, from the source or else the target."""
+        return self.source.name_of(label) if label in self.source.names else self.target.name_of(label)

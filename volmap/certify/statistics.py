@@ -1,0 +1,29 @@
+"""Weighted statistics."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+def weighted_mean(values: NDArray[np.float64], weights: NDArray[np.float64]) -> float:
+    """Mean of values that stand for `weights` (areas, volumes) each."""
+    return float((values * weights).sum() / weights.sum())
+
+
+def weighted_quantile(values: NDArray[np.float64], weights: NDArray[np.float64], share: float) -> float:
+    """The smallest value below or at which at least `share` of the weight lies."""
+    order = np.argsort(values, kind="stable")
+    total = np.cumsum(weights[order])
+    row = int(np.searchsorted(total, share * total[-1] * (1 - 1e-12)))
+    return float(values[order[min(row, len(order) - 1)]])
+
+
+def summary(values: NDArray[np.float64], weights: NDArray[np.float64]) -> dict[str, float]:
+    """Mean, median, 95th percentile and largest value."""
+    return {
+        "mean": weighted_mean(values, weights),
+        "p50": weighted_quantile(values, weights, 0.5),
+        "p95": weighted_quantile(values, weights, 0.95),
+        "max": float(values.max()),
+    }
