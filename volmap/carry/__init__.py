@@ -1,1 +1,24 @@
-"""carry"""
+"""Fields, and things carried through a map."""
+
+from volmap.carry.fields import backward_field, carried_solid, forward_field, volume_ratio_image
+from volmap.carry.points import MovedPoints, move_points
+from volmap.carry.sampling import FieldError, RoundTrip, field_error, round_trip, sample_field
+from volmap.carry.sidecar import field_sidecar
+from volmap.carry.things import Carried, carry
+
+__all__ = [
+    "Carried",
+    "FieldError",
+    "MovedPoints",
+    "RoundTrip",
+    "backward_field",
+    "carried_solid",
+    "carry",
+    "field_error",
+    "field_sidecar",
+    "forward_field",
+    "move_points",
+    "round_trip",
+    "sample_field",
+    "volume_ratio_image",
+]

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+
 import numpy as np
 from numba import njit, prange
 from numpy.typing import NDArray
 
 from volmap.kernels.barycentric import INSIDE, barycentric_rows, plain
 
-# Slices of the grid that are drawn by one thread at a time.
+# Slices of the grid that are drawn by one thread, or given out, at a time.
 _SLAB = 8
 
 
@@ -43,13 +45,13 @@ def tets_on_grid(
     return owner
 
 
-def values_on_grid(
+def values_by_slab(
     index_points: NDArray[np.float64],
     tets: NDArray[np.int64],
     values: NDArray[np.float64],
     owner: NDArray[np.int32],
-) -> NDArray[np.float32]:
-    """Values of the mesh's points, carried linearly to the voxel centres.
+) -> Iterator[tuple[slice, NDArray[np.float64]]]:
+    """Values of the mesh's points, carried linearly to the voxel centres, some slices at a time.
 
     Parameters
     ----------
@@ -59,16 +61,39 @@ def values_on_grid(
     owner : (I, J, K) int32
         From `tets_on_grid`.
 
-    Returns
-    -------
-    (I, J, K, c) float32
-        NaN outside the mesh.  Computed in float64, rounded once.
+    Yields
+    ------
+    slab : slice
+        Along i.
+    found : (slab, J, K, c) float64
+        NaN outside the mesh.
     """
     tets, values = plain(tets, np.int64), plain(values, np.float64)
     rows = barycentric_rows(plain(index_points, np.float64), tets)
-    found = np.empty((*owner.shape, values.shape[1]), np.float32)
-    _evaluate(rows, tets, values, plain(owner, np.int32), found)
-    return found
+    for first in range(0, owner.shape[0], _SLAB):
+        slab = slice(first, min(first + _SLAB, owner.shape[0]))
+        found = np.empty((slab.stop - first, *owner.shape[1:], values.shape[1]))
+        _evaluate(rows, tets, values, plain(owner[slab], np.int32), first, found)
+        yield slab, found
+
+
+def values_on_grid(
+    index_points: NDArray[np.float64],
+    tets: NDArray[np.int64],
+    values: NDArray[np.float64],
+    owner: NDArray[np.int32],
+) -> NDArray[np.float32]:
+    """All slabs of `values_by_slab` in one array, computed in float64 and rounded once.
+
+    Returns
+    -------
+    (I, J, K, c) float32
+        NaN outside the mesh.
+    """
+    whole = np.empty((*owner.shape, np.shape(values)[1]), np.float32)
+    for slab, found in values_by_slab(index_points, tets, values, owner):
+        whole[slab] = found
+    return whole
 
 
 def _corner_range(
@@ -131,7 +156,7 @@ def _draw_row(rows, t, i, j, first, last, owner):  # type: ignore[no-untyped-def
 
 
 @njit(cache=True, parallel=True)
-def _evaluate(rows, tets, values, owner, found):  # type: ignore[no-untyped-def]
+def _evaluate(rows, tets, values, owner, first, found):  # type: ignore[no-untyped-def]
     """Linear interpolation in each voxel's own tet."""
     for i in prange(owner.shape[0]):
         weight = np.empty(4)
@@ -141,7 +166,7 @@ def _evaluate(rows, tets, values, owner, found):  # type: ignore[no-untyped-def]
                 if t < 0:
                     found[i, j, k] = np.nan
                     continue
-                x, y, z = i - rows[t, 3, 0], j - rows[t, 3, 1], k - rows[t, 3, 2]
+                x, y, z = first + i - rows[t, 3, 0], j - rows[t, 3, 1], k - rows[t, 3, 2]
                 weight[0] = 1.0
                 for r in range(3):
                     weight[r + 1] = rows[t, r, 0] * x + rows[t, r, 1] * y + rows[t, r, 2] * z

@@ -1,0 +1,179 @@
+"""A sampled field used as a user would, and how far that is from the exact map."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from volmap.kernels.trilinear import sample
+from volmap.types import GridField, InputError, VolumeMap
+
+_CHUNK = 1_000_000
+N_RANDOM = 100_000
+
+
+def sample_field(
+    field: GridField, points: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
+    """Displacements between voxel centres, trilinear.
+
+    Parameters
+    ----------
+    field : GridField
+    points : (n, 3) float64, mm, RAS+
+        In the world of the field's grid.
+
+    Returns
+    -------
+    displacement : (n, 3) float64, mm
+        NaN where not inside.
+    inside : (n,) bool
+        True where every voxel with a share in the answer is defined.
+    """
+    displacement = sample(field.displacement, field.grid.to_index(points))
+    return displacement, ~np.isnan(displacement[:, 0])
+
+
+@dataclass(frozen=True)
+class RoundTrip:
+    """There by one field and back by the other.
+
+    Parameters
+    ----------
+    mean_mm, p95_mm, max_mm : float
+        Distance between a voxel centre and where it comes back to; NaN when nothing was measured.
+    coverage : float
+        Part of the supported voxels for which the way back was defined (the image of a voxel near the
+        boundary may lie in a cell with an undefined corner).
+    n_voxels : int
+        Voxels measured.
+    worst_mm : tuple of 3 float
+        The voxel centre with the largest distance, world mm, RAS+.
+    """
+
+    mean_mm: float
+    p95_mm: float
+    max_mm: float
+    coverage: float
+    n_voxels: int
+    worst_mm: tuple[float, float, float]
+
+
+def round_trip(there: GridField, back: GridField) -> RoundTrip:
+    """Send every supported voxel centre of `there` out and, by trilinear sampling of `back`, home again.
+
+    Parameters
+    ----------
+    there, back : GridField
+        A pair: forward and backward, in either order.
+
+    Raises
+    ------
+    InputError
+        When `there` does not point into the space of `back`, or `back` not into that of `there`.
+    """
+    if (there.points_into, there.grid_space) != (back.grid_space, back.points_into):
+        raise InputError(
+            "two fields are not a pair",
+            found=f"{there.grid_space} to {there.points_into} and {back.grid_space} to {back.points_into}",
+            expected="one to lead back where the other starts",
+        )
+    voxel = np.flatnonzero(there.support)
+    error = np.empty(len(voxel), np.float32)
+    for first in range(0, len(voxel), _CHUNK):
+        error[first : first + _CHUNK] = _way_home(there, back, voxel[first : first + _CHUNK])
+    return _summary(there, voxel, error)
+
+
+def _way_home(there: GridField, back: GridField, voxel: NDArray[np.int64]) -> NDArray[np.float64]:
+    """(n,) distances between voxel centres and where they come back to, mm; NaN where undefined."""
+    start = _centres(there, voxel)
+    away = start + there.displacement.reshape(-1, 3)[voxel]
+    home = away + sample_field(back, away)[0]
+    return np.asarray(np.linalg.norm(home - start, axis=1))
+
+
+def _centres(field: GridField, voxel: NDArray[np.int64]) -> NDArray[np.float64]:
+    """(n, 3) world places of voxels given by their flat number, mm."""
+    return field.grid.to_world(np.stack(np.unravel_index(voxel, field.grid.shape), axis=1))
+
+
+def _summary(there: GridField, voxel: NDArray[np.int64], error: NDArray[np.float32]) -> RoundTrip:
+    known = np.flatnonzero(~np.isnan(error))
+    if not len(known):
+        nan = float("nan")
+        return RoundTrip(nan, nan, nan, 0.0, 0, (nan, nan, nan))
+    worst = _centres(there, voxel[known[error[known].argmax()]][None])[0]
+    return RoundTrip(
+        mean_mm=float(error[known].mean(dtype=np.float64)),
+        p95_mm=float(np.percentile(error[known], 95)),
+        max_mm=float(error[known].max()),
+        coverage=len(known) / len(voxel),
+        n_voxels=len(known),
+        worst_mm=(float(worst[0]), float(worst[1]), float(worst[2])),
+    )
+
+
+@dataclass(frozen=True)
+class FieldError:
+    """Difference between a sampled field and the map it was sampled from.
+
+    Parameters
+    ----------
+    mean_mm, p95_mm, max_mm : float
+        NaN when nothing was measured.
+    n_points : int
+        Places measured: those where the trilinear sample is defined.
+    """
+
+    mean_mm: float
+    p95_mm: float
+    max_mm: float
+    n_points: int
+
+
+def field_error(field: GridField, exact: VolumeMap, *, n_random: int = N_RANDOM, seed: int = 0) -> FieldError:
+    """Compare at all mesh points, at all tet centroids and at random places spread evenly by volume.
+
+    Mesh points are where a piecewise affine map bends, so the largest difference sits there or close by.
+
+    Parameters
+    ----------
+    field : GridField
+    exact : VolumeMap
+        With its mesh in the space of the field's grid: the map for a forward field, ``map.reversed()`` for
+        a backward one.
+    n_random : int
+    seed : int
+        Same seed, same places.
+    """
+    places, images = _test_places(exact, n_random, seed)
+    found, inside = sample_field(field, places)
+    if not inside.any():
+        return FieldError(float("nan"), float("nan"), float("nan"), 0)
+    error = np.linalg.norm(places + found - images, axis=1)[inside]
+    return FieldError(
+        float(error.mean()), float(np.percentile(error, 95)), float(error.max()), int(inside.sum())
+    )
+
+
+def _test_places(
+    exact: VolumeMap, n_random: int, seed: int
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Places in the mesh and, without any search, their exact images."""
+    tets, volumes = exact.mesh.tets, np.abs(exact.mesh.volumes)
+    random = np.random.default_rng(seed)
+    tet = np.searchsorted(np.cumsum(volumes), random.random(n_random) * volumes.sum())
+    tet = np.concatenate([np.arange(len(tets)), np.minimum(tet, len(tets) - 1)])
+    weights = random.dirichlet(np.ones(4), len(tet))  # uniform in a tet
+    weights[: len(tets)] = 0.25
+
+    def at(values: NDArray[np.float64]) -> NDArray[np.float64]:
+        inner = np.zeros((len(tet), 3))
+        for a in range(4):
+            inner += weights[:, a, None] * values[tets[tet, a]]
+        return np.concatenate([values, inner])
+
+    return at(exact.mesh.points), at(exact.images)

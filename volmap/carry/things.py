@@ -1,0 +1,224 @@
+"""The verb: one thing, carried through a map."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import singledispatch
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from volmap.carry.points import MovedPoints, move_points
+from volmap.carry.volumes import pull_image, pull_labels
+from volmap.types import (
+    Finding,
+    Grid,
+    ImageVolume,
+    InputError,
+    LabelVolume,
+    Landmarks,
+    Level,
+    Surface,
+    TetMesh,
+    VolumeMap,
+)
+
+REACH_MM = 1.0
+
+
+@dataclass(frozen=True)
+class Carried:
+    """A thing in its new place, and what was seen on the way.
+
+    Parameters
+    ----------
+    thing : Landmarks, LabelVolume, ImageVolume, TetMesh or Surface
+        Of the same kind as what was carried.
+    findings : tuple of Finding
+    """
+
+    thing: Any
+    findings: tuple[Finding, ...] = ()
+
+
+@singledispatch
+def carry(
+    thing: Any,
+    volume_map: VolumeMap,
+    *,
+    reverse: bool = False,
+    onto: Grid | None = None,
+    reach_mm: float = REACH_MM,
+) -> Carried:
+    """Carry a thing from SOURCE to TARGET, or back.
+
+    Parameters
+    ----------
+    thing : Landmarks, LabelVolume, ImageVolume, TetMesh or Surface
+        In SOURCE's world (in TARGET's with `reverse`).
+        Points of landmarks, meshes and surfaces move exactly (see `points.move_points`).  Volumes are
+        pulled: each voxel centre of `onto` inside the body is sent back by the exact inverse, and takes the
+        label of the voxel it falls in, or the trilinear intensity there.
+    volume_map : VolumeMap
+    reverse : bool
+        From TARGET to SOURCE, by the exact inverse.
+    onto : Grid
+        Where a volume goes: a grid of TARGET (of SOURCE with `reverse`).  Needed by volumes, not used
+        by the rest.
+    reach_mm : float
+        Points up to this far outside the body are carried with the nearest tet's affine map, and named in a
+        finding; a voxel of the scan (`Grid.voxel_mm`) is a good choice.  Points farther out: landmarks are
+        left out and named; a mesh or surface is refused.
+
+    Returns
+    -------
+    Carried
+
+    Raises
+    ------
+    InputError
+        A kind of thing that cannot be carried, no `onto` for a volume, a volume or a mesh that does not lie
+        on the body.
+    """
+    raise InputError(
+        "this kind of thing cannot be carried",
+        found=type(thing).__name__,
+        expected="Landmarks, LabelVolume, ImageVolume, TetMesh or Surface",
+    )
+
+
+@carry.register
+def _carry_landmarks(
+    thing: Landmarks,
+    volume_map: VolumeMap,
+    *,
+    reverse: bool = False,
+    onto: Grid | None = None,
+    reach_mm: float = REACH_MM,
+) -> Carried:
+    moved = move_points(_directed(volume_map, reverse), thing.points, reach_mm=reach_mm)
+    kept = np.flatnonzero(moved.carried)
+    landmarks = Landmarks(
+        tuple(thing.names[i] for i in kept), moved.points[kept], tuple(thing.roles[i] for i in kept)
+    )
+    return Carried(landmarks, _landmark_findings(thing, moved))
+
+
+@carry.register
+def _carry_labels(
+    thing: LabelVolume,
+    volume_map: VolumeMap,
+    *,
+    reverse: bool = False,
+    onto: Grid | None = None,
+    reach_mm: float = REACH_MM,
+) -> Carried:
+    return Carried(*pull_labels(thing, _directed(volume_map, reverse), _required(onto, thing.name)))
+
+
+@carry.register
+def _carry_image(
+    thing: ImageVolume,
+    volume_map: VolumeMap,
+    *,
+    reverse: bool = False,
+    onto: Grid | None = None,
+    reach_mm: float = REACH_MM,
+) -> Carried:
+    return Carried(*pull_image(thing, _directed(volume_map, reverse), _required(onto, thing.name)))
+
+
+@carry.register
+def _carry_mesh(
+    thing: TetMesh,
+    volume_map: VolumeMap,
+    *,
+    reverse: bool = False,
+    onto: Grid | None = None,
+    reach_mm: float = REACH_MM,
+) -> Carried:
+    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "mesh", reach_mm)
+    mesh = thing.moved(points)
+    turned = int(((mesh.volumes <= 0) & (thing.volumes > 0)).sum())
+    if turned:
+        sentence = (
+            f"{turned} of {len(mesh.tets)} tets turned inside out: they are larger than the map's bends"
+        )
+        remedy = "refine the mesh before carrying it"
+        findings += (Finding(Level.WARN, "turned-tets", "mesh", sentence, remedy),)
+    return Carried(mesh, findings)
+
+
+@carry.register
+def _carry_surface(
+    thing: Surface,
+    volume_map: VolumeMap,
+    *,
+    reverse: bool = False,
+    onto: Grid | None = None,
+    reach_mm: float = REACH_MM,
+) -> Carried:
+    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "surface", reach_mm)
+    return Carried(Surface(points, thing.triangles, thing.sides), findings)
+
+
+def _directed(volume_map: VolumeMap, reverse: bool) -> VolumeMap:
+    return volume_map.reversed() if reverse else volume_map
+
+
+def _required(onto: Grid | None, where: str) -> Grid:
+    if onto is None:
+        raise InputError(
+            "a volume needs a grid to be carried onto",
+            where=where,
+            remedy="name a scan of the space the volume goes to",
+        )
+    return onto
+
+
+def _landmark_findings(thing: Landmarks, moved: MovedPoints) -> tuple[Finding, ...]:
+    """Who was outside, how far, and what was done about it."""
+    findings = []
+    for chosen, code, fate in (
+        (
+            moved.extrapolated,
+            "outside-carried",
+            "carried with the affine map of the nearest tet, not measured",
+        ),
+        (~moved.carried, "outside-left-out", "not carried"),
+    ):
+        which = np.flatnonzero(chosen)
+        if len(which):
+            named = ", ".join(f"{thing.names[i]} ({moved.outside_mm[i]:.2f} mm)" for i in which)
+            sentence = (
+                f"{len(which)} of {len(thing.names)} points lie outside the body and were {fate}: {named}"
+            )
+            remedy = "check that the points belong to this scan and lie in the segmented body"
+            findings.append(Finding(Level.WARN, code, "landmarks", sentence, remedy))
+    return tuple(findings)
+
+
+def _all_points(
+    points: NDArray[np.float64], volume_map: VolumeMap, where: str, reach_mm: float
+) -> tuple[NDArray[np.float64], tuple[Finding, ...]]:
+    """Every point carried, or the whole thing refused."""
+    moved = move_points(volume_map, points, reach_mm=reach_mm)
+    lost = ~moved.carried
+    if lost.any():
+        raise InputError(
+            "points lie outside the body",
+            where=where,
+            found=f"{lost.sum()} of {len(points)} points, up to {moved.outside_mm.max():.2f} mm outside",
+            expected=f"at most {reach_mm:g} mm",
+            remedy="check that it belongs to this scan, cut it to the body, or allow a larger reach",
+            refused=True,
+        )
+    n_outside = int(moved.extrapolated.sum())
+    if not n_outside:
+        return moved.points, ()
+    sentence = (
+        f"{n_outside} of {len(points)} points lie up to {moved.outside_mm.max():.2f} mm outside the body "
+        "and were carried with the affine map of the nearest tet, not measured"
+    )
+    return moved.points, (Finding(Level.WARN, "outside-carried", where, sentence),)
