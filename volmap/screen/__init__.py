@@ -1,1 +1,18 @@
-"""screen"""
+"""Look at label volumes before anything is built on them, and mend what can be mended openly."""
+
+from volmap.screen.mending import Change, Mended, mend
+from volmap.screen.pairs import PairResult, compare, screen_pair
+from volmap.screen.results import LabelScreen, ScreenResult
+from volmap.screen.screening import screen
+
+__all__ = [
+    "Change",
+    "LabelScreen",
+    "Mended",
+    "PairResult",
+    "ScreenResult",
+    "compare",
+    "mend",
+    "screen",
+    "screen_pair",
+]

@@ -76,6 +76,17 @@ class Grid(Frozen):
         return "right" if np.linalg.det(self.affine[:3, :3]) > 0 else "left"
 
     @property
+    def orientation(self) -> str:
+        """Where each index grows to: "LIP" says i to the left, j downward (inferior), k to the back."""
+        weights = np.abs(self.affine[:3, :3] / self.spacing)
+        letters = [""] * 3
+        for _ in range(3):
+            world, index = divmod(int(np.argmax(weights)), 3)
+            letters[index] = ("LR", "PA", "IS")[world][int(self.affine[world, index] > 0)]
+            weights[world, :] = weights[:, index] = -1.0
+        return "".join(letters)
+
+    @property
     def shear(self) -> float:
         """Largest cosine between two voxel axes; 0 when they are orthogonal."""
         axes = self.affine[:3, :3] / self.spacing
