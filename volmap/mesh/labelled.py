@@ -1,0 +1,191 @@
+"""Lattice, snap, split, label: from a field to conforming labelled tets with a background ring."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from volmap.kernels.labelfield import LabelField, Scratch, cut_edges, owners
+from volmap.kernels.lattice import bcc, edge_lengths, longest_first, oriented, split_edges, used_only
+from volmap.kernels.snap import MOST_TIES, add_labels, disjoint, snap
+from volmap.kernels.stars import new_stars
+from volmap.kernels.tets import signed_volumes
+from volmap.kernels.topology import unique_edges
+from volmap.mesh.hidden import refined
+from volmap.mesh.nearby import near_body
+from volmap.mesh.specks import without_specks
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+CELL = 1.08  # cube of the lattice, in wanted edges
+ORIGIN = np.array([0.37, 0.41, 0.43])  # of a cell: keeps lattice points off the planes of voxels
+SNAP_ROUNDS = 3
+SNAP_SHARE = 0.30  # of an edge: crossings nearer than this to an end draw it
+SHORT_BONUS = 1.15  # for the shorter edges of the lattice
+LEAST_VOLUME = 0.04  # of its own that a tet must keep when its points snap
+NEAREST_SPLIT = 0.12  # of an edge, from either end
+
+
+class Complex(NamedTuple):
+    """Labelled tets in the mesher's frame, label 0 being the background ring.
+
+    Attributes
+    ----------
+    points : (n, 3) float64, mm
+    tets : (m, 4) int64
+    labels : (m,) int64
+    """
+
+    points: Floats
+    tets: Ints
+    labels: Ints
+
+
+def lattice_edge(volume_mm3: float, n_tets: int) -> float:
+    """Edge that gives about `n_tets` tets in a body of that volume, mm; interfaces add a quarter."""
+    return float((12 * 1.25 * volume_mm3 / n_tets) ** (1 / 3) / CELL)
+
+
+def lattice_size(volume_mm3: float, edge_mm: float) -> float:
+    """Tets to expect in a body of that volume."""
+    return 12 * 1.25 * volume_mm3 / (CELL * edge_mm) ** 3
+
+
+def labelled_lattice(
+    field: LabelField, edge_mm: float, *, refine: int, scratch: Scratch
+) -> tuple[Complex, int]:
+    """Conforming labelled tets, not yet improved.
+
+    Returns
+    -------
+    complex : Complex
+    n_specks : int
+        Tiny pieces that took the label around them.
+    """
+    points, tets = _lattice_near_body(field, edge_mm)
+    owner = owners(field, points, scratch)
+    points, tets, owner = refined(field, points, tets, owner, edge_mm=edge_mm, times=refine, scratch=scratch)
+    points, tets, owner = _with_ring(points, tets, owner)
+    sets = np.full((len(points), MOST_TIES), -1, np.int64)
+    sets[:, 0] = owner
+    points = _snapped(field, points, tets, sets, scratch)
+    points, tets, sets = _split_at_crossings(field, points, tets, sets, scratch)
+    labels = _labels_of_tets(field, points, tets, sets, scratch)
+    labels, n_specks = without_specks(points, tets, labels)
+    return Complex(points, tets, labels), n_specks
+
+
+def _lattice_near_body(field: LabelField, edge_mm: float) -> tuple[Floats, Ints]:
+    """The tets of the lattice that lie near the body."""
+    cell = CELL * edge_mm
+    filled = np.argwhere(field.labels > 0)
+    low = (filled.min(axis=0) - 0.5) * field.spacing - cell * (2.0 + ORIGIN)
+    high = (filled.max(axis=0) + 0.5) * field.spacing + 2.0 * cell
+    points, tets = bcc(low, high, cell)
+    near = near_body(field, points, 2.5 * cell)
+    points, tets, _ = used_only(points, tets[near[tets].any(axis=1)])
+    return points, tets
+
+
+def _with_ring(points: Floats, tets: Ints, owner: Ints) -> tuple[Floats, Ints, Ints]:
+    """Tets that touch the body, and all tets that touch one of those."""
+    touched = np.zeros(len(points), bool)
+    touched[tets[(owner[tets] > 0).any(axis=1)]] = True
+    points, tets, kept = used_only(points, tets[touched[tets].any(axis=1)])
+    return points, tets, owner[kept]
+
+
+def _both_ways(
+    field: LabelField, points: Floats, sets: Ints, edges: Ints, scratch: Scratch
+) -> tuple[Floats, Ints, NDArray[np.bool_]]:
+    """Crossings seen from both ends of each edge.
+
+    Returns
+    -------
+    where : (2, m) float64
+        Share of the edge from the end it is seen from.
+    labels : (2, m, 2) int64
+    crossed : (m,) bool
+    """
+    ahead = cut_edges(field, points, sets, edges, scratch)
+    back = cut_edges(field, points, sets, np.ascontiguousarray(edges[:, ::-1]), scratch)
+    labels = np.stack([ahead[1], back[1]])
+    return np.stack([ahead[0], back[0]]), labels, (labels[:, :, 1] >= 0).all(axis=0)
+
+
+def _reaches(points: Floats, edges: Ints, edge_of_tet: Ints) -> Floats:
+    """(e,) share of each edge within which a crossing draws its end."""
+    lengths = edge_lengths(points, edges)
+    longest = np.zeros(len(edges))
+    np.maximum.at(longest, edge_of_tet.ravel(), np.repeat(lengths[edge_of_tet].max(axis=1), 6))
+    return np.where(lengths >= 0.93 * longest, SNAP_SHARE, SNAP_SHARE * SHORT_BONUS)
+
+
+def _snapped(field: LabelField, points: Floats, tets: Ints, sets: Ints, scratch: Scratch) -> Floats:
+    """Points with those near a crossing moved onto it; their label sets grow in place."""
+    edges, edge_of_tet = unique_edges(tets)
+    reach = _reaches(points, edges, edge_of_tet)
+    stars = new_stars(points, tets, np.ones(len(tets), np.int64))
+    floors = LEAST_VOLUME * 6.0 * signed_volumes(points, tets)
+    moved = np.zeros(len(points), np.int64)
+    for _ in range(SNAP_ROUNDS):
+        crossing = np.flatnonzero(disjoint(sets, edges))
+        if not len(crossing):
+            break
+        pairs = edges[crossing]
+        where, labels, crossed = _both_ways(field, stars.points, sets, pairs, scratch)
+        movers = np.concatenate([pairs[:, 0], pairs[:, 1]])
+        others = np.concatenate([pairs[:, 1], pairs[:, 0]])
+        urgency = (where / reach[crossing]).ravel()
+        chosen = np.flatnonzero(np.tile(crossed, 2) & (urgency < 1.0))
+        chosen = chosen[np.lexsort((movers[chosen], urgency[chosen]))]
+        start, end = stars.points[movers[chosen]], stars.points[others[chosen]]
+        places = start + where.ravel()[chosen, None] * (end - start)
+        moved[moved == 2] = 1
+        done = snap(stars, movers[chosen], places, floors=floors, moved=moved)
+        if not done.any():
+            break
+        add_labels(sets, movers[chosen][done], labels[:, :, 1].ravel()[chosen][done])
+    return stars.points
+
+
+def _split_at_crossings(
+    field: LabelField, points: Floats, tets: Ints, sets: Ints, scratch: Scratch
+) -> tuple[Floats, Ints, Ints]:
+    """Split the edges whose ends have no label in common where the label changes."""
+    edges, edge_of_tet = unique_edges(tets)
+    crossing = np.flatnonzero(disjoint(sets, edges))
+    if not len(crossing):
+        return points, tets, sets
+    pairs = edges[crossing]
+    where, labels, _ = _both_ways(field, points, sets, pairs, scratch)
+    ahead, back = where[0], 1.0 - where[1]
+    nearer = np.where(np.abs(ahead - 0.5) < np.abs(back - 0.5), ahead, back)
+    share = np.where(labels[0, :, 1] == labels[1, :, 1], ahead, nearer)
+    share = np.clip(share, NEAREST_SPLIT, 1.0 - NEAREST_SPLIT)[:, None]
+    new_points = (1.0 - share) * points[pairs[:, 0]] + share * points[pairs[:, 1]]
+    new_sets = np.full((len(pairs), sets.shape[1]), -1, np.int64)
+    new_sets[:, 0] = np.where(labels[0, :, 0] >= 0, labels[0, :, 0], sets[pairs[:, 0], 0])
+    entered = np.where(labels[0, :, 1] >= 0, labels[0, :, 1], sets[pairs[:, 1], 0])
+    add_labels(new_sets, np.arange(len(pairs)), entered)
+    middle = np.full(len(edges), -1, np.int64)
+    middle[crossing] = len(points) + np.arange(len(pairs))
+    rank = longest_first(edge_lengths(points, edges))
+    pieces, _ = split_edges(tets, edges, edge_of_tet, middle=middle, rank=rank)
+    all_points = np.concatenate([points, new_points])
+    return all_points, oriented(all_points, pieces), np.concatenate([sets, new_sets])
+
+
+def _labels_of_tets(field: LabelField, points: Floats, tets: Ints, sets: Ints, scratch: Scratch) -> Ints:
+    """The one label common to all four points, else the label at the centre of the tet."""
+    first = sets[tets[:, 0]]
+    common = first >= 0
+    for corner in range(1, 4):
+        common &= (first[:, :, None] == sets[tets[:, corner]][:, None, :]).any(axis=2)
+    labels = first[np.arange(len(tets)), common.argmax(axis=1)]
+    unclear = np.flatnonzero(common.sum(axis=1) != 1)
+    labels[unclear] = owners(field, points[tets[unclear]].mean(axis=1), scratch)
+    return labels

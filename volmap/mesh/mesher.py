@@ -1,0 +1,138 @@
+"""From a label volume to one conforming mesh, with a ladder of attempts."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+from volmap.mesh.attempt import Attempt, Rung, attempted
+from volmap.mesh.facts import voxel_facts
+from volmap.mesh.labelled import lattice_edge, lattice_size
+from volmap.mesh.prepare import Prepared, prepare
+from volmap.mesh.quality import LabelQuality, QualityTable, quality_table
+from volmap.mesh.settings import MeshSettings
+from volmap.mesh.verdicts import findings_of
+from volmap.types.findings import Finding
+from volmap.types.progress import Progress, silent
+from volmap.types.tetmesh import TetMesh
+from volmap.types.volumes import LabelVolume
+
+LEAST_DIHEDRAL_DEG = 12.0
+VOLUME_LIMIT_PCT = 0.5
+THIN_VOLUME_LIMIT_PCT = 3.0
+SMALLEST_DEFAULT_VOXELS = 0.75  # no default edge is shorter: the voxels say nothing finer
+
+
+@dataclass(frozen=True, eq=False)
+class MeshResult:
+    """A mesh and how good it is.
+
+    Attributes
+    ----------
+    mesh : TetMesh
+        World mm, RAS+.
+    quality : QualityTable
+    findings : tuple of Finding
+    settings : MeshSettings
+        As used: `edge_mm`, `smoothing_voxels` and `refine` are those of the attempt that was kept.
+    """
+
+    mesh: TetMesh
+    quality: QualityTable
+    findings: tuple[Finding, ...]
+    settings: MeshSettings
+
+
+def mesh(
+    labels: LabelVolume, settings: MeshSettings | None = None, *, progress: Progress = silent
+) -> MeshResult:
+    """One conforming tetrahedral mesh for all labels of a volume.
+
+    Parameters
+    ----------
+    labels : LabelVolume
+    settings : MeshSettings, optional
+    progress : Progress
+
+    Raises
+    ------
+    InputError
+        A volume without labels, or a body too small for the edge length.
+
+    Notes
+    -----
+    Body-centred-cubic lattice, snapped to and split at the ties of smoothed labels (after Labelle & Shewchuk
+    2007 and Boltcheva, Yvinec & Boissonnat 2009), improved by guarded relocation.  When a label misses its
+    volume or falls apart, finer attempts follow and the best one is kept.
+    """
+    settings = settings or MeshSettings()
+    prepared = prepare(labels)
+    best: tuple[float, Attempt, QualityTable] | None = None
+    n_tried = 0
+    for rung in rungs(settings, _body_volume(prepared), prepared.grid.voxel_mm):
+        attempt = attempted(prepared, rung, progress, name=labels.name)
+        table = _table(attempt, prepared, labels)
+        n_tried += 1
+        shortfall = sum(row.voxel_mm3 for row in wrong_rows(table))
+        shortfall += 1e12 * (table.min_dihedral_deg < LEAST_DIHEDRAL_DEG or table.inverted_tets > 0)
+        if best is None or shortfall < best[0]:
+            best = (shortfall, attempt, table)
+        if shortfall == 0.0:
+            break
+    assert best is not None
+    _, kept, table = best
+    used = replace(
+        settings,
+        edge_mm=kept.rung.edge_mm,
+        smoothing_voxels=kept.rung.smoothing_voxels,
+        refine=kept.rung.refine,
+    )
+    findings = findings_of(
+        labels, table, wrong=wrong_rows(table), specks=kept.specks, n_tried=n_tried, edge_mm=kept.rung.edge_mm
+    )
+    return MeshResult(kept.mesh, table, findings, used)
+
+
+def _table(attempt: Attempt, prepared: Prepared, labels: LabelVolume) -> QualityTable:
+    facts = voxel_facts(prepared, attempt.targets)
+    return quality_table(attempt.mesh, facts, {k: labels.name_of(k) for k in facts})
+
+
+def _body_volume(prepared: Prepared) -> float:
+    """Of all labelled voxels in the mesher's frame, mm3."""
+    return float((prepared.labels > 0).sum() * prepared.voxel_volume)
+
+
+def rungs(settings: MeshSettings, volume_mm3: float, voxel_mm: float) -> tuple[Rung, ...]:
+    """The attempts to make: as asked, sharper and finer in thin parts, then with shorter edges if few enough.
+
+    Parameters
+    ----------
+    volume_mm3 : float
+        Of the body.
+    voxel_mm : float
+    """
+    edge = settings.edge_mm
+    if edge is None:
+        edge = max(lattice_edge(volume_mm3, settings.wanted_tets), SMALLEST_DEFAULT_VOXELS * voxel_mm)
+    sharp, finer = min(1.0, settings.smoothing_voxels), max(settings.refine, 2)
+    first = Rung(edge, settings.smoothing_voxels, settings.refine)
+    later = [
+        Rung(edge, sharp, min(settings.refine + 1, 3)),
+        Rung(0.7 * edge, sharp, finer),
+        Rung(0.5 * edge, sharp, finer),
+    ]
+    return (first, *(r for r in later if lattice_size(volume_mm3, r.edge_mm) <= settings.max_tets))
+
+
+def volume_limit_pct(row: LabelQuality) -> float:
+    """How far the volume of a label may be off: 0.5 %, 3 % for one thinner than three voxels."""
+    return THIN_VOLUME_LIMIT_PCT if row.thin else VOLUME_LIMIT_PCT
+
+
+def wrong_rows(table: QualityTable) -> tuple[LabelQuality, ...]:
+    """Labels that are lost, miss their volume, or have more pieces than their voxels."""
+    return tuple(
+        row
+        for row in table.rows
+        if row.tets == 0 or abs(row.volume_error_pct) > volume_limit_pct(row) or row.pieces > row.voxel_pieces
+    )
