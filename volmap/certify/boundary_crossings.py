@@ -1,4 +1,9 @@
-"""Gate: the image of the outer boundary crosses nothing, and no piece lies inside another."""
+"""Gate: the outer boundary crosses nothing, no piece lies inside another, and faces join two tets at most.
+
+With every tet positive, these make the map one-to-one: a tet's neighbours then lie on the other side of
+its faces, so each piece covers evenly what its boundary encloses, and an embedded boundary encloses it
+once.
+"""
 
 from __future__ import annotations
 
@@ -21,7 +26,7 @@ from volmap.types.tetmesh import TetMesh
 
 
 def boundary_crossings(evidence: Evidence, limit: Limit, *, inverted: Gate) -> Gate:
-    """Count crossing pairs of boundary triangles of the image, and pieces that lie inside another.
+    """Count crossing pairs of boundary triangles, nested pieces and wrongly joined faces, in both worlds.
 
     Parameters
     ----------
@@ -30,48 +35,81 @@ def boundary_crossings(evidence: Evidence, limit: Limit, *, inverted: Gate) -> G
     inverted : Gate
         `inverted_tets`: only both together make the map one-to-one.
     """
-    image = evidence.map.image_mesh
-    first, second, hull = match_faces(image.tets)
-    triangles = face_corners(image.tets, hull)
-    try:
-        pairs = triangle_crossings(image.points, triangles)
-    except ValueError as fault:
-        return not_assessed(limit, str(fault))
-    nested = nested_pieces(image, first // 4, second // 4)
-    count = len(pairs) + len(nested)
-    value = {
-        "count": count,
-        "crossing_pairs": len(pairs),
-        "nested_pieces": len(nested),
-        "triangles": len(triangles),
-    }
-    where = [_crossing_place(image, triangles[p]) for p in pairs[:MOST]] + nested[:MOST]
+    mesh, image = evidence.map.mesh, evidence.map.image_mesh
+    first, second, hull = match_faces(mesh.tets)
+    triangles = face_corners(mesh.tets, hull)
+    wrong = wrongly_joined(mesh.tets, first, second)
+    where = [_face_place(mesh, face) for face in wrong[:MOST]]
+    counts = {"crossing_pairs": 0, "nested_pieces": 0, "wrong_faces": len(wrong)}
+    for space, body in {"target": image, "source": mesh}.items():
+        try:
+            pairs = triangle_crossings(body.points, triangles)
+        except ValueError as fault:
+            return not_assessed(limit, str(fault))
+        nested = nested_pieces(body, (first // 4, second // 4), space=space)
+        counts["crossing_pairs"] += len(pairs)
+        counts["nested_pieces"] += len(nested)
+        where += [_crossing_place(body, triangles[pair], space) for pair in pairs[:MOST]] + nested[:MOST]
+    total = sum(counts.values())
+    value = {"count": total, **counts, "triangles": len(triangles)}
     sentence = _sentence(value, positive=inverted.verdict is Verdict.PASS)
-    return judged(limit, {"count": count}, value=value, sentence=sentence, where=where[:MOST])
+    return judged(limit, {"count": total}, value=value, sentence=sentence, where=where[:MOST])
 
 
 def _sentence(value: dict[str, int], *, positive: bool) -> str:
     if value["count"]:
         return (
-            f"{value['crossing_pairs']} pairs of boundary triangles of the image cross and "
-            f"{value['nested_pieces']} pieces lie inside another: the image covers some places twice."
+            f"{value['crossing_pairs']} pairs of boundary triangles cross, "
+            f"{value['nested_pieces']} pieces lie inside another "
+            f"and {value['wrong_faces']} faces join tets on one side: "
+            "some places are covered twice."
         )
-    clean = (
-        f"The {value['triangles']} boundary triangles of the image do not cross "
-        "and no piece lies inside another"
-    )
+    clean = f"The {value['triangles']} boundary triangles do not cross and no piece lies inside another"
     if positive:
         return f"{clean}; with every tet positive, the map is one-to-one."
-    return f"{clean}, but some tets are not positive, so this does not make the map injective."
+    return f"{clean}, but some tets are not positive, so the map still folds."
 
 
-def _crossing_place(image: TetMesh, triangles: NDArray[np.int64]) -> dict[str, Any]:
-    corners = image.points[triangles]
+def wrongly_joined(
+    tets: NDArray[np.int64], first: NDArray[np.int64], second: NDArray[np.int64]
+) -> NDArray[np.int64]:
+    """Shared faces that more than two tets share, or that two tets see from the same side.
+
+    Parameters
+    ----------
+    tets : (m, 4) int64
+    first, second : (k,) int64
+        From `topology.match_faces`.
+
+    Returns
+    -------
+    (n,) int64
+        Faces, ``4 * tet + corner``.
+    """
+    same = _turn(face_corners(tets, first)) == _turn(face_corners(tets, second))
+    return np.union1d(first[same], np.intersect1d(first, second))
+
+
+def _turn(corners: NDArray[np.int64]) -> NDArray[np.bool_]:
+    """(k,) parity of the order in which a face lists its corners."""
+    a, b, c = corners.T
+    return np.asarray((a > b) ^ (b > c) ^ (a > c))
+
+
+def _face_place(mesh: TetMesh, face: int) -> dict[str, Any]:
+    centre = mesh.points[face_corners(mesh.tets, np.array([face]))[0]].mean(axis=0)
+    return place(centre, "source", "a face joins two tets on one side, or more than two tets")
+
+
+def _crossing_place(body: TetMesh, triangles: NDArray[np.int64], space: str) -> dict[str, Any]:
+    corners = body.points[triangles]
     low, high = corners.min(axis=1).max(axis=0), corners.max(axis=1).min(axis=0)
-    return place((low + high) / 2, "target", "two triangles of the image's boundary cross")
+    return place((low + high) / 2, space, "two triangles of the boundary cross")
 
 
-def nested_pieces(mesh: TetMesh, first: NDArray[np.int64], second: NDArray[np.int64]) -> list[dict[str, Any]]:
+def nested_pieces(
+    mesh: TetMesh, shared: tuple[NDArray[np.int64], NDArray[np.int64]], *, space: str
+) -> list[dict[str, Any]]:
     """Face-connected pieces of which a tet's centre lies in a tet of another piece.
 
     Where no boundaries cross, one point decides for the whole piece.
@@ -79,9 +117,10 @@ def nested_pieces(mesh: TetMesh, first: NDArray[np.int64], second: NDArray[np.in
     Parameters
     ----------
     mesh : TetMesh
-        The image.
-    first, second : (k,) int64
+    shared : two (k,) int64
         The two tets of each shared face.
+    space : str
+        'source' or 'target', for the places.
 
     Returns
     -------
@@ -89,7 +128,7 @@ def nested_pieces(mesh: TetMesh, first: NDArray[np.int64], second: NDArray[np.in
         A place each.
     """
     m = len(mesh.tets)
-    links = coo_array((np.ones(len(first), np.int8), (first, second)), shape=(m, m))
+    links = coo_array((np.ones(len(shared[0]), np.int8), shared), shape=(m, m))
     n_pieces, piece = connected_components(links, directed=False)
     if n_pieces == 1:
         return []
@@ -101,9 +140,7 @@ def nested_pieces(mesh: TetMesh, first: NDArray[np.int64], second: NDArray[np.in
         near = np.flatnonzero((piece != p) & (low <= centre).all(axis=1) & (centre <= high).all(axis=1))
         holders = near[_holds(corners[near], centre)]
         if len(holders):
-            found.append(
-                place(centre, "target", f"piece {p} of the image lies inside piece {piece[holders[0]]}")
-            )
+            found.append(place(centre, space, f"piece {p} lies inside piece {piece[holders[0]]}"))
     return found
 
 

@@ -60,11 +60,10 @@ def _segment_meets_segment(points: Floats, p: int, q: int, a: int, b: int) -> bo
     """True when two closed segments in space meet: in one plane, and meeting along all three axes."""
     if orient_3d(points, p, q, a, b) != 0:
         return False
-    return (
-        _segments_meet_2d(points, 0, p, q, a, b)
-        and _segments_meet_2d(points, 1, p, q, a, b)
-        and _segments_meet_2d(points, 2, p, q, a, b)
-    )
+    for axis in range(3):  # noqa: SIM110  (compiled code has no all())
+        if not _segments_meet_2d(points, axis, p, q, a, b):
+            return False
+    return True
 
 
 @njit(cache=True)
@@ -100,10 +99,38 @@ def _apart(points: Floats, s: tuple[int, int, int], t: tuple[int, int, int]) -> 
 
 
 @njit(cache=True)
+def _coplanar(points: Floats, s: tuple[int, int, int], t: tuple[int, int, int]) -> bool:
+    """True when all of `t` lies in the plane of `s`."""
+    for c in range(3):  # noqa: SIM110
+        if orient_3d(points, s[0], s[1], s[2], t[c]) != 0:
+            return False
+    return True
+
+
+@njit(cache=True)
+def _beside(points: Floats, axis: int, s: tuple[int, int, int], t: tuple[int, int, int]) -> bool:
+    """True when an edge of `s` has all of `t` strictly on its outer side, seen along `axis`."""
+    inner = orient_2d(points, axis, s[0], s[1], s[2])
+    for e in range(3):
+        a, b = s[e], s[(e + 1) % 3]
+        outer = -inner
+        if (
+            orient_2d(points, axis, a, b, t[0]) == outer
+            and orient_2d(points, axis, a, b, t[1]) == outer
+            and orient_2d(points, axis, a, b, t[2]) == outer
+        ):
+            return True
+    return False
+
+
+@njit(cache=True)
 def _free_pair_crosses(points: Floats, s: tuple[int, int, int], t: tuple[int, int, int]) -> bool:
     """Two triangles without a common corner."""
     if _apart(points, s, t) or _apart(points, t, s):
         return False
+    axis = _axis_of(points, s)
+    if axis >= 0 and _coplanar(points, s, t) and _axis_of(points, t) >= 0:
+        return not (_beside(points, axis, s, t) or _beside(points, axis, t, s))
     for e in range(3):
         f = (e + 1) % 3
         if _segment_meets_triangle(points, s[e], s[f], t) or _segment_meets_triangle(points, t[e], t[f], s):
@@ -152,17 +179,6 @@ def _pair_crosses(points: Floats, s: Ints, t: Ints) -> bool:
 
 
 @njit(cache=True)
-def _boxes(points: Floats, triangles: Ints) -> tuple[Floats, Floats]:
-    """(m, 3) lower and upper corners of the triangles' boxes."""
-    low, high = np.empty((len(triangles), 3)), np.empty((len(triangles), 3))
-    for t in range(len(triangles)):
-        for c in range(3):
-            x, y, z = points[triangles[t, 0], c], points[triangles[t, 1], c], points[triangles[t, 2], c]
-            low[t, c], high[t, c] = min(x, y, z), max(x, y, z)
-    return low, high
-
-
-@njit(cache=True)
 def _fill_cells(first: Ints, last: Ints, shape: Ints) -> tuple[Ints, Ints]:
     """Which triangles reach each cell, as a compressed list (ascending in each cell)."""
     start = np.zeros(shape[0] * shape[1] * shape[2] + 1, np.int64)
@@ -198,15 +214,14 @@ def _meets_first_here(
 
 
 @njit(cache=True)
-def _crossing_pairs(points: Floats, triangles: Ints, shape: Ints) -> Ints:
-    low, high = _boxes(points, triangles)
-    first, last = np.empty((len(low), 3), np.int64), np.empty((len(low), 3), np.int64)
-    for c in range(3):
-        origin = low[:, c].min()
-        step = (high[:, c].max() - origin) / shape[c]
-        for t in range(len(low)):
-            first[t, c] = min(int((low[t, c] - origin) / step), shape[c] - 1) if step > 0.0 else 0
-            last[t, c] = min(int((high[t, c] - origin) / step), shape[c] - 1) if step > 0.0 else 0
+def _crossing_pairs(
+    points: Floats, triangles: Ints, low: Floats, high: Floats, first: Ints, last: Ints
+) -> Ints:
+    """All pairs that cross, cell by cell; `first` and `last` are the cells of the triangles' boxes."""
+    shape = np.ones(3, np.int64)
+    for t in range(len(last)):
+        for c in range(3):
+            shape[c] = max(shape[c], last[t, c] + 1)
     start, held = _fill_cells(first, last, shape)
     pairs, n = np.empty((64, 2), np.int64), 0
     for cell in range(len(start) - 1):
@@ -218,23 +233,22 @@ def _crossing_pairs(points: Floats, triangles: Ints, shape: Ints) -> Ints:
                     continue
                 if _pair_crosses(points, triangles[s], triangles[t]):
                     if n == len(pairs):
-                        pairs = np.concatenate((pairs, np.empty_like(pairs)))
+                        longer = np.empty((2 * n, 2), np.int64)
+                        for i in range(n):
+                            longer[i, 0], longer[i, 1] = pairs[i, 0], pairs[i, 1]
+                        pairs = longer
                     pairs[n, 0], pairs[n, 1] = s, t
                     n += 1
-    return pairs[:n].copy()
+    return pairs[:n]
 
 
-def _cells_along(points: Floats, triangles: Ints) -> Ints:
-    """(3,) cells of the grid: about as large as the mean box of a triangle, at most two a triangle."""
-    corners = points[triangles]
-    box = corners.max(axis=1) - corners.min(axis=1)
-    extent = corners.max(axis=(0, 1)) - corners.min(axis=(0, 1))
-    edge = max(float(box.mean()), 1e-30)
-    while True:
-        shape = np.clip(np.ceil(extent / edge), 1, 1024).astype(np.int64)
-        if shape.prod() <= max(8, 2 * len(triangles)):
-            return shape
+def _cells_of(low: Floats, high: Floats) -> tuple[Ints, Ints]:
+    """(m, 3) first and last cell of each box, in cells about as large as the mean box, two a box at most."""
+    origin, extent = low.min(axis=0), high.max(axis=0) - low.min(axis=0)
+    edge = max(float((high - low).mean()), float(extent.max()) / 1024, 1e-30)
+    while np.ceil(extent / edge + 1).prod() > max(8, 2 * len(low)):
         edge *= 1.25
+    return ((low - origin) / edge).astype(np.int64), ((high - origin) / edge).astype(np.int64)
 
 
 def triangle_crossings(points: Floats, triangles: Ints) -> Ints:
@@ -263,6 +277,9 @@ def triangle_crossings(points: Floats, triangles: Ints) -> Ints:
         return np.empty((0, 2), np.int64)
     if not in_exact_range(points[np.unique(triangles)]).all():
         raise ValueError("a coordinate is not 0 and not between 1e-75 and 1e75: crossings cannot be exact")
-    pairs = _crossing_pairs(points, triangles, _cells_along(points, triangles))
+    corners = points[triangles]
+    low, high = corners.min(axis=1), corners.max(axis=1)
+    pairs = _crossing_pairs(points, triangles, low, high, *_cells_of(low, high))
     order = np.lexsort((pairs[:, 1], pairs[:, 0]))
-    return np.array(pairs[order], np.int64)
+    found: Ints = pairs[order]
+    return found

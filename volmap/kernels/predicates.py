@@ -146,6 +146,8 @@ def orient_2d(points: NDArray[np.float64], axis: int, i: int, j: int, k: int) ->
         return 1
     if left - right < -size:
         return -1
+    if size == 0.0:
+        return 0
     d = _differences(points, i, (j, k, k))
     expansion = np.empty(20)
     n = 0
