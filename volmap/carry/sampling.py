@@ -7,10 +7,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.kernels.trilinear import sample
+from volmap.kernels.trilinear import homecoming, sample
 from volmap.types import GridField, InputError, VolumeMap
 
-_CHUNK = 1_000_000
 N_RANDOM = 100_000
 
 
@@ -80,38 +79,25 @@ def round_trip(there: GridField, back: GridField) -> RoundTrip:
             found=f"{there.grid_space} to {there.points_into} and {back.grid_space} to {back.points_into}",
             expected="one to lead back where the other starts",
         )
-    voxel = np.flatnonzero(there.support)
-    error = np.empty(len(voxel), np.float32)
-    for first in range(0, len(voxel), _CHUNK):
-        error[first : first + _CHUNK] = _way_home(there, back, voxel[first : first + _CHUNK])
-    return _summary(there, voxel, error)
+    to_index = np.asarray(np.linalg.inv(back.grid.affine), np.float64)
+    distance = homecoming(there.displacement, back.displacement, there.grid.affine, to_index)
+    known = np.flatnonzero(~np.isnan(distance))
+    return _summary(there, known, distance.ravel()[known])
 
 
-def _way_home(there: GridField, back: GridField, voxel: NDArray[np.int64]) -> NDArray[np.float64]:
-    """(n,) distances between voxel centres and where they come back to, mm; NaN where undefined."""
-    start = _centres(there, voxel)
-    away = start + there.displacement.reshape(-1, 3)[voxel]
-    home = away + sample_field(back, away)[0]
-    return np.asarray(np.linalg.norm(home - start, axis=1))
-
-
-def _centres(field: GridField, voxel: NDArray[np.int64]) -> NDArray[np.float64]:
-    """(n, 3) world places of voxels given by their flat number, mm."""
-    return field.grid.to_world(np.stack(np.unravel_index(voxel, field.grid.shape), axis=1))
-
-
-def _summary(there: GridField, voxel: NDArray[np.int64], error: NDArray[np.float32]) -> RoundTrip:
-    known = np.flatnonzero(~np.isnan(error))
-    if not len(known):
+def _summary(there: GridField, voxel: NDArray[np.int64], distance: NDArray[np.float32]) -> RoundTrip:
+    """Numbers of the voxels (flat, in order) that came home."""
+    if not len(voxel):
         nan = float("nan")
         return RoundTrip(nan, nan, nan, 0.0, 0, (nan, nan, nan))
-    worst = _centres(there, voxel[known[error[known].argmax()]][None])[0]
+    place = np.unravel_index(voxel[distance.argmax()], there.grid.shape)
+    worst = there.grid.to_world(np.array([place], np.float64))[0]
     return RoundTrip(
-        mean_mm=float(error[known].mean(dtype=np.float64)),
-        p95_mm=float(np.percentile(error[known], 95)),
-        max_mm=float(error[known].max()),
-        coverage=len(known) / len(voxel),
-        n_voxels=len(known),
+        mean_mm=float(distance.mean(dtype=np.float64)),
+        p95_mm=float(np.percentile(distance, 95)),
+        max_mm=float(distance.max()),
+        coverage=len(voxel) / int(np.count_nonzero(there.support)),
+        n_voxels=len(voxel),
         worst_mm=(float(worst[0]), float(worst[1]), float(worst[2])),
     )
 

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.carry.fields import tets_at_centres
+from volmap.kernels.nearest import nearest_labels
 from volmap.kernels.rasterise import values_by_slab
 from volmap.kernels.trilinear import sample
 from volmap.types import (
@@ -20,9 +21,6 @@ from volmap.types import (
     TetMesh,
     VolumeMap,
 )
-
-# A preimage half-way between two voxels belongs to the lower one, however the last bit was rounded.
-_HALF_WAY = 1e-6
 
 
 def pull_labels(
@@ -47,7 +45,7 @@ def pull_labels(
     findings = _covering(volume.grid, onto, volume_map, volume.name)
     labels = np.zeros(onto.shape, np.uint16)
     for slab, index in _preimages(volume.grid, volume_map, onto):
-        labels[slab] = _nearest(volume.labels, index)
+        labels[slab] = nearest_labels(volume.labels, index)
     carried = LabelVolume(onto, labels, volume.names, volume.name)
     return carried, findings + _losses(volume, carried, volume_map.mesh)
 
@@ -77,15 +75,6 @@ def _preimages(of: Grid, volume_map: VolumeMap, onto: Grid) -> Iterator[tuple[sl
     owner = tets_at_centres(image_mesh, onto)
     index_values = of.to_index(volume_map.mesh.points)
     return values_by_slab(onto.to_index(image_mesh.points), image_mesh.tets, index_values, owner)
-
-
-def _nearest(labels: NDArray[np.uint16], index: NDArray[np.float64]) -> NDArray[np.uint16]:
-    """Labels of the voxels that hold the places; 0 where there is none."""
-    voxel = np.ceil(index - 0.5 - _HALF_WAY)
-    inside = ((voxel >= 0) & (voxel < labels.shape)).all(axis=-1)
-    found = np.zeros(index.shape[:-1], np.uint16)
-    found[inside] = labels[tuple(voxel[inside].astype(np.int64).T)]
-    return found
 
 
 def _covering(of: Grid, onto: Grid, volume_map: VolumeMap, name: str) -> tuple[Finding, ...]:
@@ -129,9 +118,10 @@ def _losses(volume: LabelVolume, carried: LabelVolume, mesh: TetMesh) -> tuple[F
     before = np.bincount(volume.labels.ravel(), minlength=65536)
     outside = tets_at_centres(mesh, volume.grid) < 0
     left = np.bincount(volume.labels[outside], minlength=65536)
+    present = carried.present
     findings = []
     for label in volume.present:
-        if label not in carried.present:
+        if label not in present:
             sentence = f"{volume.name_of(label)} has no voxel on the new grid"
             findings.append(Finding(Level.WARN, "label-lost", volume.name, sentence))
         part = left[label] / before[label]

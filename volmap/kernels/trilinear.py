@@ -30,36 +30,109 @@ def sample(values: NDArray[np.float32], index: NDArray[np.float64]) -> NDArray[n
     (n, c) float64
         NaN where a voxel is missing.
     """
-    locked = np.ascontiguousarray(values, np.float32).view()
-    locked.setflags(write=False)  # one kind of array for the kernel, without a copy of a big field
     found = np.empty((len(index), values.shape[3]))
-    _sample(locked, plain(index, np.float64), found)
+    _sample(_locked(values), plain(index, np.float64), found)
     return found
+
+
+def homecoming(
+    there: NDArray[np.float32],
+    back: NDArray[np.float32],
+    to_world: NDArray[np.float64],
+    to_index: NDArray[np.float64],
+) -> NDArray[np.float32]:
+    """How far from home each voxel centre ends when one field sends it out and the other back.
+
+    Parameters
+    ----------
+    there : (I, J, K, 3) float32, mm
+    back : (A, B, C, 3) float32, mm
+    to_world : (4, 4) float64
+        Voxel indices of `there` to world mm.
+    to_index : (4, 4) float64
+        World mm to voxel indices of `back`.
+
+    Returns
+    -------
+    (I, J, K) float32, mm
+        NaN where either way is not defined.
+    """
+    distance = np.empty(there.shape[:3], np.float32)
+    _go_and_return(
+        _locked(there), _locked(back), plain(to_world, np.float64), plain(to_index, np.float64), distance
+    )
+    return distance
+
+
+def _locked(values: NDArray[np.float32]) -> NDArray[np.float32]:
+    """A read-only view: one kind of array for the kernels, without a copy of a big field."""
+    view = np.ascontiguousarray(values, np.float32).view()
+    view.setflags(write=False)
+    return view
+
+
+@njit(cache=True, inline="always")
+def _axis(x, n):  # type: ignore[no-untyped-def]
+    """The voxel at or below x and the share of the next one; -1 when x is beyond the outer centres."""
+    if not -_AT_CENTRE <= x <= n - 1 + _AT_CENTRE:
+        return -1, 0.0
+    low = int(np.floor(x + _AT_CENTRE))
+    share = x - low
+    return low, share if share > _AT_CENTRE else 0.0
+
+
+@njit(cache=True, inline="always")
+def _between(values, i, j, k, a, b, c, v):  # type: ignore[no-untyped-def]
+    """Component v in the cell of voxel (i, j, k), at shares (a, b, c) of the next voxels."""
+    total = 0.0
+    for di in range(2 if a > 0.0 else 1):
+        p = a if di else 1.0 - a
+        for dj in range(2 if b > 0.0 else 1):
+            q = p * (b if dj else 1.0 - b)
+            for dk in range(2 if c > 0.0 else 1):
+                total += q * (c if dk else 1.0 - c) * values[i + di, j + dj, k + dk, v]
+    return total
 
 
 @njit(cache=True, parallel=True)
 def _sample(values, index, found):  # type: ignore[no-untyped-def]
-    """Sum of the corners of the cell, each with the product of its three shares."""
+    """One place after the other."""
     for n in prange(index.shape[0]):
-        found[n] = np.nan
-        low, share = np.empty(3, np.int64), np.empty(3)
-        inside = True
-        for d in range(3):
-            if not -_AT_CENTRE <= index[n, d] <= values.shape[d] - 1 + _AT_CENTRE:
-                inside = False
-                break
-            low[d] = int(np.floor(index[n, d] + _AT_CENTRE))
-            share[d] = index[n, d] - low[d]
-            if share[d] <= _AT_CENTRE:
-                share[d] = 0.0
-        if not inside:
-            continue
-        found[n] = 0.0
-        for corner in range(8):
-            a, b, c = corner >> 2, (corner >> 1) & 1, corner & 1
-            weight = share[0] if a else 1.0 - share[0]
-            weight *= share[1] if b else 1.0 - share[1]
-            weight *= share[2] if c else 1.0 - share[2]
-            if weight > 0.0:
-                for v in range(values.shape[3]):
-                    found[n, v] += weight * values[low[0] + a, low[1] + b, low[2] + c, v]
+        i, a = _axis(index[n, 0], values.shape[0])
+        j, b = _axis(index[n, 1], values.shape[1])
+        k, c = _axis(index[n, 2], values.shape[2])
+        for v in range(values.shape[3]):
+            if i < 0 or j < 0 or k < 0:
+                found[n, v] = np.nan
+            else:
+                found[n, v] = _between(values, i, j, k, a, b, c, v)
+
+
+@njit(cache=True, parallel=True)
+def _go_and_return(there, back, to_world, to_index, distance):  # type: ignore[no-untyped-def]
+    """x + u(x) = y, then the length of u(x) + v(y)."""
+    for p in prange(there.shape[0]):
+        y = np.empty(3)
+        for q in range(there.shape[1]):
+            for r in range(there.shape[2]):
+                distance[p, q, r] = np.nan
+                if np.isnan(there[p, q, r, 0]):
+                    continue
+                for d in range(3):
+                    y[d] = to_world[d, 0] * p + to_world[d, 1] * q + to_world[d, 2] * r + to_world[d, 3]
+                    y[d] += there[p, q, r, d]
+                i, a = _axis(_row(to_index, 0, y), back.shape[0])
+                j, b = _axis(_row(to_index, 1, y), back.shape[1])
+                k, c = _axis(_row(to_index, 2, y), back.shape[2])
+                if i < 0 or j < 0 or k < 0:
+                    continue
+                square = 0.0
+                for d in range(3):
+                    square += (there[p, q, r, d] + _between(back, i, j, k, a, b, c, d)) ** 2
+                distance[p, q, r] = np.sqrt(square)
+
+
+@njit(cache=True, inline="always")
+def _row(matrix, d, y):  # type: ignore[no-untyped-def]
+    """Component d of an affine map."""
+    return matrix[d, 0] * y[0] + matrix[d, 1] * y[1] + matrix[d, 2] * y[2] + matrix[d, 3]

@@ -34,7 +34,7 @@ class GridField(Frozen):
     def __post_init__(self) -> None:
         u = self._own("displacement", np.float32, (*self.grid.shape, 3))
         holes = np.isnan(u)
-        if (holes.any(axis=3) != holes.all(axis=3)).any():
+        if any((holes[..., 0] != holes[..., d]).any() for d in (1, 2)):
             raise InputError("a displacement is either a whole vector or NaN", where="GridField.displacement")
 
     @property
