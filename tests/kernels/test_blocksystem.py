@@ -18,7 +18,7 @@ def mesh():
 
 
 def random_parts(tets, seed):
-    """Per tet: a random symmetric 12x12 matrix whose block rows sum to zero, as its six blocks; and forces."""
+    """Per tet a random symmetric 12x12 matrix whose block rows sum to zero, as six blocks; and forces."""
     rng = np.random.default_rng(seed)
     blocks = np.empty((len(tets), 6, 3, 3))
     for t in range(len(tets)):

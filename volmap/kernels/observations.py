@@ -1,7 +1,7 @@
 """Quadratic pulls on points of a mesh: boundary matches and guides alike.
 
-An observation says that the point ``sum_c weight_c x_corner_c`` should lie at an anchor: fully along a normal,
-and by a share of it across.
+An observation says that the point ``sum_c weight_c x_corner_c`` should lie at an anchor: fully along a
+normal, and by a share of it across.
 """
 
 from __future__ import annotations

@@ -1,1 +1,7 @@
-"""mapping"""
+"""Mapping stage: a mesh and a target's label surfaces in, a fold-free map out."""
+
+from volmap.mapping.alignment import Alignment, align
+from volmap.mapping.settings import MapSettings
+from volmap.mapping.solve import Solved, map_mesh
+
+__all__ = ["Alignment", "MapSettings", "Solved", "align", "map_mesh"]

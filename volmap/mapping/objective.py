@@ -1,0 +1,95 @@
+"""What is minimised: distortion of all tets, boundary matches and guides."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from volmap.kernels import blocksystem, distortion, observations, steps, tets
+from volmap.kernels.energies import ENERGIES
+from volmap.kernels.observations import Observations
+
+Floats = NDArray[np.float64]
+
+SAFETY = 0.9  # of the largest step that keeps every tet positive
+
+
+@dataclass(frozen=True, eq=False)
+class Value:
+    """Total objective and its distortion part; both infinite where a tet is not positive."""
+
+    total: float
+    distortion: float
+
+
+class Objective:
+    """``(1/V) sum v_t W_S(F_t) + pulls`` over the image points of a mesh.
+
+    Parameters
+    ----------
+    points : (n, 3) float64, mm
+        Of the source mesh.
+    mesh_tets : (m, 4) int64
+    energy : str
+    """
+
+    def __init__(self, points: Floats, mesh_tets: NDArray[np.int64], *, energy: str) -> None:
+        n, m = len(points), len(mesh_tets)
+        self.code = ENERGIES[energy]
+        self.tets = mesh_tets
+        self.pattern = blocksystem.pattern_of(mesh_tets, n)
+        self.shape_gradients = tets.shape_gradients(points, mesh_tets)
+        volumes = tets.signed_volumes(points, mesh_tets)
+        self.volume_mm3 = float(volumes.sum())
+        self.weights = volumes / self.volume_mm3
+        self.densities = np.empty(m)
+        self.forces, self.blocks = np.empty((m, 4, 3)), np.empty((m, 6, 3, 3))
+        self.gradient, self.diagonal = np.empty((n, 3)), np.empty((n, 3, 3))
+        self.off_diagonal = np.empty((len(self.pattern.edges), 3, 3))
+
+    def value(self, images: Floats, pulls: Observations) -> Value:
+        """The objective at image points (n, 3) mm."""
+        distortion.energies(self.code, images, self.tets, self.shape_gradients, self.densities)
+        spent = float(self.weights @ self.densities)
+        return Value(spent + observations.misfit(pulls, images), spent)
+
+    def differentiate(self, images: Floats, pulls: Observations) -> Value:
+        """The objective, with its gradient and convex second-derivative model kept for `newton_step`."""
+        distortion.derivatives(
+            self.code,
+            images,
+            self.tets,
+            self.shape_gradients,
+            self.weights,
+            True,
+            self.densities,
+            self.forces,
+            self.blocks,
+        )
+        blocksystem.gather(
+            self.pattern, self.forces, self.blocks, self.gradient, self.diagonal, self.off_diagonal
+        )
+        pulled = observations.add_pull(pulls, images, self.gradient, self.diagonal, self.off_diagonal)
+        spent = float(self.weights @ self.densities)
+        return Value(spent + pulled, spent)
+
+    def newton_step(self, *, tolerance: float, most: int) -> tuple[Floats, float, int]:
+        """Direction (n, 3) mm, its slope (negative), and the linear iterations it took."""
+        direction = np.empty_like(self.gradient)
+        iterations = blocksystem.solve(
+            self.pattern, self.diagonal, self.off_diagonal, -self.gradient, tolerance, most, direction
+        )
+        return direction, float((self.gradient * direction).sum()), int(iterations)
+
+    def largest_step(self, images: Floats, direction: Floats) -> float:
+        """Largest step in [0, 1] that surely keeps every tet positive."""
+        bounds = self.densities  # work space of the right size
+        steps.step_bounds(images, direction, self.tets, 1.0 / SAFETY, bounds)
+        return SAFETY * float(bounds.min())
+
+    def all_positive(self, images: Floats) -> bool:
+        """Plain signs, with a margin above rounding."""
+        volumes = tets.signed_volumes(images, self.tets)
+        return bool((volumes > 1e-12 * self.weights * self.volume_mm3).all())

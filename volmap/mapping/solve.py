@@ -1,0 +1,248 @@
+"""From an alignment to a settled map: a ladder of boundary weights, Newton steps that never invert a tet."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from volmap.kernels.observations import Observations, joined
+from volmap.mapping.alignment import Alignment, align
+from volmap.mapping.guides import guide_observations, guide_rms
+from volmap.mapping.matching import Matcher, Residual
+from volmap.mapping.objective import Objective
+from volmap.mapping.patches import matching_patches, steady_contacts
+from volmap.mapping.settings import MapSettings
+from volmap.types import (
+    InputError,
+    IterationRecord,
+    LandmarkPairs,
+    Outcome,
+    Progress,
+    Status,
+    Surface,
+    TetMesh,
+    VolumeMap,
+    silent,
+)
+
+Floats = NDArray[np.float64]
+
+ARMIJO = 1e-4
+SMALLEST_STEP = 1e-6
+FORCING = 0.02  # relative residual of the linear solves
+LINEAR_ITERATIONS = 400  # at most, a Newton step
+STALLED_STEPS = 3  # steps in a row that hardly move before it counts as stalled
+
+
+@dataclass(frozen=True)
+class Solved:
+    """An outcome with the alignment it started from and every alignment that was tried."""
+
+    outcome: Outcome
+    alignment: Alignment
+    tried: tuple[Alignment, ...]
+
+
+@dataclass
+class _State:
+    """Where the solve is; replaced piece by piece."""
+
+    images: Floats
+    boundary_weight: float
+    guide_weight: float
+    history: list[IterationRecord]
+    settling: bool = False
+    idle: int = 0
+
+
+def _weighted(o: Observations, factor: float) -> Observations:
+    return o._replace(strengths=o.strengths * factor)
+
+
+class _Solver:
+    """The pieces one solve needs."""
+
+    def __init__(
+        self,
+        mesh: TetMesh,
+        target: Surface,
+        settings: MapSettings,
+        *,
+        alignment: Alignment,
+        guides: LandmarkPairs | None,
+        uncertainty_mm: float,
+    ) -> None:
+        points, tets = np.array(mesh.points), np.array(mesh.tets)
+        self.settings, self.uncertainty_mm = settings, uncertainty_mm
+        self.objective = Objective(points, tets, energy=settings.energy)
+        steady, self.notes = steady_contacts(mesh.interfaces, target, alignment.matrix)
+        patches = matching_patches(mesh.interfaces, target, steady)
+        self.matcher = Matcher(
+            patches, points, np.array(target.points), pattern=self.objective.pattern, across=settings.across
+        )
+        self.guides = None
+        self.guide_sd_mm = 0.0
+        if guides is not None and guides.names:
+            assert guides.sd_mm is not None
+            self.guides = guide_observations(mesh, guides, pattern=self.objective.pattern)
+            self.guide_sd_mm = float(np.sqrt(len(guides.sd_mm) / (guides.sd_mm**-2.0).sum()))
+        self.unit = (0.02 * np.cbrt(self.objective.volume_mm3)) ** -2.0
+
+    def pulls(self, state: _State) -> tuple[Observations, Residual]:
+        matches, residual = self.matcher.match(state.images)
+        parts = [_weighted(matches, state.boundary_weight)]
+        if self.guides is not None:
+            parts.append(_weighted(self.guides, state.guide_weight))
+        return joined(parts), residual
+
+    def boundary_reached(self, residual: Residual) -> bool:
+        return residual.rms_mm <= self.uncertainty_mm
+
+    def guides_reached(self, images: Floats) -> bool:
+        return self.guides is None or guide_rms(self.guides, images) <= self.guide_sd_mm
+
+    def search(self, images: Floats, pulls: Observations, *, at: float) -> tuple[Floats, float, int]:
+        """One Newton step from objective value `at`: new images, share of the step taken, linear iterations."""
+        tolerance = 0.02 if at > 0 else 0.1
+        direction, slope, iterations = self.objective.newton_step(tolerance=tolerance, most=LINEAR_ITERATIONS)
+        length = min(1.0, self.objective.largest_step(images, direction))
+        while length > SMALLEST_STEP:
+            trial = images + length * direction
+            value = self.objective.value(trial, pulls)
+            if value.total <= at + ARMIJO * length * slope and self.objective.all_positive(trial):
+                return trial, length, iterations
+            length *= 0.5
+        return images, 0.0, iterations
+
+
+def _step(solver: _Solver, state: _State) -> tuple[float, Residual]:
+    """Match, differentiate, move; returns the relative decrease of the objective and the residual before."""
+    pulls, residual = solver.pulls(state)
+    before = solver.objective.differentiate(state.images, pulls)
+    images, length, iterations = solver.search(state.images, pulls, at=before.total)
+    after = solver.objective.value(images, pulls)
+    state.images = images
+    decrease = (before.total - after.total) / max(before.total, 1e-300)
+    smallest = float(np.linalg.det(_gradients(solver.objective, images)).min())
+    state.history.append(
+        IterationRecord(
+            len(state.history) + 1,
+            state.boundary_weight,
+            after.total,
+            after.distortion,
+            residual.rms_mm,
+            length,
+            iterations,
+            smallest,
+        )
+    )
+    state.idle = state.idle + 1 if length < 1e-3 else 0
+    return decrease, residual
+
+
+def _gradients(objective: Objective, images: Floats) -> Floats:
+    return np.asarray(np.einsum("tci,tcj->tij", images[objective.tets], objective.shape_gradients))
+
+
+def _raise_weights(solver: _Solver, state: _State, residual: Residual) -> bool:
+    """Raise what is not inside its uncertainty yet; False when nothing is left to raise."""
+    last = solver.settings.last_weight * solver.unit
+    factor = solver.settings.weight_factor
+    raised = False
+    if not solver.boundary_reached(residual) and state.boundary_weight < 0.999 * last:
+        state.boundary_weight = min(last, state.boundary_weight * factor)
+        raised = True
+    if not solver.guides_reached(state.images) and state.guide_weight < 99.9 * last:
+        state.guide_weight *= factor
+        raised = True
+    return raised
+
+
+def _climb(solver: _Solver, state: _State, progress: Progress) -> Status | None:
+    """Newton steps up the ladder and down to rest; None when steps ran out."""
+    settings = solver.settings
+    on_rung = 0
+    while len(state.history) < settings.most_steps:
+        decrease, residual = _step(solver, state)
+        on_rung += 1
+        note = f"boundary {residual.rms_mm:.3f} mm, distortion {state.history[-1].distortion:.4f}"
+        progress("map", len(state.history), 0, note)
+        if state.idle >= STALLED_STEPS:
+            return Status.STALLED
+        if state.settling:
+            if decrease < settings.settle:
+                reached = solver.boundary_reached(residual) and solver.guides_reached(state.images)
+                return Status.SETTLED if reached else Status.BOUNDARY_NOT_REACHED
+        elif on_rung >= settings.steps_a_rung or decrease < 20 * settings.settle:
+            on_rung = 0
+            _, residual = solver.pulls(state)
+            state.settling = not _raise_weights(solver, state, residual)
+    return None
+
+
+def uncertainty_of(settings: MapSettings, voxel_mm: float) -> float:
+    """The declared boundary uncertainty in mm."""
+    return settings.uncertainty_mm or settings.uncertainty_voxels * voxel_mm
+
+
+def map_mesh(
+    mesh: TetMesh,
+    target: Surface,
+    settings: MapSettings | None = None,
+    *,
+    voxel_mm: float = 1.0,
+    guides: LandmarkPairs | None = None,
+    progress: Progress = silent,
+) -> Solved:
+    """Map a mesh onto the label surfaces of another body.
+
+    Parameters
+    ----------
+    mesh : TetMesh
+        The source body; every tet positive.
+    target : Surface
+        Label surfaces of the target body, same labels, in the target's world.
+    settings : MapSettings
+    voxel_mm : float
+        "One voxel" as a length, for the declared uncertainty.
+    guides : LandmarkPairs, optional
+        Pairs that steer the map.
+    progress : Progress
+
+    Returns
+    -------
+    Solved
+
+    Raises
+    ------
+    InputError
+        The bodies hold different labels, or a guide lies outside the source body.
+    """
+    settings = settings or MapSettings()
+    here, there = set(mesh.present), {int(v) for v in np.unique(target.sides) if v}
+    if here != there:
+        raise InputError(
+            "the two scans hold different labels",
+            found=f"{sorted(here)} and {sorted(there)}",
+            expected="the same set",
+            refused=True,
+        )
+    progress("align", 0, 0)
+    alignment, tried = align(mesh.interfaces, target, start=settings.start, guides=guides, seed=settings.seed)
+    solver = _Solver(
+        mesh,
+        target,
+        settings,
+        alignment=alignment,
+        guides=guides,
+        uncertainty_mm=uncertainty_of(settings, voxel_mm),
+    )
+    weight = settings.first_weight * solver.unit
+    state = _State(alignment.apply(np.array(mesh.points)), weight, weight, [])
+    status = _climb(solver, state, progress) or Status.OUT_OF_STEPS
+    words = ", ".join(f"{a.name} {a.residual_mm:.2f} mm" for a in tried)
+    start = f"{alignment.name}, turned by {alignment.rotation_deg:.0f} degrees (residuals: {words})"
+    outcome = Outcome(VolumeMap(mesh, state.images), status, tuple(state.history), start, solver.notes)
+    return Solved(outcome, alignment, tried)
