@@ -1,0 +1,129 @@
+"""The methods paragraph, told from the settings."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from volmap.report import scales
+from volmap.report.inputs import ReportInput
+from volmap.report.scales import number
+from volmap.report.tables import leaves
+from volmap.types import Gate, Verdict
+
+
+def settings_rows(inputs: ReportInput) -> list[tuple[str, str]]:
+    """Every setting by its full name, as used; those of the inputs win over the certificate's."""
+    merged = {p: v for s in (inputs.certificate.settings, inputs.settings) for p, v in leaves(s)}
+    return [(scales.plain_text(".".join(p)), _shown(v)) for p, v in merged.items()]
+
+
+def version_rows(inputs: ReportInput) -> list[tuple[str, str]]:
+    """Software and versions."""
+    return [
+        (scales.plain_text(".".join(p)), scales.plain_text(str(v)))
+        for p, v in leaves(inputs.certificate.versions)
+    ]
+
+
+def _shown(value: Any) -> str:
+    if isinstance(value, list | tuple):
+        return scales.plain_text(", ".join(_shown(v) for v in value), 300)
+    return number(value, 4)
+
+
+def methods(inputs: ReportInput) -> list[str]:
+    """Sentences that say what was done; only what is known is told."""
+    known = {p[-1]: v for s in (inputs.certificate.settings, inputs.settings) for p, v in leaves(s) if p}
+    told = [
+        _meshing(inputs, known),
+        _solving(inputs, known),
+        _guiding(inputs),
+        _signs(inputs),
+        _ending(inputs),
+        _checking(inputs),
+        _software(inputs),
+    ]
+    return [t for t in told if t]
+
+
+def _meshing(inputs: ReportInput, known: Mapping[str, Any]) -> str:
+    mesh = inputs.map.mesh
+    parts = [f"{number(len(mesh.points))} points and {number(len(mesh.tets))} tetrahedra"]
+    if known.get("edge_mm") is not None:
+        parts.append(f"an edge length of {number(known['edge_mm'])} mm")
+    angle = inputs.certificate.mesh.get("min_dihedral_deg")
+    if angle is not None:
+        parts.append(f"a smallest dihedral angle of {number(angle)}°")
+    n = len(inputs.labels)
+    labels = "one label" if n == 1 else f"{n} labels with shared interfaces"
+    source = scales.plain_text(inputs.source.name)
+    return f"The source segmentation ({source}; {labels}) was meshed with {_and(parts)}."
+
+
+def _and(parts: list[str]) -> str:
+    return parts[0] if len(parts) == 1 else ", ".join(parts[:-1]) + " and " + parts[-1]
+
+
+def _solving(inputs: ReportInput, known: Mapping[str, Any]) -> str:
+    energy = known.get("energy")
+    density = "a distortion energy" if energy is None else f"the distortion energy “{_shown(energy)}”"
+    sentence = (
+        f"A piecewise affine map into the target ({scales.plain_text(inputs.target.name)}) was found by "
+        f"minimising {density}, symmetrised so that neither scan is preferred, together with the squared "
+        "distances between matching label interfaces, measured in both directions"
+    )
+    ladder = next(
+        (known[k] for k in ("ladder", "rungs", "boundary_weights") if known.get(k) is not None), None
+    )
+    if ladder is not None:
+        sentence += f", whose weight rose over the ladder {_shown(ladder)}"
+    if inputs.history:
+        steps = len(inputs.history)
+        linear = sum(h.linear_iterations for h in inputs.history)
+        sentence += f", in {number(steps)} Newton steps ({number(linear)} linear iterations)"
+    return sentence + "."
+
+
+def _guiding(inputs: ReportInput) -> str:
+    guides = 0 if inputs.checks is None else inputs.checks.roles.count("guide")
+    if not guides:
+        return "No landmark steered the map."
+    words = "landmarks steered the map and count" if guides > 1 else "landmark steered the map and counts"
+    return f"{number(guides)} guide {words} as no evidence."
+
+
+def _gate(inputs: ReportInput, name: str) -> Gate | None:
+    return next((g for g in inputs.certificate.gates if g.name == name), None)
+
+
+def _signs(inputs: ReportInput) -> str:
+    gate = _gate(inputs, "inverted_tets")
+    if gate is None or gate.verdict is Verdict.NOT_ASSESSED or not isinstance(gate.value, int | float):
+        return "The orientation of the mapped tetrahedra was not certified."
+    count = "none" if gate.value == 0 else number(int(gate.value))
+    return (
+        f"The orientation of every mapped tetrahedron was decided with exact arithmetic; {count} "
+        f"{'was' if gate.value <= 1 else 'were'} inverted."
+    )
+
+
+def _ending(inputs: ReportInput) -> str:
+    if not inputs.certificate.status:
+        return ""
+    return f"The solve ended with the statement: “{scales.plain_text(inputs.certificate.status, 400)}”"
+
+
+def _checking(inputs: ReportInput) -> str:
+    checks = 0 if inputs.checks is None else inputs.checks.roles.count("check")
+    if not checks:
+        return "No independent landmark was available to check the interior."
+    return (
+        f"{number(checks)} independent check landmark{'s were' if checks > 1 else ' was'} carried by the map "
+        "and by an affine baseline, and the distance to the observed partner was measured in the target."
+    )
+
+
+def _software(inputs: ReportInput) -> str:
+    rows = version_rows(inputs)
+    return "Software: " + ", ".join(f"{name} {version}" for name, version in rows) + "." if rows else ""
