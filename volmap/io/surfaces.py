@@ -21,6 +21,7 @@ from volmap.types.errors import InputError
 
 FORMATS = {".stl": "stl", ".ply": "ply", ".off": "off", ".obj": "obj", ".vtk": "vtk", ".vtu": "vtu",
            ".msh": "gmsh", ".mesh": "medit", ".wkt": "wkt"}  # fmt: skip
+LARGEST_MM = 1e7
 
 
 def read_closed_surface(
@@ -88,8 +89,10 @@ def _triangles(mesh: Any, where: str) -> tuple[NDArray[np.float64], NDArray[np.i
     points = np.asarray(mesh.points, np.float64)
     blocks = [np.asarray(b.data, np.int64) for b in mesh.cells if b.type == "triangle" and len(b.data)]
     triangles = np.concatenate(blocks)
-    if points.ndim != 2 or points.shape[1] != 3 or not np.isfinite(points).all():
-        raise InputError("the points are not finite triples", where=where)
+    if points.ndim != 2 or points.shape[1] != 3 or not (np.abs(points) < LARGEST_MM).all():
+        raise InputError(
+            "the points are not finite triples", where=where, expected=f"coordinates below {LARGEST_MM:g} mm"
+        )
     if triangles.min() < 0 or triangles.max() >= len(points):
         raise InputError("a triangle names a point that does not exist", where=where)
     return points, triangles
