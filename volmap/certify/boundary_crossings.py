@@ -21,7 +21,7 @@ from volmap.certify.table import Limit
 from volmap.kernels.crossings import triangle_crossings
 from volmap.kernels.predicates import orientation_signs
 from volmap.kernels.topology import face_corners, match_faces
-from volmap.types.certificate import Gate, Verdict
+from volmap.types.certificate import Gate
 from volmap.types.tetmesh import TetMesh
 
 
@@ -52,7 +52,7 @@ def boundary_crossings(evidence: Evidence, limit: Limit, *, inverted: Gate) -> G
         where += [_crossing_place(body, triangles[pair], space) for pair in pairs[:MOST]] + nested[:MOST]
     total = sum(counts.values())
     value = {"count": total, **counts, "triangles": len(triangles)}
-    sentence = _sentence(value, positive=inverted.verdict is Verdict.PASS)
+    sentence = _sentence(value, positive=inverted.value["count"] == 0)
     return judged(limit, {"count": total}, value=value, sentence=sentence, where=where[:MOST])
 
 

@@ -139,11 +139,11 @@ def _limit(name: str, entry: Any, where: str) -> Limit:
     for key in ("unit", "source"):
         if not isinstance(entry.get(key), str) or not entry[key].strip():
             raise InputError(f"a gate does not say its {key}", where=where, expected=f"{key} = text")
+    levels = {level: _numbers(name, entry.get(level, {}), f"{where}.{level}") for level in _LEVELS}
     for level in ("warn", "fail"):
-        both = sorted(set(entry.get(level, {})) & set(entry.get(f"{level}_voxel", {})))
+        both = sorted(set(levels[level]) & set(levels[f"{level}_voxel"]))
         if both:
             raise InputError("a limit is given in two units", where=where, found=", ".join(both))
-    levels = {level: _numbers(name, entry.get(level, {}), f"{where}.{level}") for level in _LEVELS}
     return Limit(name, entry["unit"], entry["source"], **levels)
 
 
