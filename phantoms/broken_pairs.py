@@ -15,7 +15,7 @@ def make(bench: Bench) -> list[BrokenInput]:
     """Write them all."""
     labels = bench.target.labels
     x, y, z = ellipsoid_frame(bench.target.grid)
-    merged = np.where(labels == 2, 1, labels)
+    emptied = np.where(labels == 2, 0, labels)
     renumbered = np.where(labels == 2, 7, labels)
     ball = (x**2 + y**2 + z**2 < 18**2).astype(np.uint16)
     split = _split(x, y, z)
@@ -27,7 +27,7 @@ def make(bench: Bench) -> list[BrokenInput]:
             "label-missing",
             "the second scan lacks a label",
             bench.source.labels,
-            merged,
+            emptied,
             ("label", "2|core"),
         ),
         _pair(

@@ -33,10 +33,10 @@ PROTOCOLS = (
 NAMES = {1: "gel", 2: "rod", 3: "knob"}
 CONTRAST = Contrast(NAMES, {1: 110.0, 2: 170.0, 3: 60.0})
 PARTS = {
-    2: Inclusion((1.5, -20.0, 5.0), (6.0, 24.0, 8.0), (8.0, 0.0, 6.0), 2.5),
-    3: Inclusion((-2.5, 30.0, -7.0), (6.5, 9.0, 7.0), (0.0, 15.0, 20.0), 2.0),
+    2: Inclusion((1.0, -20.0, 5.0), (6.0, 24.0, 8.0), (8.0, 0.0, 6.0), 2.5),
+    3: Inclusion((-1.0, 30.0, -7.0), (6.0, 9.0, 7.0), (0.0, 15.0, 20.0), 2.0),
 }
-BEADS_IN = {1: 15, 2: 5, 3: 4}
+BEADS_IN = {1: 18, 2: 4, 3: 2}
 STORY = (
     "A thick, rounded slab of incompressible gel, about 26 x 112 x 46 mm when flat, with a rod and a "
     "knob of gel of another colour inside, is bent through 150 degrees at visit 0, 75 degrees at visit "

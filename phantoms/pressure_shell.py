@@ -17,17 +17,17 @@ from .phantom import Phantom, Points, Truth
 from .scanner import Contrast, Protocol, grid_around, scanned
 from .texture import Texture
 
-INNER_MM, LAYER_MM, OUTER_MM = 15.0, 22.0, 30.0
+LAYER_MM, OUTER_MM = 23.5, 30.0
 INNER_AT_VISIT_MM = (15.0, 18.0, 22.5)
 PROTOCOLS = (
     Protocol((1.2, 1.2, 1.5), "RAS"),
-    Protocol((1.2, 1.2, 1.6), "LAS", (6.0, -8.0, 10.0)),
-    Protocol((1.2, 1.2, 1.6), "PIR", (-9.0, 5.0, 12.0)),
+    Protocol((1.1, 1.1, 1.5), "LAS", (6.0, -8.0, 10.0)),
+    Protocol((1.1, 1.1, 1.5), "PIR", (-9.0, 5.0, 12.0)),
 )
 CONTRAST = Contrast({1: "inner layer", 2: "outer layer"}, {1: 150.0, 2: 100.0})
 BEADS_IN = {1: 8, 2: 16}
 STORY = (
-    "A thick hollow gel sphere of two layers (rest radii 15, 22 and 30 mm), incompressible, is inflated "
+    "A thick hollow gel sphere of two layers (rest radii 15, 23.5 and 30 mm), incompressible, is inflated "
     "by pressure until its cavity has the radius 18 mm (visit 1) and 22.5 mm (visit 2). The truth is "
     "the exact solution r^3 = R^3 + a^3 - A^3, in which every volume is kept: the volume ratio is 1 "
     "everywhere. The cavity is part of the shape, not a flaw of the segmentation: each layer has one "

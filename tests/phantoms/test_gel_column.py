@@ -2,7 +2,9 @@
 
 import numpy as np
 import pytest
+from scipy.ndimage import binary_dilation
 from scipy.ndimage import label as pieces
+from skimage.measure import euler_number
 from volmap_phantoms import column, make
 from volmap_phantoms.gel_column import MeshMotion
 from volmap_phantoms.hyperelastic import Solid, forces_and_stiffness
@@ -43,17 +45,17 @@ def test_stored_motion_is_the_equilibrium_of_the_code_that_made_it():
 
 
 def test_a_coarse_simulation_comes_near_the_stored_one(motion):
-    # rate: the same rig on coarser meshes comes nearer to the stored motion as the mesh is refined; the
-    # coarser one is within 1.5 mm (10 % of the mean displacement), the finer within half of that
+    # rate: the same rig on coarser meshes nears the stored motion as they are refined. Measured at visit 3,
+    # where the mean displacement is 15.6 mm: mean difference 0.76, 0.49, 0.21 mm at 2, 3 and 4 cells across
+    # (about order 1.5: quadratic tets, but stiffness jumps inside cells). A third of room is left.
     errors = []
-    for cells in ((2, 2, 5), (4, 4, 10)):
-        coarse = simulated(cells, substeps=1)
+    for cells in ((2, 2, 5), (3, 3, 7)):
+        coarse = simulated(cells, substeps=2)
         inside = np.isfinite(motion.to_material(coarse.points, 0)).all(axis=1)
         moved = motion.from_material(coarse.points[inside], 3) - coarse.points[inside]
         errors.append(np.linalg.norm(moved - coarse.displacements[3][inside], axis=1).mean())
-    print(errors)
-    assert errors[0] < 1.5
-    assert errors[1] < 0.5 * errors[0]
+    assert errors[0] < 1.0
+    assert errors[1] < 0.75 * errors[0]
 
 
 def test_no_tet_is_inverted_and_growth_is_what_was_asked(motion):
@@ -99,6 +101,10 @@ def test_labels_are_whole_and_clear_of_the_border(phantom):
         labels = visit.labels.labels
         assert visit.labels.present == (1, 2, 3)
         assert [pieces(labels == n)[1] for n in (1, 2, 3)] == [1, 1, 1]
+        # the gel holds two closed inclusions, which are two cavities of it: Euler numbers 3, 1, 1
+        assert [euler_number(labels == n, 3) for n in (1, 2, 3)] == [3, 1, 1]
+        for n in (2, 3):
+            assert np.unique(labels[binary_dilation(labels == n, iterations=2)]).tolist() == [1, n]
         assert labels[1:-1, 1:-1, 1:-1].sum() == labels.sum()
 
 
