@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import numpy as np
-import pytest
 
 from volmap.report import ReportInput
 from volmap.types import (
@@ -168,8 +167,3 @@ def make_inputs(n: int = 12, **changes) -> ReportInput:  # type: ignore[no-untyp
         "title": "",
     }
     return ReportInput(**(values | changes))
-
-
-@pytest.fixture(scope="session")
-def inputs() -> ReportInput:
-    return make_inputs()

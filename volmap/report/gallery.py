@@ -213,7 +213,7 @@ def _parts(scene: Scene, labels: tuple[int, ...]) -> Picture:
         rows = [[panel for pair in zip(*rows, strict=True) for panel in pair]]
     figure = plate(rows, foot_in=charts.BAR_IN)
     charts.colour_bar(figure, scene.limit, inverted=scene.inverted)
-    names = ", ".join(scene.inputs.source.name_of(v) for v in labels)
+    names = ", ".join(scales.plain_text(scene.inputs.source.name_of(v), 60) for v in labels)
     return finish(
         figure,
         alt=f"One label at a time ({names}), in the source and in the target, inside the "
@@ -275,19 +275,15 @@ def _cut_panel(
 ) -> Panel:
     middle, centre = scene.middle[side], scene.centres[side]
     at = centre + ((middle - centre) @ view.toward) * view.toward
-    height, width = shape
-    places = cuts.plane_points(view, at, mm_per_px=scale, height=height, width=width)
+    plane = cuts.Plane(view, at, scale, *shape)
     colours = scales.label_colours(scene.inputs.labels)
     if image is None:
-        ground = cuts.label_ground(volume, places, colours)
+        ground = cuts.label_ground(volume, plane, colours)
     else:
-        ground = cuts.image_ground(image, places, cuts.image_window(image))
+        ground = cuts.image_ground(image, plane, cuts.image_window(image))
     lines = [
-        line
-        for surface, dashed in ((own, False), (other, True))
-        for line in cuts.outlines(
-            surface, view, at, mm_per_px=scale, height=height, width=width, colours=colours, dashed=dashed
-        )
+        *cuts.outlines(own, plane, colours, dashed=False),
+        *cuts.outlines(other, plane, colours, dashed=True),
     ]
     axis = int(np.argmax(np.abs(view.toward)))
     heading = f"{_heading(side)}, {'xyz'[axis]} = {scales.fixed(middle[axis], 1)} mm, {view.words}"

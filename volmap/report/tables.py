@@ -156,13 +156,13 @@ def _unit_of(path: tuple[str, ...], unit: str) -> str:
 
 
 def _named(key: str, names: Mapping[int, str]) -> str:
-    """A key in words: a label's name, "99.9 %" for "p99_9", "mean above" for "mean_above"."""
+    """A key in words: a label's name, "P99.9" for "p99_9", "mean above" for "mean_above"."""
     if key.isdigit() and int(key) in names:
         return names[int(key)]
     percentile = re.fullmatch(r"p(\d+)(?:_(\d+))?(_.*)?", key)
     if percentile:
         whole, part, rest = percentile.groups(default="")
-        key = f"{whole}.{part} %{rest}" if part else f"{whole} %{rest}"
+        key = f"P{whole}.{part}{rest}" if part else f"P{whole}{rest}"
     return scales.plain_text(key.removesuffix("_mm").replace("_", " "), 60)
 
 
