@@ -50,10 +50,11 @@ def _radius(volume_mm3: float) -> float:
     return float((3.0 * volume_mm3 / (4.0 * np.pi)) ** (1 / 3))
 
 
-def drawn(mesh: TetMesh, like: LabelVolume) -> NDArray[np.int64]:
+def drawn(mesh: TetMesh, like: LabelVolume) -> NDArray[np.uint16]:
     """(I, J, K) label of the tet at each voxel centre of a grid; 0 outside the mesh."""
     owner = tets_on_grid(like.grid.to_index(mesh.points), mesh.tets, like.grid.shape)
-    return np.where(owner >= 0, mesh.labels[np.maximum(owner, 0)], 0)
+    label_of_owner = np.append(mesh.labels, 0).astype(np.uint16)  # owner -1, outside, takes the last
+    return label_of_owner[owner]
 
 
 def overlap(evidence: Evidence, limit: Limit) -> Gate:
@@ -75,7 +76,7 @@ def overlap(evidence: Evidence, limit: Limit) -> Gate:
 
 def _row(
     label: int,
-    solid: NDArray[np.int64],
+    solid: NDArray[np.uint16],
     scan: LabelVolume,
     own: LabelVolume | None,
     warn_mm: float | None,

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 MOST = 10
+_LOOKED_AT = 2000
 
 
 def place(point: NDArray[np.float64], space: str, note: str) -> dict[str, Any]:
@@ -42,7 +43,13 @@ def worst_places(
     list of (value, place)
         At most MOST.
     """
-    order = np.argsort(-values, kind="stable")[:2000]
+    candidates = (
+        np.sort(np.argpartition(-values, _LOOKED_AT)[:_LOOKED_AT])
+        if len(values) > _LOOKED_AT
+        else slice(None)
+    )
+    rows = np.arange(len(values))[candidates]
+    order = rows[np.argsort(-values[rows], kind="stable")]
     kept: list[int] = []
     for row in order:
         if len(kept) == MOST:

@@ -6,37 +6,15 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.ndimage import map_coordinates
 
 from volmap.certify.evidence import Evidence
 from volmap.certify.judge import judged, not_assessed
 from volmap.certify.places import ranked, worst_places
 from volmap.certify.statistics import summary
 from volmap.certify.table import Limit
+from volmap.kernels.there_and_back import round_trip_errors
 from volmap.types.certificate import Gate
 from volmap.types.gridfield import GridField
-
-
-def displacement_at(field: GridField, points: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Trilinear displacements of a field at world points; NaN where any of the eight voxels is undefined.
-
-    Parameters
-    ----------
-    field : GridField
-    points : (n, 3) float64, mm, RAS+
-
-    Returns
-    -------
-    (n, 3) float64, mm
-    """
-    index = field.grid.to_index(points).T
-    parts = [
-        map_coordinates(
-            np.asarray(field.displacement[..., c], np.float64), index, order=1, mode="constant", cval=np.nan
-        )
-        for c in range(3)
-    ]
-    return np.stack(parts, axis=1)
 
 
 def there_and_back(
@@ -53,12 +31,10 @@ def there_and_back(
     defined : int
         Voxel centres for which `first` is defined.
     """
-    voxels = np.argwhere(first.support)
-    points = first.grid.to_world(voxels.astype(np.float64))
-    reached = points + first.displacement[tuple(voxels.T)]
-    error = np.linalg.norm(reached + displacement_at(second, reached) - points, axis=1)
+    error = round_trip_errors(first.displacement, first.grid.affine, second.displacement, second.grid.affine)
     known = np.isfinite(error)
-    return points[known], error[known], len(points)
+    points = first.grid.to_world(np.argwhere(known).astype(np.float64))
+    return points, error[known].astype(np.float64), int(first.support.sum())
 
 
 def round_trip(evidence: Evidence, limit: Limit) -> Gate:

@@ -70,13 +70,18 @@ def smallest_determinants(displacement, axes, tets):  # type: ignore[no-untyped-
             for k in range(nk):
                 whole = True
                 for corner in range(8):
+                    if np.isnan(
+                        displacement[i + (corner >> 2), j + ((corner >> 1) & 1), k + (corner & 1), 0]
+                    ):
+                        whole = False
+                        break
+                if not whole:
+                    continue
+                for corner in range(8):
                     a, b, c = corner >> 2, (corner >> 1) & 1, corner & 1
                     for d in range(3):
                         u = displacement[i + a, j + b, k + c, d]
                         y[corner, d] = axes[d, 0] * a + axes[d, 1] * b + axes[d, 2] * c + u
-                    whole = whole and not np.isnan(y[corner, 0])
-                if not whole:
-                    continue
                 smallest = np.inf
                 for t in range(10):
                     size = volume if t < 8 else 2.0 * volume
@@ -95,7 +100,7 @@ def cube_determinants(displacement: NDArray[np.float32], affine: NDArray[np.floa
     affine : (4, 4) float64
         Of the grid; may be left-handed.
     """
-    u = np.array(displacement, np.float32, order="C")
+    u = np.require(displacement, np.float32, ["C", "W"])
     if min(u.shape[:3]) < 2:
         return np.empty(tuple(max(n - 1, 0) for n in u.shape[:3]))
     axes = np.array(affine[:3, :3], np.float64, order="C")
