@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import ArrayLike, DTypeLike, NDArray
 
 # How far below zero a coordinate may be before a point counts as outside: rounding, not geometry.
@@ -17,7 +17,7 @@ def plain(values: ArrayLike, dtype: DTypeLike) -> NDArray[Any]:
     return np.require(values, dtype, ["C", "W"])
 
 
-@njit(cache=True, parallel=True)
+@njit(cache=True)
 def barycentric_rows(points, tets):  # type: ignore[no-untyped-def]
     """Tables from which the coordinates of any place follow.
 
@@ -36,7 +36,7 @@ def barycentric_rows(points, tets):  # type: ignore[no-untyped-def]
         every comparison with it is false.
     """
     rows = np.empty((tets.shape[0], 4, 3))
-    for t in prange(tets.shape[0]):
+    for t in range(tets.shape[0]):
         edges = np.empty((3, 3))
         for r in range(3):
             for d in range(3):

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
 
 from volmap.kernels.barycentric import plain
@@ -33,10 +33,10 @@ def nearest_labels(labels: NDArray[np.uint16], index: NDArray[np.float64]) -> ND
     return found
 
 
-@njit(cache=True, parallel=True)
+@njit(cache=True)
 def _look_up(labels, index, found):  # type: ignore[no-untyped-def]
     """Round each index, half-way down."""
-    for n in prange(index.shape[0]):
+    for n in range(index.shape[0]):
         i = np.ceil(index[n, 0] - 0.5 - _HALF_WAY)
         j = np.ceil(index[n, 1] - 0.5 - _HALF_WAY)
         k = np.ceil(index[n, 2] - 0.5 - _HALF_WAY)
