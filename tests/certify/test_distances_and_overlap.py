@@ -5,7 +5,7 @@ import pytest
 
 from volmap.certify.boundary_distance import surface_distances
 from volmap.certify.overlap import dice, equivalent_shell_mm, shell_dice
-from volmap.certify.statistics import summary, weighted_mean, weighted_quantile
+from volmap.certify.statistics import even_summary, summary, weighted_mean, weighted_quantile
 from volmap.types import Surface
 
 GOLDEN = (1 + 5**0.5) / 2
@@ -141,3 +141,9 @@ def test_weighted_statistics():
         3,
     ]
     assert summary(np.arange(1.0, 101), np.ones(100)) == {"mean": 50.5, "p50": 50, "p95": 95, "max": 100}
+
+
+@pytest.mark.parametrize("n", [1, 2, 7, 19, 20, 21, 1000])
+def test_even_weights_need_no_sorting(n):
+    values = np.random.default_rng(n).normal(size=n)
+    assert even_summary(values) == pytest.approx(summary(values, np.ones(n)))

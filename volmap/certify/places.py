@@ -17,6 +17,15 @@ def place(point: NDArray[np.float64], space: str, note: str) -> dict[str, Any]:
     return {"point_mm": [round(float(c), 3) for c in point], "space": space, "note": note}
 
 
+def largest(values: NDArray[np.float64]) -> NDArray[np.int64]:
+    """Rows of the largest values, largest first, ties in order; a few thousand at most."""
+    if len(values) > _LOOKED_AT:
+        rows = np.sort(np.argpartition(-values, _LOOKED_AT)[:_LOOKED_AT])
+    else:
+        rows = np.arange(len(values))
+    return np.asarray(rows[np.argsort(-values[rows], kind="stable")])
+
+
 def worst_places(
     points: NDArray[np.float64],
     values: NDArray[np.float64],
@@ -43,13 +52,7 @@ def worst_places(
     list of (value, place)
         At most MOST.
     """
-    candidates = (
-        np.sort(np.argpartition(-values, _LOOKED_AT)[:_LOOKED_AT])
-        if len(values) > _LOOKED_AT
-        else slice(None)
-    )
-    rows = np.arange(len(values))[candidates]
-    order = rows[np.argsort(-values[rows], kind="stable")]
+    order = largest(values)
     kept: list[int] = []
     for row in order:
         if len(kept) == MOST:

@@ -9,32 +9,11 @@ from numpy.typing import NDArray
 
 from volmap.certify.evidence import Evidence
 from volmap.certify.judge import judged, not_assessed
-from volmap.certify.places import ranked, worst_places
-from volmap.certify.statistics import summary
+from volmap.certify.places import largest, ranked, worst_places
+from volmap.certify.statistics import even_summary
 from volmap.certify.table import Limit
 from volmap.kernels.there_and_back import round_trip_errors
 from volmap.types.certificate import Gate
-from volmap.types.gridfield import GridField
-
-
-def there_and_back(
-    first: GridField, second: GridField
-) -> tuple[NDArray[np.float64], NDArray[np.float64], int]:
-    """Where the voxel centres of `first` come back to through both fields.
-
-    Returns
-    -------
-    points : (n, 3) float64, mm
-        Voxel centres for which both fields are defined.
-    error_mm : (n,) float64
-        How far from itself each comes back.
-    defined : int
-        Voxel centres for which `first` is defined.
-    """
-    error = round_trip_errors(first.displacement, first.grid.affine, second.displacement, second.grid.affine)
-    known = np.isfinite(error)
-    points = first.grid.to_world(np.argwhere(known).astype(np.float64))
-    return points, error[known].astype(np.float64), int(first.support.sum())
 
 
 def round_trip(evidence: Evidence, limit: Limit) -> Gate:
@@ -49,11 +28,17 @@ def round_trip(evidence: Evidence, limit: Limit) -> Gate:
     value: dict[str, Any] = {}
     places: list[tuple[float, dict[str, Any]]] = []
     for name, (first, second, space) in orders.items():
-        points, error, defined = there_and_back(first, second)
-        if not len(points):
+        errors = round_trip_errors(
+            first.displacement, first.grid.affine, second.displacement, second.grid.affine
+        )
+        known = np.flatnonzero(np.isfinite(errors))
+        if not len(known):
             return not_assessed(limit, "the two fields have no place in common", voxel_mm=voxel_mm)
-        value[name] = summary(error, np.ones(len(error))) | {"coverage": len(points) / defined}
-        places += _worst(points, error, space, voxel_mm)
+        error = errors.ravel()[known].astype(np.float64)
+        value[name] = even_summary(error) | {"coverage": len(known) / int(first.support.sum())}
+        rows = largest(error)
+        voxels = np.stack(np.unravel_index(known[rows], errors.shape), axis=1)
+        places += _worst(first.grid.to_world(voxels.astype(np.float64)), error[rows], space, voxel_mm)
     worst = {k: max(value[name][k] for name in orders) for k in ("mean", "p95", "max")}
     sentence = (
         f"Forward and backward field undo each other to {worst['mean']:.4f} mm on average "

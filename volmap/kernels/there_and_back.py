@@ -8,9 +8,8 @@ from numpy.typing import NDArray
 
 
 @njit(cache=True)
-def _displaced(displacement, inverse, x, y):  # type: ignore[no-untyped-def]
+def _displaced(displacement, inverse, x, y, base, part):  # type: ignore[no-untyped-def]
     """Put ``x + u(x)`` into `y`; NaN where one of the voxels that count is undefined or missing."""
-    base, part = np.empty(3, np.int64), np.empty(3)
     for d in range(3):
         index = inverse[d, 3]
         for e in range(3):
@@ -38,7 +37,7 @@ def _displaced(displacement, inverse, x, y):  # type: ignore[no-untyped-def]
 def _errors(first, affine, second, inverse, found):  # type: ignore[no-untyped-def]
     """Fill `found` with the distance from each voxel centre of `first` to where it comes back."""
     for i in prange(first.shape[0]):
-        x, y, z = np.empty(3), np.empty(3), np.empty(3)
+        x, y, z, base, part = np.empty(3), np.empty(3), np.empty(3), np.empty(3, np.int64), np.empty(3)
         for j in range(first.shape[1]):
             for k in range(first.shape[2]):
                 if np.isnan(first[i, j, k, 0]):
@@ -47,7 +46,7 @@ def _errors(first, affine, second, inverse, found):  # type: ignore[no-untyped-d
                 for d in range(3):
                     x[d] = affine[d, 0] * i + affine[d, 1] * j + affine[d, 2] * k + affine[d, 3]
                     y[d] = x[d] + first[i, j, k, d]
-                _displaced(second, inverse, y, z)
+                _displaced(second, inverse, y, z, base, part)
                 total = 0.0
                 for d in range(3):
                     total += (z[d] - x[d]) ** 2
