@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from importlib import import_module
 from typing import TYPE_CHECKING
 
@@ -58,4 +59,5 @@ def make(name: str, *, seed: int = 0, voxel_mm: float | None = None) -> Phantom:
         )
     module = import_module(f".{name.replace('-', '_')}", __package__)
     made: Phantom = module.make(seed=seed, voxel_mm=voxel_mm)
-    return made
+    voxels = "its own" if voxel_mm is None else f"{voxel_mm:g}"
+    return replace(made, settings={"seed": str(seed), "voxel_mm": voxels})

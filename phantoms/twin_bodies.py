@@ -21,9 +21,8 @@ from .texture import Texture
 
 NAMES = {1: "bulk", 2: "node", 3: "stalk", 4: "lens"}
 CONTRAST = Contrast(NAMES, {1: 100.0, 2: 180.0, 3: 60.0, 4: 150.0})
-SITE_DEPTH = (
-    0.75  # sites lie at this share of a structure's half width, so a voxel's rounding keeps them inside
-)
+# Sites lie at this share of a structure's half width, so that a voxel's rounding keeps them inside.
+SITE_DEPTH = 0.75
 STORY = (
     "Two gel bodies cast from one family of moulds: an egg with two lobes and a dent, holding a node, a "
     "stalk and a lens. The second is a third larger in volume, is turned and shifted, has other "

@@ -76,6 +76,7 @@ def test_truth_record_holds_displacements_and_ratios(folder, phantom):
     assert list(record["pairs"]["0_to_2"]["displacement_mm"].values()) == pytest.approx(moved, abs=1e-4)
     assert record["pairs"]["0_to_1"]["volume_ratio"]["1"] == {"mean": 1.0, "min": 1.0, "max": 1.0}
     assert record["notice"] == caution()
+    assert record["settings"] == {"seed": "0", "voxel_mm": "2.5"}
     assert caution() in (folder / "README.md").read_text(encoding="utf-8")
 
 
