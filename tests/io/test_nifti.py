@@ -187,13 +187,16 @@ def test_digest_does_not_depend_on_how_a_file_stores_it(tmp_path):
     assert read_labels(tmp_path / "other.nii").sha256 not in digests
 
 
-def test_qform_alone_agrees_with_nibabel(tmp_path):
-    # Independent library: nibabel's quaternion code.
+@pytest.mark.parametrize("flip", [1, -1])
+def test_qform_alone_agrees_with_nibabel(tmp_path, flip):
+    # Independent library: nibabel's quaternion code; both handednesses.
     image = nib.Nifti1Image(np.ones((4, 4, 4), np.uint8), None)
-    image.set_qform(OBLIQUE, code=1)
+    image.set_qform(OBLIQUE @ np.diag([flip, 1, 1, 1]), code=1)
     image.set_sform(None, code=0)
     nib.save(image, tmp_path / "q.nii")
-    assert np.allclose(read_labels(tmp_path / "q.nii").grid.affine, image.get_qform(), atol=1e-6)
+    read = read_labels(tmp_path / "q.nii").grid.affine
+    assert np.allclose(read, image.get_qform(), atol=1e-6)
+    assert np.sign(np.linalg.det(read)) == flip
 
 
 def test_two_orientations_that_differ_are_warned_of_and_the_sform_wins(tmp_path):
