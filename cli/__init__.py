@@ -1,1 +1,1 @@
-"""Command line."""
+"""Floor 7: parse, one call, print, exit status; a short file a verb."""

@@ -16,6 +16,7 @@ from numba import njit, prange
 
 from volmap.kernels.energies import density
 
+CHUNK = 256  # tets that share one set of work arrays
 SWEEPS = 30  # Jacobi sweeps at most; five are enough for any F met so far
 
 
@@ -120,6 +121,14 @@ def _gradient_of(points, tets, shape_gradients, t, f):  # type: ignore[no-untype
     )
 
 
+@njit(cache=True)
+def _stretches(f, v, s):  # type: ignore[no-untyped-def]
+    """Turn f into U diag(s), in place; v and s written."""
+    rotate_to_stretches(f, v)
+    for k in range(3):
+        s[k] = sqrt(f[0, k] ** 2 + f[1, k] ** 2 + f[2, k] ** 2)
+
+
 @njit(cache=True, parallel=True)
 def energies(code, points, tets, shape_gradients, out):  # type: ignore[no-untyped-def]
     """W_S of every tet into out (m,); infinity where a tet is not positive.
@@ -134,17 +143,32 @@ def energies(code, points, tets, shape_gradients, out):  # type: ignore[no-untyp
     shape_gradients : (m, 4, 3) float64
         Of the source mesh, 1/mm.
     """
-    for t in prange(len(tets)):
+    for chunk in prange((len(tets) + CHUNK - 1) // CHUNK):
         f, v, s = np.empty((3, 3)), np.empty((3, 3)), np.empty(3)
         g, h, w = np.empty(3), np.empty((3, 3)), np.empty(3)
         g2, h2 = np.empty(3), np.empty((3, 3))
-        if _gradient_of(points, tets, shape_gradients, t, f) <= 0.0:
-            out[t] = np.inf
-        else:
-            rotate_to_stretches(f, v)
-            for k in range(3):
-                s[k] = sqrt(f[0, k] ** 2 + f[1, k] ** 2 + f[2, k] ** 2)
-            out[t] = symmetrised(code, s, g, h, w, g2, h2)
+        for t in range(chunk * CHUNK, min(len(tets), (chunk + 1) * CHUNK)):
+            if _gradient_of(points, tets, shape_gradients, t, f) <= 0.0:
+                out[t] = np.inf
+            else:
+                _stretches(f, v, s)
+                out[t] = symmetrised(code, s, g, h, w, g2, h2)
+
+
+@njit(cache=True)
+def _forces(weight, shape_gradient, u, v, g, turned, force):  # type: ignore[no-untyped-def]
+    """First derivative in the corners into force (4, 3); shape gradients in the frame of v into turned."""
+    for c in range(4):
+        for k in range(3):
+            turned[c, k] = (
+                v[0, k] * shape_gradient[c, 0]
+                + v[1, k] * shape_gradient[c, 1]
+                + v[2, k] * shape_gradient[c, 2]
+            )
+        for i in range(3):
+            force[c, i] = weight * (
+                u[i, 0] * g[0] * turned[c, 0] + u[i, 1] * g[1] * turned[c, 1] + u[i, 2] * g[2] * turned[c, 2]
+            )
 
 
 @njit(cache=True)
@@ -201,41 +225,23 @@ def derivatives(code, points, tets, shape_gradients, weights, clamp, out, forces
         Weighted second derivative for the corner pairs of `tets.EDGES`.  ``K_ba = K_ab^T`` and
         the rows of K sum to zero, so six blocks are the whole matrix.
     """
-    for t in prange(len(tets)):
+    for chunk in prange((len(tets) + CHUNK - 1) // CHUNK):
         f, v, s = np.empty((3, 3)), np.empty((3, 3)), np.empty(3)
         g, h, w = np.empty(3), np.empty((3, 3)), np.empty(3)
         g2, h2, u = np.empty(3), np.empty((3, 3)), np.empty((3, 3))
-        p, q = np.zeros((3, 3)), np.zeros((3, 3))
-        turned = np.empty((4, 3))
-        if _gradient_of(points, tets, shape_gradients, t, f) <= 0.0:
-            out[t] = np.inf
-            for c in range(4):
-                for i in range(3):
-                    forces[t, c, i] = 0.0
-            for e in range(6):
-                for i in range(3):
-                    for j in range(3):
-                        blocks[t, e, i, j] = 0.0
-        else:
-            rotate_to_stretches(f, v)
+        p, q, turned = np.zeros((3, 3)), np.zeros((3, 3)), np.empty((4, 3))
+        for t in range(chunk * CHUNK, min(len(tets), (chunk + 1) * CHUNK)):
+            if _gradient_of(points, tets, shape_gradients, t, f) <= 0.0:
+                out[t] = np.inf
+                forces[t] = 0.0
+                blocks[t] = 0.0
+                continue
+            _stretches(f, v, s)
             for k in range(3):
-                s[k] = sqrt(f[0, k] ** 2 + f[1, k] ** 2 + f[2, k] ** 2)
                 for i in range(3):
                     u[i, k] = f[i, k] / s[k]
             out[t] = symmetrised(code, s, g, h, w, g2, h2)
-            for c in range(4):
-                for k in range(3):
-                    turned[c, k] = (
-                        v[0, k] * shape_gradients[t, c, 0]
-                        + v[1, k] * shape_gradients[t, c, 1]
-                        + v[2, k] * shape_gradients[t, c, 2]
-                    )
-                for i in range(3):
-                    forces[t, c, i] = weights[t] * (
-                        u[i, 0] * g[0] * turned[c, 0]
-                        + u[i, 1] * g[1] * turned[c, 1]
-                        + u[i, 2] * g[2] * turned[c, 2]
-                    )
+            _forces(weights[t], shape_gradients[t], u, v, g, turned, forces[t])
             _parts(s, g, h, p, q, clamp, f, h2)
             e = 0
             for a in range(3):

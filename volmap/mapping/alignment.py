@@ -1,7 +1,8 @@
 """Where to start: rigid and affine alignments of two labelled surfaces.
 
 Several starts are refined by alternating closest points and least squares (Besl & McKay, IEEE PAMI 14(2),
-1992), first rigid, then affine; the smallest residual wins, and among nearly equal ones the smallest rotation.
+1992), first rigid, then affine; the smallest residual wins, and among nearly equal ones the smallest
+rotation.
 """
 
 from __future__ import annotations

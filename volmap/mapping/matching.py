@@ -22,7 +22,7 @@ def edge_numbers(pattern: Pattern, first: Ints, second: Ints) -> Ints:
     keys = pattern.edges[:, 0] * n + pattern.edges[:, 1]
     wanted = np.minimum(first, second) * n + np.maximum(first, second)
     place = np.minimum(np.searchsorted(keys, wanted), len(keys) - 1)
-    return np.where(keys[place] == wanted, place, -1)
+    return np.asarray(np.where(keys[place] == wanted, place, -1))
 
 
 def face_normals(points: Floats, triangles: Ints) -> Floats:
@@ -34,7 +34,7 @@ def face_normals(points: Floats, triangles: Ints) -> Floats:
 def unit(vectors: Floats) -> Floats:
     """Vectors of length one; zero stays zero."""
     length = np.linalg.norm(vectors, axis=1, keepdims=True)
-    return np.divide(vectors, length, out=np.zeros_like(vectors), where=length > 0)
+    return np.asarray(np.divide(vectors, length, out=np.zeros_like(vectors), where=length > 0))
 
 
 def at_points(values: Floats, triangles: Ints, n_points: int) -> Floats:

@@ -104,9 +104,8 @@ class _Solver:
         return self.guides is None or guide_rms(self.guides, images) <= self.guide_sd_mm
 
     def search(self, images: Floats, pulls: Observations, *, at: float) -> tuple[Floats, float, int]:
-        """One Newton step from objective value `at`: new images, share of the step taken, linear iterations."""
-        tolerance = 0.02 if at > 0 else 0.1
-        direction, slope, iterations = self.objective.newton_step(tolerance=tolerance, most=LINEAR_ITERATIONS)
+        """One Newton step from objective value `at`: new images, share of it taken, linear iterations."""
+        direction, slope, iterations = self.objective.newton_step(tolerance=FORCING, most=LINEAR_ITERATIONS)
         length = min(1.0, self.objective.largest_step(images, direction))
         while length > SMALLEST_STEP:
             trial = images + length * direction

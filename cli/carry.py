@@ -1,0 +1,39 @@
+"""Carry landmarks (.csv), a label volume or an image (.nii, .nii.gz) or a mesh (.vtu) through a map."""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+
+from .console import Console
+
+HELP = "carry points, labels, images or meshes through a map"
+EXAMPLE = "volmap carry beads.csv --through map_0_1 --out beads_in_visit1.csv"
+
+
+def arguments(parser: argparse.ArgumentParser) -> None:
+    """Options of this verb."""
+    parser.add_argument("thing", type=Path, metavar="THING", help="file to carry")
+    parser.add_argument("--through", type=Path, required=True, metavar="DIR", help="map folder")
+    parser.add_argument("--out", type=Path, required=True, metavar="FILE", help="where to write it")
+    parser.add_argument("--reverse", action="store_true", help="from TARGET to SOURCE")
+    parser.add_argument("--overwrite", action="store_true", help="replace a file that stands there")
+
+
+def run(options: argparse.Namespace, console: Console) -> int:
+    """Carry one thing."""
+    from volmap import pipeline
+
+    findings = pipeline.carry_file(
+        options.thing,
+        options.through,
+        options.out,
+        reverse=options.reverse,
+        overwrite=options.overwrite,
+    )
+    for finding in findings:
+        console.say(finding.line)
+    console.say(f"wrote {options.out}")
+    console.result({"written": options.out.name, "findings": [f.as_dict() for f in findings]})
+    console.end()
+    return 0

@@ -1,0 +1,77 @@
+"""Map the inside of SOURCE onto the inside of TARGET; write a map folder with certificate and report."""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+
+from .console import Console
+
+HELP = "certified volumetric map between two label volumes"
+EXAMPLE = "volmap map visit0_labels.nii.gz visit1_labels.nii.gz --out map_0_1"
+ENERGIES = ("symmetric-dirichlet", "arap", "log-strain", "neo-hookean", "conformal")
+
+
+def arguments(parser: argparse.ArgumentParser) -> None:
+    """Options of this verb."""
+    parser.add_argument("source", type=Path, metavar="SOURCE", help="label volume (NIfTI)")
+    parser.add_argument("target", type=Path, metavar="TARGET", help="label volume with the same labels")
+    parser.add_argument("--out", type=Path, required=True, metavar="DIR", help="map folder to write")
+    parser.add_argument("--overwrite", action="store_true", help="replace a map folder that stands there")
+    parser.add_argument("--edge", type=float, metavar="MM", help="mesh edge (default: about 40,000 tets)")
+    parser.add_argument("--guides", type=Path, metavar="CSV", help="landmark pairs, roles guide and check")
+    parser.add_argument(
+        "--energy", choices=ENERGIES, default=ENERGIES[0], help=f"distortion energy (default {ENERGIES[0]})"
+    )
+    parser.add_argument(
+        "--uncertainty",
+        type=float,
+        metavar="MM",
+        help="declared uncertainty of the segmentations (default: a tenth of a voxel)",
+    )
+    parser.add_argument("--source-image", type=Path, metavar="NII", help="intensities to show in the report")
+    parser.add_argument("--target-image", type=Path, metavar="NII", help="intensities to show in the report")
+    parser.add_argument("--gates", type=Path, metavar="TOML", help="a gate table of your own")
+    parser.add_argument(
+        "--one-order", action="store_true", help="do not solve on the other mesh too (order not assessed)"
+    )
+    parser.add_argument(
+        "--allow-topology-change",
+        action="store_true",
+        help="go on when pieces or handles differ; the certificate fails that gate",
+    )
+    parser.add_argument("--seed", type=int, default=0, help="of the subsamples the alignment uses")
+    parser.add_argument("--threads", type=int, help="threads (default: all)")
+
+
+def run(options: argparse.Namespace, console: Console) -> int:
+    """Map; exit status 1 when a gate failed."""
+    from volmap import pipeline
+
+    from .verdict import show
+
+    pipeline.use_threads(options.threads)
+    job = pipeline.MapJob(
+        mesh=pipeline.MeshSettings(edge_mm=options.edge),
+        map=pipeline.MapSettings(
+            energy=options.energy, uncertainty_mm=options.uncertainty, seed=options.seed
+        ),
+        both_orders=not options.one_order,
+        allow_topology_change=options.allow_topology_change,
+        gates=options.gates,
+    )
+    folder = pipeline.map_files(
+        options.source,
+        options.target,
+        options.out,
+        job,
+        guides=options.guides,
+        source_image=options.source_image,
+        target_image=options.target_image,
+        overwrite=options.overwrite,
+        progress=console.progress,
+    )
+    failed = show(folder.certificate, console)
+    console.say(f"wrote {options.out}; open {options.out / 'report.html'}")
+    console.end()
+    return failed

@@ -1,0 +1,52 @@
+"""Make a gel phantom: synthetic serial scans of a body in a test rig, with known motion."""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+
+from .console import Console
+
+HELP = "synthetic serial scans with known motion"
+EXAMPLE = "volmap phantom gel-column --out column"
+
+
+def arguments(parser: argparse.ArgumentParser) -> None:
+    """Options of this verb."""
+    parser.add_argument("name", nargs="?", metavar="NAME", help="which phantom")
+    parser.add_argument("--list", action="store_true", help="name them all and stop")
+    parser.add_argument("--out", type=Path, metavar="DIR", help="folder to write")
+    parser.add_argument("--seed", type=int, default=0, help="of the noise")
+    parser.add_argument("--voxel", type=float, metavar="MM", help="voxel size instead of the phantom's own")
+
+
+def run(options: argparse.Namespace, console: Console) -> int:
+    """Make one phantom, or list them."""
+    import volmap_phantoms as phantoms
+
+    from volmap.types import InputError
+
+    names = phantoms.names()
+    if options.list:
+        for name, line in names.items():
+            console.say(f"{name:16s} {line}")
+        console.result({"phantoms": dict(names)})
+        console.end()
+        return 0
+    if options.name not in names:
+        raise InputError(
+            "there is no such phantom",
+            where="NAME",
+            found=repr(options.name),
+            expected=", ".join(names),
+            remedy="see volmap phantom --list",
+        )
+    if options.out is None:
+        raise InputError("a folder to write is needed", where="--out", remedy=f"for instance {EXAMPLE}")
+    console.progress("phantom", 0, 0, options.name)
+    phantoms.write(phantoms.make(options.name, seed=options.seed, voxel_mm=options.voxel), options.out)
+    written = sorted(p.name for p in options.out.iterdir())
+    console.say(f"wrote {options.out}: {', '.join(written)}")
+    console.result({"written": written})
+    console.end()
+    return 0

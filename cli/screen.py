@@ -1,0 +1,89 @@
+"""Look at label volumes: what is in them, and what would go wrong. Two files are compared as a pair."""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from .console import Console
+
+if TYPE_CHECKING:
+    from volmap.screen import ScreenResult
+
+HELP = "what is in a label volume and what would go wrong"
+EXAMPLE = "volmap screen visit0_labels.nii.gz visit1_labels.nii.gz"
+
+
+def arguments(parser: argparse.ArgumentParser) -> None:
+    """Options of this verb."""
+    parser.add_argument("files", nargs="+", type=Path, metavar="FILE", help="label volumes (NIfTI)")
+    parser.add_argument("--edge", type=float, metavar="MM", help="mesh edge the volumes are meant for")
+    parser.add_argument(
+        "--mend",
+        type=Path,
+        metavar="OUT",
+        help="write a mended copy of FILE (cavities filled, specks dropped, padded); list every change",
+    )
+
+
+def run(options: argparse.Namespace, console: Console) -> int:
+    """Screen; exit status 1 when something cannot be mapped."""
+    from volmap import pipeline
+
+    if options.mend is not None:
+        return _mend(options, console)
+    screened = pipeline.screen_files(options.files, edge_mm=options.edge, progress=console.progress)
+    for result in screened.results:
+        _show(result, console)
+    document: dict[str, Any] = {"files": [r.as_dict() for r in screened.results]}
+    if screened.pair is not None:
+        document["pair"] = {
+            "volume_ratios": dict(screened.pair.volume_ratios),
+            "findings": [f.as_dict() for f in screened.pair.comparison],
+        }
+        console.say("as a pair")
+        for label, ratio in screened.pair.volume_ratios:
+            name = screened.pair.source.of_label(label).name
+            console.say(f"  {name}: volume ratio {ratio:.3f}")
+        for finding in screened.pair.comparison:
+            console.say(f"  {finding.line}")
+    console.say("cannot be mapped as it is" if screened.refused else "can be mapped")
+    console.result(document | {"refused": screened.refused})
+    console.end()
+    return int(screened.refused)
+
+
+def _show(result: ScreenResult, console: Console) -> None:
+    shape = " x ".join(str(n) for n in result.shape)
+    spacing = " x ".join(f"{s:g}" for s in result.spacing_mm)
+    console.say(
+        f"{result.name}: {shape} voxels of {spacing} mm, {result.orientation}, {result.handedness}-handed"
+    )
+    for entry in result.labels:
+        border = f", touches the border ({', '.join(entry.border)})" if entry.border else ""
+        beside = ", ".join(f"{label} ({area:.0f} mm2)" for label, area in entry.neighbours) or "none"
+        console.say(
+            f"  {entry.label} {entry.name}: {entry.volume_mm3:.1f} mm3, pieces {entry.pieces}, "
+            f"Euler {entry.euler}, cavities {entry.cavities}, thinnest {entry.thinnest_voxels:.1f} voxels, "
+            f"neighbours {beside}{border}"
+        )
+    for finding in result.findings:
+        console.say(f"  {finding.line}")
+
+
+def _mend(options: argparse.Namespace, console: Console) -> int:
+    from volmap import pipeline
+    from volmap.types import InputError
+
+    if len(options.files) != 1:
+        raise InputError(
+            "one volume is mended at a time", where="--mend", found=f"{len(options.files)} files"
+        )
+    mended = pipeline.mend_file(options.files[0], options.mend)
+    for change in mended.changes:
+        console.say(change.sentence)
+    console.say(f"{len(mended.changes)} changes; wrote {options.mend}")
+    console.result({"changes": [change.as_dict() for change in mended.changes], "written": options.mend.name})
+    console.end()
+    return 0

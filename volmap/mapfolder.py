@@ -1,0 +1,291 @@
+"""A map on disk: written whole or not at all, read back and checked."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass, field
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from volmap.certify import as_document, from_document
+from volmap.io.atomic import whole_folder
+from volmap.io.json_documents import read_json, write_json
+from volmap.io.landmarks import read_pairs, write_pairs
+from volmap.io.nifti import read_field, read_image, read_labels, write_field, write_image, write_labels
+from volmap.io.vtk_xml import read_mesh, read_surface, write_mesh, write_surface
+from volmap.types import (
+    Certificate,
+    GridField,
+    ImageVolume,
+    InputError,
+    IterationRecord,
+    LabelVolume,
+    LandmarkPairs,
+    Surface,
+    TetMesh,
+    VolumeMap,
+)
+from volmap.types.notice import caution
+
+MAP, OTHER = "map.vtu", "other_order.vtu"
+SURFACES = {"source": "source_surface.vtp", "target": "target_surface.vtp"}
+LABELS = {"source": "source_labels.nii.gz", "target": "target_labels.nii.gz"}
+FIELDS = ("forward", "backward")
+CARRIED, RATIO = "carried_labels.nii.gz", "volume_ratio.nii.gz"
+CERTIFICATE, REPORT, STEPS, PAIRS = "certificate.json", "report.html", "steps.json", "landmarks.csv"
+
+
+@dataclass(frozen=True, eq=False)
+class MapFolder:
+    """A map with everything that is stored beside it.
+
+    Parameters
+    ----------
+    map : VolumeMap
+        From SOURCE into TARGET.
+    solved_on : str
+        'source' or 'target': whose own mesh the tets of the map are.  When it is 'target', the points
+        of the map are the images of TARGET's mesh in SOURCE.
+    source, target : LabelVolume
+    source_surface, target_surface : Surface
+        Label surfaces of the scans' own meshes.
+    forward, backward : GridField
+    carried : LabelVolume
+        SOURCE's labels on TARGET's grid.
+    volume_ratio : ImageVolume
+        J on SOURCE's grid.
+    sidecars : mapping of str to dict
+        Of 'forward' and 'backward'.
+    certificate : Certificate
+    other : VolumeMap, optional
+        The pair solved on the other scan's mesh, from TARGET into SOURCE.
+    pairs : LandmarkPairs, optional
+        Guides and checks.
+    history : tuple of IterationRecord
+    distortion : (m,) float64
+        W_S of each tet.
+    """
+
+    map: VolumeMap
+    solved_on: str
+    source: LabelVolume
+    target: LabelVolume
+    source_surface: Surface
+    target_surface: Surface
+    forward: GridField
+    backward: GridField
+    carried: LabelVolume
+    volume_ratio: ImageVolume
+    sidecars: Mapping[str, dict[str, Any]]
+    certificate: Certificate
+    other: VolumeMap | None = None
+    pairs: LandmarkPairs | None = None
+    history: tuple[IterationRecord, ...] = ()
+    distortion: NDArray[np.float64] = field(default_factory=lambda: np.zeros(0))
+
+    @property
+    def own_meshes(self) -> dict[str, TetMesh]:
+        """The scans' own meshes, as far as they are stored: 'source', 'target'."""
+        found = {self.solved_on: self.map.mesh if self.solved_on == "source" else self.map.image_mesh}
+        if self.other is not None:
+            if self.solved_on == "source":
+                found["target"] = self.other.mesh
+            else:
+                found["source"] = self.other.image_mesh
+        return found
+
+
+def write_map_folder(path: Path, folder: MapFolder, *, report_html: str, overwrite: bool = False) -> None:
+    """Write a map folder; it stands whole under its name, or not at all.
+
+    Raises
+    ------
+    InputError
+        The place is taken or cannot be written.
+    """
+    with whole_folder(path, overwrite=overwrite, holding=CERTIFICATE) as place:
+        _write_meshes(place, folder)
+        for name in FIELDS:
+            grid_field: GridField = getattr(folder, name)
+            write_field(place / f"{name}.nii.gz", grid_field)
+            write_json(place / f"{name}.json", folder.sidecars[name])
+            defined = grid_field.support.astype(np.uint16)
+            support = LabelVolume(grid_field.grid, defined, {1: "defined"}, f"{name}_support")
+            write_labels(place / f"{name}_support.nii.gz", support)
+        write_labels(place / CARRIED, folder.carried)
+        write_image(place / RATIO, folder.volume_ratio)
+        for side, file in LABELS.items():
+            write_labels(place / file, getattr(folder, side))
+        if folder.pairs is not None:
+            write_pairs(place / PAIRS, folder.pairs)
+        steps = [asdict(record) for record in folder.history]
+        write_json(place / STEPS, {"schema": "volmap-steps/1", "notice": caution(), "steps": steps})
+        write_json(place / CERTIFICATE, as_document(folder.certificate))
+        (place / REPORT).write_text(report_html, encoding="utf-8")
+
+
+def _write_meshes(place: Path, folder: MapFolder) -> None:
+    here = folder.map
+    cells: dict[str, NDArray[Any]] = {"volume_ratio": here.volume_ratio, "stretch": here.stretches}
+    if len(folder.distortion):
+        cells["distortion"] = folder.distortion
+    names = {"source": here.source, "target": here.target}
+    write_mesh(
+        place / MAP,
+        here.mesh,
+        point_data={"image_mm": here.images},
+        cell_data=cells,
+        field_data=names | {"solved_on": folder.solved_on},
+    )
+    if folder.other is not None:
+        write_mesh(
+            place / OTHER,
+            folder.other.mesh,
+            point_data={"image_mm": folder.other.images},
+            field_data={"source": names["target"], "target": names["source"]},
+        )
+    for side, file in SURFACES.items():
+        write_surface(place / file, getattr(folder, f"{side}_surface"))
+
+
+def read_map_folder(path: Path) -> MapFolder:
+    """Read a map folder and check that its files belong together.
+
+    Raises
+    ------
+    InputError
+        No map folder, a file missing or damaged, or files that do not belong to one map.
+    """
+    certificate = read_certificate(path)
+    mesh, points, cells, told = read_mesh(_file(path, MAP))
+    names = {side: str(getattr(certificate, side).get("name", side)) for side in ("source", "target")}
+    volume_map = VolumeMap(mesh, _images(points, MAP), names["source"], names["target"])
+    source, target = (_labels(path, side, certificate) for side in ("source", "target"))
+    pairs = read_pairs(path / PAIRS) if (path / PAIRS).exists() else None
+    folder = MapFolder(
+        map=volume_map,
+        solved_on=_solved_on(told),
+        source=source,
+        target=target,
+        source_surface=read_surface(_file(path, SURFACES["source"])),
+        target_surface=read_surface(_file(path, SURFACES["target"])),
+        forward=read_field(
+            _file(path, "forward.nii.gz"), grid_space=names["source"], points_into=names["target"]
+        ),
+        backward=read_field(
+            _file(path, "backward.nii.gz"), grid_space=names["target"], points_into=names["source"]
+        ),
+        carried=read_labels(_file(path, CARRIED)),
+        volume_ratio=read_image(_file(path, RATIO)),
+        sidecars={name: read_json(_file(path, f"{name}.json")) for name in FIELDS},
+        certificate=certificate,
+        other=_other(path, names),
+        pairs=pairs,
+        history=_history(path),
+        distortion=np.asarray(cells.get("distortion", np.zeros(0)), np.float64),
+    )
+    _require_same_grids(folder)
+    _require_supports(path, folder)
+    return folder
+
+
+def read_certificate(path: Path) -> Certificate:
+    """The certificate of a map folder.
+
+    Raises
+    ------
+    InputError
+        No map folder, or a damaged certificate.
+    """
+    if not path.is_dir():
+        raise InputError(
+            "is not a map folder", where=path.name, expected="a folder that `volmap map` has written"
+        )
+    return from_document(read_json(_file(path, CERTIFICATE)), where=CERTIFICATE)
+
+
+def _file(path: Path, name: str) -> Path:
+    if not (path / name).is_file():
+        raise InputError(
+            "a file of the map folder is missing",
+            where=f"{path.name}/{name}",
+            remedy="map the pair again; a map folder must stay whole",
+        )
+    return path / name
+
+
+def _images(points: Mapping[str, NDArray[Any]], name: str) -> NDArray[np.float64]:
+    if "image_mm" not in points:
+        raise InputError("holds no point array `image_mm`", where=name)
+    return np.asarray(points["image_mm"], np.float64)
+
+
+def _solved_on(told: Mapping[str, Any]) -> str:
+    side = str(told.get("solved_on", ""))
+    if side not in ("source", "target"):
+        raise InputError(
+            "does not say whose mesh it was solved on",
+            where=MAP,
+            found=repr(side),
+            expected="solved_on = source or target in its FieldData",
+        )
+    return side
+
+
+def _labels(path: Path, side: str, certificate: Certificate) -> LabelVolume:
+    stored = read_labels(_file(path, LABELS[side]))
+    told: Mapping[str, Any] = getattr(certificate, side)
+    if told.get("sha256") != stored.sha256:
+        raise InputError(
+            f"the {side} labels are not those the certificate speaks of",
+            where=f"{path.name}/{LABELS[side]}",
+            found=f"digest {stored.sha256[:12]}",
+            expected=str(told.get("sha256"))[:12],
+            remedy="map the pair again",
+            refused=True,
+        )
+    names = {int(k): str(v.get("name", "")) for k, v in dict(told.get("labels", {})).items()}
+    return LabelVolume(stored.grid, stored.labels, names, str(told.get("name", side)))
+
+
+def _other(path: Path, names: Mapping[str, str]) -> VolumeMap | None:
+    if not (path / OTHER).exists():
+        return None
+    mesh, points, _, _ = read_mesh(path / OTHER)
+    return VolumeMap(mesh, _images(points, OTHER), names["target"], names["source"])
+
+
+def _history(path: Path) -> tuple[IterationRecord, ...]:
+    steps = read_json(_file(path, STEPS)).get("steps", [])
+    try:
+        return tuple(IterationRecord(**step) for step in steps)
+    except TypeError as fault:
+        raise InputError("a step of the solve is not as written", where=STEPS, found=str(fault)) from fault
+
+
+def _require_same_grids(folder: MapFolder) -> None:
+    pairs = (
+        ("forward.nii.gz", folder.forward.grid, folder.source),
+        (RATIO, folder.volume_ratio.grid, folder.source),
+        ("backward.nii.gz", folder.backward.grid, folder.target),
+        (CARRIED, folder.carried.grid, folder.target),
+    )
+    for name, grid, owner in pairs:
+        if not grid.same_place(owner.grid):
+            raise InputError(
+                f"does not lie on the grid of {owner.name}", where=name, remedy="map the pair again"
+            )
+
+
+def _require_supports(path: Path, folder: MapFolder) -> None:
+    for name in FIELDS:
+        file = f"{name}_support.nii.gz"
+        support = read_labels(_file(path, file))
+        grid_field: GridField = getattr(folder, name)
+        if support.labels.shape != grid_field.grid.shape or (support.labels != grid_field.support).any():
+            raise InputError(
+                f"is not where {name}.nii.gz is defined", where=file, remedy="map the pair again"
+            )

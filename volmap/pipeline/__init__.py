@@ -1,0 +1,38 @@
+"""Floor 4: the one place that strings the stages together; command line, desk and study call it."""
+
+from volmap.mapping import MapSettings
+from volmap.mesh import MeshSettings
+from volmap.pipeline.files import (
+    Screened,
+    carry_file,
+    map_files,
+    mend_file,
+    mesh_file,
+    report_folder,
+    screen_files,
+)
+from volmap.pipeline.machine import use_threads
+from volmap.pipeline.opinion import SecondOpinion, certify_folder, evidence_of
+from volmap.pipeline.pair import MapJob, map_pair
+from volmap.pipeline.reporting import affine_baseline, report_of, write_map
+
+__all__ = [
+    "MapJob",
+    "MapSettings",
+    "MeshSettings",
+    "Screened",
+    "SecondOpinion",
+    "affine_baseline",
+    "carry_file",
+    "certify_folder",
+    "evidence_of",
+    "map_files",
+    "map_pair",
+    "mend_file",
+    "mesh_file",
+    "report_folder",
+    "report_of",
+    "screen_files",
+    "use_threads",
+    "write_map",
+]

@@ -1,0 +1,100 @@
+"""What a certificate is measured on, and a second opinion on a stored one."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import numpy as np
+
+from volmap import carry as carrying
+from volmap import certify as certifying
+from volmap.mapfolder import MapFolder, read_map_folder
+from volmap.types import Certificate, LabelVolume, Progress, TetMesh, VolumeMap, silent
+
+
+def evidence_of(folder: MapFolder) -> certifying.Evidence:
+    """What a certificate is measured on; from a folder just made or one read back, alike."""
+    own = folder.own_meshes
+    return certifying.Evidence(
+        map=folder.map,
+        source=folder.source,
+        target=folder.target,
+        source_surface=folder.source_surface,
+        target_surface=folder.target_surface,
+        forward=folder.forward,
+        backward=folder.backward,
+        other=folder.other,
+        checks=folder.pairs,
+        source_mesh_labels=_voxelised(own.get("source"), folder.source),
+        target_mesh_labels=_voxelised(own.get("target"), folder.target),
+    )
+
+
+def _voxelised(mesh: TetMesh | None, volume: LabelVolume) -> LabelVolume | None:
+    if mesh is None:
+        return None
+    return carrying.carried_solid(VolumeMap(mesh, mesh.points), volume.grid, names=volume.names)
+
+
+@dataclass(frozen=True)
+class SecondOpinion:
+    """A stored certificate against what its files say now.
+
+    Parameters
+    ----------
+    certificate : Certificate
+        The stored one, with its gates measured anew.
+    disagreements : tuple of str
+        A sentence for each number or word that is not what the files give.
+    not_repeated : tuple of str
+        Gates that the files alone cannot repeat.
+    """
+
+    certificate: Certificate
+    disagreements: tuple[str, ...]
+    not_repeated: tuple[str, ...]
+
+
+def certify_folder(path: Path, *, gates: Path | None = None, progress: Progress = silent) -> SecondOpinion:
+    """Measure every gate again from a map folder's files alone.
+
+    Raises
+    ------
+    InputError
+        No map folder, or files that are missing, damaged or do not belong together.
+    """
+    progress("read", 0, 0)
+    folder = read_map_folder(path)
+    table = certifying.read_gate_table(gates)
+    fresh, measures = certifying.certify(evidence_of(folder), table, progress=progress)
+    stored = folder.certificate
+    against = [d.sentence for d in certifying.compare(stored, fresh)] + _doctored(folder)
+    return SecondOpinion(
+        replace(stored, gates=fresh, measures=measures),
+        tuple(against),
+        certifying.not_repeated(stored, fresh),
+    )
+
+
+def _doctored(folder: MapFolder) -> list[str]:
+    """Files that are not what the map gives."""
+    made = {
+        "forward.nii.gz": (folder.forward, carrying.forward_field(folder.map, folder.source.grid)),
+        "backward.nii.gz": (folder.backward, carrying.backward_field(folder.map, folder.target.grid)),
+    }
+    told = []
+    for name, (stored, fresh) in made.items():
+        apart = np.abs(stored.displacement - fresh.displacement)
+        if (stored.support != fresh.support).any() or np.nanmax(apart, initial=0.0) > 1e-3:
+            told.append(
+                f"{name}: the stored field is not the map in map.vtu (up to {np.nanmax(apart):.3g} mm)"
+            )
+    carried = carrying.carried_solid(folder.map, folder.target.grid)
+    differ = int((carried.labels != folder.carried.labels).sum())
+    if differ:
+        told.append(f"carried_labels.nii.gz: {differ} voxels are not what map.vtu gives")
+    ratio = carrying.volume_ratio_image(folder.map, folder.source.grid).values
+    if not np.allclose(ratio, folder.volume_ratio.values, rtol=1e-4, equal_nan=True):
+        told.append("volume_ratio.nii.gz: not what map.vtu gives")
+    return told

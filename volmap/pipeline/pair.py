@@ -1,0 +1,328 @@
+"""Mapping a pair: screen, mesh, map, sample, certify."""
+
+from __future__ import annotations
+
+from dataclasses import asdict, dataclass, field, replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from volmap import carry as carrying
+from volmap import certify as certifying
+from volmap import mesh as meshing
+from volmap import screen as screening
+from volmap.kernels.distortion import energies
+from volmap.kernels.energies import ENERGIES
+from volmap.kernels.tets import dihedral_degrees, shape_gradients
+from volmap.mapfolder import MapFolder
+from volmap.mapping import MapSettings, Solved, map_mesh
+from volmap.mesh import MeshResult, MeshSettings
+from volmap.pipeline.machine import Stopwatch, announce_compiling, peak_mb, use_threads, versions
+from volmap.pipeline.opinion import evidence_of
+from volmap.types import (
+    Certificate,
+    Finding,
+    LabelVolume,
+    LandmarkPairs,
+    Level,
+    Progress,
+    VolumeMap,
+    silent,
+)
+
+
+@dataclass(frozen=True)
+class MapJob:
+    """Everything a user may choose about mapping a pair.
+
+    Parameters
+    ----------
+    mesh : MeshSettings
+    map : MapSettings
+    both_orders : bool
+        Solve on the other scan's mesh too, to measure how much the answer depends on whose mesh is used.
+    allow_topology_change : bool
+        Go on when pieces or Euler numbers differ; the certificate fails that gate.
+    gates : Path, optional
+        The user's own gate table.
+    """
+
+    mesh: MeshSettings = field(default_factory=MeshSettings)
+    map: MapSettings = field(default_factory=MapSettings)
+    both_orders: bool = True
+    allow_topology_change: bool = False
+    gates: Path | None = None
+
+
+@dataclass(frozen=True, eq=False)
+class _Order:
+    """Which scan the pair is solved on: decided by the content of the scans, not by who asks."""
+
+    flipped: bool
+
+    @staticmethod
+    def of(source: LabelVolume, target: LabelVolume) -> _Order:
+        return _Order(target.sha256 < source.sha256)
+
+    def turned(self, volume_map: VolumeMap) -> VolumeMap:
+        return volume_map.reversed() if self.flipped else volume_map
+
+
+@dataclass(frozen=True, eq=False)
+class _Solutions:
+    """The pair solved on the first scan's mesh and, when asked for, on the second's."""
+
+    main: Solved
+    other: Solved | None
+
+
+def map_pair(
+    source: LabelVolume,
+    target: LabelVolume,
+    job: MapJob | None = None,
+    *,
+    pairs: LandmarkPairs | None = None,
+    notes: tuple[str, ...] = (),
+    progress: Progress = silent,
+) -> MapFolder:
+    """Screen, mesh, map, sample and certify a pair of label volumes.
+
+    The pair is solved in an order decided by its content, so that asking for (A, B) or for (B, A) gives one
+    map and its exact inverse.
+
+    Parameters
+    ----------
+    source, target : LabelVolume
+    job : MapJob, optional
+    pairs : LandmarkPairs, optional
+        Guides and checks, from SOURCE to TARGET.
+    notes : tuple of str
+        Sentences to keep with the certificate.
+    progress : Progress
+
+    Returns
+    -------
+    MapFolder
+        Not written yet.
+
+    Raises
+    ------
+    InputError
+        What the screen refuses, what cannot be meshed, a guide outside the body.
+    """
+    job = job or MapJob()
+    announce_compiling(progress)
+    watch = Stopwatch()
+    table = certifying.read_gate_table(job.gates)
+    with watch.measuring("screen"):
+        progress("screen", 0, 0)
+        screened = screening.screen_pair(
+            source, target, edge_mm=job.mesh.edge_mm, allow_topology_change=job.allow_topology_change
+        )
+        screened.require_mappable()
+    with watch.measuring("mesh"):
+        meshes = [
+            meshing.mesh(volume, job.mesh, progress=_prefixed(progress, side))
+            for volume, side in ((source, "source"), (target, "target"))
+        ]
+    order = _Order.of(source, target)
+    solutions = _solve(meshes, source, target, job, order, pairs, watch, progress)
+    folder = _sampled(solutions, meshes, source, target, order, pairs, watch, progress, energy=job.map.energy)
+    with watch.measuring("certify"):
+        gates, measures = certifying.certify(evidence_of(folder), table, progress=progress)
+    findings = [*screened.findings, *meshes[0].findings, *meshes[1].findings]
+    certificate = replace(
+        folder.certificate,
+        gates=gates,
+        measures=measures,
+        settings=_settings_document(job, solutions, order),
+        mesh=_mesh_document(folder, meshes),
+        seconds=watch.seconds,
+        peak_mb=peak_mb(),
+        notes=(*notes, *solutions.main.outcome.notes, *_sentences(findings)),
+    )
+    return replace(folder, certificate=certificate)
+
+
+def _prefixed(progress: Progress, name: str) -> Progress:
+    def told(stage: str, step: int, total: int, note: str = "") -> None:
+        progress(f"{stage} {name}", step, total, note)
+
+    return told
+
+
+def _solve(
+    meshes: list[MeshResult],
+    source: LabelVolume,
+    target: LabelVolume,
+    job: MapJob,
+    order: _Order,
+    pairs: LandmarkPairs | None,
+    watch: Stopwatch,
+    progress: Progress,
+) -> _Solutions:
+    first, second = (meshes[1], meshes[0]) if order.flipped else (meshes[0], meshes[1])
+    guides = pairs.of_role("guide") if pairs is not None else None
+    forward = guides.reversed() if guides is not None and order.flipped else guides
+    voxel_mm = 0.5 * (source.grid.voxel_mm + target.grid.voxel_mm)
+    with watch.measuring("map"):
+        main = map_mesh(
+            first.mesh,
+            second.mesh.interfaces,
+            job.map,
+            voxel_mm=voxel_mm,
+            guides=forward,
+            progress=progress,
+        )
+    if not job.both_orders:
+        return _Solutions(main, None)
+    with watch.measuring("map the other way"):
+        other = map_mesh(
+            second.mesh,
+            first.mesh.interfaces,
+            job.map,
+            voxel_mm=voxel_mm,
+            guides=forward.reversed() if forward is not None else None,
+            progress=_prefixed(progress, "the other way"),
+        )
+    return _Solutions(main, other)
+
+
+def _sampled(
+    solutions: _Solutions,
+    meshes: list[MeshResult],
+    source: LabelVolume,
+    target: LabelVolume,
+    order: _Order,
+    pairs: LandmarkPairs | None,
+    watch: Stopwatch,
+    progress: Progress,
+    *,
+    energy: str,
+) -> MapFolder:
+    named = replace(order.turned(solutions.main.outcome.map), source=source.name, target=target.name)
+    with watch.measuring("fields"):
+        progress("fields", 0, 3)
+        forward = carrying.forward_field(named, source.grid)
+        backward = carrying.backward_field(named, target.grid)
+        progress("fields", 1, 3)
+        sidecars = {
+            "forward": carrying.field_sidecar(
+                forward,
+                named,
+                direction="forward",
+                grid_sha256=source.sha256,
+                points_into_sha256=target.sha256,
+                paired_file="backward.nii.gz",
+                paired=carrying.round_trip(forward, backward),
+            ),
+            "backward": carrying.field_sidecar(
+                backward,
+                named,
+                direction="backward",
+                grid_sha256=target.sha256,
+                points_into_sha256=source.sha256,
+                paired_file="forward.nii.gz",
+                paired=carrying.round_trip(backward, forward),
+            ),
+        }
+        progress("fields", 2, 3)
+        carried = carrying.carried_solid(named, target.grid, names=source.names)
+        ratio = carrying.volume_ratio_image(named, source.grid)
+    other = None
+    if solutions.other is not None:
+        other = replace(order.turned(solutions.other.outcome.map), source=target.name, target=source.name)
+    outcome = solutions.main.outcome
+    return MapFolder(
+        map=named,
+        solved_on="target" if order.flipped else "source",
+        source=source,
+        target=target,
+        source_surface=meshes[0].mesh.interfaces,
+        target_surface=meshes[1].mesh.interfaces,
+        forward=forward,
+        backward=backward,
+        carried=carried,
+        volume_ratio=ratio,
+        sidecars=sidecars,
+        certificate=Certificate(
+            _scan_document(source),
+            _scan_document(target),
+            (),
+            versions=versions(),
+            status=outcome.status.value,
+        ),
+        other=other,
+        pairs=pairs,
+        history=outcome.history,
+        distortion=_distortion(named, energy),
+    )
+
+
+def _distortion(volume_map: VolumeMap, energy: str) -> NDArray[np.float64]:
+    """W_S of each tet of the map as it is handed out."""
+    points, images = np.array(volume_map.mesh.points), np.array(volume_map.images)
+    tets = np.array(volume_map.mesh.tets)
+    out = np.empty(len(tets))
+    energies(ENERGIES[energy], images, tets, shape_gradients(points, tets), out)
+    return out
+
+
+def _scan_document(volume: LabelVolume) -> dict[str, Any]:
+    counts = np.bincount(volume.labels.ravel())
+    return {
+        "name": volume.name,
+        "sha256": volume.sha256,
+        "shape": list(volume.grid.shape),
+        "spacing_mm": volume.grid.spacing.tolist(),
+        "labels": {
+            str(label): {
+                "name": volume.name_of(label),
+                "voxels": int(counts[label]),
+                "volume_mm3": float(counts[label] * volume.grid.voxel_mm3),
+            }
+            for label in volume.present
+        },
+    }
+
+
+def _settings_document(job: MapJob, solutions: _Solutions, order: _Order) -> dict[str, Any]:
+    alignment = solutions.main.alignment
+    matrix = np.linalg.inv(alignment.matrix) if order.flipped else alignment.matrix
+    return {
+        "mesh": asdict(job.mesh),
+        "map": asdict(job.map),
+        "both_orders": job.both_orders,
+        "allow_topology_change": job.allow_topology_change,
+        "gates": job.gates.name if job.gates else "built in",
+        "threads": use_threads(None),
+        "solved_on": "target" if order.flipped else "source",
+        "alignment": {
+            "start": solutions.main.outcome.start,
+            "affine": matrix.tolist(),
+            "residual_mm": alignment.residual_mm,
+        },
+    }
+
+
+def _mesh_document(folder: MapFolder, meshes: list[MeshResult]) -> dict[str, Any]:
+    mesh = folder.map.mesh
+    angles = dihedral_degrees(mesh.points, mesh.tets)
+    voxels = {int(k): v["volume_mm3"] for k, v in folder.certificate.source["labels"].items()}
+    error = {str(k): 100.0 * (mesh.volume_of(k) / v - 1.0) for k, v in voxels.items()}
+    return {
+        "points": len(mesh.points),
+        "tets": len(mesh.tets),
+        "edge_mm": meshes[0].settings.edge_mm,
+        "min_dihedral_deg": float(angles.min()),
+        "volume_error_pct": error,
+        "own": {
+            side: result.quality.as_dict() for side, result in zip(("source", "target"), meshes, strict=True)
+        },
+    }
+
+
+def _sentences(findings: list[Finding]) -> tuple[str, ...]:
+    return tuple(f"{f.where}: {f.sentence}" for f in findings if f.level is not Level.NOTE)
