@@ -69,6 +69,16 @@ def test_flat_and_quads_and_unknown(tmp_path):
         read_closed_surface(tmp_path / "a.stlx")
 
 
+def test_a_surface_cut_short_and_one_of_nothing(tmp_path):
+    meshio.stl.write(tmp_path / "a.stl", meshio.Mesh(CUBE, [("triangle", SIDES)]), binary=True)
+    whole = (tmp_path / "a.stl").read_bytes()
+    for content in (whole[: 84 + 50 * 5 + 17], b"solid a\nendsolid a\n"):
+        (tmp_path / "a.stl").write_bytes(content)
+        with pytest.raises(InputError, match=r"damaged or cut short|damaged or not") as caught:
+            read_closed_surface(tmp_path / "a.stl")
+        assert not caught.value.refused
+
+
 def test_a_claim_of_four_billion_triangles(tmp_path):
     (tmp_path / "a.stl").write_bytes(b"x" * 80 + struct.pack("<I", 2**32 - 1) + b"\0" * 500)
     with pytest.raises(InputError):

@@ -81,9 +81,14 @@ def _parsed(file: Path, where: str) -> Any:
 
 def _triangles(mesh: Any, where: str) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
     kinds = sorted({block.type for block in mesh.cells if len(block.data)} - {"vertex", "line"})
+    if not kinds:
+        raise InputError(
+            "the surface file holds no triangle; it is empty, damaged or cut short", where=where,
+            remedy="export it again",
+        )  # fmt: skip
     if kinds != ["triangle"]:
         raise InputError(
-            "the surface is not of triangles alone", where=where, found=", ".join(kinds) or "no face",
+            "the surface is not of triangles alone", where=where, found=", ".join(kinds),
             remedy="triangulate it first",
         )  # fmt: skip
     points = np.asarray(mesh.points, np.float64)

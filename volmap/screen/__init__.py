@@ -2,6 +2,7 @@
 
 from volmap.screen.mending import Change, Mended, mend
 from volmap.screen.pairs import PairResult, compare, screen_pair
+from volmap.screen.placement import screen_pairs_of_landmarks
 from volmap.screen.results import LabelScreen, ScreenResult
 from volmap.screen.screening import screen
 
@@ -15,4 +16,5 @@ __all__ = [
     "mend",
     "screen",
     "screen_pair",
+    "screen_pairs_of_landmarks",
 ]
