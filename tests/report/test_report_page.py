@@ -13,7 +13,7 @@ import pytest
 from PIL import Image
 from report_scene import certificate, lattice, make_inputs, rounded
 
-from volmap.report import ReportInput, report, tables
+from volmap.report import ReportInput, methods, report, tables
 from volmap.types import Certificate, Gate, InputError, LandmarkPairs, Surface, TetMesh, Verdict, VolumeMap
 from volmap.types.notice import caution
 
@@ -247,3 +247,49 @@ def test_progress_is_told() -> None:
     with pytest.raises(KeyboardInterrupt):
         report(make_inputs(3), progress=listen)
     assert told == [("report", 0, 6, "bodies"), ("report", 1, 6, "cut open")]
+
+
+def test_values_of_gates_carry_the_units_they_have() -> None:
+    """Truth: by hand: counts of other things have no unit; "per_label" is told in another table."""
+    names = {1: "body"}
+    value = {"count": 0, "tets": 38106}
+    assert tables.told(value, "tets", names, {"count"}) == ["count 0 tets", "tets 38\u202f106"]
+    value = {"mean": 0.25, "p99_9": 3.0, "samples": 12, "per_label": {"1": 5}}
+    assert tables.told(value, "mm", names) == ["mean 0.25 mm", "P99.9 3 mm", "samples 12"]
+    assert tables.told({"lowest_dice": 0.9, "shell_mm": 0.3}, "Dice", names) == [
+        "lowest dice 0.9",
+        "shell 0.3 mm",
+    ]
+    assert tables.told({"1": {"a": 1, "b": 2}}, "1", names) == ["body: a 1, b 2"]
+    assert (
+        tables.told({str(k): {"a": 1} for k in range(3, 8)}, "1", names)[-1]
+        == "and 2 more in the certificate"
+    )
+    assert tables.told([0.5, 2.0], "1", names) == ["0.5 to 2"]
+    assert tables.told(4.0, "mm", names) == ["4 mm"]
+    assert tables.told(float("inf"), "mm", names) == ["infinite"]
+    assert tables.told(None, "mm", names) == ["–"]
+
+
+@pytest.mark.parametrize(
+    ("settings", "words"),
+    [
+        (
+            {"first_weight": 0.01, "weight_factor": 3.1623, "last_weight": 10.0, "uncertainty_voxels": 0.1},
+            "rose by factors of 3.16 from 0.01 to at most 10 (0.02 V^(1/3))⁻², until the residual was within "
+            "the declared 0.1 voxel",
+        ),
+        ({"energy": "log-strain"}, "the distortion energy “log-strain”, symmetrised"),
+        ({}, "minimising a distortion energy, symmetrised"),
+    ],
+)
+def test_the_methods_tell_the_settings_that_are_known(settings: dict[str, object], words: str) -> None:
+    given = make_inputs(3)
+    bare = dataclasses.replace(given, certificate=Certificate({}, {}, ()), settings=settings)
+    told = " ".join(methods.methods(bare))
+    assert words in told
+    assert "was not certified" in told
+    assert ("ladder" in told) is False
+    assert [v for k, v in methods.settings_rows(bare) if k == "energy"] == [
+        str(settings[k]) for k in settings if k == "energy"
+    ]

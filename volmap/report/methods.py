@@ -73,16 +73,27 @@ def _solving(inputs: ReportInput, known: Mapping[str, Any]) -> str:
         f"minimising {density}, symmetrised so that neither scan is preferred, together with the squared "
         "distances between matching label interfaces, measured in both directions"
     )
-    ladder = next(
-        (known[k] for k in ("ladder", "rungs", "boundary_weights") if known.get(k) is not None), None
-    )
-    if ladder is not None:
-        sentence += f", whose weight rose over the ladder {_shown(ladder)}"
+    sentence += _ladder(known)
     if inputs.history:
         steps = len(inputs.history)
         linear = sum(h.linear_iterations for h in inputs.history)
         sentence += f", in {number(steps)} Newton steps ({number(linear)} linear iterations)"
     return sentence + "."
+
+
+def _ladder(known: Mapping[str, Any]) -> str:
+    """How the boundary weight rose, and where it stopped."""
+    told = ""
+    if all(known.get(k) is not None for k in ("first_weight", "weight_factor", "last_weight")):
+        first, factor, last = (number(known[k]) for k in ("first_weight", "weight_factor", "last_weight"))
+        told = f", whose weight rose by factors of {factor} from {first} to at most {last} (0.02 V^(1/3))⁻²"
+    elif known.get("ladder") is not None:
+        told = f", whose weight rose over the ladder {_shown(known['ladder'])}"
+    if told and known.get("uncertainty_mm") is not None:
+        told += f", until the residual was within the declared {number(known['uncertainty_mm'])} mm"
+    elif told and known.get("uncertainty_voxels") is not None:
+        told += f", until the residual was within the declared {number(known['uncertainty_voxels'])} voxel"
+    return told
 
 
 def _guiding(inputs: ReportInput) -> str:

@@ -212,7 +212,7 @@ def place(point: ArrayLike | None) -> str:
 
 def plain_text(text: str, longest: int = 200) -> str:
     """Text of a user or a file, without control characters and not longer than `longest`."""
-    clean = "".join(c if c.isprintable() else " " for c in text)
+    clean = "".join(c if c.isprintable() or c in "\u00a0\u202f" else " " for c in text)
     return clean if len(clean) <= longest else clean[: longest - 1] + "…"
 
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterator, Mapping
+from collections.abc import Collection, Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -19,6 +19,7 @@ from volmap.types import Certificate, Gate, LabelVolume, Verdict
 Floats = NDArray[np.float64]
 
 MOST_PLACES = 3
+MOST_GROUPS = 3
 
 
 @dataclass(frozen=True)
@@ -128,8 +129,14 @@ def leaves(value: Any, path: tuple[str, ...] = ()) -> Iterator[tuple[tuple[str, 
         yield path, value
 
 
-def told(value: Any, unit: str, names: Mapping[int, str]) -> list[str]:
-    """A value or a limit of a gate, in lines: one a group, with names for label numbers."""
+def told(value: Any, unit: str, names: Mapping[int, str], watched: Collection[str] = ()) -> list[str]:
+    """A value or a limit of a gate, in lines: one a group, with names for label numbers.
+
+    Parameters
+    ----------
+    watched : collection of str
+        Entries that have the gate's own unit even when that is a count of something.
+    """
     if value is None:
         return ["–"]
     lines: dict[str, list[str]] = {}
@@ -138,21 +145,34 @@ def told(value: Any, unit: str, names: Mapping[int, str]) -> list[str]:
             continue
         group = " · ".join(_named(p, names) for p in path[:-1])
         kind = _named(path[-1], names) if path else ""
-        lines.setdefault(group, []).append(f"{kind} {_amount(leaf, _unit_of(path, unit))}".strip())
+        amount = _amount(leaf, _unit_of(path[-1] if path else "", leaf, unit, watched))
+        lines.setdefault(group, []).append(f"{kind} {amount}".strip())
     own = lines.pop("", [])
-    return own + [f"{group}: {', '.join(entries)}" for group, entries in lines.items()] or ["–"]
+    groups = [f"{group}: {', '.join(entries)}" for group, entries in lines.items()]
+    if len(groups) > MOST_GROUPS:
+        groups = [*groups[:MOST_GROUPS], f"and {len(groups) - MOST_GROUPS} more in the certificate"]
+    return own + groups or ["–"]
 
 
 PER_LABEL = "per_label"
 """Part of a gate's value that is told in the table of labels."""
 
 
-def _unit_of(path: tuple[str, ...], unit: str) -> str:
-    """Unit of one entry: a length where its own name says so, else the gate's; none for a pure number."""
-    last = path[-1] if path else ""
-    if last.endswith("_mm") or last.startswith("shell"):
+def _unit_of(kind: str, leaf: Any, unit: str, watched: Collection[str]) -> str:
+    """Unit of one entry: a length where its name says so, none for a pure number or a side count."""
+    if kind.endswith("_mm") or kind.startswith("shell"):
         return "mm"
-    return "" if unit in ("1", "count", "ratio", "Dice") else unit
+    if unit in ("1", "count", "ratio", "Dice"):
+        return ""
+    if unit == "mm":
+        return "" if isinstance(leaf, int) and kind not in watched and kind else unit
+    return unit if kind in watched or not kind else ""
+
+
+def _watched(gate: Gate) -> set[str]:
+    """Entries that a gate's limits watch: "mean" for "mean_above"."""
+    limits = [key for limit in (gate.warn, gate.fail) if isinstance(limit, Mapping) for key in limit]
+    return {*limits, *(str(key).rsplit("_", 1)[0] for key in limits)}
 
 
 def _named(key: str, names: Mapping[int, str]) -> str:
@@ -183,10 +203,10 @@ def gate_rows(certificate: Certificate, names: Mapping[int, str]) -> list[dict[s
             "name": scales.plain_text(g.name),
             "words": gate_words(g),
             "sentence": scales.plain_text(g.sentence, 600),
-            "value": told(g.value, g.unit, names),
-            "warn": told(g.warn, g.unit, names),
-            "fail": told(g.fail, g.unit, names),
-            "source": scales.plain_text(g.limit_source, 400),
+            "value": told(g.value, g.unit, names, _watched(g)),
+            "warn": told(g.warn, g.unit, names, _watched(g)),
+            "fail": told(g.fail, g.unit, names, _watched(g)),
+            "source": scales.plain_text(g.limit_source, 1200),
             "verdict": g.verdict.value,
             "word": scales.GATE_WORDS[g.verdict],
             "where": [_spot(w) for w in g.where[:MOST_PLACES]],
