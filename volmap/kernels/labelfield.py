@@ -187,10 +187,10 @@ def owners(field, points, scratch):  # type: ignore[no-untyped-def]
 @njit(cache=True, error_model="numpy")
 def _holds(sets, row, label):  # type: ignore[no-untyped-def]
     """Whether a row of a table of label sets (filled with -1) holds a label."""
+    found = False
     for q in range(sets.shape[1]):
-        if sets[row, q] == label:
-            return True
-    return False
+        found = found or sets[row, q] == label
+    return found
 
 
 @njit(cache=True, error_model="numpy")
@@ -245,7 +245,7 @@ def cut_edges(field, points, sets, edges, scratch):  # type: ignore[no-untyped-d
         start, end = edges[e, 0], edges[e, 1]
         low, high, middle = 0.0, 1.0, 0.0
         lead_low, inside, outside = _lead(field, points, sets, start, end, 0.0, scratch)
-        lead_high, last, entered = _lead(field, points, sets, start, end, 1.0, scratch)
+        lead_high, _, entered = _lead(field, points, sets, start, end, 1.0, scratch)
         if lead_low <= 1e-9:
             high = 0.0
         elif lead_high >= 0.0:

@@ -97,7 +97,7 @@ def smooth(field, stars, strata, good, share, shift, place, scratch):  # type: i
 
 @njit(cache=True, error_model="numpy")
 def _offer(field, stars, strata, v, direction, step, slack_mm, place, wish, scratch):  # type: ignore[no-untyped-def]
-    """Fill `place` with a trial position; interface points stay within `slack_mm` of the tie.  False if none."""
+    """Fill `place` with a trial position, interface points within `slack_mm` of the tie; False if none."""
     for d in range(3):
         wish[d] = stars.points[v, d] + step * direction[d]
         place[d] = wish[d]

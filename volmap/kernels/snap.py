@@ -19,7 +19,7 @@ def disjoint(sets: Ints, edges: Ints) -> NDArray[np.bool_]:
     apart = first[:, 0] != second[:, 0]
     a, b = first[apart], second[apart]
     apart[apart] = ~((a[:, :, None] == b[:, None, :]) & (a[:, :, None] >= 0)).any(axis=(1, 2))
-    return apart
+    return np.asarray(apart)
 
 
 def add_labels(sets: Ints, rows: Ints, labels: Ints) -> None:

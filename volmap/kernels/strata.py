@@ -1,4 +1,4 @@
-"""Which points of a labelled mesh lie inside, on an interface, on a curve where interfaces meet, or at a corner."""
+"""Which points of a labelled mesh lie inside, on an interface, on a curve of interfaces, or at a corner."""
 
 from __future__ import annotations
 
@@ -61,7 +61,7 @@ def triangle_edges(triangles: Ints, n_points: int) -> tuple[Ints, Ints]:
 
 
 def label_sets(tets: Ints, labels: Ints, n_points: int) -> Ints:
-    """(n, 8) labels of the tets around each point, ascending, filled up with -1; the hull's points also have 0."""
+    """(n, 8) labels around each point, ascending, filled up with -1; points of the hull also have 0."""
     _, _, hull = match_faces(tets)
     on_hull = np.unique(tets[hull // 4][np.arange(4)[None, :] != (hull % 4)[:, None]])
     span = np.int64(labels.max() + 1)
@@ -95,7 +95,7 @@ def _compressed(pairs: Ints, n_points: int) -> tuple[Ints, Ints]:
 
 
 def _neighbours(inner: Ints, surface: Ints, curve: NDArray[np.bool_], kind: Ints) -> tuple[Ints, Ints]:
-    """Interior points see all neighbours, interface points those on interfaces, curve points those on curves."""
+    """Inner points see all neighbours, interface points those on interfaces, curve points those on curves."""
     both = np.concatenate([inner, inner[:, ::-1]])
     chosen = [both[kind[both[:, 0]] == INTERIOR]]
     both, on_curve = np.concatenate([surface, surface[:, ::-1]]), np.r_[curve, curve]
@@ -112,7 +112,7 @@ def point_normals(points: Floats, triangles: Ints) -> Floats:
         [np.bincount(triangles.ravel(), np.repeat(area[:, d], 3), len(points)) for d in range(3)], axis=1
     )
     length = np.linalg.norm(total, axis=1, keepdims=True)
-    return np.divide(total, length, out=np.zeros_like(total), where=length > 1e-12)
+    return np.asarray(np.divide(total, length, out=np.zeros_like(total), where=length > 1e-12))
 
 
 def _sizes(points: Floats, edges: Ints) -> Floats:
@@ -123,7 +123,7 @@ def _sizes(points: Floats, edges: Ints) -> Floats:
 
 
 def new_strata(points: Floats, tets: Ints, labels: Ints) -> Strata:
-    """Strata of a mesh with its background ring (label 0), or of one without (the hull is then an interface)."""
+    """Strata of a mesh with its background ring (label 0) or without (the hull is then an interface)."""
     triangles, sides = label_interfaces(tets, labels)
     surface, counts = triangle_edges(triangles, len(points))
     kind = _kinds(tets, labels, surface, counts, len(points))

@@ -85,7 +85,7 @@ def _solve_gaps(scratch, n_gaps, ridge):  # type: ignore[no-untyped-def]
 
 @njit(cache=True, error_model="numpy")
 def _newton_step(scratch, n_gaps, voxel_mm):  # type: ignore[no-untyped-def]
-    """The shortest step that closes the gaps to first order, at most 0.6 voxel; False where the field is flat."""
+    """The shortest step that closes the gaps to first order, at most 0.6 voxel; False in a flat field."""
     slopes, step = scratch.slopes, scratch.step
     if n_gaps == 1:
         squared = slopes[0, 0] ** 2 + slopes[0, 1] ** 2 + slopes[0, 2] ** 2

@@ -1,7 +1,8 @@
 """Floor 2, mesh: from a label volume, or a closed surface, to tetrahedra."""
 
+from volmap.mesh.closed_surface import mesh_surface
 from volmap.mesh.mesher import MeshResult, mesh
 from volmap.mesh.quality import LabelQuality, QualityTable
 from volmap.mesh.settings import MeshSettings
 
-__all__ = ["LabelQuality", "MeshResult", "MeshSettings", "QualityTable", "mesh"]
+__all__ = ["LabelQuality", "MeshResult", "MeshSettings", "QualityTable", "mesh", "mesh_surface"]

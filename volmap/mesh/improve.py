@@ -4,18 +4,18 @@ from __future__ import annotations
 
 import numpy as np
 
-from volmap.kernels.labelfield import LabelField, Scratch
+from volmap.kernels.labelfield import LabelField, Scratch, new_scratch
 from volmap.kernels.relocate import reproject, search, search_directions, smooth
 from volmap.kernels.stars import new_stars
-from volmap.kernels.strata import Strata, point_normals
+from volmap.kernels.strata import BACKGROUND, INTERIOR, Strata, point_normals
 from volmap.mesh.labelled import Complex
 
 GOOD = float(np.sin(np.radians(32.0)))  # a star this good may give some of it up for an even mesh
-BAD = float(np.sin(np.radians(20.0)))  # stars worse than this are searched for something better
 KEPT = float(np.sin(np.radians(18.0)))  # what re-projection leaves alone
 SHARE = 0.7  # of the way to the mean, for interface points
-SEARCH_ROUNDS = 2
-SLACK_VOXELS = 0.15  # how far a search may take an interface point from the tie
+# Searches one after another: stars worse than the angle are searched, and interface points may leave the tie
+# by so much of a voxel.  The last ones serve the few stars that the strict ones cannot mend.
+SEARCHES = ((20.0, 0.15), (20.0, 0.15), (16.0, 0.3), (16.0, 0.3), (16.0, 0.5), (16.0, 0.5))
 
 
 def improved(
@@ -30,12 +30,12 @@ def improved(
     for _ in range(sweeps):
         strata.normals[:] = point_normals(stars.points, strata.triangles)
         smooth(field, stars, strata, GOOD, SHARE, shift, place, scratch)
-    slack_mm = SLACK_VOXELS * float(field.spacing.min())
+    voxel_mm = float(field.spacing.min())
     directions, memory = search_directions(), np.zeros((3, 3))
-    for _ in range(SEARCH_ROUNDS):
+    for bad_deg, slack_voxels in SEARCHES:
         strata.normals[:] = point_normals(stars.points, strata.triangles)
-        if search(field, stars, strata, BAD, slack_mm, directions, memory, scratch) == 0:
-            break
+        bad, slack_mm = float(np.sin(np.radians(bad_deg))), slack_voxels * voxel_mm
+        search(field, stars, strata, bad, slack_mm, directions, memory, scratch)
     return Complex(stars.points, complex_.tets, complex_.labels)
 
 
@@ -45,3 +45,10 @@ def on_ties(field: LabelField, complex_: Complex, strata: Strata, scratch: Scrat
     strata.normals[:] = point_normals(stars.points, strata.triangles)
     reproject(field, stars, strata, KEPT, np.zeros(3), np.zeros(3), scratch)
     return Complex(stars.points, complex_.tets, complex_.labels)
+
+
+def smoothed_inside(complex_: Complex, strata: Strata) -> Complex:
+    """The complex with the inner points around its worst tets searched for better places; all others stay."""
+    inner = strata._replace(kind=np.where(strata.kind == INTERIOR, INTERIOR, BACKGROUND))
+    field = LabelField(np.zeros((1, 1, 1), np.uint16), np.ones(3), np.ones(3), np.zeros(1))
+    return improved(field, complex_, inner, sweeps=2, scratch=new_scratch())

@@ -113,7 +113,8 @@ def _both_ways(
     ahead = cut_edges(field, points, sets, edges, scratch)
     back = cut_edges(field, points, sets, np.ascontiguousarray(edges[:, ::-1]), scratch)
     labels = np.stack([ahead[1], back[1]])
-    return np.stack([ahead[0], back[0]]), labels, (labels[:, :, 1] >= 0).all(axis=0)
+    crossed = np.asarray((labels[:, :, 1] >= 0).all(axis=0))
+    return np.stack([ahead[0], back[0]]), labels, crossed
 
 
 def _reaches(points: Floats, edges: Ints, edge_of_tet: Ints) -> Floats:
@@ -188,4 +189,4 @@ def _labels_of_tets(field: LabelField, points: Floats, tets: Ints, sets: Ints, s
     labels = first[np.arange(len(tets)), common.argmax(axis=1)]
     unclear = np.flatnonzero(common.sum(axis=1) != 1)
     labels[unclear] = owners(field, points[tets[unclear]].mean(axis=1), scratch)
-    return labels
+    return np.asarray(labels)

@@ -19,6 +19,8 @@ from volmap.types.volumes import LabelVolume
 LEAST_DIHEDRAL_DEG = 12.0
 VOLUME_LIMIT_PCT = 0.5
 THIN_VOLUME_LIMIT_PCT = 3.0
+MOST_PIECES = 20
+MOST_HOLES = 4  # by which the Euler number of a thin label may change without another attempt
 SMALLEST_DEFAULT_VOXELS = 0.75  # no default edge is shorter: the voxels say nothing finer
 
 
@@ -76,7 +78,7 @@ def mesh(
         shortfall += 1e12 * (table.min_dihedral_deg < LEAST_DIHEDRAL_DEG or table.inverted_tets > 0)
         if best is None or shortfall < best[0]:
             best = (shortfall, attempt, table)
-        if shortfall == 0.0:
+        if shortfall == 0.0 or _crumbles(table):
             break
     assert best is not None
     _, kept, table = best
@@ -124,15 +126,23 @@ def rungs(settings: MeshSettings, volume_mm3: float, voxel_mm: float) -> tuple[R
     return (first, *(r for r in later if lattice_size(volume_mm3, r.edge_mm) <= settings.max_tets))
 
 
+def _crumbles(table: QualityTable) -> bool:
+    """True for labels in so many pieces that shorter edges would only make more of them."""
+    return max(row.voxel_pieces for row in table.rows) > MOST_PIECES
+
+
 def volume_limit_pct(row: LabelQuality) -> float:
     """How far the volume of a label may be off: 0.5 %, 3 % for one thinner than three voxels."""
     return THIN_VOLUME_LIMIT_PCT if row.thin else VOLUME_LIMIT_PCT
 
 
 def wrong_rows(table: QualityTable) -> tuple[LabelQuality, ...]:
-    """Labels that are lost, miss their volume, or have more pieces than their voxels."""
+    """Labels that are lost, miss their volume, fall apart, or are thin and have become full of holes."""
     return tuple(
         row
         for row in table.rows
-        if row.tets == 0 or abs(row.volume_error_pct) > volume_limit_pct(row) or row.pieces > row.voxel_pieces
+        if row.tets == 0
+        or abs(row.volume_error_pct) > volume_limit_pct(row)
+        or row.pieces > row.voxel_pieces
+        or (row.thin and abs(row.euler - row.voxel_euler) > MOST_HOLES)
     )

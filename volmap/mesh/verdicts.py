@@ -58,6 +58,8 @@ def _not_held(labels: LabelVolume, row: LabelQuality, n_tried: int) -> Finding:
     elif row.pieces > row.voxel_pieces:
         code = "label-fragmented"
         what = f"the mesh has {row.pieces} pieces where the voxels have {row.voxel_pieces}"
+    elif row.thin and row.euler != row.voxel_euler:
+        code, what = "label-perforated", "the label is thinner than the edges and its mesh has holes"
     else:
         code, what = "volume-off", f"the volume of the mesh is off by {row.volume_error_pct:+.2f} %"
     return Finding(

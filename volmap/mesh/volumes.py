@@ -21,7 +21,7 @@ MOST_RELAXATIONS = 8
 def label_volumes(complex_: Complex, n_labels: int) -> Floats:
     """(n_labels,) volume of each label, mm3."""
     volumes = signed_volumes(complex_.points, complex_.tets)
-    return np.bincount(complex_.labels, volumes, n_labels)
+    return np.asarray(np.bincount(complex_.labels, volumes, n_labels), np.float64)
 
 
 def shared_areas(points: Floats, strata: Strata, n_labels: int) -> Floats:
