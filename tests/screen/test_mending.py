@@ -59,6 +59,21 @@ def test_a_speck_inside_another_label_joins_it_rather_than_making_a_cavity():
     assert [c.kind for c in done.changes] == ["dropped speck"]
 
 
+def test_two_specks_side_by_side_do_not_trade_places_for_ever():
+    # Each would take the other's label (a tie of six, the smallest wins) if specks had a say.
+    x, y, z = np.indices((14, 13, 13)) - np.array([6, 6, 6])[:, None, None, None]
+    along = np.where(x < 0, -x, np.maximum(x - 1, 0))
+    sideways = np.abs(y) >= np.abs(z)
+    labels = np.where(sideways, np.where(y < 0, 4, 5), np.where(z < 0, 6, 7))
+    ends = along > np.maximum(np.abs(y), np.abs(z))
+    labels = np.where(ends, np.where(x < 0, 3, 8), labels)
+    labels[0, 0:3, 0:3] = 1
+    labels[13, 0:3, 0:3] = 2
+    labels[6, 6, 6], labels[7, 6, 6] = 1, 2
+    done = mend(volume(labels), pad=False)
+    assert [(c.label, c.to_label, c.voxels) for c in done.changes] == [(1, 3, 1), (2, 4, 1)]
+
+
 def test_switches_and_limits():
     labels = np.where(distance() < 9, 1, 0)
     labels[11:14, 11:13, 11:13] = 0

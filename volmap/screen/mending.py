@@ -149,15 +149,21 @@ def _drop_specks(work: _Work, limit: float) -> None:
         specked = np.zeros(work.labels.shape, bool)
         for region in specks:
             specked[region.box] |= region.mask
-        firm = np.where(specked, 0, work.labels)  # specks have no say
-        targets = [most_common(region.values_around(firm)) for region in specks]
+        firm = np.where(specked, -1, work.labels.astype(np.int64))
+        targets = [_by_vote(region.values_around(firm)) for region in specks]
         for region, target in zip(specks, targets, strict=True):
             work.give(region, target, "dropped speck")
 
 
+def _by_vote(values: NDArray[np.int64]) -> int:
+    """The value of most faces; specks (-1) have no say, so that two of them cannot trade places for ever."""
+    firm = values[values >= 0]
+    return most_common(firm) if len(firm) else 0
+
+
 def _specks(labels: NDArray[np.uint16], limit: float) -> list[Region]:
     found = []
-    for label in np.flatnonzero(np.bincount(labels.ravel()))[:].tolist():
+    for label in np.flatnonzero(np.bincount(labels.ravel())).tolist():
         if label == 0:
             continue
         numbered, sizes = pieces(labels == label)
@@ -171,8 +177,7 @@ def _specks(labels: NDArray[np.uint16], limit: float) -> list[Region]:
 def _fill_cavities(work: _Work, largest: float) -> None:
     for region in enclosed(work.labels == 0):
         if region.voxels <= largest:
-            around = region.values_around(work.labels)
-            work.give(region, most_common(around[around > 0]), "filled cavity")
+            work.give(region, most_common(region.values_around(work.labels)), "filled cavity")
 
 
 def _pad(
