@@ -7,8 +7,9 @@ import pytest
 from box_of_two_labels import SIZE, box, field, moved, moved_back
 
 from volmap.certify import certify
+from volmap.certify.labels_agree import topology
 from volmap.kernels.rasterise import tets_on_grid
-from volmap.types import Grid, GridField, LabelVolume, LandmarkPairs, TetMesh, Verdict, VolumeMap
+from volmap.types import Grid, GridField, LabelVolume, LandmarkPairs, Surface, TetMesh, Verdict, VolumeMap
 
 ALL = (
     "inverted_tets",
@@ -259,6 +260,50 @@ def test_a_label_in_more_pieces_or_with_a_hole_warns(sound, table):
     labels[tuple(middle)] = 0
     gates = run(replace(sound, target=LabelVolume(sound.target.grid, labels)), table)
     assert gates["labels_agree"].value["target"]["1"] == {"pieces": 1, "euler": 2}
+
+
+def test_pieces_and_euler_numbers_are_those_of_six_neighbours():
+    """Two voxels that share an edge only: two pieces, Euler number 2 (with 26 neighbours both would be 1)."""
+    two = np.zeros((2, 2, 1), bool)
+    two[0, 0, 0] = two[1, 1, 0] = True
+    assert topology(two) == (2, 2)
+    ring_of_voxels = np.ones((3, 3, 1), bool)
+    ring_of_voxels[1, 1] = False
+    assert topology(ring_of_voxels) == (1, 0)
+
+
+def test_a_part_of_the_scan_that_the_map_never_reaches(sound, table):
+    """Seen from the map every distance is 0; only the way back finds the part that was left out."""
+    scan, n = sound.target_surface, len(sound.target_surface.points)
+    part = box((1, 1, 1), (2.0, 2, 2), origin=(60, 0, 0)).interfaces
+    more = Surface(
+        np.r_[scan.points, part.points],
+        np.r_[scan.triangles, part.triangles + n],
+        np.r_[scan.sides, part.sides],
+    )
+    gate = run(replace(sound, target_surface=more), table)["boundary_distance_mm"]
+    assert gate.verdict is Verdict.FAIL
+    rows = gate.value["per_label"]["target"]["1"]
+    assert rows["map_to_scan"]["max"] < 1e-9
+    assert rows["scan_to_map"]["max"] > 30
+    assert gate.where[0]["point_mm"][0] > 55
+
+
+@pytest.mark.parametrize("space", ["source", "target"])
+def test_overlap_is_measured_on_both_grids(sound, table, space):
+    """Labels pushed three voxels along k: in SOURCE 7 of 10 slices stay, and so Dice is 0.7."""
+    volume = getattr(sound, space)
+    pushed = LabelVolume(volume.grid, np.roll(volume.labels, 3, axis=2))
+    gate = run(replace(sound, **{space: pushed}), table)["overlap"]
+    other = {"source": "target", "target": "source"}[space]
+    assert gate.value["per_label"][other]["1"]["dice"] > 0.98
+    assert (
+        gate.value["lowest_dice"]
+        == min(row["dice"] for row in gate.value["per_label"][space].values())
+        < 0.85
+    )
+    if space == "source":
+        assert gate.value["per_label"]["source"]["1"]["dice"] == pytest.approx(0.7)
 
 
 def test_the_handedness_of_a_grid_is_no_fold(sound, table):
