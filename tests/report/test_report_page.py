@@ -116,6 +116,7 @@ def test_the_page_is_whole_and_says_everything(page: str, inputs: ReportInput) -
     assert inputs.source.sha256[:12] in words
     assert "L-A-S (left-handed)" in words
     assert "guide steered the map" in words
+    assert "Smallest volume ratio met at any step: 0.54." in words
     assert "rose over the ladder 0.01, 0.1, 1" in words
     assert len(page) < 4e6
 
@@ -289,7 +290,26 @@ def test_the_methods_tell_the_settings_that_are_known(settings: dict[str, object
     told = " ".join(methods.methods(bare))
     assert words in told
     assert "was not certified" in told
-    assert ("ladder" in told) is False
     assert [v for k, v in methods.settings_rows(bare) if k == "energy"] == [
         str(settings[k]) for k in settings if k == "energy"
     ]
+
+
+@pytest.mark.parametrize(
+    ("value", "words"),
+    [
+        (0, "none was inverted"),
+        ({"count": 0, "tets": 9}, "none was inverted"),
+        ({"count": 2}, "2 were inverted"),
+    ],
+)
+def test_the_methods_tell_the_exact_signs_only_when_they_were_found(value: object, words: str) -> None:
+    gate = Gate("inverted_tets", value, "tets", None, None, "", Verdict.PASS)
+    given = make_inputs(3)
+
+    def told(gates: tuple[Gate, ...]) -> str:
+        return " ".join(methods.methods(dataclasses.replace(given, certificate=Certificate({}, {}, gates))))
+
+    assert words in told((gate,))
+    assert "was not certified" in told((dataclasses.replace(gate, verdict=Verdict.NOT_ASSESSED),))
+    assert "was not certified" in told(())

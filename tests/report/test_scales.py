@@ -63,6 +63,9 @@ def test_the_sides_differ_for_a_reader_without_green_cones() -> None:
     assert (opposite[[0, 1, 2, 3]] > [0.4, 0.4, 0.3, 0.15]).all()
     assert (seen[:4, 2] > seen[:4, 0]).all()  # shrank: blue
     assert (seen[5:, 2] < seen[5:, 0]).all()  # grew: yellow to brown
+    plain = scales.ratio_colours(t)
+    assert (np.diff(plain[:4], axis=1) > 0.05).all()  # blue: red < green < blue
+    assert (np.diff(plain[5:], axis=1) < -0.05).all()  # orange: red > green > blue
 
 
 def test_a_ratio_that_is_not_positive_has_a_colour_off_the_scale() -> None:

@@ -328,6 +328,6 @@ def solve_picture(inputs: ReportInput) -> Picture | None:
         charts.solve_course(inputs.history),
         alt=f"Boundary residual, boundary weight and smallest volume ratio over {len(inputs.history)} "
         f"Newton steps; the residual ended at {scales.mm(last.residual_mm)}.",
-        caption="The solve: as the boundary weighs more, the boundaries meet; the smallest volume ratio "
-        "stays above zero at every step.",
+        caption="The solve, step by step. Smallest volume ratio met at any step: "
+        f"{scales.number(min(h.smallest_ratio for h in inputs.history))}.",
     )

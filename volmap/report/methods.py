@@ -110,13 +110,12 @@ def _gate(inputs: ReportInput, name: str) -> Gate | None:
 
 def _signs(inputs: ReportInput) -> str:
     gate = _gate(inputs, "inverted_tets")
-    if gate is None or gate.verdict is Verdict.NOT_ASSESSED or not isinstance(gate.value, int | float):
+    found = gate.value.get("count") if gate is not None and isinstance(gate.value, Mapping) else None
+    found = gate.value if gate is not None and isinstance(gate.value, int) else found
+    if gate is None or gate.verdict is Verdict.NOT_ASSESSED or not isinstance(found, int):
         return "The orientation of the mapped tetrahedra was not certified."
-    count = "none" if gate.value == 0 else number(int(gate.value))
-    return (
-        f"The orientation of every mapped tetrahedron was decided with exact arithmetic; {count} "
-        f"{'was' if gate.value <= 1 else 'were'} inverted."
-    )
+    count = "none was" if found == 0 else f"{number(found)} {'was' if found == 1 else 'were'}"
+    return f"The orientation of every mapped tetrahedron was decided with exact arithmetic; {count} inverted."
 
 
 def _ending(inputs: ReportInput) -> str:
