@@ -102,6 +102,22 @@ def test_flat_triangles_have_the_rational_sign(values, axis):
     assert orient_2d(points, axis, 0, 1, 2) == (det > 0) - (det < 0)
 
 
+@settings(max_examples=200, deadline=None)
+@given(st.lists(plain_size, min_size=4, max_size=4), weights, st.integers(-3, 3), st.integers(0, 2))
+def test_nearly_collinear_points_have_the_rational_sign(values, t, nudges, axis):
+    """The third point is put on the line of the others up to rounding, then moved by a few last bits."""
+    u, v = (axis + 1) % 3, (axis + 2) % 3
+    points = np.zeros((3, 3))
+    points[:2, [u, v]] = np.array(values).reshape(2, 2)
+    points[2] = points[0] + t * (points[1] - points[0])
+    for _ in range(abs(nudges)):
+        points[2, v] = np.nextafter(points[2, v], np.inf if nudges > 0 else -np.inf)
+    p = [[Fraction(float(points[i, w])) for w in (u, v)] for i in range(3)]
+    det = (p[1][0] - p[0][0]) * (p[2][1] - p[0][1]) - (p[1][1] - p[0][1]) * (p[2][0] - p[0][0])
+    if np.abs(points[points != 0]).min(initial=1) > 1e-75:
+        assert orient_2d(points, axis, 0, 1, 2) == (det > 0) - (det < 0)
+
+
 @pytest.mark.parametrize("axis", [0, 1, 2])
 def test_a_triangle_seen_along_an_axis_turns_as_its_tet(axis):
     """Counter-clockwise along an axis is positive with a fourth point further along it."""
