@@ -62,12 +62,15 @@ def labelled_lattice(
     Returns
     -------
     complex : Complex
+        Without tets when no lattice point falls into the body.
     n_specks : int
         Tiny pieces that took the label around them.
     """
     points, tets = _lattice_near_body(field, edge_mm)
     owner = owners(field, points, scratch)
     points, tets, owner = refined(field, points, tets, owner, edge_mm=edge_mm, times=refine, scratch=scratch)
+    if not (owner > 0).any():
+        return Complex(points[:0], tets[:0], owner[:0]), 0
     points, tets, owner = _with_ring(points, tets, owner)
     sets = np.full((len(points), MOST_TIES), -1, np.int64)
     sets[:, 0] = owner

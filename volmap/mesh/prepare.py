@@ -49,14 +49,19 @@ class Prepared:
     fine: NDArray[np.uint16]
 
     @property
+    def coarse_spacing(self) -> NDArray[np.float64]:
+        """(3,) of the voxels, mm, to 1e-7: the last bits of an oblique affine must not change a mesh."""
+        return np.asarray(np.round(self.grid.spacing, 7))
+
+    @property
     def spacing(self) -> NDArray[np.float64]:
         """(3,) of the fine voxels, mm."""
-        return np.asarray(self.grid.spacing / self.factors)
+        return np.asarray(self.coarse_spacing / self.factors)
 
     @property
     def voxel_volume(self) -> float:
         """Of an uncut voxel in the mesher's frame (which has no shear), mm3."""
-        return float(np.prod(self.grid.spacing))
+        return float(np.prod(self.coarse_spacing))
 
     def field(self, width_voxels: float) -> LabelField:
         """The smoothed indicators of the fine voxels."""
@@ -65,7 +70,7 @@ class Prepared:
 
     def to_world(self, points: NDArray[np.float64]) -> NDArray[np.float64]:
         """(n, 3) points of the mesher's frame to world mm, RAS+."""
-        index = points / self.grid.spacing - 0.5 * (1.0 - 1.0 / self.factors) + self.corner
+        index = points / self.coarse_spacing - 0.5 * (1.0 - 1.0 / self.factors) + self.corner
         return self.grid.to_world(index)
 
 
@@ -81,7 +86,7 @@ def prepare(volume: LabelVolume) -> Prepared:
     kept = volume.labels[tuple(slice(a, b) for a, b in zip(corner, end, strict=True))]
     label_ids = np.unique(np.r_[0, kept.ravel()]).astype(np.int64)
     labels = np.ascontiguousarray(np.searchsorted(label_ids, kept).astype(np.uint16))
-    factors = subdivision(volume.grid.spacing)
+    factors = subdivision(np.round(volume.grid.spacing, 7))
     fine = subdivided(labels, volume.grid.spacing, factors)
     return Prepared(volume.grid, corner, factors, label_ids, labels, fine)
 
