@@ -1,9 +1,9 @@
 """The gel column at rest: its shape, its two inclusions and the motion of the plate it is glued to.
 
-The column lies in a test rig, its long axis along z.  Its foot is clamped, its top is glued to a plate
-that moves.  At first it floats in a bath of its own density; as the bath is drained it sags under its
-weight.  One inclusion takes up water and swells, the other dries and shrinks.  Lengths are mm, angles
-degrees, stiffness kPa.
+The column lies in a test rig, its long axis along z. Its foot is glued to a plate that turns, its top
+to one that turns and moves. At first it floats in a bath of its own density; as the bath is drained it
+sags under its weight. One inclusion takes up water and swells, the other dries and shrinks. Lengths are
+mm, angles degrees, stiffness kPa.
 """
 
 from __future__ import annotations
@@ -38,9 +38,11 @@ class LoadStep:
     Parameters
     ----------
     shift_mm : tuple of 3 float
-        Translation of the plate.
+        Translation of the top plate.
     turn_deg : tuple of 3 float
-        Rotation vector of the plate about the middle of the column's top.
+        Rotation vector of the top plate about the middle of the column's top.
+    foot_turn_deg : tuple of 3 float
+        Rotation vector of the foot plate about the middle of the column's foot.
     growth : dict of int to float
         Stress-free volume ratio of each label; labels not named keep 1.
     drained : float
@@ -49,6 +51,7 @@ class LoadStep:
 
     shift_mm: tuple[float, float, float]
     turn_deg: tuple[float, float, float]
+    foot_turn_deg: tuple[float, float, float]
     growth: dict[int, float]
     drained: float
 
@@ -67,15 +70,19 @@ class LoadStep:
         growth = {k: (1 - share) * self.growth.get(k, 1.0) + share * other.growth.get(k, 1.0) for k in labels}
         drained = (1 - share) * self.drained + share * other.drained
         return LoadStep(
-            mix(self.shift_mm, other.shift_mm), mix(self.turn_deg, other.turn_deg), growth, drained
+            mix(self.shift_mm, other.shift_mm),
+            mix(self.turn_deg, other.turn_deg),
+            mix(self.foot_turn_deg, other.foot_turn_deg),
+            growth,
+            drained,
         )
 
 
-REST = LoadStep((0.0, 0.0, 0.0), (0.0, 0.0, 0.0), {}, 0.0)
+REST = LoadStep((0.0, 0.0, 0.0), (0.0, 0.0, 0.0), (0.0, 0.0, 0.0), {}, 0.0)
 LOADS = (
-    LoadStep((2.0, -2.0, 2.5), (-4.0, -3.0, 5.0), {2: 1.06, 3: 0.94}, 0.5),
-    LoadStep((5.0, -5.0, 6.0), (-8.0, -6.0, 10.0), {2: 1.13, 3: 0.88}, 0.75),
-    LoadStep((9.0, -8.0, 12.0), (-11.0, -8.0, 15.0), {2: 1.22, 3: 0.80}, 1.0),
+    LoadStep((5.7, -7.6, 1.5), (-4.0, -3.0, 3.0), (12.0, 9.0, 0.0), {2: 1.06, 3: 0.94}, 0.10),
+    LoadStep((9.2, -12.2, 3.0), (-6.3, -4.8, 5.0), (19.0, 14.3, 0.0), {2: 1.13, 3: 0.88}, 0.15),
+    LoadStep((12.9, -17.2, 4.5), (-8.8, -6.6, 7.0), (26.4, 19.8, 0.0), {2: 1.22, 3: 0.80}, 0.20),
 )
 
 
@@ -105,8 +112,19 @@ def rest_shape(box: NDArray[np.float64]) -> NDArray[np.float64]:
     return np.stack([across, deep, height], axis=1)
 
 
-def plate_motion(points: NDArray[np.float64], load: LoadStep) -> NDArray[np.float64]:
-    """(n, 3) displacement, mm, of (n, 3) points glued to the plate."""
-    middle = np.array([0.0, 0.0, HEIGHT_MM])
-    turn = Rotation.from_rotvec(np.radians(load.turn_deg)).as_matrix()
-    return np.asarray((points - middle) @ turn.T + middle + np.array(load.shift_mm) - points)
+def top_motion(points: NDArray[np.float64], load: LoadStep) -> NDArray[np.float64]:
+    """(n, 3) displacement, mm, of (n, 3) points glued to the top plate."""
+    turned = _turned(points, load.turn_deg, np.array([0.0, 0.0, HEIGHT_MM]))
+    return np.asarray(turned + np.array(load.shift_mm) - points)
+
+
+def foot_motion(points: NDArray[np.float64], load: LoadStep) -> NDArray[np.float64]:
+    """(n, 3) displacement, mm, of (n, 3) points glued to the foot plate."""
+    return np.asarray(_turned(points, load.foot_turn_deg, np.zeros(3)) - points)
+
+
+def _turned(
+    points: NDArray[np.float64], turn_deg: tuple[float, float, float], middle: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    turn = Rotation.from_rotvec(np.radians(turn_deg)).as_matrix()
+    return np.asarray((points - middle) @ turn.T + middle)

@@ -25,14 +25,15 @@ CONTRAST = Contrast(column.NAMES, {1: 110.0, 2: 190.0, 3: 65.0})
 BEADS_IN = {1: 18, 2: 4, 3: 2}
 STORY = (
     "A soft gel column of about 45 x 36 x 110 mm, rounded and irregular, with two stiffer inclusions "
-    "and 24 beads, lies in a test rig, its foot clamped and its top glued to a plate. At visit 0 it "
-    "floats in a bath of its own density. For visits 1 to 3 the bath is drained step by step, so that "
-    "the column sags under its weight, while the plate moves sideways, turns and pulls: it is bent, "
-    "twisted and stretched by up to 25 mm. One inclusion takes up water and swells, the other dries and "
-    "shrinks. The motion is a finite-element solution (scikit-fem, quadratic tetrahedra, compressible "
-    "neo-Hookean gel with stress-free growth) stored in phantoms/data and made again by `python -m "
+    "and 24 beads, lies in a test rig, its foot and its top glued to plates. At visit 0 it floats in a "
+    "bath of its own density. For visits 1 to 3 both plates turn, the top plate moves sideways and "
+    "pulls, and the bath is drained in part, so that the column is bent, twisted, stretched and sags, "
+    "by up to 25 mm. One inclusion takes up water and swells, the other dries and shrinks. The motion "
+    "is a finite-element solution (scikit-fem, quadratic tetrahedra, compressible neo-Hookean gel with "
+    "stress-free growth) stored in phantoms/data and made again by `python -m "
     "volmap_phantoms.simulate`. A voxel has the label of the material point at its centre, found by "
-    "point location in the deformed mesh."
+    "point location in the deformed mesh. Labels show least of what happens close to the plates, where "
+    "the glue holds the gel back."
 )
 
 

@@ -73,7 +73,11 @@ def simulated(
         state = states[-1]
         for part in range(1, substeps + 1):
             load = before.between(after, part / substeps)
-            moved = np.concatenate([np.zeros((len(foot), 3)), column.plate_motion(solid.nodes[top], load)])
+            ends = (
+                column.foot_motion(solid.nodes[foot], load),
+                column.top_motion(solid.nodes[top], load),
+            )
+            moved = np.concatenate(ends)
             state = equilibrium(
                 solid, material_under(solid, load), state, held=held, held_displacement=moved, report=report
             )
@@ -84,7 +88,7 @@ def simulated(
 def _ends(
     solid: Solid, mesh: MeshTet, cells: tuple[int, int, int]
 ) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-    """Nodes of the clamped foot and of the glued top, by their place in the box the mesh came from."""
+    """Nodes glued to the foot plate and to the top plate, by their place in the box the mesh came from."""
     box = MeshTet.init_tensor(*(np.linspace(0, 1, n + 1) for n in cells))
     nodes = []
     for level in (0.0, 1.0):

@@ -38,15 +38,15 @@ def test_stored_motion_is_the_equilibrium_of_the_code_that_made_it():
     state[order] = simulation.displacements[3][stored_order]
     forces, _ = forces_and_stiffness(solid, material_under(solid, column.LOADS[2]), state)
     size = np.linalg.norm(forces.reshape(-1, 3), axis=1)
-    moved = column.plate_motion(solid.nodes, column.LOADS[2])
-    glued = (np.abs(state).max(axis=1) == 0) | (np.abs(state - moved).max(axis=1) < 1e-5)
+    plates = [motion(solid.nodes, column.LOADS[2]) for motion in (column.foot_motion, column.top_motion)]
+    glued = np.min([np.abs(state - moved).max(axis=1) for moved in plates], axis=0) < 1e-5
     assert 0.05 < glued.mean() < 0.15
     assert size[~glued].max() < 1e-3 * size[glued].max()
 
 
 def test_a_coarse_simulation_comes_near_the_stored_one(motion):
     # rate: the same rig on coarser meshes nears the stored motion as they are refined. Measured at visit 3,
-    # where the mean displacement is 15.6 mm: mean difference 0.76, 0.49, 0.21 mm at 2, 3 and 4 cells across
+    # where the mean displacement is 15.4 mm: mean difference 0.29, 0.18, 0.09 mm at 2, 3 and 4 cells across
     # (about order 1.5: quadratic tets, but stiffness jumps inside cells). A third of room is left.
     errors = []
     for cells in ((2, 2, 5), (3, 3, 7)):
@@ -54,7 +54,7 @@ def test_a_coarse_simulation_comes_near_the_stored_one(motion):
         inside = np.isfinite(motion.to_material(coarse.points, 0)).all(axis=1)
         moved = motion.from_material(coarse.points[inside], 3) - coarse.points[inside]
         errors.append(np.linalg.norm(moved - coarse.displacements[3][inside], axis=1).mean())
-    assert errors[0] < 1.0
+    assert errors[0] < 0.4
     assert errors[1] < 0.75 * errors[0]
 
 
@@ -70,10 +70,10 @@ def test_no_tet_is_inverted_and_growth_is_what_was_asked(motion):
 
 
 def test_displacement_is_what_the_scenario_says(motion):
-    # the figure: up to 25 mm, growing from visit to visit, and the foot does not move
+    # the figure: up to 25 mm, growing from visit to visit
     largest = np.linalg.norm(motion.simulation.displacements, axis=2).max(axis=1)
     assert largest[0] == 0
-    assert largest[3] == pytest.approx(24.5, abs=1.0)
+    assert largest[3] == pytest.approx(25.0, abs=1.0)
     assert (np.diff(largest) > 4).all()
 
 
@@ -142,11 +142,11 @@ def test_volume_ratio_by_differences_of_carry(phantom):
 
 
 def test_affine_cannot_explain_the_motion(phantom):
-    # the scenario asks for bending: the best affine map of the beads themselves leaves more than a voxel
+    # the scenario asks for bending: the best affine map of the beads themselves leaves most of a millimetre and more
     start = np.c_[phantom.visits[0].beads.points, np.ones(24)]
     for visit in phantom.visits[1:]:
         left = start @ np.linalg.lstsq(start, visit.beads.points, rcond=None)[0] - visit.beads.points
-        assert np.linalg.norm(left, axis=1).mean() > 1.3
+        assert np.linalg.norm(left, axis=1).mean() > 0.8
 
 
 def test_file_keeps_a_simulation(tmp_path, motion):
