@@ -1,14 +1,15 @@
-"""Whether this machine has compiled the kernels before."""
+"""How kernels are compiled: once a machine, with as little to compile as can be.
+
+A literal number handed on to a kernel compiles it once more: hand on ``np.int64(0)`` instead.
+"""
 
 from __future__ import annotations
 
-from pathlib import Path
+from numba import njit
 
-from volmap.kernels.distortion import derivatives
+# Called from Python: wrappers and all.  Division by zero gives infinity, as in numpy.
+kernel = njit(cache=True, error_model="numpy")
 
-
-def not_compiled_yet() -> bool:
-    """True when numba's cache does not hold the largest kernel for this Python yet."""
-    cache = getattr(derivatives, "_cache", None)
-    folder = Path(getattr(cache, "cache_path", "") or ".")
-    return not any(folder.glob("distortion.derivatives-*.nbi"))
+# Called by kernels only: without the wrappers that unpack Python arguments, which take longer to compile
+# than most bodies.
+inner_kernel = njit(cache=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)

@@ -13,8 +13,9 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
+
+from volmap.kernels.compiled import inner_kernel, kernel
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -69,7 +70,7 @@ def new_scratch() -> Scratch:
     )
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _spline(t):  # type: ignore[no-untyped-def]
     """B3(t)."""
     t = abs(t)
@@ -80,7 +81,7 @@ def _spline(t):  # type: ignore[no-untyped-def]
     return 0.0
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _spline_slope(t):  # type: ignore[no-untyped-def]
     """Derivative of B3 at t."""
     sign = 1.0 if t > 0.0 else -1.0
@@ -92,7 +93,7 @@ def _spline_slope(t):  # type: ignore[no-untyped-def]
     return 0.0
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _weigh_axis(field, axis, place_mm, weights):  # type: ignore[no-untyped-def]
     """Fill the weights along one axis; returns the first voxel that counts and how many do."""
     width, spacing = field.width[axis], field.spacing[axis]
@@ -106,7 +107,7 @@ def _weigh_axis(field, axis, place_mm, weights):  # type: ignore[no-untyped-def]
     return first, count
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _slot_of(names, count, label):  # type: ignore[no-untyped-def]
     """Where a label's sums are kept; `count` when it has not been met."""
     for slot in range(count):
@@ -115,7 +116,7 @@ def _slot_of(names, count, label):  # type: ignore[no-untyped-def]
     return min(count, names.shape[0] - 1)
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _add_run(scratch, count, label, a, b, run, slope):  # type: ignore[no-untyped-def]
     """Add a run of voxels of one label along the last axis; returns the number of labels met."""
     names, values, weights = scratch.names, scratch.values, scratch.weights
@@ -132,7 +133,7 @@ def _add_run(scratch, count, label, a, b, run, slope):  # type: ignore[no-untype
     return count
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def evaluate(field, x, y, z, scratch):  # type: ignore[no-untyped-def]
     """Values and gradients (1/mm) of all labels near a point.
 
@@ -142,21 +143,21 @@ def evaluate(field, x, y, z, scratch):  # type: ignore[no-untyped-def]
         ``scratch.names[:count]`` and ``scratch.values[:count]`` are filled.
     """
     labels, weights = field.labels, scratch.weights
-    first_i, n_i = _weigh_axis(field, 0, x, weights)
-    first_j, n_j = _weigh_axis(field, 1, y, weights)
-    first_k, n_k = _weigh_axis(field, 2, z, weights)
-    count = 0
+    first_i, n_i = _weigh_axis(field, np.int64(0), x, weights)
+    first_j, n_j = _weigh_axis(field, np.int64(1), y, weights)
+    first_k, n_k = _weigh_axis(field, np.int64(2), z, weights)
+    count = np.int64(0)
     for a in range(n_i):
         i = first_i + a
         for b in range(n_j):
             j = first_j + b
             outside = i < 0 or j < 0 or i >= labels.shape[0] or j >= labels.shape[1]
-            current, run, slope = -1, 0.0, 0.0
+            current, run, slope = np.int64(-1), 0.0, 0.0
             for c in range(n_k):
                 k = first_k + c
-                label = 0
+                label = np.int64(0)
                 if not (outside or k < 0 or k >= labels.shape[2]):
-                    label = int(labels[i, j, k])
+                    label = np.int64(labels[i, j, k])
                 if label != current and current >= 0:
                     count = _add_run(scratch, count, current, a, b, run, slope)
                     run, slope = 0.0, 0.0
@@ -169,7 +170,7 @@ def evaluate(field, x, y, z, scratch):  # type: ignore[no-untyped-def]
     return count
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def owners(field, points, scratch):  # type: ignore[no-untyped-def]
     """(n,) int64 label with the largest value at each point (mm, of the field); the smaller one of equals."""
     found = np.empty(points.shape[0], np.int64)
@@ -184,7 +185,7 @@ def owners(field, points, scratch):  # type: ignore[no-untyped-def]
     return found
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _holds(sets, row, label):  # type: ignore[no-untyped-def]
     """Whether a row of a table of label sets (filled with -1) holds a label."""
     found = False
@@ -193,7 +194,7 @@ def _holds(sets, row, label):  # type: ignore[no-untyped-def]
     return found
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _lead(field, points, sets, start, end, t, scratch):  # type: ignore[no-untyped-def]
     """How far the labels of `start` lead over all others at ``start + t (end - start)``.
 
@@ -221,7 +222,7 @@ def _lead(field, points, sets, start, end, t, scratch):  # type: ignore[no-untyp
     return best - rival, inside, outside
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def cut_edges(field, points, sets, edges, scratch):  # type: ignore[no-untyped-def]
     """Where along each edge the label leaves the set of labels of its first point.
 

@@ -7,9 +7,9 @@ angles 60 and 90 degrees, edges a and a sqrt(3)/2.
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from volmap.kernels.compiled import inner_kernel, kernel
 from volmap.kernels.tets import signed_volumes
 from volmap.kernels.topology import unique_edges
 
@@ -79,7 +79,7 @@ def used_only(points: Floats, tets: Ints) -> tuple[Floats, Ints, Ints]:
     return points[kept], new[tets], kept
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _cut_one(stack, n_pieces, start, end, middle):  # type: ignore[no-untyped-def]
     """Bisect those pieces on the stack that hold the edge (start, end); returns the number of pieces."""
     for s in range(n_pieces):
@@ -98,14 +98,14 @@ def _cut_one(stack, n_pieces, start, end, middle):  # type: ignore[no-untyped-de
     return n_pieces
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def _split(tets, edge_of_tet, ends, middle, cuts, n_cuts, pieces, parent, stack):  # type: ignore[no-untyped-def]
     """Fill `pieces` and `parent`; `cuts[t, :n_cuts[t]]` are the edges of tet t to cut, in their order."""
     n = 0
     for t in range(tets.shape[0]):
         for d in range(4):
             stack[0, d] = tets[t, d]
-        count = 1
+        count = np.int64(1)
         for q in range(n_cuts[t]):
             e = edge_of_tet[t, cuts[t, q]]
             count = _cut_one(stack, count, ends[e, 0], ends[e, 1], middle[e])

@@ -7,9 +7,9 @@ is ever turned over (Freitag & Ollivier-Gooch 1997; Klingner & Shewchuk 2007).
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from volmap.kernels.compiled import inner_kernel, kernel
 from volmap.kernels.stars import star_sine, star_sine_at
 from volmap.kernels.tie import project
 
@@ -24,7 +24,7 @@ def search_directions() -> NDArray[np.float64]:
     return np.asarray(grid / np.linalg.norm(grid, axis=1, keepdims=True))
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _average_shift(stars, strata, v, shift):  # type: ignore[no-untyped-def]
     """Fill the way to the mean of the neighbours, for an interface point without its normal part."""
     points, first, last = stars.points, strata.start[v], strata.start[v + 1]
@@ -40,7 +40,7 @@ def _average_shift(stars, strata, v, shift):  # type: ignore[no-untyped-def]
             shift[d] -= along * normal[v, d]
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _keep_if_good(stars, strata, v, place, floor):  # type: ignore[no-untyped-def]
     """Move a point to `place` unless the least sine around it falls under `floor`; True when moved."""
     sine = star_sine_at(stars, v, place, floor - SLACK, strata.size_mm[v])
@@ -51,7 +51,7 @@ def _keep_if_good(stars, strata, v, place, floor):  # type: ignore[no-untyped-de
     return True
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def smooth(field, stars, strata, good, share, shift, place, scratch):  # type: ignore[no-untyped-def]
     """One sweep of guarded averaging over all points, in their order.
 
@@ -95,7 +95,7 @@ def smooth(field, stars, strata, good, share, shift, place, scratch):  # type: i
     return n_moved
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _offer(field, stars, strata, v, direction, step, slack_mm, place, wish, scratch):  # type: ignore[no-untyped-def]
     """Fill `place` with a trial position, interface points within `slack_mm` of the tie; False if none."""
     for d in range(3):
@@ -112,7 +112,7 @@ def _offer(field, stars, strata, v, direction, step, slack_mm, place, wish, scra
     return True
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _descend(field, stars, strata, v, now, bad, slack_mm, directions, memory, scratch):  # type: ignore[no-untyped-def]
     """Pattern search (Hooke & Jeeves 1961) for a better least sine around one point; returns steps taken."""
     size, n_steps = strata.size_mm[v], 0
@@ -139,7 +139,7 @@ def _descend(field, stars, strata, v, now, bad, slack_mm, directions, memory, sc
     return n_steps
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def search(field, stars, strata, bad, slack_mm, directions, memory, scratch):  # type: ignore[no-untyped-def]
     """Pattern search at every point whose star holds a tet with a least sine under `bad`.
 
@@ -167,7 +167,7 @@ def search(field, stars, strata, bad, slack_mm, directions, memory, scratch):  #
     return n_steps
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def reproject(field, stars, strata, floor, wish, place, scratch):  # type: ignore[no-untyped-def]
     """Bring interface points back to the tie, no tet falling under `floor` that is not under it already.
 

@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from volmap.kernels.compiled import inner_kernel, kernel
 from volmap.kernels.stars import Stars, six_volumes
 
 Ints = NDArray[np.int64]
@@ -30,7 +30,7 @@ def add_labels(sets: Ints, rows: Ints, labels: Ints) -> None:
     sets[rows[fits], free[fits]] = labels[fits]
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _holds_floor(stars, v, floors):  # type: ignore[no-untyped-def]
     """Whether every tet around a point has at least its least volume (six times, mm3)."""
     for s in range(stars.start[v], stars.start[v + 1]):
@@ -40,7 +40,7 @@ def _holds_floor(stars, v, floors):  # type: ignore[no-untyped-def]
     return True
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def _snap(stars, movers, places, floors, moved, done):  # type: ignore[no-untyped-def]
     points = stars.points
     for q in range(movers.shape[0]):

@@ -5,9 +5,9 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from volmap.kernels.compiled import inner_kernel, kernel
 from volmap.kernels.topology import incidence
 
 Floats = NDArray[np.float64]
@@ -42,7 +42,7 @@ def new_stars(points: Floats, tets: Ints, labels: Ints) -> Stars:
     return Stars(np.array(points), np.array(tets), np.array(labels), start, cell)
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def six_volumes(points, tets, t):  # type: ignore[no-untyped-def]
     """Six times the signed volume of tet t, mm3."""
     a, b, c, d = tets[t, 0], tets[t, 1], tets[t, 2], tets[t, 3]
@@ -53,7 +53,7 @@ def six_volumes(points, tets, t):  # type: ignore[no-untyped-def]
     return (b1 * c2 - b2 * c1) * d0 + (b2 * c0 - b0 * c2) * d1 + (b0 * c1 - b1 * c0) * d2
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def least_sine(points, tets, t):  # type: ignore[no-untyped-def]
     """Smallest sine of the six dihedral angles of tet t; -1 when its volume is not positive.
 
@@ -83,7 +83,7 @@ def least_sine(points, tets, t):  # type: ignore[no-untyped-def]
     return volume * np.sqrt(least)
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def star_sine(stars, v, stop, size_mm):  # type: ignore[no-untyped-def]
     """Least sine of the labelled tets around a point; -1 when any tet is not positive.
 
@@ -101,7 +101,7 @@ def star_sine(stars, v, stop, size_mm):  # type: ignore[no-untyped-def]
     return worst
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def star_sine_at(stars, v, place, stop, size_mm):  # type: ignore[no-untyped-def]
     """`star_sine` as if the point were at `place`."""
     points = stars.points

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 
+from volmap.kernels.compiled import inner_kernel, kernel
 from volmap.kernels.labelfield import evaluate
 
 NEWTON_STEPS = 8
@@ -13,7 +13,7 @@ HALVINGS = 12
 FLATTEST = 0.05  # gradient per voxel below which Newton's step means nothing
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _gap_along(field, place, at, ties, normals, row, scratch):  # type: ignore[no-untyped-def]
     """Value of the first tied label minus that of the second, `at` mm along the normal of a row."""
     count = evaluate(
@@ -32,7 +32,7 @@ def _gap_along(field, place, at, ties, normals, row, scratch):  # type: ignore[n
     return gap
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _fill_gaps(scratch, count, ties, row, n_gaps):  # type: ignore[no-untyped-def]
     """Differences of the tied labels from the first of them, with gradients.
 
@@ -61,7 +61,7 @@ def _fill_gaps(scratch, count, ties, row, n_gaps):  # type: ignore[no-untyped-de
     return worst
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _solve_gaps(scratch, n_gaps, ridge):  # type: ignore[no-untyped-def]
     """Replace the gaps g by z with ``(J J' + ridge) z = g``: elimination without pivots, at most 3 x 3."""
     gaps, slopes, matrix = scratch.gaps, scratch.slopes, scratch.normal_matrix
@@ -83,7 +83,7 @@ def _solve_gaps(scratch, n_gaps, ridge):  # type: ignore[no-untyped-def]
         gaps[i] /= matrix[i, i]
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _newton_step(scratch, n_gaps, voxel_mm):  # type: ignore[no-untyped-def]
     """The shortest step that closes the gaps to first order, at most 0.6 voxel; False in a flat field."""
     slopes, step = scratch.slopes, scratch.step
@@ -105,7 +105,7 @@ def _newton_step(scratch, n_gaps, voxel_mm):  # type: ignore[no-untyped-def]
     return True
 
 
-@njit(cache=True, error_model="numpy")
+@inner_kernel
 def _search_normal(field, place, ties, normals, row, reach_mm, scratch):  # type: ignore[no-untyped-def]
     """Move `place` along the normal to the nearest change of sign: strides of half a voxel, then halving."""
     stride = 0.5 * min(field.spacing[0], field.spacing[1], field.spacing[2])
@@ -132,7 +132,7 @@ def _search_normal(field, place, ties, normals, row, reach_mm, scratch):  # type
     return True
 
 
-@njit(cache=True, error_model="numpy")
+@kernel
 def project(field, place, ties, normals, row, reach_mm, scratch):  # type: ignore[no-untyped-def]
     """Move a place to where the labels of a row of `ties` have equal values.
 
@@ -153,7 +153,7 @@ def project(field, place, ties, normals, row, reach_mm, scratch):  # type: ignor
     -------
     bool
     """
-    n_gaps = -1
+    n_gaps = np.int64(-1)
     for q in range(min(4, ties.shape[1])):
         if ties[row, q] >= 0:
             n_gaps += 1
