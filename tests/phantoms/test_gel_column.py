@@ -142,7 +142,7 @@ def test_volume_ratio_by_differences_of_carry(phantom):
 
 
 def test_affine_cannot_explain_the_motion(phantom):
-    # the scenario asks for bending: the best affine map of the beads themselves leaves most of a millimetre and more
+    # the scenario asks for bending: the best affine map of the beads themselves leaves nearly a millimetre
     start = np.c_[phantom.visits[0].beads.points, np.ones(24)]
     for visit in phantom.visits[1:]:
         left = start @ np.linalg.lstsq(start, visit.beads.points, rcond=None)[0] - visit.beads.points
