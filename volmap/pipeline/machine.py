@@ -10,7 +10,7 @@ import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 
-from volmap.kernels.compiled import not_compiled_yet
+from volmap.kernels.first_use import not_compiled_yet
 from volmap.types import InputError, Progress
 
 PACKAGES = ("volmap", "numpy", "scipy", "numba", "scikit-image", "nibabel", "vtk")
