@@ -112,3 +112,14 @@ def test_progress_is_told():
     mesh(two_in_one(), COARSE, progress=lambda stage, step, total, note="": told.append((stage, step, total)))
     assert told[0][:2] == ("mesh", 1)
     assert told[-1][1] == told[-1][2]
+
+
+def test_noise_is_meshed_and_told():
+    labels = np.zeros((14, 14, 14), np.uint16)
+    labels[2:12, 2:12, 2:12] = np.random.default_rng(0).integers(0, 3, (10, 10, 10))
+    result = mesh(volume_of(labels), COARSE)
+    assert (result.mesh.volumes > 0).all()
+    codes = {f.code for f in result.findings}
+    assert codes & {"volume-off", "label-fragmented", "label-lost", "label-perforated"}
+    assert "topology-changed" in codes
+    assert ("poor-tets" in codes) == (result.quality.min_dihedral_deg < 12)

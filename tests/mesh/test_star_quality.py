@@ -6,11 +6,13 @@ from vtkmodules.vtkCommonDataModel import vtkTetra, vtkTriangle
 
 from volmap.kernels.labelfield import LabelField, new_scratch
 from volmap.kernels.lattice import bcc
-from volmap.kernels.relocate import search, search_directions, smooth
+from volmap.kernels.relocate import relax, search, search_directions
 from volmap.kernels.snap import add_labels, disjoint, snap
 from volmap.kernels.stars import least_sine, new_stars, six_volumes, star_sine
 from volmap.kernels.strata import new_strata
 from volmap.kernels.tets import dihedral_degrees, signed_volumes
+
+SHARES = np.array([1.0, 0.7])
 
 
 def vtk_dihedrals(corners):
@@ -96,7 +98,7 @@ def test_smoothing_and_search_never_lower_the_worst_tet(shaken):
         return min(least_sine(stars.points, stars.tets, t) for t in range(len(stars.tets)))
 
     before = worst()
-    smooth(empty_field(), stars, strata, 1.0, 0.7, np.zeros(3), np.zeros(3), new_scratch())
+    relax(empty_field(), stars, strata, 1.0, SHARES, np.zeros(3), np.zeros(3), new_scratch())
     smoothed = worst()
     assert smoothed >= before
     steps = search(
@@ -109,7 +111,7 @@ def test_smoothing_and_search_never_lower_the_worst_tet(shaken):
 def test_smoothing_leaves_the_hull(shaken):
     stars, strata = shaken
     before = stars.points.copy()
-    smooth(empty_field(), stars, fixed_hull(strata), 1.0, 0.7, np.zeros(3), np.zeros(3), new_scratch())
+    relax(empty_field(), stars, fixed_hull(strata), 1.0, SHARES, np.zeros(3), np.zeros(3), new_scratch())
     hull = strata.kind != 0
     assert (stars.points[hull] == before[hull]).all()
     assert (stars.points[~hull] != before[~hull]).any()

@@ -5,6 +5,8 @@ A literal number handed on to a kernel compiles it once more: hand on ``np.int64
 
 from __future__ import annotations
 
+from typing import Any
+
 from numba import njit
 
 # Called from Python: wrappers and all.  Division by zero gives infinity, as in numpy.
@@ -12,4 +14,5 @@ kernel = njit(cache=True, error_model="numpy")
 
 # Called by kernels only: without the wrappers that unpack Python arguments, which take longer to compile
 # than most bodies.
-inner_kernel = njit(cache=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+WITHOUT_WRAPPERS: dict[str, Any] = {"no_cpython_wrapper": True, "no_cfunc_wrapper": True}
+inner_kernel = njit(cache=True, error_model="numpy", **WITHOUT_WRAPPERS)

@@ -52,8 +52,8 @@ def _keep_if_good(stars, strata, v, place, floor):  # type: ignore[no-untyped-de
 
 
 @kernel
-def smooth(field, stars, strata, good, share, shift, place, scratch):  # type: ignore[no-untyped-def]
-    """One sweep of guarded averaging over all points, in their order.
+def relax(field, stars, strata, good, shares, wish, place, scratch):  # type: ignore[no-untyped-def]
+    """One sweep over all points, in their order: towards the mean of the neighbours, interfaces onto the tie.
 
     Parameters
     ----------
@@ -62,10 +62,11 @@ def smooth(field, stars, strata, good, share, shift, place, scratch):  # type: i
         Its points change in place.
     strata : Strata
     good : float
-        Least sine that is good enough to give up for an even mesh.
-    share : float
-        Of the way to the mean that interface points go.
-    shift, place : (3,) float64
+        Least sine that is good enough to give up for an even mesh, or for the tie.
+    shares : (2,) float64
+        Of the way to the mean that inner points and interface points go.  With 0, inner points stay and
+        interface points only return to the tie.
+    wish, place : (3,) float64
         Working memory.
     scratch : Scratch
 
@@ -74,21 +75,25 @@ def smooth(field, stars, strata, good, share, shift, place, scratch):  # type: i
     int
         Points moved.
     """
-    n_moved = 0
-    for v in range(stars.points.shape[0]):
+    n_moved, points = 0, stars.points
+    for v in range(points.shape[0]):
         kind, size = strata.kind[v], strata.size_mm[v]
-        if kind < 0:
+        share = shares[1] if kind > 0 else shares[0]
+        if kind < 0 or (kind == 0 and share == 0.0):
             continue
         now = star_sine(stars, v, -2.0, size)
         if kind == 0 and now > 0.62:  # still as good as the lattice
             continue
-        _average_shift(stars, strata, v, shift)
-        step = share if kind > 0 else 1.0
-        for _ in range(1 if kind == 3 else 4):
+        _average_shift(stars, strata, v, wish)
+        for d in range(3):
+            wish[d] = points[v, d] + share * wish[d]
+        if kind > 0 and not project(field, wish, strata.ties, strata.normals, v, REACH * size, scratch):
+            continue
+        step = 1.0
+        for _ in range(4):
             for d in range(3):
-                place[d] = stars.points[v, d] + step * shift[d]
-            on = kind == 0 or project(field, place, strata.ties, strata.normals, v, REACH * size, scratch)
-            if on and _keep_if_good(stars, strata, v, place, min(now, good)):
+                place[d] = points[v, d] + step * (wish[d] - points[v, d])
+            if _keep_if_good(stars, strata, v, place, min(now, good)):
                 n_moved += 1
                 break
             step *= 0.5
@@ -165,33 +170,3 @@ def search(field, stars, strata, bad, slack_mm, directions, memory, scratch):  #
         if now < bad:
             n_steps += _descend(field, stars, strata, v, now, bad, slack_mm, directions, memory, scratch)
     return n_steps
-
-
-@kernel
-def reproject(field, stars, strata, floor, wish, place, scratch):  # type: ignore[no-untyped-def]
-    """Bring interface points back to the tie, no tet falling under `floor` that is not under it already.
-
-    Returns
-    -------
-    int
-        Points moved.
-    """
-    n_moved = 0
-    for v in range(stars.points.shape[0]):
-        if strata.kind[v] <= 0:
-            continue
-        size = strata.size_mm[v]
-        for d in range(3):
-            wish[d] = stars.points[v, d]
-        if not project(field, wish, strata.ties, strata.normals, v, REACH * size, scratch):
-            continue
-        least = min(star_sine(stars, v, -2.0, size), floor)
-        step = 1.0
-        for _ in range(3):
-            for d in range(3):
-                place[d] = stars.points[v, d] + step * (wish[d] - stars.points[v, d])
-            if _keep_if_good(stars, strata, v, place, least):
-                n_moved += 1
-                break
-            step *= 0.5
-    return n_moved

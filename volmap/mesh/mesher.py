@@ -7,8 +7,9 @@ from dataclasses import dataclass, replace
 from volmap.mesh.attempt import Attempt, Rung, attempted
 from volmap.mesh.facts import voxel_facts
 from volmap.mesh.labelled import lattice_edge, lattice_size
+from volmap.mesh.limits import LEAST_DIHEDRAL_DEG, crumbles, wrong_rows
 from volmap.mesh.prepare import Prepared, prepare
-from volmap.mesh.quality import LabelQuality, QualityTable, quality_table
+from volmap.mesh.quality import QualityTable, quality_table
 from volmap.mesh.settings import MeshSettings
 from volmap.mesh.verdicts import findings_of
 from volmap.types.findings import Finding
@@ -16,11 +17,6 @@ from volmap.types.progress import Progress, silent
 from volmap.types.tetmesh import TetMesh
 from volmap.types.volumes import LabelVolume
 
-LEAST_DIHEDRAL_DEG = 12.0
-VOLUME_LIMIT_PCT = 0.5
-THIN_VOLUME_LIMIT_PCT = 3.0
-MOST_PIECES = 20
-MOST_HOLES = 4  # by which the Euler number of a thin label may change without another attempt
 SMALLEST_DEFAULT_VOXELS = 0.75  # no default edge is shorter: the voxels say nothing finer
 
 
@@ -78,7 +74,7 @@ def mesh(
         shortfall += 1e12 * (table.min_dihedral_deg < LEAST_DIHEDRAL_DEG or table.inverted_tets > 0)
         if best is None or shortfall < best[0]:
             best = (shortfall, attempt, table)
-        if shortfall == 0.0 or _crumbles(table):
+        if shortfall == 0.0 or crumbles(table):
             break
     assert best is not None
     _, kept, table = best
@@ -124,25 +120,3 @@ def rungs(settings: MeshSettings, volume_mm3: float, voxel_mm: float) -> tuple[R
         Rung(0.5 * edge, sharp, finer),
     ]
     return (first, *(r for r in later if lattice_size(volume_mm3, r.edge_mm) <= settings.max_tets))
-
-
-def _crumbles(table: QualityTable) -> bool:
-    """True for labels in so many pieces that shorter edges would only make more of them."""
-    return max(row.voxel_pieces for row in table.rows) > MOST_PIECES
-
-
-def volume_limit_pct(row: LabelQuality) -> float:
-    """How far the volume of a label may be off: 0.5 %, 3 % for one thinner than three voxels."""
-    return THIN_VOLUME_LIMIT_PCT if row.thin else VOLUME_LIMIT_PCT
-
-
-def wrong_rows(table: QualityTable) -> tuple[LabelQuality, ...]:
-    """Labels that are lost, miss their volume, fall apart, or are thin and have become full of holes."""
-    return tuple(
-        row
-        for row in table.rows
-        if row.tets == 0
-        or abs(row.volume_error_pct) > volume_limit_pct(row)
-        or row.pieces > row.voxel_pieces
-        or (row.thin and abs(row.euler - row.voxel_euler) > MOST_HOLES)
-    )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from volmap.mesh.limits import LEAST_DIHEDRAL_DEG, volume_is_off
 from volmap.mesh.quality import LabelQuality, QualityTable
 from volmap.types.findings import Finding, Level
 from volmap.types.volumes import LabelVolume
@@ -34,6 +35,8 @@ def findings_of(
     found = [_not_held(labels, row, n_tried) for row in wrong]
     found += [_topology(labels, row) for row in table.rows if row.tets and _changed(row)]
     found += [_hinged(labels, row) for row in table.rows if row.hinges]
+    if table.min_dihedral_deg < LEAST_DIHEDRAL_DEG:
+        found.append(_poor(labels, table))
     if labels.grid.shear > LEAST_SHEAR:
         found.append(_sheared(labels))
     found += [_left_out(labels, row) for row in table.rows if row.specks_mm3 > 0]
@@ -58,10 +61,10 @@ def _not_held(labels: LabelVolume, row: LabelQuality, n_tried: int) -> Finding:
     elif row.pieces > row.voxel_pieces:
         code = "label-fragmented"
         what = f"the mesh has {row.pieces} pieces where the voxels have {row.voxel_pieces}"
-    elif row.thin and row.euler != row.voxel_euler:
-        code, what = "label-perforated", "the label is thinner than the edges and its mesh has holes"
-    else:
+    elif volume_is_off(row):
         code, what = "volume-off", f"the volume of the mesh is off by {row.volume_error_pct:+.2f} %"
+    else:
+        code, what = "label-perforated", "the label is thinner than the edges and its mesh has holes"
     return Finding(
         Level.WARN,
         code,
@@ -89,6 +92,17 @@ def _hinged(labels: LabelVolume, row: LabelQuality) -> Finding:
         _at(labels, row),
         f"{row.hinges} of its pieces hang by an edge or a point only, so they may turn freely",
         "join or separate the pieces in the segmentation",
+    )
+
+
+def _poor(labels: LabelVolume, table: QualityTable) -> Finding:
+    return Finding(
+        Level.WARN,
+        "poor-tets",
+        labels.name,
+        f"the smallest dihedral angle is {table.min_dihedral_deg:.1f} degrees, "
+        f"less than {LEAST_DIHEDRAL_DEG:g}",
+        "clean salt-and-pepper voxels from the segmentation, or ask for a shorter edge",
     )
 
 
