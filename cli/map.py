@@ -9,7 +9,7 @@ from .console import Console
 
 HELP = "certified volumetric map between two label volumes"
 EXAMPLE = "volmap map visit0_labels.nii.gz visit1_labels.nii.gz --out map_0_1"
-ENERGIES = ("symmetric-dirichlet", "arap", "log-strain", "neo-hookean", "conformal")
+ENERGIES = ("soft-tissue", "neo-hookean", "symmetric-dirichlet", "arap", "log-strain", "conformal")
 
 
 def arguments(parser: argparse.ArgumentParser) -> None:

@@ -24,6 +24,7 @@ from volmap.types import (
     IterationRecord,
     LabelVolume,
     LandmarkPairs,
+    Status,
     Surface,
     TetMesh,
     VolumeMap,
@@ -64,6 +65,8 @@ class MapFolder:
         The pair solved on the other scan's mesh, from TARGET into SOURCE.
     pairs : LandmarkPairs, optional
         Guides and checks.
+    status : Status
+        How the solve ended.
     history : tuple of IterationRecord
     distortion : (m,) float64
         W_S of each tet.
@@ -83,6 +86,7 @@ class MapFolder:
     certificate: Certificate
     other: VolumeMap | None = None
     pairs: LandmarkPairs | None = None
+    status: Status = Status.OUT_OF_STEPS
     history: tuple[IterationRecord, ...] = ()
     distortion: NDArray[np.float64] = field(default_factory=lambda: np.zeros(0))
 
@@ -122,7 +126,8 @@ def write_map_folder(path: Path, folder: MapFolder, *, report_html: str, overwri
         if folder.pairs is not None:
             write_pairs(place / PAIRS, folder.pairs)
         steps = [asdict(record) for record in folder.history]
-        write_json(place / STEPS, {"schema": "volmap-steps/1", "notice": caution(), "steps": steps})
+        told = {"schema": "volmap-steps/1", "notice": caution(), "status": folder.status.name}
+        write_json(place / STEPS, told | {"steps": steps})
         write_json(place / CERTIFICATE, as_document(folder.certificate))
         (place / REPORT).write_text(report_html, encoding="utf-8")
 
@@ -164,6 +169,7 @@ def read_map_folder(path: Path) -> MapFolder:
     names = {side: str(getattr(certificate, side).get("name", side)) for side in ("source", "target")}
     volume_map = VolumeMap(mesh, _images(points, MAP), names["source"], names["target"])
     source, target = (_labels(path, side, certificate) for side in ("source", "target"))
+    status, history = _steps(path)
     pairs = read_pairs(path / PAIRS) if (path / PAIRS).exists() else None
     folder = MapFolder(
         map=volume_map,
@@ -184,7 +190,8 @@ def read_map_folder(path: Path) -> MapFolder:
         certificate=certificate,
         other=_other(path, names),
         pairs=pairs,
-        history=_history(path),
+        status=status,
+        history=history,
         distortion=np.asarray(cells.get("distortion", np.zeros(0)), np.float64),
     )
     _require_same_grids(folder)
@@ -258,11 +265,12 @@ def _other(path: Path, names: Mapping[str, str]) -> VolumeMap | None:
     return VolumeMap(mesh, _images(points, OTHER), names["target"], names["source"])
 
 
-def _history(path: Path) -> tuple[IterationRecord, ...]:
-    steps = read_json(_file(path, STEPS)).get("steps", [])
+def _steps(path: Path) -> tuple[Status, tuple[IterationRecord, ...]]:
+    document = read_json(_file(path, STEPS))
     try:
-        return tuple(IterationRecord(**step) for step in steps)
-    except TypeError as fault:
+        steps = tuple(IterationRecord(**step) for step in document.get("steps", []))
+        return Status[str(document.get("status"))], steps
+    except (TypeError, KeyError) as fault:
         raise InputError("a step of the solve is not as written", where=STEPS, found=str(fault)) from fault
 
 

@@ -22,6 +22,7 @@ ALL = (
     "field_folds",
     "check_points_mm",
     "labels_agree",
+    "solve_settled",
 )
 
 

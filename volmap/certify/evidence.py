@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 from volmap.types.gridfield import GridField
 from volmap.types.landmarks import LandmarkPairs
+from volmap.types.outcome import Status
 from volmap.types.surface import Surface
 from volmap.types.volume_map import VolumeMap
 from volmap.types.volumes import LabelVolume
@@ -30,6 +31,8 @@ class Evidence:
         The same pair solved on TARGET's mesh: its mesh is TARGET's body, its images lie in SOURCE.
     checks : LandmarkPairs, optional
         Of these only the pairs of role 'check' are used.
+    status : Status, optional
+        How the solve ended.
     source_mesh_labels, target_mesh_labels : LabelVolume, optional
         A scan's own mesh drawn on its own grid: what Dice a mesh can score at all.
     """
@@ -43,6 +46,7 @@ class Evidence:
     backward: GridField | None = None
     other: VolumeMap | None = None
     checks: LandmarkPairs | None = None
+    status: Status | None = None
     source_mesh_labels: LabelVolume | None = None
     target_mesh_labels: LabelVolume | None = None
 

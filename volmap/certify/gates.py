@@ -16,6 +16,7 @@ from volmap.certify.measures import measures
 from volmap.certify.order_difference import order_difference
 from volmap.certify.overlap import overlap
 from volmap.certify.round_trip import round_trip
+from volmap.certify.solve_settled import solve_settled
 from volmap.certify.table import GateTable, Limit
 from volmap.certify.volume_ratio import volume_ratio
 from volmap.types.certificate import Gate
@@ -30,6 +31,7 @@ _AFTER_THE_SIGNS: tuple[tuple[str, Callable[[Evidence, Limit], Gate]], ...] = (
     ("field_folds", field_folds),
     ("check_points_mm", check_points),
     ("labels_agree", labels_agree),
+    ("solve_settled", solve_settled),
 )
 
 

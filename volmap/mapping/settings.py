@@ -37,7 +37,7 @@ class MapSettings:
         Of the random subsamples the alignment uses.
     """
 
-    energy: str = "symmetric-dirichlet"
+    energy: str = "soft-tissue"
     uncertainty_mm: float | None = None
     uncertainty_voxels: float = 0.1
     across: float = 0.05

@@ -33,6 +33,7 @@ ARMIJO = 1e-4
 SMALLEST_STEP = 1e-6
 FORCING = 0.02  # relative residual of the linear solves
 LINEAR_ITERATIONS = 400  # at most, a Newton step
+GUIDE_REACH_VOXELS = 3.0  # guides farther outside the body are refused
 STALLED_STEPS = 3  # steps in a row that hardly move before it counts as stalled
 
 
@@ -72,10 +73,11 @@ class _Solver:
         *,
         alignment: Alignment,
         guides: LandmarkPairs | None,
-        uncertainty_mm: float,
+        voxel_mm: float,
     ) -> None:
         points, tets = np.array(mesh.points), np.array(mesh.tets)
-        self.settings, self.uncertainty_mm = settings, uncertainty_mm
+        self.settings = settings
+        self.uncertainty_mm = settings.uncertainty_mm or settings.uncertainty_voxels * voxel_mm
         self.objective = Objective(points, tets, energy=settings.energy)
         steady, self.notes = steady_contacts(mesh.interfaces, target, alignment.matrix)
         patches = matching_patches(mesh.interfaces, target, steady)
@@ -86,7 +88,9 @@ class _Solver:
         self.guide_sd_mm = 0.0
         if guides is not None and guides.names:
             assert guides.sd_mm is not None
-            self.guides = guide_observations(mesh, guides, pattern=self.objective.pattern)
+            self.guides = guide_observations(
+                mesh, guides, pattern=self.objective.pattern, reach_mm=GUIDE_REACH_VOXELS * voxel_mm
+            )
             self.guide_sd_mm = float(np.sqrt(len(guides.sd_mm) / (guides.sd_mm**-2.0).sum()))
         self.unit = (0.02 * np.cbrt(self.objective.volume_mm3)) ** -2.0
 
@@ -181,11 +185,6 @@ def _climb(solver: _Solver, state: _State, progress: Progress) -> Status | None:
     return None
 
 
-def uncertainty_of(settings: MapSettings, voxel_mm: float) -> float:
-    """The declared boundary uncertainty in mm."""
-    return settings.uncertainty_mm or settings.uncertainty_voxels * voxel_mm
-
-
 def map_mesh(
     mesh: TetMesh,
     target: Surface,
@@ -236,7 +235,7 @@ def map_mesh(
         settings,
         alignment=alignment,
         guides=guides,
-        uncertainty_mm=uncertainty_of(settings, voxel_mm),
+        voxel_mm=voxel_mm,
     )
     weight = settings.first_weight * solver.unit
     state = _State(alignment.apply(np.array(mesh.points)), weight, weight, [])

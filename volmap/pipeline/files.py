@@ -142,7 +142,9 @@ def map_files(
     pairs = read_pairs(guides) if guides is not None else None
     images = [read_image(p) if p is not None else None for p in (source_image, target_image)]
     notes = tuple(f"{f.where}: {f.sentence}" for f in (*findings_a, *findings_b))
-    folder = map_pair(a, b, job, pairs=pairs, notes=notes, progress=progress)
+    folder = map_pair(
+        a, b, job, pairs=pairs, pairs_name=guides.name if guides else "", notes=notes, progress=progress
+    )
     write_map(
         out, folder, source_image=images[0], target_image=images[1], overwrite=overwrite, progress=progress
     )

@@ -26,6 +26,7 @@ def evidence_of(folder: MapFolder) -> certifying.Evidence:
         backward=folder.backward,
         other=folder.other,
         checks=folder.pairs,
+        status=folder.status,
         source_mesh_labels=_voxelised(own.get("source"), folder.source),
         target_mesh_labels=_voxelised(own.get("target"), folder.target),
     )

@@ -84,6 +84,7 @@ def map_pair(
     job: MapJob | None = None,
     *,
     pairs: LandmarkPairs | None = None,
+    pairs_name: str = "landmarks",
     notes: tuple[str, ...] = (),
     progress: Progress = silent,
 ) -> MapFolder:
@@ -98,6 +99,8 @@ def map_pair(
     job : MapJob, optional
     pairs : LandmarkPairs, optional
         Guides and checks, from SOURCE to TARGET.
+    pairs_name : str
+        What to call them in messages.
     notes : tuple of str
         Sentences to keep with the certificate.
     progress : Progress
@@ -122,6 +125,7 @@ def map_pair(
             source, target, edge_mm=job.mesh.edge_mm, allow_topology_change=job.allow_topology_change
         )
         screened.require_mappable()
+        placed = _placed(pairs, source, target, pairs_name)
     with watch.measuring("mesh"):
         meshes = [
             meshing.mesh(volume, job.mesh, progress=_prefixed(progress, side))
@@ -132,7 +136,7 @@ def map_pair(
     folder = _sampled(solutions, meshes, source, target, order, pairs, watch, progress, energy=job.map.energy)
     with watch.measuring("certify"):
         gates, measures = certifying.certify(evidence_of(folder), table, progress=progress)
-    findings = [*screened.findings, *meshes[0].findings, *meshes[1].findings]
+    findings = [*screened.findings, *placed, *meshes[0].findings, *meshes[1].findings]
     certificate = replace(
         folder.certificate,
         gates=gates,
@@ -144,6 +148,17 @@ def map_pair(
         notes=(*notes, *solutions.main.outcome.notes, *_sentences(findings)),
     )
     return replace(folder, certificate=certificate)
+
+
+def _placed(
+    pairs: LandmarkPairs | None, source: LabelVolume, target: LabelVolume, name: str
+) -> tuple[Finding, ...]:
+    """Where landmarks lie outside the bodies; refused when it is a guide."""
+    if pairs is None:
+        return ()
+    findings = screening.screen_pairs_of_landmarks(pairs, source, target, name=name)
+    screening.raise_refusal(findings)
+    return findings
 
 
 def _prefixed(progress: Progress, name: str) -> Progress:
@@ -256,6 +271,7 @@ def _sampled(
         ),
         other=other,
         pairs=pairs,
+        status=outcome.status,
         history=outcome.history,
         distortion=_distortion(named, energy),
     )

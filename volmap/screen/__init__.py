@@ -3,7 +3,7 @@
 from volmap.screen.mending import Change, Mended, mend
 from volmap.screen.pairs import PairResult, compare, screen_pair
 from volmap.screen.placement import screen_pairs_of_landmarks
-from volmap.screen.results import LabelScreen, ScreenResult
+from volmap.screen.results import LabelScreen, ScreenResult, raise_refusal
 from volmap.screen.screening import screen
 
 __all__ = [
@@ -14,6 +14,7 @@ __all__ = [
     "ScreenResult",
     "compare",
     "mend",
+    "raise_refusal",
     "screen",
     "screen_pair",
     "screen_pairs_of_landmarks",

@@ -52,6 +52,18 @@ class VolumeMap(Frozen):
         return np.asarray(np.linalg.det(self.gradients))
 
     @cached_property
+    def volume_ratio_at_points(self) -> NDArray[np.float64]:
+        """(n,) volume in TARGET over volume in SOURCE of all tets around each point.
+
+        Averaging over patches recovers a quantity that is constant in each tet to a higher order (after
+        Zienkiewicz & Zhu, Int. J. Numer. Methods Eng. 33, 1992).
+        """
+        corners, n = self.mesh.tets.ravel(), len(self.mesh.points)
+        here = np.bincount(corners, np.repeat(self.mesh.volumes, 4), n)
+        there = np.bincount(corners, np.repeat(self.mesh.volumes * self.volume_ratio, 4), n)
+        return np.asarray(np.divide(there, here, out=np.full(n, np.nan), where=here > 0))
+
+    @cached_property
     def stretches(self) -> NDArray[np.float64]:
         """(m, 3) principal stretches (singular values of F), descending."""
         return np.asarray(np.linalg.svd(self.gradients, compute_uv=False))

@@ -15,7 +15,17 @@ from volmap.kernels.energies.log_strain import log_strain
 from volmap.kernels.energies.neo_hookean import neo_hookean
 from volmap.kernels.energies.symmetric_dirichlet import symmetric_dirichlet
 
-ENERGIES = {"symmetric-dirichlet": 0, "arap": 1, "log-strain": 2, "neo-hookean": 3, "conformal": 4}
+PLAIN = 1.5  # lambda / mu of "neo-hookean": Poisson's ratio 0.3
+SOFT_TISSUE = 9.0  # of "soft-tissue": Poisson's ratio 0.45, as is common practice for soft tissue (no source)
+
+ENERGIES = {
+    "symmetric-dirichlet": 0,
+    "arap": 1,
+    "log-strain": 2,
+    "neo-hookean": 3,
+    "conformal": 4,
+    "soft-tissue": 5,
+}
 
 
 @njit(cache=True)
@@ -28,5 +38,7 @@ def density(code, s, gradient, hessian):  # type: ignore[no-untyped-def]
     if code == 2:
         return log_strain(s, gradient, hessian)
     if code == 3:
-        return neo_hookean(s, gradient, hessian)
-    return conformal(s, gradient, hessian)
+        return neo_hookean(s, gradient, hessian, PLAIN)
+    if code == 4:
+        return conformal(s, gradient, hessian)
+    return neo_hookean(s, gradient, hessian, SOFT_TISSUE)
