@@ -5,7 +5,7 @@ import pytest
 from box_of_two_labels import SIZE, box, drawn_box, field, moved, moved_back
 
 from volmap.certify import Evidence, read_gate_table
-from volmap.types import LandmarkPairs, VolumeMap
+from volmap.types import LandmarkPairs, Status, VolumeMap
 
 
 @pytest.fixture(scope="session")
@@ -35,4 +35,5 @@ def sound():
         backward=field(target, moved_back, ("target", "source")),
         other=VolumeMap(finer.moved(moved(finer.points)), finer.points, "target", "source"),
         checks=pairs,
+        status=Status.SETTLED,
     )

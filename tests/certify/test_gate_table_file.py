@@ -19,13 +19,16 @@ def written(tmp_path, text):
     return path
 
 
+ONLY_WARNS = {"solve_settled"}  # an unfinished map is judged by all the other gates
+
+
 def test_every_gate_has_a_unit_a_source_and_a_limit_that_fails():
     table = read_gate_table()
     assert set(table.limits) == set(STATISTICS)
-    for limit in table.limits.values():
+    for name, limit in table.limits.items():
         assert limit.unit
         assert len(limit.source) > 40
-        assert limit.fails_at(1.0)
+        assert limit.warns_at(1.0) if name in ONLY_WARNS else limit.fails_at(1.0)
 
 
 def test_a_warning_comes_before_the_failure():
