@@ -17,6 +17,13 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--through", type=Path, required=True, metavar="DIR", help="map folder")
     parser.add_argument("--out", type=Path, required=True, metavar="FILE", help="where to write it")
     parser.add_argument("--reverse", action="store_true", help="from TARGET to SOURCE")
+    parser.add_argument(
+        "--as",
+        dest="kind",
+        choices=("labels", "image"),
+        default="either",
+        help="what a volume holds: labels (nearest voxel) or an image (trilinear); default: by its values",
+    )
     parser.add_argument("--overwrite", action="store_true", help="replace a file that stands there")
 
 
@@ -29,6 +36,8 @@ def run(options: argparse.Namespace, console: Console) -> int:
         options.through,
         options.out,
         reverse=options.reverse,
+        kind=options.kind,
+        progress=console.progress,
         overwrite=options.overwrite,
     )
     for finding in findings:

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import argparse
+from collections.abc import Mapping
 from pathlib import Path
+from typing import Any
 
 from .console import Console
 
@@ -24,14 +26,23 @@ def run(options: argparse.Namespace, console: Console) -> int:
     from .verdict import show
 
     opinion = pipeline.certify_folder(options.folder, gates=options.gates, progress=console.progress)
-    failed = show(opinion.certificate, console)
+    second = {"disagreements": list(opinion.disagreements), "not_repeated": list(opinion.not_repeated)}
+    failed = show(opinion.certificate, console, more={"second_opinion": second})
     for name in opinion.not_repeated:
         console.say(f"  not repeated: {name}")
     for sentence in opinion.disagreements:
-        console.fault(f"DISAGREES: {options.folder.name}: {sentence}")
+        console.fault(f"DISAGREES: {options.folder.absolute().name}: {sentence}")
     if opinion.disagreements:
-        console.fault(f"the stored certificate does not hold: {len(opinion.disagreements)} disagreements")
+        console.fault(_verdict(len(opinion.disagreements), opinion.certificate.settings, options.gates))
     else:
         console.say("the stored certificate holds")
     console.end()
     return int(failed or bool(opinion.disagreements))
+
+
+def _verdict(count: int, settings: Mapping[str, Any], gates: Path | None) -> str:
+    sentence = f"the stored certificate does not hold: {count} disagreement{'s' if count > 1 else ''}"
+    table = settings.get("gates", "built in")
+    if gates is None and table != "built in":
+        return f"{sentence}; it was made with the gate table {table}: name that with --gates"
+    return f"{sentence}; map the pair again"

@@ -59,12 +59,14 @@ class Console:
         print(text, file=sys.stderr if self.as_json else sys.stdout)
 
     def result(self, document: dict[str, Any]) -> None:
-        """The result, when it was asked for as JSON."""
+        """The result with the caution, when it was asked for as JSON."""
         if self.as_json:
             from volmap.io.json_documents import plain
+            from volmap.types.notice import caution
 
             self._close_line()
-            print(json.dumps(plain(document), indent=2, ensure_ascii=False, allow_nan=False))
+            told = {"notice": caution()} | document
+            print(json.dumps(plain(told), indent=2, ensure_ascii=False, allow_nan=False))
 
     def end(self) -> None:
         """The last line of every command: the caution."""

@@ -28,7 +28,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
     from .verdict import show
 
-    with whole_folder(options.out, overwrite=options.overwrite, holding="phantom") as place:
+    with whole_folder(options.out, overwrite=options.overwrite, holding="map_0_3/certificate.json") as place:
         console.progress("phantom", 0, 0, "gel-column")
         phantoms.write(phantoms.make("gel-column"), place / "phantom")
         scans = [place / "phantom" / f"visit{v}_labels.nii.gz" for v in (0, 3)]

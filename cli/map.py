@@ -6,6 +6,7 @@ import argparse
 from pathlib import Path
 
 from .console import Console
+from .usage import positive_mm, whole_number
 
 HELP = "certified volumetric map between two label volumes"
 EXAMPLE = "volmap map visit0_labels.nii.gz visit1_labels.nii.gz --out map_0_1"
@@ -18,14 +19,16 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("target", type=Path, metavar="TARGET", help="label volume with the same labels")
     parser.add_argument("--out", type=Path, required=True, metavar="DIR", help="map folder to write")
     parser.add_argument("--overwrite", action="store_true", help="replace a map folder that stands there")
-    parser.add_argument("--edge", type=float, metavar="MM", help="mesh edge (default: about 40,000 tets)")
+    parser.add_argument(
+        "--edge", type=positive_mm, metavar="MM", help="mesh edge (default: about 40,000 tets)"
+    )
     parser.add_argument("--guides", type=Path, metavar="CSV", help="landmark pairs, roles guide and check")
     parser.add_argument(
         "--energy", choices=ENERGIES, default=ENERGIES[0], help=f"distortion energy (default {ENERGIES[0]})"
     )
     parser.add_argument(
         "--uncertainty",
-        type=float,
+        type=positive_mm,
         metavar="MM",
         help="declared uncertainty of the segmentations (default: a tenth of a voxel)",
     )
@@ -40,8 +43,10 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         action="store_true",
         help="go on when pieces or handles differ; the certificate fails that gate",
     )
-    parser.add_argument("--seed", type=int, default=0, help="of the subsamples the alignment uses")
-    parser.add_argument("--threads", type=int, help="threads (default: all)")
+    parser.add_argument(
+        "--seed", type=whole_number(0), default=0, help="of the subsamples the alignment uses"
+    )
+    parser.add_argument("--threads", type=whole_number(1), help="threads (default: all)")
 
 
 def run(options: argparse.Namespace, console: Console) -> int:

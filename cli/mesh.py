@@ -6,6 +6,7 @@ import argparse
 from pathlib import Path
 
 from .console import Console
+from .usage import positive_mm
 
 HELP = "multi-label tetrahedral mesh"
 EXAMPLE = "volmap mesh visit0_labels.nii.gz --out visit0.vtu --edge 2.5"
@@ -15,7 +16,9 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     """Options of this verb."""
     parser.add_argument("file", type=Path, metavar="FILE", help="label volume (NIfTI) or closed surface")
     parser.add_argument("--out", type=Path, required=True, metavar="MESH.vtu", help="where to write the mesh")
-    parser.add_argument("--edge", type=float, metavar="MM", help="edge length (default: about 40,000 tets)")
+    parser.add_argument(
+        "--edge", type=positive_mm, metavar="MM", help="edge length (default: about 40,000 tets)"
+    )
     parser.add_argument("--overwrite", action="store_true", help="replace a mesh that stands there")
 
 

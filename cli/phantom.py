@@ -6,6 +6,7 @@ import argparse
 from pathlib import Path
 
 from .console import Console
+from .usage import UsageError, positive_mm, whole_number
 
 HELP = "synthetic serial scans with known motion"
 EXAMPLE = "volmap phantom gel-column --out column"
@@ -16,15 +17,15 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("name", nargs="?", metavar="NAME", help="which phantom")
     parser.add_argument("--list", action="store_true", help="name them all and stop")
     parser.add_argument("--out", type=Path, metavar="DIR", help="folder to write")
-    parser.add_argument("--seed", type=int, default=0, help="of the noise")
-    parser.add_argument("--voxel", type=float, metavar="MM", help="voxel size instead of the phantom's own")
+    parser.add_argument("--seed", type=whole_number(0), default=0, help="of the noise")
+    parser.add_argument(
+        "--voxel", type=positive_mm, metavar="MM", help="voxel size instead of the phantom's own"
+    )
 
 
 def run(options: argparse.Namespace, console: Console) -> int:
     """Make one phantom, or list them."""
     import volmap_phantoms as phantoms
-
-    from volmap.types import InputError
 
     names = phantoms.names()
     if options.list:
@@ -34,15 +35,10 @@ def run(options: argparse.Namespace, console: Console) -> int:
         console.end()
         return 0
     if options.name not in names:
-        raise InputError(
-            "there is no such phantom",
-            where="NAME",
-            found=repr(options.name),
-            expected=", ".join(names),
-            remedy="see volmap phantom --list",
-        )
+        found = "no NAME is given" if options.name is None else f"there is no phantom {options.name!r}"
+        raise UsageError(f"{found}; there are {', '.join(names)}")
     if options.out is None:
-        raise InputError("a folder to write is needed", where="--out", remedy=f"for instance {EXAMPLE}")
+        raise UsageError(f"--out DIR is missing; for instance {EXAMPLE}")
     console.progress("phantom", 0, 0, options.name)
     phantoms.write(phantoms.make(options.name, seed=options.seed, voxel_mm=options.voxel), options.out)
     written = sorted(p.name for p in options.out.iterdir())

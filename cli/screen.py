@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from .console import Console
+from .usage import UsageError, positive_mm
 
 if TYPE_CHECKING:
     from volmap.screen import ScreenResult
@@ -18,7 +19,7 @@ EXAMPLE = "volmap screen visit0_labels.nii.gz visit1_labels.nii.gz"
 def arguments(parser: argparse.ArgumentParser) -> None:
     """Options of this verb."""
     parser.add_argument("files", nargs="+", type=Path, metavar="FILE", help="label volumes (NIfTI)")
-    parser.add_argument("--edge", type=float, metavar="MM", help="mesh edge the volumes are meant for")
+    parser.add_argument("--edge", type=positive_mm, metavar="MM", help="mesh edge the volumes are meant for")
     parser.add_argument(
         "--mend",
         type=Path,
@@ -48,7 +49,12 @@ def run(options: argparse.Namespace, console: Console) -> int:
             console.say(f"  {name}: volume ratio {ratio:.3f}")
         for finding in screened.pair.comparison:
             console.say(f"  {finding.line}")
-    console.say("cannot be mapped as it is" if screened.refused else "can be mapped")
+    refusals = screened.refusals
+    if refusals:
+        others = f" (and {len(refusals) - 1} more, above)" if len(refusals) > 1 else ""
+        console.fault(f"cannot be mapped as it is: {refusals[0]}{others}")
+    else:
+        console.say("can be mapped")
     console.result(document | {"refused": screened.refused})
     console.end()
     return int(screened.refused)
@@ -74,12 +80,9 @@ def _show(result: ScreenResult, console: Console) -> None:
 
 def _mend(options: argparse.Namespace, console: Console) -> int:
     from volmap import pipeline
-    from volmap.types import InputError
 
     if len(options.files) != 1:
-        raise InputError(
-            "one volume is mended at a time", where="--mend", found=f"{len(options.files)} files"
-        )
+        raise UsageError(f"--mend takes one FILE at a time, not {len(options.files)}")
     mended = pipeline.mend_file(options.files[0], options.mend)
     for change in mended.changes:
         console.say(change.sentence)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from .console import Console
 
@@ -10,13 +10,13 @@ if TYPE_CHECKING:
     from volmap.types import Certificate
 
 
-def show(certificate: Certificate, console: Console) -> int:
-    """Print every gate and the verdict, the JSON document when asked for; returns 1 when a gate failed."""
+def show(certificate: Certificate, console: Console, *, more: dict[str, Any] | None = None) -> int:
+    """Print every gate and the verdict, or the JSON document (with `more`); returns 1 when a gate failed."""
     from volmap.certify import as_document
     from volmap.types import Verdict
 
     for gate in certificate.gates:
         console.say(f"  {gate.verdict.value:12s} {gate.name}: {gate.sentence}")
     console.say(f"verdict: {certificate.verdict.value}. {certificate.status}")
-    console.result(as_document(certificate))
+    console.result(as_document(certificate) | (more or {}))
     return int(certificate.verdict is Verdict.FAIL)

@@ -13,7 +13,7 @@ from pathlib import Path
 from volmap.io.opening import shown_name
 from volmap.types.errors import InputError
 
-_DISK = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EROFS, errno.EIO)
+_DISK = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EROFS, errno.EIO, errno.ENAMETOOLONG, errno.ELOOP)
 
 
 @contextmanager
@@ -33,13 +33,13 @@ def whole_file(path: str | os.PathLike[str], *, overwrite: bool = False) -> Iter
         The place is taken or cannot be written.  After any failure, Ctrl-C included, nothing is left.
     """
     target = Path(path)
-    _require_place(target, overwrite, folder=False)
+    require_place(target, overwrite=overwrite, folder=False)
     temporary = _sibling(target, "".join(target.suffixes[-2:])[-24:])
     try:
         with _disk_faults(target):
             temporary.touch(exist_ok=False)
             yield temporary
-            _require_place(target, overwrite, folder=False)
+            require_place(target, overwrite=overwrite, folder=False)
             os.replace(temporary, target)
     finally:
         temporary.unlink(missing_ok=True)
@@ -67,13 +67,13 @@ def whole_folder(
         The place is taken or cannot be written.  After any failure, Ctrl-C included, nothing is left.
     """
     target = Path(path)
-    _require_place(target, overwrite, folder=True, holding=holding)
+    require_place(target, overwrite=overwrite, folder=True, holding=holding)
     temporary = _sibling(target, "")
     try:
         with _disk_faults(target):
             temporary.mkdir()
             yield temporary
-            _require_place(target, overwrite, folder=True, holding=holding)
+            require_place(target, overwrite=overwrite, folder=True, holding=holding)
             _put_folder(temporary, target)
     finally:
         shutil.rmtree(temporary, ignore_errors=True)
@@ -97,28 +97,62 @@ def _sibling(target: Path, suffix: str) -> Path:
     return target.absolute().parent / f".part-{secrets.token_hex(6)}{suffix}"
 
 
-def _require_place(target: Path, overwrite: bool, *, folder: bool, holding: str = "") -> None:
-    where = shown_name(target)
-    if not target.absolute().parent.is_dir():
-        raise InputError("the folder to write in does not exist", where=where, remedy="make the folder first")
-    if not target.exists() and not target.is_symlink():
-        return
+def require_place(
+    path: str | os.PathLike[str], *, overwrite: bool = False, folder: bool, holding: str = ""
+) -> None:
+    """Refuse a place that is taken or cannot be written: before long work, and again before the renaming.
+
+    Parameters
+    ----------
+    path : path
+    overwrite, holding
+        As in `whole_folder`.
+    folder : bool
+        A folder is going to stand there, else a file.
+
+    Raises
+    ------
+    InputError
+    """
+    target, where = Path(path), shown_name(path)
+    with _disk_faults(target):
+        _require_parent(target, where)
+        if not target.exists() and not target.is_symlink():
+            return
     if target.is_dir() != folder:
         kinds = ("a folder", "a file") if folder else ("a file", "a folder")
-        raise InputError("the place is taken", where=where, found=kinds[1], expected=kinds[0])
+        raise InputError(
+            "the place is taken", where=where, found=kinds[1], expected=kinds[0], remedy=_ANOTHER_NAME
+        )
     if folder and not any(target.iterdir()):
         return
     if not overwrite:
         raise InputError(
-            "exists already", where=where, remedy="choose another name, or ask for it to be overwritten"
+            "exists already", where=where, remedy=f"{_ANOTHER_NAME}, or --overwrite to replace it"
         )
     if folder and holding and not (target / holding).is_file():
         raise InputError(
             "is not a folder of the kind that would replace it and is left alone",
             where=where,
             expected=f"a folder that holds {holding}",
-            remedy="choose another name",
+            remedy=_ANOTHER_NAME,
         )
+
+
+_ANOTHER_NAME = "choose another name"
+
+
+def _require_parent(target: Path, where: str) -> None:
+    parent = target.absolute().parent
+    if not parent.is_dir():
+        raise InputError(
+            "the folder to write in does not exist",
+            where=where,
+            found=f"no folder {shown_name(parent)}",
+            remedy="make the folder first",
+        )
+    if not os.access(parent, os.W_OK | os.X_OK):
+        raise PermissionError(errno.EACCES, "permission denied")
 
 
 @contextmanager
@@ -127,10 +161,15 @@ def _disk_faults(target: Path) -> Iterator[None]:
         yield
     except PermissionError as fault:
         raise InputError(
-            "cannot be written", where=shown_name(target), remedy="choose a folder you may write in"
+            "cannot be written",
+            where=shown_name(target),
+            found="no permission to write there",
+            remedy="choose a folder you may write in",
         ) from fault
     except OSError as fault:
         if fault.errno not in _DISK:
             raise
         reason = (fault.strerror or "").lower()
-        raise InputError("cannot be written", where=shown_name(target), found=reason) from fault
+        raise InputError(
+            "cannot be written", where=shown_name(target), found=reason, remedy="choose another place or name"
+        ) from fault

@@ -147,6 +147,7 @@ def _parse(
             where=where,
             found=str(len(cells)),
             expected=str(len(header)),
+            remedy="give every column of the header a value, commas between them",
         )
     values = dict(zip(header, cells, strict=True))
     name, role = values["name"], values.get("role", "check")
@@ -155,17 +156,26 @@ def _parse(
     if "sd_mm" in values:
         sd = _number(values["sd_mm"], "sd_mm", where)
         if sd <= 0:
-            raise InputError("sd_mm is not above 0", where=where, found=values["sd_mm"])
+            raise InputError(
+                "sd_mm is not above 0",
+                where=where,
+                found=values["sd_mm"],
+                remedy="give the uncertainty in mm",
+            )
         numbers.append(sd)
     return name, numbers, role
 
 
 def _check_name(name: str, role: str, seen: dict[str, str], where: str) -> None:
     if not name:
-        raise InputError("a landmark has no name", where=where)
+        raise InputError("a landmark has no name", where=where, remedy="name it in the first column")
     if role not in ROLES:
         raise InputError(
-            "a landmark's role is unknown", where=where, found=repr(role[:20]), expected="guide or check"
+            "a landmark's role is unknown",
+            where=where,
+            found=repr(role[:20]),
+            expected="guide or check",
+            remedy="write guide for one that steers the map, check for one that only measures it",
         )
     if name in seen:
         both = seen[name] != role
@@ -187,6 +197,10 @@ def _number(text: str, column: str, where: str) -> float:
         value = math.nan
     if not math.isfinite(value):
         raise InputError(
-            f"{column} is not a finite number", where=where, found=repr(text[:20]), expected="a number in mm"
+            f"{column} is not a finite number",
+            where=where,
+            found=repr(text[:20]),
+            expected="a number in mm",
+            remedy="correct it, with a point for decimals, or drop the line",
         )
     return value

@@ -9,7 +9,7 @@ from __future__ import annotations
 import gzip
 import os
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -28,6 +28,8 @@ from volmap.types.volumes import ImageVolume, LabelVolume
 PathLike = str | os.PathLike[str]
 _SCANNER = 1  # NIFTI_XFORM_SCANNER_ANAT
 _PACKING = 4  # gzip level
+_MOST_LABELS = 256
+VolumeKind = Literal["labels", "image", "either"]
 
 
 def read_labels(path: PathLike, *, names: PathLike | None = None) -> LabelVolume:
@@ -86,6 +88,39 @@ def read_image_with_findings(path: PathLike, *, unit: str = "") -> tuple[ImageVo
     header, stored = _read(path)
     values = _as_float32(_scaled(_one_frame(header, stored), header))
     return ImageVolume(Grid(values.shape, header.affine), values, unit, header.name), header.findings
+
+
+def read_volume_with_findings(
+    path: PathLike, *, kind: VolumeKind = "either"
+) -> tuple[LabelVolume | ImageVolume, tuple[Finding, ...]]:
+    """A volume of either kind, read once.
+
+    Parameters
+    ----------
+    path : path
+    kind : 'labels', 'image' or 'either'
+        'either' takes whole numbers from 0 to 65535, at most 256 different ones, for labels.
+
+    Raises
+    ------
+    InputError
+        As `read_labels` and `read_image`.
+    """
+    header, stored = _read(path)
+    values = _scaled(_one_frame(header, stored), header)
+    grid = Grid(values.shape, header.affine)
+    if kind == "labels" or (kind == "either" and _could_be_labels(values)):
+        labels = whole_labels(values, header.name)
+        return LabelVolume(grid, labels, sibling_names(path), header.name), header.findings
+    return ImageVolume(grid, _as_float32(values), "", header.name), header.findings
+
+
+def _could_be_labels(values: NDArray[Any]) -> bool:
+    if values.dtype.kind == "f" and not (np.isfinite(values).all() and (values == np.rint(values)).all()):
+        return False
+    if not values.size or values.min() < 0 or values.max() > 65535:
+        return False
+    return bool(np.count_nonzero(np.bincount(values.astype(np.uint16).ravel())) <= _MOST_LABELS)
 
 
 def read_field(path: PathLike, *, grid_space: str = "source", points_into: str = "target") -> GridField:
@@ -169,7 +204,8 @@ def whole_labels(values: NDArray[Any], name: str) -> NDArray[np.uint16]:
         fractions = values != np.rint(values)
         if fractions.any():
             share = f"fractions in {100 * fractions.mean():.2g} % of the voxels"
-            found = f"{share}, {values[fractions][0]:.6g} for one"
+            worst = values.flat[np.abs(values - np.rint(values)).argmax()]
+            found = f"{share}, {worst:.6g} for one"
             _refuse(True, "label values that are not whole numbers", name, found=found)
     least, most = (int(values.min()), int(values.max())) if values.size else (0, 0)
     _refuse(least < 0, "label values below 0", name, found=str(least))

@@ -6,23 +6,22 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
 from volmap import carry as carrying
 from volmap import mesh as meshing
 from volmap import screen as screening
-from volmap.io.atomic import whole_file
+from volmap.io.atomic import require_place, whole_file
 from volmap.io.landmarks import read_landmarks, read_pairs, write_landmarks
 from volmap.io.nifti import (
+    VolumeKind,
     read_image,
-    read_image_with_findings,
     read_labels_with_findings,
+    read_volume_with_findings,
     write_image,
     write_labels,
 )
 from volmap.io.surfaces import FORMATS, read_closed_surface
 from volmap.io.vtk_xml import read_mesh, write_mesh
-from volmap.mapfolder import REPORT, MapFolder, read_map_folder
+from volmap.mapfolder import CERTIFICATE, REPORT, MapFolder, read_map_folder
 from volmap.mesh import MeshResult, MeshSettings
 from volmap.pipeline.machine import announce_compiling
 from volmap.pipeline.pair import MapJob, map_pair
@@ -59,7 +58,14 @@ class Screened:
     @property
     def refused(self) -> bool:
         """True when a volume, or the pair, cannot be mapped."""
-        return any(r.refused for r in self.results) or (self.pair is not None and self.pair.refused)
+        return bool(self.refusals)
+
+    @property
+    def refusals(self) -> tuple[str, ...]:
+        """What cannot be mapped and the remedy, a sentence each; the pair's differences come last."""
+        found = [finding for result in self.results for finding in result.findings]
+        found += self.pair.comparison if self.pair is not None else ()
+        return tuple(f.line.removeprefix("refuse: ") for f in found if f.level is Level.REFUSE)
 
 
 def screen_files(paths: list[Path], *, edge_mm: float | None = None, progress: Progress = silent) -> Screened:
@@ -70,10 +76,16 @@ def screen_files(paths: list[Path], *, edge_mm: float | None = None, progress: P
     InputError
         A file that cannot be read.
     """
-    results = []
+    loaded = []
     for step, path in enumerate(paths):
-        progress("screen", step, len(paths), path.name)
-        labels, findings = read_labels_with_findings(path)
+        progress("read", step, len(paths), path.name)
+        loaded.append(read_labels_with_findings(path))
+    volumes = [labels for labels, _ in loaded]
+    if len(volumes) == 2:
+        volumes = list(_told_apart(*volumes))
+    results = []
+    for step, (labels, (_, findings)) in enumerate(zip(volumes, loaded, strict=True)):
+        progress("screen", step, len(paths), labels.name)
         result = screening.screen(labels, edge_mm=edge_mm)
         results.append(replace(result, findings=(*result.findings, *findings)))
     pair = screening.compare(results[0], results[1]) if len(results) == 2 else None
@@ -88,6 +100,8 @@ def mend_file(path: Path, out: Path) -> Mended:
     InputError
         A file that cannot be read, or a place that is taken.
     """
+    _require_name(out, _NIFTI)
+    require_place(out, folder=False)
     labels, _ = read_labels_with_findings(path)
     mended = screening.mend(labels)
     write_labels(out, mended.labels)
@@ -104,6 +118,8 @@ def mesh_file(
     InputError
         A file that cannot be read, a volume the screen refuses, a surface that is not closed.
     """
+    _require_name(out, (".vtu",))
+    require_place(out, overwrite=overwrite, folder=False)
     announce_compiling(progress)
     if path.suffix.lower() in FORMATS:
         points, triangles = read_closed_surface(path)
@@ -135,7 +151,8 @@ def map_files(
     InputError
         Whatever is wrong with an input; nothing is written then.
     """
-    _require_free(out, overwrite)
+    require_place(out, overwrite=overwrite, folder=True, holding=CERTIFICATE)
+    progress("read", 0, 0, f"{source.name} and {target.name}")
     a, findings_a = read_labels_with_findings(source)
     b, findings_b = read_labels_with_findings(target)
     a, b = _told_apart(a, b)
@@ -151,15 +168,17 @@ def map_files(
     return folder
 
 
-def _require_free(out: Path, overwrite: bool) -> None:
-    """Refuse a taken place before the work, not after it."""
-    if not out.absolute().parent.is_dir():
+_NIFTI = (".nii", ".nii.gz")
+
+
+def _require_name(out: Path, endings: tuple[str, ...]) -> None:
+    """Refuse a name for another kind of file before the work, not after it."""
+    if not out.name.lower().endswith(endings):
         raise InputError(
-            "the folder to write in does not exist", where=str(out), remedy="make the folder first"
-        )
-    if out.exists() and not overwrite:
-        raise InputError(
-            "stands already", where=out.name, remedy="choose another --out, or --overwrite to replace it"
+            "is no name for what comes out",
+            where=out.name,
+            expected=f"a name that ends in {' or '.join(endings)}",
+            remedy="change the ending of the name",
         )
 
 
@@ -187,6 +206,7 @@ def report_folder(
     InputError
         No map folder, or an image that cannot be read.
     """
+    require_place(path / REPORT, overwrite=True, folder=False)
     folder = read_map_folder(path)
     images = [read_image(p) if p is not None else None for p in (source_image, target_image)]
     html = report_of(folder, source_image=images[0], target_image=images[1], progress=progress)
@@ -196,67 +216,79 @@ def report_folder(
 
 
 def carry_file(
-    thing: Path, through: Path, out: Path, *, reverse: bool = False, overwrite: bool = False
+    thing: Path,
+    through: Path,
+    out: Path,
+    *,
+    reverse: bool = False,
+    kind: VolumeKind = "either",
+    overwrite: bool = False,
+    progress: Progress = silent,
 ) -> tuple[Finding, ...]:
     """Carry landmarks (csv), a label volume, an image (nii) or a mesh (vtu) through a map folder.
+
+    Parameters
+    ----------
+    thing, through, out : Path
+    reverse : bool
+        From TARGET to SOURCE.
+    kind : 'labels', 'image' or 'either'
+        What a volume holds; 'either' decides by its values.
+    overwrite : bool
+    progress : Progress
 
     Raises
     ------
     InputError
         A file that cannot be read or does not lie on the body, or a place that is taken.
     """
-    _require_free(out, overwrite)
-    _require_kind(thing, out)
+    _require_name(out, _endings(thing))
+    require_place(out, overwrite=overwrite, folder=False)
+    progress("read", 0, 2, thing.name)
+    loaded, findings = _loaded(thing, kind)
+    progress("read", 1, 2, through.absolute().name)
     folder = read_map_folder(through)
+    progress("carry", 0, 0, thing.name)
     start, end = (folder.target, folder.source) if reverse else (folder.source, folder.target)
-    loaded, findings = _loaded(thing)
     carried = carrying.carry(loaded, folder.map, reverse=reverse, onto=end.grid, reach_mm=start.grid.voxel_mm)
     _write_thing(out, carried.thing, overwrite)
     return (*findings, *carried.findings)
 
 
-_KINDS = {".csv": "csv", ".vtu": "vtu", ".nii": "nii", ".gz": "nii"}
+def _endings(thing: Path) -> tuple[str, ...]:
+    """Endings of files of the same kind as `thing`."""
+    for endings in ((".csv",), (".vtu",), _NIFTI):
+        if thing.name.lower().endswith(endings):
+            return endings
+    raise InputError(
+        "this kind of file cannot be carried",
+        where=thing.name,
+        expected=".csv, .nii, .nii.gz or .vtu",
+        remedy="points go into a csv with name,x_mm,y_mm,z_mm; volumes into NIfTI",
+    )
 
 
-def _require_kind(thing: Path, out: Path) -> None:
-    kind = _KINDS.get(thing.suffix.lower())
-    if kind is None:
-        raise InputError(
-            "this kind of file cannot be carried", where=thing.name, expected=".csv, .nii, .nii.gz or .vtu"
-        )
-    if _KINDS.get(out.suffix.lower()) != kind:
-        raise InputError(
-            "is no name for what comes out", where=out.name, expected=f"the same kind as {thing.name}"
-        )
-
-
-def _loaded(path: Path) -> tuple[Any, tuple[Finding, ...]]:
-    kind = _KINDS[path.suffix.lower()]
-    if kind == "csv":
+def _loaded(path: Path, kind: VolumeKind) -> tuple[Any, tuple[Finding, ...]]:
+    ending = _endings(path)[0]
+    if ending == ".csv":
         return read_landmarks(path), ()
-    if kind == "vtu":
+    if ending == ".vtu":
         return read_mesh(path)[0], ()
-    image, findings = read_image_with_findings(path)
-    if _is_labels(image):
-        return read_labels_with_findings(path)
-    note = Finding(
-        Level.NOTE,
-        "carried_as_image",
-        path.name,
-        "its values are not whole numbers from 0 to 65535, so it was carried as an image (trilinear)",
-    )
-    return image, (*findings, note)
+    volume, findings = read_volume_with_findings(path, kind=kind)
+    if kind != "either":
+        return volume, findings
+    return volume, (*findings, _how_taken(volume))
 
 
-def _is_labels(image: ImageVolume) -> bool:
-    values = image.values
-    return bool(
-        np.isfinite(values).all()
-        and values.min() >= 0
-        and values.max() <= 65535
-        and (values == np.rint(values)).all()
-        and len(np.unique(values)) <= 256
-    )
+def _how_taken(volume: LabelVolume | ImageVolume) -> Finding:
+    """What a volume was taken for, which decides how it is sampled."""
+    if isinstance(volume, LabelVolume):
+        sentence = f"its {len(volume.present)} whole numbers were taken for labels (nearest voxel)"
+        return Finding(
+            Level.NOTE, "carried-as-labels", volume.name, sentence, "say --as image if they are not"
+        )
+    sentence = "its values are no labels (whole, 0 to 65535, at most 256 of them): an image (trilinear)"
+    return Finding(Level.NOTE, "carried-as-image", volume.name, sentence)
 
 
 def _write_thing(out: Path, thing: Any, overwrite: bool) -> None:

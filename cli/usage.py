@@ -1,0 +1,39 @@
+"""What is wrong with how a command was called: exit status 2."""
+
+from __future__ import annotations
+
+import argparse
+import math
+from collections.abc import Callable
+
+
+class UsageError(Exception):
+    """Options that do not go together, or name nothing; the sentence says what would be right."""
+
+
+def positive_mm(text: str) -> float:
+    """A length above 0, for argparse.
+
+    Raises
+    ------
+    argparse.ArgumentTypeError
+        No number, not finite, or not above 0.
+    """
+    try:
+        value = float(text)
+    except ValueError:
+        value = math.nan
+    if not 0.0 < value < math.inf:
+        raise argparse.ArgumentTypeError(f"{text!r} is not a length above 0 mm")
+    return value
+
+
+def whole_number(least: int) -> Callable[[str], int]:
+    """A reader of whole numbers from `least` up, for argparse."""
+
+    def read(text: str) -> int:
+        if not text.isdecimal() or int(text) < least:
+            raise argparse.ArgumentTypeError(f"{text!r} is not a whole number from {least} up")
+        return int(text)
+
+    return read
