@@ -24,6 +24,7 @@ SCREEN_SAMPLES, SCREEN_ROUNDS = 200, 15  # for the first look at every start
 ROUNDS = 40  # for those that are still near the best
 HOPELESS = 1.5  # starts whose residual is larger than this factor times the best are not refined further
 NEARLY_EQUAL = 1.05  # residuals within this factor of the best count as equal
+AT_REST = 1e-4  # share of the body's size by which no point moves any more
 MOST_STRETCH = 3.0  # an affine start is held inside this range of stretches
 
 
@@ -109,7 +110,8 @@ def fit_affine(points: Floats, anchors: Floats, weight: Floats) -> Floats:
     w = (weight / weight.sum())[:, None]
     a, b = (w * points).sum(axis=0), (w * anchors).sum(axis=0)
     x, y = points - a, anchors - b
-    linear = np.linalg.solve((w * x).T @ x + 1e-12 * np.eye(3), (w * x).T @ y).T
+    spread = (w * x).T @ x
+    linear = np.linalg.solve(spread + 1e-12 * np.trace(spread) * np.eye(3), (w * x).T @ y).T
     u, s, v = np.linalg.svd(linear)
     if np.linalg.det(u @ v) < 0:
         v[2] = -v[2]
@@ -130,15 +132,21 @@ def _pairs(source: list[_Label], target: list[_Label], matrix: Floats) -> tuple[
     return np.concatenate(points), np.concatenate(anchors), np.concatenate(weights)
 
 
+def _change(before: Floats, after: Floats, points: Floats) -> float:
+    """Largest move of any point between two affines, as a share of the points' spread."""
+    difference = after - before
+    moves = points @ difference[:3, :3].T + difference[:3, 3]
+    return float(np.linalg.norm(moves, axis=1).max() / np.sqrt(points.var(axis=0).sum()))
+
+
 def _refine(
     source: list[_Label], target: list[_Label], matrix: Floats, *, name: str, rounds: int, rigid: bool
 ) -> Alignment:
     for fit in (fit_rigid, fit_affine) if rigid else (fit_affine,):
         for _ in range(rounds):
-            fitted = fit(*_pairs(source, target, matrix))
-            change = float(np.abs(fitted - matrix).max())
-            matrix = fitted
-            if change < 1e-3:
+            points, anchors, weights = _pairs(source, target, matrix)
+            before, matrix = matrix, fit(points, anchors, weights)
+            if _change(before, matrix, points) < AT_REST:
                 break
     points, anchors, weights = _pairs(source, target, matrix)
     gap = points @ matrix[:3, :3].T + matrix[:3, 3] - anchors
