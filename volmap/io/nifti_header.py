@@ -262,6 +262,7 @@ def _orientation(
         )  # fmt: skip
     sform = np.array([raw["srow_x"], raw["srow_y"], raw["srow_z"], [0, 0, 0, 1]], np.float64)
     affine = sform if codes[0] > 0 else qform_affine(raw, where)
+    affine = affine.astype(np.float32).astype(np.float64)  # as it is written again: NIfTI-1 keeps float32
     try:
         grid = Grid((shape[0], shape[1], shape[2]), affine)
     except InputError as fault:

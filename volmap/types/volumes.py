@@ -89,9 +89,9 @@ class ImageVolume(Frozen):
 
 
 def digest(voxels: NDArray[np.generic], affine: NDArray[np.float64]) -> str:
-    """SHA-256 of shape, voxels (first index fastest) and affine (rounded to 1e-6 mm)."""
+    """SHA-256 of shape, voxels (first index fastest) and affine (as float32, which is what NIfTI-1 keeps)."""
     h = hashlib.sha256()
     h.update(np.array(voxels.shape, "<i8").tobytes())
     h.update(np.asfortranarray(voxels).tobytes(order="F"))
-    h.update((np.round(affine, 6) + 0.0).astype("<f8").tobytes())
+    h.update((affine.astype("<f4") + np.float32(0.0)).tobytes())
     return h.hexdigest()
