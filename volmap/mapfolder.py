@@ -15,6 +15,7 @@ from volmap.io.atomic import whole_folder
 from volmap.io.json_documents import read_json, write_json
 from volmap.io.landmarks import read_pairs, write_pairs
 from volmap.io.nifti import read_field, read_image, read_labels, write_field, write_image, write_labels
+from volmap.io.opening import shown_name
 from volmap.io.vtk_xml import read_mesh, read_surface, write_mesh, write_surface
 from volmap.types import (
     Certificate,
@@ -168,6 +169,7 @@ def read_map_folder(path: Path) -> MapFolder:
     mesh, points, cells, told = read_mesh(_file(path, MAP))
     names = {side: str(getattr(certificate, side).get("name", side)) for side in ("source", "target")}
     volume_map = VolumeMap(mesh, _images(points, MAP), names["source"], names["target"])
+    _require_cells(cells, volume_map)
     source, target = (_labels(path, side, certificate) for side in ("source", "target"))
     status, history = _steps(path)
     pairs = read_pairs(path / PAIRS) if (path / PAIRS).exists() else None
@@ -209,7 +211,10 @@ def read_certificate(path: Path) -> Certificate:
     """
     if not path.is_dir():
         raise InputError(
-            "is not a map folder", where=path.name, expected="a folder that `volmap map` has written"
+            "is not a map folder",
+            where=shown_name(path.absolute()),
+            expected="a folder that `volmap map` has written",
+            remedy="check the name, or map the pair first",
         )
     return from_document(read_json(_file(path, CERTIFICATE)), where=CERTIFICATE)
 
@@ -218,7 +223,7 @@ def _file(path: Path, name: str) -> Path:
     if not (path / name).is_file():
         raise InputError(
             "a file of the map folder is missing",
-            where=f"{path.name}/{name}",
+            where=f"{path.absolute().name}/{name}",
             remedy="map the pair again; a map folder must stay whole",
         )
     return path / name
@@ -228,6 +233,18 @@ def _images(points: Mapping[str, NDArray[Any]], name: str) -> NDArray[np.float64
     if "image_mm" not in points:
         raise InputError("holds no point array `image_mm`", where=name)
     return np.asarray(points["image_mm"], np.float64)
+
+
+def _require_cells(cells: Mapping[str, NDArray[Any]], volume_map: VolumeMap) -> None:
+    for name, fresh in (("volume_ratio", volume_map.volume_ratio), ("stretch", volume_map.stretches)):
+        stored = cells.get(name)
+        if stored is None or stored.shape != fresh.shape or not np.allclose(stored, fresh, rtol=1e-6):
+            raise InputError(
+                f"its cell array `{name}` is not what its points give",
+                where=MAP,
+                remedy="map the pair again",
+                refused=True,
+            )
 
 
 def _solved_on(told: Mapping[str, Any]) -> str:
@@ -248,7 +265,7 @@ def _labels(path: Path, side: str, certificate: Certificate) -> LabelVolume:
     if told.get("sha256") != stored.sha256:
         raise InputError(
             f"the {side} labels are not those the certificate speaks of",
-            where=f"{path.name}/{LABELS[side]}",
+            where=f"{path.absolute().name}/{LABELS[side]}",
             found=f"digest {stored.sha256[:12]}",
             expected=str(told.get("sha256"))[:12],
             remedy="map the pair again",

@@ -57,7 +57,8 @@ def field_sidecar(
         **_meaning(field, here, there),
         "grid_space": {"role": here, "name": field.grid_space, "sha256": grid_sha256},
         "points_into": {"role": there, "name": field.points_into, "sha256": points_into_sha256},
-        "digest": "SHA-256 of the shape, the voxels (first index fastest) and the affine of the label volume",
+        "digest": "SHA-256 of the label volume: shape (3 int64), voxels (uint16, first index fastest) and "
+        "affine (16 float32, row by row), all little-endian",
         **_CONVENTIONS,
         "against_exact_map": _against_exact(field_error(field, exact)),
         "paired_file": paired_file,

@@ -77,21 +77,22 @@ def _differences(old: Gate, new: Gate) -> Iterator[tuple[str, Any, Any]]:
     if old.verdict is not new.verdict:
         yield "verdict", old.verdict.value, new.verdict.value
     for part in ("unit", "warn", "fail", "value"):
-        yield from _leaves(part, plain(getattr(old, part)), plain(getattr(new, part)))
+        yield from unlike(part, plain(getattr(old, part)), plain(getattr(new, part)))
     if len(old.where) != len(new.where):
         yield "where (count)", len(old.where), len(new.where)
 
 
-def _leaves(path: str, old: Any, new: Any) -> Iterator[tuple[str, Any, Any]]:
+def unlike(path: str, old: Any, new: Any) -> Iterator[tuple[str, Any, Any]]:
+    """Every leaf in which two plain values differ: its path, the old and the new; as `compare` does."""
     if isinstance(old, dict) and isinstance(new, dict):
         for key in [*old, *(k for k in new if k not in old)]:
             if key not in old or key not in new:
                 yield f"{path}.{key}", old.get(key, "missing"), new.get(key, "missing")
             else:
-                yield from _leaves(f"{path}.{key}", old[key], new[key])
+                yield from unlike(f"{path}.{key}", old[key], new[key])
     elif isinstance(old, list) and isinstance(new, list) and len(old) == len(new):
         for i, (a, b) in enumerate(zip(old, new, strict=True)):
-            yield from _leaves(f"{path}[{i}]", a, b)
+            yield from unlike(f"{path}[{i}]", a, b)
     elif not _equal(old, new):
         yield path, old, new
 

@@ -5,11 +5,10 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 from pathlib import Path
 
-import numpy as np
-
 from volmap import carry as carrying
 from volmap import certify as certifying
 from volmap.mapfolder import MapFolder, read_map_folder
+from volmap.pipeline.doctored import doctored
 from volmap.types import Certificate, LabelVolume, Progress, TetMesh, VolumeMap, silent
 
 
@@ -70,32 +69,10 @@ def certify_folder(path: Path, *, gates: Path | None = None, progress: Progress 
     table = certifying.read_gate_table(gates)
     fresh, measures = certifying.certify(evidence_of(folder), table, progress=progress)
     stored = folder.certificate
-    against = [d.sentence for d in certifying.compare(stored, fresh)] + _doctored(folder)
+    progress("compare", 0, 0)
+    against = [d.sentence for d in certifying.compare(stored, fresh)] + doctored(folder, measures)
     return SecondOpinion(
         replace(stored, gates=fresh, measures=measures),
         tuple(against),
         certifying.not_repeated(stored, fresh),
     )
-
-
-def _doctored(folder: MapFolder) -> list[str]:
-    """Files that are not what the map gives."""
-    made = {
-        "forward.nii.gz": (folder.forward, carrying.forward_field(folder.map, folder.source.grid)),
-        "backward.nii.gz": (folder.backward, carrying.backward_field(folder.map, folder.target.grid)),
-    }
-    told = []
-    for name, (stored, fresh) in made.items():
-        apart = np.abs(stored.displacement - fresh.displacement)
-        if (stored.support != fresh.support).any() or np.nanmax(apart, initial=0.0) > 1e-3:
-            told.append(
-                f"{name}: the stored field is not the map in map.vtu (up to {np.nanmax(apart):.3g} mm)"
-            )
-    carried = carrying.carried_solid(folder.map, folder.target.grid)
-    differ = int((carried.labels != folder.carried.labels).sum())
-    if differ:
-        told.append(f"carried_labels.nii.gz: {differ} voxels are not what map.vtu gives")
-    ratio = carrying.volume_ratio_image(folder.map, folder.source.grid).values
-    if not np.allclose(ratio, folder.volume_ratio.values, rtol=1e-4, equal_nan=True):
-        told.append("volume_ratio.nii.gz: not what map.vtu gives")
-    return told

@@ -7,20 +7,17 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 
 from volmap import carry as carrying
 from volmap import certify as certifying
 from volmap import mesh as meshing
 from volmap import screen as screening
-from volmap.kernels.distortion import energies
-from volmap.kernels.energies import ENERGIES
-from volmap.kernels.tets import dihedral_degrees, shape_gradients
 from volmap.mapfolder import MapFolder
 from volmap.mapping import MapSettings, Solved, map_mesh
 from volmap.mesh import MeshResult, MeshSettings
 from volmap.pipeline.machine import Stopwatch, announce_compiling, peak_mb, use_threads, versions
 from volmap.pipeline.opinion import evidence_of
+from volmap.pipeline.told import distortion_of, mesh_document, scan_document, sidecars_of
 from volmap.types import (
     Certificate,
     Finding,
@@ -223,26 +220,7 @@ def _sampled(
         forward = carrying.forward_field(named, source.grid)
         backward = carrying.backward_field(named, target.grid)
         progress("fields", 1, 3)
-        sidecars = {
-            "forward": carrying.field_sidecar(
-                forward,
-                named,
-                direction="forward",
-                grid_sha256=source.sha256,
-                points_into_sha256=target.sha256,
-                paired_file="backward.nii.gz",
-                paired=carrying.round_trip(forward, backward),
-            ),
-            "backward": carrying.field_sidecar(
-                backward,
-                named,
-                direction="backward",
-                grid_sha256=target.sha256,
-                points_into_sha256=source.sha256,
-                paired_file="forward.nii.gz",
-                paired=carrying.round_trip(backward, forward),
-            ),
-        }
+        sidecars = sidecars_of(named, source, target, forward, backward)
         progress("fields", 2, 3)
         carried = carrying.carried_solid(named, target.grid, names=source.names)
         ratio = carrying.volume_ratio_image(named, source.grid)
@@ -263,8 +241,8 @@ def _sampled(
         volume_ratio=ratio,
         sidecars=sidecars,
         certificate=Certificate(
-            _scan_document(source),
-            _scan_document(target),
+            scan_document(source),
+            scan_document(target),
             (),
             versions=versions(),
             status=outcome.status.value,
@@ -273,35 +251,8 @@ def _sampled(
         pairs=pairs,
         status=outcome.status,
         history=outcome.history,
-        distortion=_distortion(named, energy),
+        distortion=distortion_of(named, energy),
     )
-
-
-def _distortion(volume_map: VolumeMap, energy: str) -> NDArray[np.float64]:
-    """W_S of each tet of the map as it is handed out."""
-    points, images = np.array(volume_map.mesh.points), np.array(volume_map.images)
-    tets = np.array(volume_map.mesh.tets)
-    out = np.empty(len(tets))
-    energies(ENERGIES[energy], images, tets, shape_gradients(points, tets), out)
-    return out
-
-
-def _scan_document(volume: LabelVolume) -> dict[str, Any]:
-    counts = np.bincount(volume.labels.ravel())
-    return {
-        "name": volume.name,
-        "sha256": volume.sha256,
-        "shape": list(volume.grid.shape),
-        "spacing_mm": volume.grid.spacing.tolist(),
-        "labels": {
-            str(label): {
-                "name": volume.name_of(label),
-                "voxels": int(counts[label]),
-                "volume_mm3": float(counts[label] * volume.grid.voxel_mm3),
-            }
-            for label in volume.present
-        },
-    }
 
 
 def _settings_document(job: MapJob, solutions: _Solutions, order: _Order) -> dict[str, Any]:
@@ -324,20 +275,9 @@ def _settings_document(job: MapJob, solutions: _Solutions, order: _Order) -> dic
 
 
 def _mesh_document(folder: MapFolder, meshes: list[MeshResult]) -> dict[str, Any]:
-    mesh = folder.map.mesh
-    angles = dihedral_degrees(mesh.points, mesh.tets)
-    voxels = {int(k): v["volume_mm3"] for k, v in folder.certificate.source["labels"].items()}
-    error = {str(k): 100.0 * (mesh.volume_of(k) / v - 1.0) for k, v in voxels.items()}
-    return {
-        "points": len(mesh.points),
-        "tets": len(mesh.tets),
-        "edge_mm": meshes[0].settings.edge_mm,
-        "min_dihedral_deg": float(angles.min()),
-        "volume_error_pct": error,
-        "own": {
-            side: result.quality.as_dict() for side, result in zip(("source", "target"), meshes, strict=True)
-        },
-    }
+    own = {side: result.quality.as_dict() for side, result in zip(("source", "target"), meshes, strict=True)}
+    told = mesh_document(folder.map, folder.certificate.source)
+    return told | {"edge_mm": meshes[0].settings.edge_mm, "own": own}
 
 
 def _sentences(findings: list[Finding]) -> tuple[str, ...]:
