@@ -231,7 +231,7 @@ def _file(path: Path, name: str) -> Path:
 
 def _images(points: Mapping[str, NDArray[Any]], name: str) -> NDArray[np.float64]:
     if "image_mm" not in points:
-        raise InputError("holds no point array `image_mm`", where=name)
+        raise InputError("holds no point array `image_mm`", where=name, remedy="map the pair again")
     return np.asarray(points["image_mm"], np.float64)
 
 
@@ -255,6 +255,7 @@ def _solved_on(told: Mapping[str, Any]) -> str:
             where=MAP,
             found=repr(side),
             expected="solved_on = source or target in its FieldData",
+            remedy="map the pair again",
         )
     return side
 
@@ -288,7 +289,12 @@ def _steps(path: Path) -> tuple[Status, tuple[IterationRecord, ...]]:
         steps = tuple(IterationRecord(**step) for step in document.get("steps", []))
         return Status[str(document.get("status"))], steps
     except (TypeError, KeyError) as fault:
-        raise InputError("a step of the solve is not as written", where=STEPS, found=str(fault)) from fault
+        raise InputError(
+            "a step of the solve is not as written",
+            where=STEPS,
+            found=str(fault),
+            remedy="map the pair again",
+        ) from fault
 
 
 def _require_same_grids(folder: MapFolder) -> None:

@@ -40,14 +40,14 @@ def read_label_names(path: str | os.PathLike[str]) -> dict[int, str]:
 
 
 def sibling_names(path: str | os.PathLike[str]) -> dict[int, str]:
-    """Names from a table of the same name beside a volume (`x.tsv` or `x.csv` for `x.nii.gz`).
+    """Names from a table beside a volume: `x.tsv` or `x.csv` for `x.nii.gz`, else the folder's `labels.tsv`.
 
     A table of another kind (no `index` and `name` columns) is passed over; none gives no names.
     """
     volume = Path(path)
     stem = volume.name.removesuffix(".gz").removesuffix(".nii")
-    for suffix in (".tsv", ".csv"):
-        table = volume.with_name(stem + suffix)
+    for name in (f"{stem}.tsv", f"{stem}.csv", "labels.tsv"):
+        table = volume.with_name(name)
         if table.is_file() and table.stat().st_size and _names_columns(table):
             return read_label_names(table)
     return {}
