@@ -118,7 +118,7 @@ def refit(tree, points, triangles):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)
-def _on_triangle(px, py, pz, points, a, b, c):  # type: ignore[no-untyped-def]
+def on_triangle(px, py, pz, points, a, b, c):  # type: ignore[no-untyped-def]
     """Barycentric coordinates of the point of triangle abc closest to p, and the squared distance.
 
     Regions of the triangle after Ericson, Real-Time Collision Detection (2005), section 5.1.5.
@@ -180,7 +180,7 @@ def closest_from(tree, points, triangles, queries, guess, triangle, barycentric,
         if guess[q] >= 0:
             found = guess[q]
             a, b, c = triangles[found, 0], triangles[found, 1], triangles[found, 2]
-            u0, v0, w0, best = _on_triangle(px, py, pz, points, a, b, c)
+            u0, v0, w0, best = on_triangle(px, py, pz, points, a, b, c)
         stack = np.empty(DEPTH, np.int64)
         stack[0] = 0
         size = 1
@@ -194,7 +194,7 @@ def closest_from(tree, points, triangles, queries, guess, triangle, barycentric,
                 for i in range(tree.first[node], tree.last[node]):
                     t = tree.order[i]
                     a, b, c = triangles[t, 0], triangles[t, 1], triangles[t, 2]
-                    u, v, w, s = _on_triangle(px, py, pz, points, a, b, c)
+                    u, v, w, s = on_triangle(px, py, pz, points, a, b, c)
                     if s < best or (s == best and t < found):
                         best = s
                         found = t

@@ -1,0 +1,370 @@
+"""Keeping a moving triangle surface free of crossings.
+
+A barrier acts between parts of the surface that come nearer than a small distance, and every step is cut so
+short that no two parts meet on the way (Li et al., ACM TOG 39(4), 2020, and 40(4), 2021: the barrier, and
+additive continuous collision detection).  A surface that starts without crossings never gets one.
+
+A pair is four points with weights: ``gap = sum_c weight_c x_c`` joins the closest points of a point and a
+triangle (weights 1, -u, -v, -w) or of two edges (1 - s, s, t - 1, -t).
+"""
+
+from __future__ import annotations
+
+from math import log, sqrt
+from typing import NamedTuple
+
+import numpy as np
+from numba import njit, prange
+from numpy.typing import NDArray
+
+from volmap.kernels.closest import DEPTH, Tree, build_tree, on_triangle
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+KEPT = 0.1  # share of a pair's distance that a step leaves at least
+ADVANCES = 500  # rounds of conservative advancement at most; stopping early is safe
+
+
+class Skin(NamedTuple):
+    """The surface that must not cross: its points, edges and triangles, with search trees.
+
+    Parameters
+    ----------
+    points : (n, 3) int64
+        Each point of the surface, three times over (a triangle without extent).
+    edges : (e, 3) int64
+        Each edge, its second point twice.
+    triangles : (t, 3) int64
+    edge_tree, triangle_tree : Tree
+    """
+
+    points: Ints
+    edges: Ints
+    triangles: Ints
+    edge_tree: Tree
+    triangle_tree: Tree
+
+
+def skin_of(points: Floats, triangles: Ints) -> Skin:
+    """The skin of a triangle surface, for any later positions of its points.
+
+    Parameters
+    ----------
+    points : (n, 3) float64, mm
+    triangles : (t, 3) int64
+    """
+    used = np.unique(triangles)
+    pairs = np.sort(triangles[:, [[0, 1], [1, 2], [2, 0]]].reshape(-1, 2), axis=1)
+    edges = np.unique(pairs, axis=0)[:, [0, 1, 1]]
+    lone = np.ascontiguousarray(np.repeat(used[:, None], 3, axis=1))
+    edges, triangles = np.ascontiguousarray(edges), np.ascontiguousarray(triangles)
+    return Skin(lone, edges, triangles, build_tree(points, edges), build_tree(points, triangles))
+
+
+@njit(cache=True)
+def _sweep(tree, cells, here, there):  # type: ignore[no-untyped-def]
+    """Boxes around cells on their straight way from `here` to `there`, in place."""
+    for node in range(len(tree.child) - 1, -1, -1):
+        c = tree.child[node]
+        for d in range(3):
+            low, high = np.inf, -np.inf
+            if c >= 0:
+                low = min(tree.low[c, d], tree.low[c + 1, d])
+                high = max(tree.high[c, d], tree.high[c + 1, d])
+            else:
+                for i in range(tree.first[node], tree.last[node]):
+                    for k in range(3):
+                        p = cells[tree.order[i], k]
+                        low = min(low, here[p, d], there[p, d])
+                        high = max(high, here[p, d], there[p, d])
+            tree.low[node, d] = low
+            tree.high[node, d] = high
+
+
+@njit(cache=True)
+def _box(cell, here, there, margin, low, high):  # type: ignore[no-untyped-def]
+    for d in range(3):
+        low[d], high[d] = np.inf, -np.inf
+        for k in range(3):
+            low[d] = min(low[d], here[cell[k], d], there[cell[k], d])
+            high[d] = max(high[d], here[cell[k], d], there[cell[k], d])
+        low[d] -= margin
+        high[d] += margin
+
+
+@njit(cache=True)
+def _apart(low, high, low2, high2):  # type: ignore[no-untyped-def]
+    x = low[0] > high2[0] or high[0] < low2[0]
+    y = low[1] > high2[1] or high[1] < low2[1]
+    return x or y or low[2] > high2[2] or high[2] < low2[2]
+
+
+@njit(cache=True)
+def _share_a_point(a, b):  # type: ignore[no-untyped-def]
+    for i in range(3):
+        for j in range(3):
+            if a[i] == b[j]:
+                return True
+    return False
+
+
+@njit(cache=True)
+def _edge_weights(x, weights):  # type: ignore[no-untyped-def]
+    """Weights of the closest points of segments x0 x1 and x2 x3 into weights (4,)
+
+    Cases after Ericson, Real-Time Collision Detection (2005), section 5.1.9.
+    """
+    a = e = b = c = f = 0.0
+    for i in range(3):
+        u = x[1, i] - x[0, i]
+        v = x[3, i] - x[2, i]
+        r = x[0, i] - x[2, i]
+        a += u * u
+        e += v * v
+        b += u * v
+        c += u * r
+        f += v * r
+    denominator = a * e - b * b
+    s = 0.0
+    if denominator > 1e-14 * a * e:
+        s = min(max((b * f - c * e) / denominator, 0.0), 1.0)
+    t = (b * s + f) / e if e > 0.0 else 0.0
+    if t < 0.0:
+        t = 0.0
+        s = min(max(-c / a, 0.0), 1.0) if a > 0.0 else 0.0
+    elif t > 1.0:
+        t = 1.0
+        s = min(max((b - c) / a, 0.0), 1.0) if a > 0.0 else 0.0
+    weights[0], weights[1], weights[2], weights[3] = 1.0 - s, s, t - 1.0, -t
+
+
+@njit(cache=True)
+def _gap(of_edges, x, weights, gap):  # type: ignore[no-untyped-def]
+    """Weights and gap vector of four places x (4, 3); returns the distance."""
+    if of_edges:
+        _edge_weights(x, weights)
+    else:
+        u, v, w, _ = on_triangle(x[0, 0], x[0, 1], x[0, 2], x, 1, 2, 3)
+        weights[0], weights[1], weights[2], weights[3] = 1.0, -u, -v, -w
+    squared = 0.0
+    for i in range(3):
+        gap[i] = 0.0
+        for k in range(4):
+            gap[i] += weights[k] * x[k, i]
+        squared += gap[i] * gap[i]
+    return sqrt(squared)
+
+
+@njit(cache=True)
+def _corners(of_edges, query, cell, corners):  # type: ignore[no-untyped-def]
+    if of_edges:
+        corners[0], corners[1], corners[2], corners[3] = query[0], query[1], cell[0], cell[1]
+    else:
+        corners[0], corners[1], corners[2], corners[3] = query[0], cell[0], cell[1], cell[2]
+
+
+@njit(cache=True)
+def _first_meeting(of_edges, x, p, longest, weights, gap):  # type: ignore[no-untyped-def]
+    """A step in [0, longest] on which the four places x (4, 3), moving by p (4, 3), surely do not meet.
+
+    x and p are work space and are changed.
+    """
+    for i in range(3):
+        mean = 0.25 * (p[0, i] + p[1, i] + p[2, i] + p[3, i])
+        for k in range(4):
+            p[k, i] -= mean
+    speed0 = sqrt(p[0, 0] ** 2 + p[0, 1] ** 2 + p[0, 2] ** 2)
+    speed1 = sqrt(p[1, 0] ** 2 + p[1, 1] ** 2 + p[1, 2] ** 2)
+    speed2 = sqrt(p[2, 0] ** 2 + p[2, 1] ** 2 + p[2, 2] ** 2)
+    speed3 = sqrt(p[3, 0] ** 2 + p[3, 1] ** 2 + p[3, 2] ** 2)
+    closing = max(speed0, speed1) + max(speed2, speed3) if of_edges else speed0 + max(speed1, speed2, speed3)
+    distance = _gap(of_edges, x, weights, gap)
+    if closing * longest <= (1.0 - KEPT) * distance:
+        return longest
+    least = KEPT * distance
+    t = 0.0
+    for _ in range(ADVANCES):
+        advance = 0.9 * (distance - 0.5 * least) / closing
+        if t + advance >= longest:
+            return longest
+        for k in range(4):
+            for i in range(3):
+                x[k, i] += advance * p[k, i]
+        distance = _gap(of_edges, x, weights, gap)
+        if distance < least:
+            return t
+        t += advance
+    return t
+
+
+@njit(cache=True, parallel=True)
+def _longest_steps(of_edges, tree, cells, queries, here, there, out):  # type: ignore[no-untyped-def]
+    """Safe share in [0, 1] of the way from here to there, query by query."""
+    for q in prange(len(queries)):
+        low, high = np.empty(3), np.empty(3)
+        x, p = np.empty((4, 3)), np.empty((4, 3))
+        weights, gap, corners = np.empty(4), np.empty(3), np.empty(4, np.int64)
+        stack = np.empty(DEPTH, np.int64)
+        _box(queries[q], here, there, 0.0, low, high)
+        safe = 1.0
+        stack[0] = 0
+        size = 1
+        while size > 0:
+            size -= 1
+            node = stack[size]
+            if _apart(low, high, tree.low[node], tree.high[node]):
+                continue
+            if tree.child[node] >= 0:
+                stack[size] = tree.child[node]
+                stack[size + 1] = tree.child[node] + 1
+                size += 2
+                continue
+            for i in range(tree.first[node], tree.last[node]):
+                c = tree.order[i]
+                if (of_edges and c <= q) or _share_a_point(queries[q], cells[c]):
+                    continue
+                _corners(of_edges, queries[q], cells[c], corners)
+                for k in range(4):
+                    for d in range(3):
+                        x[k, d] = here[corners[k], d]
+                        p[k, d] = there[corners[k], d] - here[corners[k], d]
+                safe = min(safe, _first_meeting(of_edges, x, p, safe, weights, gap))
+        out[q] = safe
+
+
+def longest_step(skin: Skin, here: Floats, there: Floats) -> float:
+    """Share in [0, 1] of the straight way from `here` to `there` on which the skin surely never meets itself.
+
+    Parameters
+    ----------
+    skin : Skin
+        Must not touch itself at `here`.
+    here, there : (n, 3) float64, mm
+    """
+    by_point, by_edge = np.empty(len(skin.points)), np.empty(len(skin.edges))
+    _sweep(skin.triangle_tree, skin.triangles, here, there)
+    _longest_steps(False, skin.triangle_tree, skin.triangles, skin.points, here, there, by_point)
+    _sweep(skin.edge_tree, skin.edges, here, there)
+    _longest_steps(True, skin.edge_tree, skin.edges, skin.edges, here, there, by_edge)
+    return float(min(by_point.min(), by_edge.min()))
+
+
+@njit(cache=True, parallel=True)
+def _near(of_edges, tree, cells, queries, points, reach, start, corners, weights, gaps, fill):  # type: ignore[no-untyped-def]
+    """Count each query's pairs nearer than `reach` into start[q + 1], or fill them in from start[q] on."""
+    for q in prange(len(queries)):
+        low, high = np.empty(3), np.empty(3)
+        x, four = np.empty((4, 3)), np.empty(4, np.int64)
+        w, gap = np.empty(4), np.empty(3)
+        stack = np.empty(DEPTH, np.int64)
+        _box(queries[q], points, points, reach, low, high)
+        found = 0
+        stack[0] = 0
+        size = 1
+        while size > 0:
+            size -= 1
+            node = stack[size]
+            if _apart(low, high, tree.low[node], tree.high[node]):
+                continue
+            if tree.child[node] >= 0:
+                stack[size] = tree.child[node]
+                stack[size + 1] = tree.child[node] + 1
+                size += 2
+                continue
+            for i in range(tree.first[node], tree.last[node]):
+                c = tree.order[i]
+                if (of_edges and c <= q) or _share_a_point(queries[q], cells[c]):
+                    continue
+                _corners(of_edges, queries[q], cells[c], four)
+                for k in range(4):
+                    for d in range(3):
+                        x[k, d] = points[four[k], d]
+                if _gap(of_edges, x, w, gap) < reach:
+                    if fill:
+                        row = start[q] + found
+                        for k in range(4):
+                            corners[row, k] = four[k]
+                            weights[row, k] = w[k]
+                        for d in range(3):
+                            gaps[row, d] = gap[d]
+                    found += 1
+        if not fill:
+            start[q + 1] = found
+
+
+class Pairs(NamedTuple):
+    """Parts of a skin that are near each other.
+
+    Parameters
+    ----------
+    corners : (k, 4) int64
+    weights : (k, 4) float64
+    gaps : (k, 3) float64, mm
+        ``sum_c weight_c x_c``.
+    """
+
+    corners: Ints
+    weights: Floats
+    gaps: Floats
+
+
+def near_pairs(skin: Skin, points: Floats, reach_mm: float) -> Pairs:
+    """All pairs of the skin nearer than `reach_mm`, point-triangle pairs first."""
+    parts = []
+    for of_edges, tree, cells, queries in (
+        (False, skin.triangle_tree, skin.triangles, skin.points),
+        (True, skin.edge_tree, skin.edges, skin.edges),
+    ):
+        _sweep(tree, cells, points, points)
+        start = np.zeros(len(queries) + 1, np.int64)
+        none = np.empty((0, 4), np.int64), np.empty((0, 4)), np.empty((0, 3))
+        _near(of_edges, tree, cells, queries, points, reach_mm, start, *none, False)
+        start = np.cumsum(start)
+        k = int(start[-1])
+        filled = np.empty((k, 4), np.int64), np.empty((k, 4)), np.empty((k, 3))
+        if k:
+            _near(of_edges, tree, cells, queries, points, reach_mm, start, *filled, True)
+        parts.append(filled)
+    return Pairs(*(np.concatenate(columns) for columns in zip(*parts, strict=True)))
+
+
+@njit(cache=True)
+def barrier(distance, reach):  # type: ignore[no-untyped-def]
+    """``-(d - r)^2 ln(d / r)`` with its first and second derivative; all 0 from d = r on, infinite at 0."""
+    if distance >= reach:
+        return 0.0, 0.0, 0.0
+    if distance <= 0.0:
+        return np.inf, -np.inf, np.inf
+    short = distance - reach
+    logarithm = log(distance / reach)
+    value = -short * short * logarithm
+    first = -2.0 * short * logarithm - short * short / distance
+    second = -2.0 * logarithm - 4.0 * short / distance + short * short / (distance * distance)
+    return value, first, second
+
+
+@njit(cache=True)
+def add_barrier(pairs, reach, strength, gradient, normals, stiffness):  # type: ignore[no-untyped-def]
+    """Sum of the barriers of all pairs; its gradient is added, its stiffness along each gap written.
+
+    Parameters
+    ----------
+    strength : float
+        Factor of each pair's barrier.
+    gradient : (n, 3) float64
+    normals, stiffness : (k, 3), (k,) float64
+        Unit gap and second derivative along it: the convex part of the pair's second derivative.
+    """
+    total = 0.0
+    for k in range(len(pairs.corners)):
+        distance = sqrt(pairs.gaps[k, 0] ** 2 + pairs.gaps[k, 1] ** 2 + pairs.gaps[k, 2] ** 2)
+        value, first, second = barrier(distance, reach)
+        total += strength * value
+        stiffness[k] = strength * second
+        for i in range(3):
+            normals[k, i] = pairs.gaps[k, i] / distance if distance > 0.0 else 0.0
+        for c in range(4):
+            for i in range(3):
+                gradient[pairs.corners[k, c], i] += strength * first * pairs.weights[k, c] * normals[k, i]
+    return total
