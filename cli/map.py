@@ -6,7 +6,7 @@ import argparse
 from pathlib import Path
 
 from .console import Console
-from .usage import positive_mm, whole_number
+from .usage import UsageError, positive_mm, whole_number
 
 HELP = "certified volumetric map between two label volumes"
 EXAMPLE = "volmap map visit0_labels.nii.gz visit1_labels.nii.gz --out map_0_1"
@@ -52,10 +52,14 @@ def arguments(parser: argparse.ArgumentParser) -> None:
 def run(options: argparse.Namespace, console: Console) -> int:
     """Map; exit status 1 when a gate failed."""
     from volmap import pipeline
+    from volmap.types import InputError
 
     from .verdict import show
 
-    pipeline.use_threads(options.threads)
+    try:
+        pipeline.use_threads(options.threads)
+    except InputError as fault:
+        raise UsageError(fault.sentence) from fault
     job = pipeline.MapJob(
         mesh=pipeline.MeshSettings(edge_mm=options.edge),
         map=pipeline.MapSettings(

@@ -6,7 +6,7 @@ from importlib.resources import files
 import pytest
 
 from volmap.certify import read_gate_table
-from volmap.certify.judge import tripped
+from volmap.certify.judge import judged, tripped
 from volmap.certify.table import STATISTICS
 from volmap.types import InputError
 
@@ -98,3 +98,22 @@ def test_limits_hold_at_the_limit_and_never_for_nan():
     assert tripped({"mean": 1.0, "min": 0.1}, limits) == []
     assert tripped({"mean": 1.01, "min": 0.09}, limits) == ["mean 1.01 above 1", "min 0.09 below 0.1"]
     assert len(tripped({"mean": float("nan"), "max": float("nan")}, limits)) == 2
+
+
+@pytest.mark.parametrize(
+    ("gate", "statistics", "said"),
+    [
+        ("overlap", {"shell": 1e9}, "shell 1e+09 above"),
+        ("field_folds", {"share": 7.0, "count": 3}, "share 7 above 0.1 (% of cubes)."),
+        ("inverted_tets", {"count": 2.0}, "count 2 above 0 (tets)."),
+        ("volume_ratio", {"min": -1.0, "p0_1": 1, "p99_9": 1, "max": 1}, "min -1 below"),
+    ],
+)
+def test_a_tripped_limit_is_told_with_its_unit(gate, statistics, said):
+    # law: a number has a unit; the shell of an overlap is a length although Dice has none
+    sentence = judged(read_gate_table()[gate], statistics, value=None, sentence="Found.").sentence
+    assert said in sentence
+    ending = {"overlap": " (mm).", "volume_ratio": "."}.get(gate, "")
+    assert sentence.endswith(ending)
+    assert "(1)" not in sentence
+    assert "(Dice)" not in sentence

@@ -54,7 +54,8 @@ def judged(
     failed, warned = tripped(statistics, fail), tripped(statistics, warn)
     verdict = Verdict.FAIL if failed else Verdict.WARN if warned else Verdict.PASS
     reasons = failed or warned
-    tail = f" Beyond the limit: {', '.join(reasons)}." if reasons else ""
+    unit = "" if limit.unit_of_limits == "1" else f" ({limit.unit_of_limits})"
+    tail = f" Beyond the limit: {', '.join(reasons)}{unit}." if reasons else ""
     return Gate(
         limit.name, value, limit.unit, warn, fail, limit.source, verdict, tuple(where), sentence + tail
     )

@@ -52,6 +52,11 @@ class Limit:
     warn_voxel: Mapping[str, float]
     fail_voxel: Mapping[str, float]
 
+    @property
+    def unit_of_limits(self) -> str:
+        """The unit the limits are in: mm for every gate about a length, the gate's own for the others."""
+        return "mm" if self.name in _IN_MM else self.unit
+
     def warns_at(self, voxel_mm: float) -> dict[str, float]:
         """The limits that warn, in the gate's unit, where a voxel is that long."""
         return dict(self.warn) | {k: v * voxel_mm for k, v in self.warn_voxel.items()}

@@ -207,6 +207,7 @@ def report_folder(
         No map folder, or an image that cannot be read.
     """
     require_place(path / REPORT, overwrite=True, folder=False)
+    progress("read", 0, 0, path.absolute().name)
     folder = read_map_folder(path)
     images = [read_image(p) if p is not None else None for p in (source_image, target_image)]
     html = report_of(folder, source_image=images[0], target_image=images[1], progress=progress)

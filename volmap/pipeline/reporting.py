@@ -71,4 +71,5 @@ def write_map(
         The place is taken or cannot be written.
     """
     html = report_of(folder, source_image=source_image, target_image=target_image, progress=progress)
+    progress("write", 0, 0, path.absolute().name)
     write_map_folder(path, folder, report_html=html, overwrite=overwrite)
