@@ -127,6 +127,30 @@ def test_signs_with_a_margin(shell):
 
 
 @pytest.mark.parametrize("energy", ENERGIES)
+def test_size_alone_costs_nothing(shell, energy):
+    """Law: 1.3 times every length is no distortion of a body grown by 1.3 cubed."""
+    mesh, _ = shell
+    points = np.array(mesh.points)
+    objective = Objective(points, np.array(mesh.tets), energy=energy, growth=1.3**3)
+    assert objective.value(1.3 * points, nothing()).distortion == pytest.approx(0.0, abs=1e-12)
+    assert objective.smallest_ratio(1.3 * points) == pytest.approx(1.3**3)
+    assert objective.smallest_ratio(points) == pytest.approx(1.0)
+
+
+@pytest.mark.parametrize("energy", ENERGIES)
+def test_the_order_of_bodies_of_different_size(shell, energy):
+    """Law: with the growth taken out, both orders have one and the same total."""
+    mesh, _ = shell
+    images = np.ascontiguousarray(1.4 * wavy(mesh.points))
+    growth = mesh.moved(images).volumes.sum() / mesh.volumes.sum()
+    totals = []
+    for here, there, ratio in ((mesh.points, images, growth), (images, mesh.points, 1 / growth)):
+        objective = Objective(np.array(here), np.array(mesh.tets), energy=energy, growth=ratio)
+        totals.append(objective.value(np.array(there), nothing()).distortion)
+    assert totals[0] == pytest.approx(totals[1], rel=1e-10)
+
+
+@pytest.mark.parametrize("energy", ENERGIES)
 def test_total_distortion_of_the_inverse(shell, energy):
     """Law: V E(A -> B) = V' E(B -> A), each total divided by its own body's volume."""
     mesh, _ = shell

@@ -33,15 +33,23 @@ class Objective:
         Of the source mesh.
     mesh_tets : (m, 4) int64
     energy : str
+    growth : float
+        Volume of the target body over that of the source.  Distortion is measured against the source
+        enlarged to the target's volume, so that size alone costs nothing: otherwise a soft boundary would
+        let a grown body shrink back, and the total would depend on which body came first.
     """
 
-    def __init__(self, points: Floats, mesh_tets: NDArray[np.int64], *, energy: str) -> None:
+    def __init__(
+        self, points: Floats, mesh_tets: NDArray[np.int64], *, energy: str, growth: float = 1.0
+    ) -> None:
         n, m = len(points), len(mesh_tets)
         self.code = ENERGIES[energy]
         self.tets = mesh_tets
         self.pattern = blocksystem.pattern_of(mesh_tets, n)
-        self.shape_gradients = tets.shape_gradients(points, mesh_tets)
-        volumes = tets.signed_volumes(points, mesh_tets)
+        self.growth = growth
+        rest = np.cbrt(growth) * points
+        self.shape_gradients = tets.shape_gradients(rest, mesh_tets)
+        volumes = tets.signed_volumes(rest, mesh_tets)
         self.volume_mm3 = float(volumes.sum())
         self.weights = volumes / self.volume_mm3
         self.densities = np.empty(m)
@@ -88,6 +96,11 @@ class Objective:
         bounds = self.densities  # work space of the right size
         steps.step_bounds(images, direction, self.tets, 1.0 / SAFETY, bounds)
         return SAFETY * float(bounds.min())
+
+    def smallest_ratio(self, images: Floats) -> float:
+        """Smallest volume in TARGET over volume in SOURCE."""
+        rest = self.weights * self.volume_mm3 / self.growth
+        return float((tets.signed_volumes(images, self.tets) / rest).min())
 
     def all_positive(self, images: Floats) -> bool:
         """Plain signs, with a margin above rounding."""

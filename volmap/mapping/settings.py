@@ -22,7 +22,8 @@ class MapSettings:
     uncertainty_voxels : float
         The same as a share of a voxel (cube root of its volume), the mean of both scans.
     across : float
-        Share of a boundary match that acts across the normal; small, so that the boundary can slide.
+        Share of a boundary match that acts across the normal.  It acts as friction against sliding: it
+        damps steps, and the smaller it is, the fewer of them sliding takes.
     first_weight, weight_factor, last_weight : float
         The ladder of boundary weights, in units of ``(0.02 V^(1/3))^-2``.
     steps_a_rung : int
@@ -30,7 +31,8 @@ class MapSettings:
     most_steps : int
         Newton steps at most in all.
     settle : float
-        Relative change of the objective below which it counts as settled.
+        Relative decrease of the objective a step below which it counts as settled; also, on average over a
+        few steps, of the objective with fresh matches.
     start : str
         'auto' (several starts, the one with the smallest residual), or the name of one start.
     seed : int
@@ -40,7 +42,7 @@ class MapSettings:
     energy: str = "soft-tissue"
     uncertainty_mm: float | None = None
     uncertainty_voxels: float = 0.1
-    across: float = 0.05
+    across: float = 0.01
     first_weight: float = 0.01
     weight_factor: float = 3.1622776601683795
     last_weight: float = 10.0
@@ -61,3 +63,19 @@ class MapSettings:
                 where="--uncertainty",
                 found=str(self.uncertainty_mm),
             )
+        _require(self.uncertainty_voxels > 0, "uncertainty_voxels", self.uncertainty_voxels, "above 0")
+        _require(0 <= self.across <= 1, "across", self.across, "from 0 to 1")
+        _require(
+            0 < self.first_weight <= self.last_weight, "first_weight", self.first_weight, "up to the last"
+        )
+        _require(self.weight_factor > 1, "weight_factor", self.weight_factor, "above 1")
+        _require(self.steps_a_rung >= 1, "steps_a_rung", self.steps_a_rung, "at least 1")
+        _require(self.most_steps >= 1, "most_steps", self.most_steps, "at least 1")
+        _require(0 < self.settle < 1, "settle", self.settle, "between 0 and 1")
+
+
+def _require(holds: bool, name: str, found: float, expected: str) -> None:
+    if not holds:
+        raise InputError(
+            "a setting of the map is out of its range", where=name, found=str(found), expected=expected
+        )

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -35,6 +35,9 @@ FORCING = 0.02  # relative residual of the linear solves
 LINEAR_ITERATIONS = 400  # at most, a Newton step
 GUIDE_REACH_VOXELS = 3.0  # guides farther outside the body are refused
 STALLED_STEPS = 3  # steps in a row that hardly move before it counts as stalled
+PLATEAU = 4  # steps over which the objective, freshly matched, must still fall
+NOTHING = 1e-9  # an objective this small has nothing left to fall: stretches of some 1e-5
+MOST_UNMATCHED = 0.05  # of the boundary's area, for a boundary that counts as reached
 
 
 @dataclass(frozen=True)
@@ -54,12 +57,20 @@ class _State:
     boundary_weight: float
     guide_weight: float
     history: list[IterationRecord]
+    levels: list[float] = field(default_factory=list)  # objective, freshly matched, since weights rose
     settling: bool = False
     idle: int = 0
 
 
 def _weighted(o: Observations, factor: float) -> Observations:
     return o._replace(strengths=o.strengths * factor)
+
+
+def _body_volume(surface: Surface) -> float:
+    """What the faces towards the outside enclose, mm3 (divergence theorem)."""
+    corners = surface.points[surface.triangles[surface.sides[:, 1] == 0]]
+    a, b, c = np.moveaxis(corners - surface.points.mean(axis=0), 1, 0)
+    return float(np.einsum("ij,ij->", np.cross(a, b), c) / 6.0)
 
 
 class _Solver:
@@ -78,7 +89,8 @@ class _Solver:
         points, tets = np.array(mesh.points), np.array(mesh.tets)
         self.settings = settings
         self.uncertainty_mm = settings.uncertainty_mm or settings.uncertainty_voxels * voxel_mm
-        self.objective = Objective(points, tets, energy=settings.energy)
+        growth = _body_volume(target) / _body_volume(mesh.interfaces)
+        self.objective = Objective(points, tets, energy=settings.energy, growth=growth)
         steady, self.notes = steady_contacts(mesh.interfaces, target, alignment.matrix)
         patches = matching_patches(mesh.interfaces, target, steady)
         self.matcher = Matcher(
@@ -92,7 +104,7 @@ class _Solver:
                 mesh, guides, pattern=self.objective.pattern, reach_mm=GUIDE_REACH_VOXELS * voxel_mm
             )
             self.guide_sd_mm = float(np.sqrt(len(guides.sd_mm) / (guides.sd_mm**-2.0).sum()))
-        self.unit = (0.02 * np.cbrt(self.objective.volume_mm3)) ** -2.0
+        self.unit = (0.02 * np.cbrt(_body_volume(target))) ** -2.0
 
     def pulls(self, state: _State) -> tuple[Observations, Residual]:
         matches, residual = self.matcher.match(state.images)
@@ -102,7 +114,7 @@ class _Solver:
         return joined(parts), residual
 
     def boundary_reached(self, residual: Residual) -> bool:
-        return residual.rms_mm <= self.uncertainty_mm
+        return residual.rms_mm <= self.uncertainty_mm and residual.rejected <= MOST_UNMATCHED
 
     def guides_reached(self, images: Floats) -> bool:
         return self.guides is None or guide_rms(self.guides, images) <= self.guide_sd_mm
@@ -127,8 +139,8 @@ def _step(solver: _Solver, state: _State) -> tuple[float, Residual]:
     images, length, iterations = solver.search(state.images, pulls, at=before.total)
     after = solver.objective.value(images, pulls)
     state.images = images
-    decrease = (before.total - after.total) / max(before.total, 1e-300)
-    smallest = float(np.linalg.det(_gradients(solver.objective, images)).min())
+    state.levels.append(before.total)
+    decrease = (before.total - after.total) / max(before.total, NOTHING)
     state.history.append(
         IterationRecord(
             len(state.history) + 1,
@@ -138,15 +150,11 @@ def _step(solver: _Solver, state: _State) -> tuple[float, Residual]:
             residual.rms_mm,
             length,
             iterations,
-            smallest,
+            solver.objective.smallest_ratio(images),
         )
     )
     state.idle = state.idle + 1 if length < 1e-3 else 0
     return decrease, residual
-
-
-def _gradients(objective: Objective, images: Floats) -> Floats:
-    return np.asarray(np.einsum("tci,tcj->tij", images[objective.tets], objective.shape_gradients))
 
 
 def _raise_weights(solver: _Solver, state: _State, residual: Residual) -> bool:
@@ -160,7 +168,17 @@ def _raise_weights(solver: _Solver, state: _State, residual: Residual) -> bool:
     if not solver.guides_reached(state.images) and state.guide_weight < 99.9 * last:
         state.guide_weight *= factor
         raised = True
+    if raised:
+        state.levels = []
     return raised
+
+
+def _at_rest(state: _State, decrease: float, settle: float) -> bool:
+    """True when a step gains nothing, or when new matches have eaten up the gain of several steps."""
+    earlier, recent = state.levels[:-PLATEAU], state.levels[-PLATEAU:]
+    if decrease < settle or not earlier:
+        return decrease < settle
+    return min(earlier) - min(recent) < PLATEAU * settle * min(earlier)
 
 
 def _climb(solver: _Solver, state: _State, progress: Progress) -> Status | None:
@@ -175,7 +193,7 @@ def _climb(solver: _Solver, state: _State, progress: Progress) -> Status | None:
         if state.idle >= STALLED_STEPS:
             return Status.STALLED
         if state.settling:
-            if decrease < settings.settle:
+            if _at_rest(state, decrease, settings.settle):
                 reached = solver.boundary_reached(residual) and solver.guides_reached(state.images)
                 return Status.SETTLED if reached else Status.BOUNDARY_NOT_REACHED
         elif on_rung >= settings.steps_a_rung or decrease < 20 * settings.settle:
@@ -216,7 +234,8 @@ def map_mesh(
     Raises
     ------
     InputError
-        The bodies hold different labels, or a guide lies outside the source body.
+        The bodies hold different labels, a tet of the mesh is not positive, or a guide lies outside the
+        source body.
     """
     settings = settings or MapSettings()
     here, there = set(mesh.present), {int(v) for v in np.unique(target.sides) if v}
@@ -226,6 +245,15 @@ def map_mesh(
             found=f"{sorted(here)} and {sorted(there)}",
             expected="the same set",
             refused=True,
+        )
+    inverted = int((mesh.volumes <= 0).sum())
+    if inverted:
+        raise InputError(
+            "tets of the mesh are not positive",
+            where="mesh",
+            found=f"{inverted} of {len(mesh.tets)}",
+            expected="every tet positive",
+            remedy="mesh the scan again",
         )
     progress("align", 0, 0)
     alignment, tried = align(mesh.interfaces, target, start=settings.start, guides=guides, seed=settings.seed)
