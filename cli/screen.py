@@ -26,6 +26,7 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         metavar="OUT",
         help="write a mended copy of FILE (cavities filled, specks dropped, padded); list every change",
     )
+    parser.add_argument("--overwrite", action="store_true", help="replace OUT when it stands there")
 
 
 def run(options: argparse.Namespace, console: Console) -> int:
@@ -83,7 +84,7 @@ def _mend(options: argparse.Namespace, console: Console) -> int:
 
     if len(options.files) != 1:
         raise UsageError(f"--mend takes one FILE at a time, not {len(options.files)}")
-    mended = pipeline.mend_file(options.files[0], options.mend)
+    mended = pipeline.mend_file(options.files[0], options.mend, overwrite=options.overwrite)
     for change in mended.changes:
         console.say(change.sentence)
     console.say(f"{len(mended.changes)} changes; wrote {options.mend}")

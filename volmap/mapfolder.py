@@ -209,11 +209,11 @@ def read_certificate(path: Path) -> Certificate:
     InputError
         No map folder, or a damaged certificate.
     """
-    if not path.is_dir():
+    if not (path / CERTIFICATE).is_file():
         raise InputError(
             "is not a map folder",
             where=shown_name(path.absolute()),
-            expected="a folder that `volmap map` has written",
+            expected=f"a folder that `volmap map` has written, with {CERTIFICATE}",
             remedy="check the name, or map the pair first",
         )
     return from_document(read_json(_file(path, CERTIFICATE)), where=CERTIFICATE)

@@ -337,3 +337,82 @@ def test_progress_elsewhere_is_a_line_a_stage_and_one_now_and_then(monkeypatch, 
         console.progress(stage, step, 5)
     lines = [line.split("  ")[-1] for line in capsys.readouterr().err.splitlines()]
     assert lines == ["mesh 1/5", "mesh 4/5", "map 1/5"]
+
+
+@pytest.mark.parametrize(
+    ("arguments", "status", "said"),
+    [
+        (
+            ["map", "A", "B", "--out", "m", "--edge", "0.05"],
+            1,
+            ["before.nii.gz", "too short", "mm or longer"],
+        ),
+        (
+            ["map", "A", "B", "--out", "m", "--edge", "40"],
+            1,
+            ["before.nii.gz", "Kern é has no tets", "shorter --edge"],
+        ),
+        (["map", "A", "B", "--out", "m", "--edge", "400"], 1, ["before.nii.gz", "ask for a shorter edge"]),
+        (["map", "A", "B", "--out", "m", "--gates", "no.toml"], 3, ["no.toml", "no such file", "gates.toml"]),
+        (["map", "A", "B", "--out", "m", "--gates", "A"], 3, ["before.nii.gz", "gate table", "UTF-8"]),
+        (["map", "A", "B", "--out", "m", "--source-image", "FAR"], 1, ["far.nii.gz", "no part of the body"]),
+        (["map", "A", "M", "--out", "m"], 3, ["is a folder"]),
+        (["certify", "A"], 3, ["before.nii.gz", "not a map folder", "map the pair first"]),
+        (["report", "."], 3, ["not a map folder", "map the pair first"]),
+        (["carry", "A", "--through", ".", "--out", "x.nii"], 3, ["not a map folder"]),
+        (
+            ["carry", "M/forward.nii.gz", "--through", "M", "--out", "x.nii"],
+            1,
+            ["more than one volume", "frame"],
+        ),
+        (["mesh", "gone.stl", "--out", "x.vtu"], 3, ["gone.stl", "no such file"]),
+        (["phantom", "gel-column", "--voxel", "5000", "--out", "x"], 3, ["0.3 to 10 mm"]),
+    ],
+)
+def test_what_a_first_user_may_get_wrong(arguments, status, said, small_pair, tmp_path, capsys, monkeypatch):
+    import nibabel
+
+    scan = nibabel.load(small_pair.source)
+    affine = scan.affine + np.array([[0, 0, 0, 900.0]] + [[0.0] * 4] * 3)
+    nibabel.save(nibabel.Nifti1Image(np.asarray(scan.dataobj), affine), small_pair.root / "far.nii.gz")
+    monkeypatch.chdir(tmp_path)
+    names = {"A": small_pair.source, "B": small_pair.target, "M": small_pair.folder}
+    names["FAR"], names["M/forward.nii.gz"] = (
+        small_pair.root / "far.nii.gz",
+        small_pair.folder / "forward.nii.gz",
+    )
+    assert main([str(names.get(word, word)) for word in arguments] + ["--quiet"]) == status
+    told = capsys.readouterr()
+    assert len(told.err.splitlines()) == 1
+    for words in said:
+        assert words in told.err
+    assert "; " in told.err
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_mending_lists_every_change_and_replaces_only_when_told(small_pair, tmp_path, capsys):
+    command = ["screen", str(small_pair.source), "--mend", str(tmp_path / "mended.nii.gz"), "--quiet"]
+    assert main(command) == 0
+    assert "0 changes; wrote" in capsys.readouterr().out
+    assert main(command) == 3
+    assert "--overwrite" in capsys.readouterr().err
+    assert main([*command, "--overwrite", "--json"]) == 0
+    assert json.loads(capsys.readouterr().out)["changes"] == []
+
+
+@pytest.mark.skipif(not os.path.isdir("/proc/self"), reason="needs a file system nobody can write to")
+def test_a_place_where_no_folder_can_be_made(capsys, small_pair, no_report):
+    command = [
+        "map",
+        str(small_pair.source),
+        str(small_pair.target),
+        "--out",
+        "/proc/map",
+        *EDGE,
+        "--one-order",
+    ]
+    assert main([*command, "--quiet"]) == 3
+    said = capsys.readouterr().err
+    assert len(said.splitlines()) == 1
+    assert "cannot be written" in said
+    assert "choose" in said

@@ -101,7 +101,14 @@ def read_gate_table(path: str | Path | None = None) -> GateTable:
     try:
         document = tomllib.loads(_text(path))
     except (OSError, UnicodeDecodeError) as fault:
-        raise InputError("the gate table cannot be read", where=where, found=type(fault).__name__) from fault
+        reason = str(fault.strerror).lower() if isinstance(fault, OSError) else "no UTF-8 text"
+        raise InputError(
+            "the gate table cannot be read",
+            where=where,
+            found=reason,
+            expected="a TOML file",
+            remedy="check the name; start from a copy of the project's gates.toml",
+        ) from fault
     except tomllib.TOMLDecodeError as fault:
         raise InputError("the gate table is not TOML", where=where, found=str(fault)) from fault
     if document.get("schema") != SCHEMA:

@@ -37,7 +37,7 @@ def whole_file(path: str | os.PathLike[str], *, overwrite: bool = False) -> Iter
     temporary = _sibling(target, "".join(target.suffixes[-2:])[-24:])
     try:
         with _disk_faults(target):
-            temporary.touch(exist_ok=False)
+            _begin(temporary, target, folder=False)
             yield temporary
             require_place(target, overwrite=overwrite, folder=False)
             os.replace(temporary, target)
@@ -71,12 +71,25 @@ def whole_folder(
     temporary = _sibling(target, "")
     try:
         with _disk_faults(target):
-            temporary.mkdir()
+            _begin(temporary, target, folder=True)
             yield temporary
             require_place(target, overwrite=overwrite, folder=True, holding=holding)
             _put_folder(temporary, target)
     finally:
         shutil.rmtree(temporary, ignore_errors=True)
+
+
+def _begin(temporary: Path, target: Path, *, folder: bool) -> None:
+    """Make the temporary file or folder; whatever keeps it from being made is a fault of the place."""
+    try:
+        if folder:
+            temporary.mkdir()
+        else:
+            temporary.touch(exist_ok=False)
+    except PermissionError:
+        raise
+    except OSError as fault:
+        raise _not_writable(target, fault) from fault
 
 
 def _put_folder(temporary: Path, target: Path) -> None:
@@ -169,7 +182,13 @@ def _disk_faults(target: Path) -> Iterator[None]:
     except OSError as fault:
         if fault.errno not in _DISK:
             raise
-        reason = (fault.strerror or "").lower()
-        raise InputError(
-            "cannot be written", where=shown_name(target), found=reason, remedy="choose another place or name"
-        ) from fault
+        raise _not_writable(target, fault) from fault
+
+
+def _not_writable(target: Path, fault: OSError) -> InputError:
+    return InputError(
+        "cannot be written",
+        where=shown_name(target),
+        found=(fault.strerror or "a fault of the disk").lower(),
+        remedy="choose another place or name",
+    )

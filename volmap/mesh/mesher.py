@@ -12,12 +12,14 @@ from volmap.mesh.prepare import Prepared, prepare
 from volmap.mesh.quality import QualityTable, quality_table
 from volmap.mesh.settings import MeshSettings
 from volmap.mesh.verdicts import findings_of
+from volmap.types.errors import InputError
 from volmap.types.findings import Finding
 from volmap.types.progress import Progress, silent
 from volmap.types.tetmesh import TetMesh
 from volmap.types.volumes import LabelVolume
 
 SMALLEST_DEFAULT_VOXELS = 0.75  # no default edge is shorter: the voxels say nothing finer
+MOST_TETS = 3_000_000  # what a laptop's memory holds through the map; no edge that gives more is tried
 
 
 @dataclass(frozen=True, eq=False)
@@ -54,7 +56,8 @@ def mesh(
     Raises
     ------
     InputError
-        A volume without labels, or a body too small for the edge length.
+        A volume without labels, a body too small for the edge length, or an edge that would give more than
+        `MOST_TETS`.
 
     Notes
     -----
@@ -64,6 +67,7 @@ def mesh(
     """
     settings = settings or MeshSettings()
     prepared = prepare(labels)
+    _require_affordable(settings, _body_volume(prepared), labels.name)
     best: tuple[float, Attempt, QualityTable] | None = None
     n_tried = 0
     for rung in rungs(settings, _body_volume(prepared), prepared.grid.voxel_mm):
@@ -93,6 +97,27 @@ def mesh(
 def _table(attempt: Attempt, prepared: Prepared, labels: LabelVolume) -> QualityTable:
     facts = voxel_facts(prepared, attempt.targets)
     return quality_table(attempt.mesh, facts, {k: labels.name_of(k) for k in facts})
+
+
+def _require_affordable(settings: MeshSettings, volume_mm3: float, name: str) -> None:
+    """Refuse, before any memory is taken, an edge so short that no machine would finish.
+
+    Raises
+    ------
+    InputError
+    """
+    if settings.edge_mm is None:
+        return
+    n_tets = lattice_size(volume_mm3, settings.edge_mm)
+    if n_tets > MOST_TETS:
+        raise InputError(
+            "the edge is too short for this body",
+            where=name,
+            found=f"edges of {settings.edge_mm:.3g} mm, which give about {n_tets:,.0f} tets",
+            expected=f"at most {MOST_TETS:,} tets",
+            remedy=f"ask for edges of {1.01 * lattice_edge(volume_mm3, MOST_TETS):.3g} mm or longer",
+            refused=True,
+        )
 
 
 def _body_volume(prepared: Prepared) -> float:

@@ -6,6 +6,8 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from volmap import carry as carrying
 from volmap import mesh as meshing
 from volmap import screen as screening
@@ -21,7 +23,7 @@ from volmap.io.nifti import (
 )
 from volmap.io.surfaces import FORMATS, read_closed_surface
 from volmap.io.vtk_xml import read_mesh, write_mesh
-from volmap.mapfolder import CERTIFICATE, REPORT, MapFolder, read_map_folder
+from volmap.mapfolder import CERTIFICATE, REPORT, MapFolder, read_certificate, read_map_folder
 from volmap.mesh import MeshResult, MeshSettings
 from volmap.pipeline.machine import announce_compiling
 from volmap.pipeline.pair import MapJob, map_pair
@@ -92,7 +94,7 @@ def screen_files(paths: list[Path], *, edge_mm: float | None = None, progress: P
     return Screened(tuple(results), pair)
 
 
-def mend_file(path: Path, out: Path) -> Mended:
+def mend_file(path: Path, out: Path, *, overwrite: bool = False) -> Mended:
     """Fill cavities, drop specks, pad; write a new file beside the old one and list every change.
 
     Raises
@@ -101,10 +103,10 @@ def mend_file(path: Path, out: Path) -> Mended:
         A file that cannot be read, or a place that is taken.
     """
     _require_name(out, _NIFTI)
-    require_place(out, folder=False)
+    require_place(out, overwrite=overwrite, folder=False)
     labels, _ = read_labels_with_findings(path)
     mended = screening.mend(labels)
-    write_labels(out, mended.labels)
+    write_labels(out, mended.labels, overwrite=overwrite)
     return mended
 
 
@@ -157,7 +159,7 @@ def map_files(
     b, findings_b = read_labels_with_findings(target)
     a, b = _told_apart(a, b)
     pairs = read_pairs(guides) if guides is not None else None
-    images = [read_image(p) if p is not None else None for p in (source_image, target_image)]
+    images = [_picture(source_image, a), _picture(target_image, b)]
     notes = tuple(f"{f.where}: {f.sentence}" for f in (*findings_a, *findings_b))
     folder = map_pair(
         a, b, job, pairs=pairs, pairs_name=guides.name if guides else "", notes=notes, progress=progress
@@ -166,6 +168,30 @@ def map_files(
         out, folder, source_image=images[0], target_image=images[1], overwrite=overwrite, progress=progress
     )
     return folder
+
+
+def _picture(path: Path | None, labels: LabelVolume) -> ImageVolume | None:
+    """Intensities to show behind a scan's labels.
+
+    Raises
+    ------
+    InputError
+        Not readable, or none of the labelled voxels lies in it.
+    """
+    if path is None:
+        return None
+    image = read_image(path)
+    centres = labels.grid.to_world(np.argwhere(labels.labels > 0).astype(np.float64))
+    index = image.grid.to_index(centres)
+    inside = ((index >= -0.5) & (index <= np.array(image.grid.shape) - 0.5)).all(axis=1)
+    if not inside.any():
+        raise InputError(
+            f"shows no part of the body of {labels.name}",
+            where=path.name,
+            remedy="give the image the labels were drawn on",
+            refused=True,
+        )
+    return image
 
 
 _NIFTI = (".nii", ".nii.gz")
@@ -206,10 +232,11 @@ def report_folder(
     InputError
         No map folder, or an image that cannot be read.
     """
+    read_certificate(path)
     require_place(path / REPORT, overwrite=True, folder=False)
     progress("read", 0, 0, path.absolute().name)
     folder = read_map_folder(path)
-    images = [read_image(p) if p is not None else None for p in (source_image, target_image)]
+    images = [_picture(source_image, folder.source), _picture(target_image, folder.target)]
     html = report_of(folder, source_image=images[0], target_image=images[1], progress=progress)
     with whole_file(path / REPORT, overwrite=True) as place:
         place.write_text(html, encoding="utf-8")

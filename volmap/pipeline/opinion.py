@@ -64,7 +64,7 @@ def certify_folder(path: Path, *, gates: Path | None = None, progress: Progress 
     InputError
         No map folder, or files that are missing, damaged or do not belong together.
     """
-    progress("read", 0, 0)
+    progress("read", 0, 0, path.absolute().name)
     folder = read_map_folder(path)
     table = certifying.read_gate_table(gates)
     fresh, measures = certifying.certify(evidence_of(folder), table, progress=progress)

@@ -21,6 +21,7 @@ from volmap.pipeline.told import distortion_of, mesh_document, scan_document, si
 from volmap.types import (
     Certificate,
     Finding,
+    InputError,
     LabelVolume,
     LandmarkPairs,
     Level,
@@ -128,6 +129,7 @@ def map_pair(
             meshing.mesh(volume, job.mesh, progress=_prefixed(progress, side))
             for volume, side in ((source, "source"), (target, "target"))
         ]
+    _require_every_label(meshes, (source, target))
     order = _Order.of(source, target)
     solutions = _solve(meshes, source, target, job, order, pairs, watch, progress)
     folder = _sampled(solutions, meshes, source, target, order, pairs, watch, progress, energy=job.map.energy)
@@ -156,6 +158,26 @@ def _placed(
     findings = screening.screen_pairs_of_landmarks(pairs, source, target, name=name)
     screening.raise_refusal(findings)
     return findings
+
+
+def _require_every_label(meshes: list[MeshResult], volumes: tuple[LabelVolume, LabelVolume]) -> None:
+    """Refuse edges so long that a label fell through the mesh.
+
+    Raises
+    ------
+    InputError
+    """
+    for result, volume in zip(meshes, volumes, strict=True):
+        lost = sorted(set(volume.present) - set(result.mesh.present))
+        if lost:
+            raise InputError(
+                f"{volume.name_of(lost[0])} has no tets",
+                where=volume.name,
+                found=f"edges of {result.settings.edge_mm:.3g} mm",
+                expected="edges shorter than the label is thick",
+                remedy="ask for a shorter --edge, or drop the label from both scans",
+                refused=True,
+            )
 
 
 def _prefixed(progress: Progress, name: str) -> Progress:
