@@ -1,5 +1,6 @@
 """The solve: laws of motion, names, units and order; honest endings; no inverted tet at any step."""
 
+import numba
 import numpy as np
 import pytest
 from hand_made_bodies import ball, cubes, lopsided, rotation
@@ -130,6 +131,17 @@ def test_same_inputs_same_bytes(plain):
     again = solved()
     assert again.outcome.map.images.tobytes() == plain.outcome.map.images.tobytes()
     assert again.outcome.history == plain.outcome.history
+
+
+def test_any_number_of_threads_gives_the_same_bytes(shell):
+    """Law; sums of products are where threads could tell.  Cannot fail on a machine of one thread."""
+    mesh, target = shell
+    most = numba.get_num_threads()
+    images = []
+    for threads in (1, most):
+        numba.set_num_threads(threads)
+        images.append(solved(mesh, target, most_steps=4).outcome.map.images.tobytes())
+    assert images[0] == images[1]
 
 
 def test_history_makes_sense(shell):

@@ -1,7 +1,8 @@
 """A symmetric block-sparse matrix on the edges of a mesh, and conjugate gradients with it.
 
 The pattern is fixed by the mesh: one 3x3 block an edge (rows of its smaller point), one a point.
-Contributions of tets are gathered, never scattered, so that sums come in one order on any number of threads.
+Contributions of tets are gathered, never scattered, and products are summed chunk by chunk, so that sums come
+in one order on any number of threads.
 """
 
 from __future__ import annotations
@@ -14,6 +15,8 @@ from numpy.typing import NDArray
 
 from volmap.kernels.tets import EDGES
 from volmap.kernels.topology import unique_edges
+
+CHUNK = 512  # points whose products one thread sums
 
 Ints = NDArray[np.int64]
 Floats = NDArray[np.float64]
@@ -162,16 +165,22 @@ def invert_blocks(diagonal, out):  # type: ignore[no-untyped-def]
 @njit(cache=True, parallel=True)
 def _advance(x, r, z, d, ad, inverse, alpha):  # type: ignore[no-untyped-def]
     """x += alpha d, r -= alpha A d, z = M^-1 r; returns r.z and r.r."""
+    n = len(x)
+    sums = np.zeros(((n + CHUNK - 1) // CHUNK, 2))
+    for chunk in prange(len(sums)):
+        for p in range(chunk * CHUNK, min(n, (chunk + 1) * CHUNK)):
+            for i in range(3):
+                x[p, i] += alpha * d[p, i]
+                r[p, i] -= alpha * ad[p, i]
+            for i in range(3):
+                z[p, i] = inverse[p, i, 0] * r[p, 0] + inverse[p, i, 1] * r[p, 1] + inverse[p, i, 2] * r[p, 2]
+            sums[chunk, 0] += r[p, 0] * z[p, 0] + r[p, 1] * z[p, 1] + r[p, 2] * z[p, 2]
+            sums[chunk, 1] += r[p, 0] * r[p, 0] + r[p, 1] * r[p, 1] + r[p, 2] * r[p, 2]
     rz = 0.0
     rr = 0.0
-    for p in prange(len(x)):
-        for i in range(3):
-            x[p, i] += alpha * d[p, i]
-            r[p, i] -= alpha * ad[p, i]
-        for i in range(3):
-            z[p, i] = inverse[p, i, 0] * r[p, 0] + inverse[p, i, 1] * r[p, 1] + inverse[p, i, 2] * r[p, 2]
-        rz += r[p, 0] * z[p, 0] + r[p, 1] * z[p, 1] + r[p, 2] * z[p, 2]
-        rr += r[p, 0] * r[p, 0] + r[p, 1] * r[p, 1] + r[p, 2] * r[p, 2]
+    for k in range(len(sums)):
+        rz += sums[k, 0]
+        rr += sums[k, 1]
     return rz, rr
 
 
@@ -185,9 +194,14 @@ def _turn(d, z, share):  # type: ignore[no-untyped-def]
 
 @njit(cache=True, parallel=True)
 def _dot(a, b):  # type: ignore[no-untyped-def]
+    n = len(a)
+    sums = np.zeros((n + CHUNK - 1) // CHUNK)
+    for chunk in prange(len(sums)):
+        for p in range(chunk * CHUNK, min(n, (chunk + 1) * CHUNK)):
+            sums[chunk] += a[p, 0] * b[p, 0] + a[p, 1] * b[p, 1] + a[p, 2] * b[p, 2]
     total = 0.0
-    for p in prange(len(a)):
-        total += a[p, 0] * b[p, 0] + a[p, 1] * b[p, 1] + a[p, 2] * b[p, 2]
+    for k in range(len(sums)):
+        total += sums[k]
     return total
 
 
