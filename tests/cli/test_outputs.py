@@ -416,3 +416,30 @@ def test_a_place_where_no_folder_can_be_made(capsys, small_pair, no_report):
     assert len(said.splitlines()) == 1
     assert "cannot be written" in said
     assert "choose" in said
+
+
+@pytest.mark.parametrize("moment", ["write_mesh", "write_field", "write_json"])
+def test_ctrl_c_while_writing_leaves_nothing(moment, small_pair, tmp_path, capsys, monkeypatch, no_report):
+    from volmap import mapfolder
+
+    def interrupted(*_, **__):
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr(mapfolder, moment, interrupted)
+    assert main([*of_verb("map", small_pair, tmp_path), "--quiet"]) == 130
+    told = capsys.readouterr()
+    assert told.err == "volmap: interrupted; nothing was written\n"
+    assert told.out == ""
+    assert [p.name for p in tmp_path.iterdir()] == ["point.csv"]
+
+
+def test_not_enough_memory_is_one_line(small_pair, tmp_path, capsys, monkeypatch):
+    def short(*_, **__):
+        raise MemoryError
+
+    monkeypatch.setattr(files, "map_pair", short)
+    assert main([*of_verb("map", small_pair, tmp_path), "--quiet"]) == 1
+    said = capsys.readouterr().err
+    assert len(said.splitlines()) == 1
+    assert "memory" in said
+    assert "--edge" in said

@@ -10,11 +10,13 @@ import time
 from dataclasses import replace
 from pathlib import Path
 
+import numba
 import numpy as np
 import pytest
 
 from volmap import pipeline
 from volmap.io.landmarks import read_pairs, write_pairs
+from volmap.io.nifti import read_labels
 from volmap.mapfolder import read_map_folder
 
 MAY_DIFFER = ("seconds", "peak_mb")  # of certificate.json, and of the line of the report that tells them
@@ -72,6 +74,19 @@ def test_the_pair_asked_for_the_other_way_is_the_exact_inverse(small_pair, turne
     affine = [np.array(f.certificate.settings["alignment"]["affine"]) for f in (one, two)]
     assert np.allclose(affine[0] @ affine[1], np.eye(4), atol=1e-9)
     assert one.certificate.verdict is two.certificate.verdict
+
+
+def test_the_number_of_threads_changes_no_bit(small_pair, small_job):
+    threads = numba.get_num_threads()
+    scans = [read_labels(small_pair.source), read_labels(small_pair.target)]
+    try:
+        pipeline.use_threads(1)
+        alone = pipeline.map_pair(*scans, replace(small_job, both_orders=False))
+    finally:
+        pipeline.use_threads(threads)
+    stored = read_map_folder(small_pair.folder)
+    assert np.array_equal(alone.map.images, stored.map.images)
+    assert np.array_equal(alone.map.mesh.points, stored.map.mesh.points)
 
 
 def test_the_report_made_again_is_the_same_page(small_pair):

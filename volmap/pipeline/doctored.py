@@ -11,11 +11,12 @@ from volmap import carry as carrying
 from volmap import certify as certifying
 from volmap.mapfolder import CARRIED, MAP, RATIO, STEPS, SURFACES, MapFolder
 from volmap.pipeline.told import distortion_of, mesh_document, scan_document, sidecars_of
+from volmap.types import Progress, silent
 
 TOLERANCE_MM = 1e-3  # of float32 displacements
 
 
-def doctored(folder: MapFolder, measures: Mapping[str, Any]) -> list[str]:
+def doctored(folder: MapFolder, measures: Mapping[str, Any], *, progress: Progress = silent) -> list[str]:
     """A sentence for each file or number that is not what the map, the scans and the steps give.
 
     Parameters
@@ -24,9 +25,20 @@ def doctored(folder: MapFolder, measures: Mapping[str, Any]) -> list[str]:
         As read.
     measures : mapping
         The certificate's measures, made anew.
+    progress : Progress
     """
-    looks = (_fields, _volumes, _surfaces, _distortion, _steps)
-    sentences = [sentence for look in looks for sentence in look(folder)]
+    looks = {
+        "fields": _fields,
+        "volumes": _volumes,
+        "surfaces": _surfaces,
+        "distortion": _distortion,
+        "steps": _steps,
+    }
+    sentences: list[str] = []
+    for i, (what, look) in enumerate(looks.items()):
+        progress("compare", i, len(looks) + 1, what)
+        sentences += look(folder)
+    progress("compare", len(looks), len(looks) + 1, "documents")
     return sentences + [
         f"{where} is stored as {old!r} and recomputed as {new!r}"
         for where, old, new in _words(folder, measures)

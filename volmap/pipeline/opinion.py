@@ -64,13 +64,13 @@ def certify_folder(path: Path, *, gates: Path | None = None, progress: Progress 
     InputError
         No map folder, or files that are missing, damaged or do not belong together.
     """
+    table = certifying.read_gate_table(gates)
     progress("read", 0, 0, path.absolute().name)
     folder = read_map_folder(path)
-    table = certifying.read_gate_table(gates)
     fresh, measures = certifying.certify(evidence_of(folder), table, progress=progress)
     stored = folder.certificate
-    progress("compare", 0, 0)
-    against = [d.sentence for d in certifying.compare(stored, fresh)] + doctored(folder, measures)
+    against = [d.sentence for d in certifying.compare(stored, fresh)]
+    against += doctored(folder, measures, progress=progress)
     return SecondOpinion(
         replace(stored, gates=fresh, measures=measures),
         tuple(against),
