@@ -23,6 +23,8 @@ SAMPLES = 1000  # points a label at most
 SCREEN_SAMPLES, SCREEN_ROUNDS = 200, 15  # for the first look at every start
 ROUNDS = 40  # for those that are still near the best
 HOPELESS = 1.5  # starts whose residual is larger than this factor times the best are not refined further
+DOUBTFUL = 1.25  # residuals within this factor of the chosen one leave doubt when they are turned otherwise
+OTHERWISE_DEG = 45.0  # between two alignments that are not the same place
 NEARLY_EQUAL = 1.05  # residuals within this factor of the best count as equal
 AT_REST = 1e-4  # share of the body's size by which no point moves any more
 MOST_STRETCH = 3.0  # an affine start is held inside this range of stretches
@@ -53,8 +55,12 @@ class Alignment:
     @property
     def rotation_deg(self) -> float:
         """Angle of its rotation part, degrees."""
-        u, _, v = np.linalg.svd(self.matrix[:3, :3])
-        return float(np.degrees(np.arccos(np.clip((np.trace(u @ v) - 1) / 2, -1, 1))))
+        return _angle_deg(self.matrix)
+
+
+def _angle_deg(matrix: Floats) -> float:
+    u, _, v = np.linalg.svd(matrix[:3, :3])
+    return float(np.degrees(np.arccos(np.clip((np.trace(u @ v) - 1) / 2, -1, 1))))
 
 
 @dataclass(eq=False)
@@ -181,6 +187,21 @@ def _starts(
             turn = axes_t @ np.diag([-signs[0], signs[1], signs[2]]) @ axes_s.T
         starts.append((f"principal axes {k + 1}", _homogeneous(turn, mean_t - turn @ mean_s)))
     return starts
+
+
+def doubts(chosen: Alignment, tried: tuple[Alignment, ...]) -> tuple[str, ...]:
+    """A sentence when another start fits nearly as well as the chosen one, but turned otherwise."""
+    others = [a for a in tried if a.residual_mm <= DOUBTFUL * chosen.residual_mm]
+    angles = {a: _angle_deg(np.linalg.inv(chosen.matrix) @ a.matrix) for a in others}
+    turned = [a for a in others if angles[a] > OTHERWISE_DEG]
+    if not turned:
+        return ()
+    other = min(turned, key=lambda a: a.residual_mm)
+    return (
+        f"How the bodies lie on each other is in doubt: start '{other.name}' fits about as well as "
+        f"'{chosen.name}' ({other.residual_mm:.2f} mm and {chosen.residual_mm:.2f} mm), but turned by "
+        f"{angles[other]:.0f} degrees against it; check with landmarks, or give three guides.",
+    )
 
 
 def align(

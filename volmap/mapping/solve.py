@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.observations import Observations, joined
-from volmap.mapping.alignment import Alignment, align
+from volmap.mapping.alignment import Alignment, align, doubts
 from volmap.mapping.guides import guide_observations, guide_rms
 from volmap.mapping.matching import Matcher, Residual
 from volmap.mapping.objective import Objective
@@ -270,5 +270,6 @@ def map_mesh(
     status = _climb(solver, state, progress) or Status.OUT_OF_STEPS
     words = ", ".join(f"{a.name} {a.residual_mm:.2f} mm" for a in tried)
     start = f"{alignment.name}, turned by {alignment.rotation_deg:.0f} degrees (residuals: {words})"
-    outcome = Outcome(VolumeMap(mesh, state.images), status, tuple(state.history), start, solver.notes)
+    notes = (*doubts(alignment, tried), *solver.notes)
+    outcome = Outcome(VolumeMap(mesh, state.images), status, tuple(state.history), start, notes)
     return Solved(outcome, alignment, tried)
