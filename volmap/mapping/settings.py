@@ -25,7 +25,7 @@ class MapSettings:
         Share of a boundary match that acts across the normal.  It acts as friction against sliding: it
         damps steps, and the smaller it is, the fewer of them sliding takes.
     first_weight, weight_factor, last_weight : float
-        The ladder of boundary weights, in units of ``(0.02 V^(1/3))^-2``.
+        The ladder of boundary weights, in units of ``(0.02 V^(1/3))^-2``, V the volume of the target body.
     steps_a_rung : int
         Newton steps at most before the weight rises.
     most_steps : int
