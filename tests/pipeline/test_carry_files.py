@@ -53,6 +53,18 @@ def test_a_point_far_outside_is_told_and_left_out(tmp_path, small_pair):
     assert "mm" in findings[0].sentence
 
 
+def test_an_uncertainty_that_stays_behind_is_told(tmp_path, small_pair):
+    (tmp_path / "here.csv").write_text(
+        "name,x_mm,y_mm,z_mm,role,sd_mm\nä,1,2,3,guide,0.5\n", encoding="utf-8"
+    )
+    findings = pipeline.carry_file(tmp_path / "here.csv", small_pair.folder, tmp_path / "there.csv")
+    assert [f.code for f in findings] == ["sd-left-out"]
+    text = (tmp_path / "there.csv").read_text(encoding="utf-8").splitlines()
+    assert text[0] == "name,x_mm,y_mm,z_mm,role"
+    assert text[1].startswith("ä,")
+    assert text[1].endswith(",guide")
+
+
 def carried_volume(small_pair, tmp_path, voxels, *, reverse=False, **choice):
     scan = nibabel.load(small_pair.target if reverse else small_pair.source)
     image = nibabel.Nifti1Image(voxels, scan.affine)

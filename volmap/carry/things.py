@@ -196,6 +196,11 @@ def _landmark_findings(thing: Landmarks, moved: MovedPoints) -> tuple[Finding, .
             )
             remedy = "check that the points belong to this scan and lie in the segmented body"
             findings.append(Finding(Level.WARN, code, "landmarks", sentence, remedy))
+    if thing.sd_mm is not None:
+        sentence = (
+            "sd_mm tells how well the points were placed in their own scan; it was not carried with them"
+        )
+        findings.append(Finding(Level.NOTE, "sd-left-out", "landmarks", sentence))
     return tuple(findings)
 
 
