@@ -31,6 +31,7 @@ def test_an_affine_map_carries_guides_exactly(where):
     assert guide_rms(pulls, BODY.points @ AFFINE.T) < 1e-12
     np.testing.assert_allclose(pulls.weights.sum(axis=1), 1.0, atol=1e-12)
     assert (pulls.weights.min() < -1e-3) == (where == "outside")
+    assert np.abs(pulls.weights).max() < 2.0  # a tet of 2 mm, continued by at most 0.9 mm
 
 
 def test_guides_far_outside_are_refused_by_name():

@@ -3,11 +3,12 @@
 import numba
 import numpy as np
 import pytest
-from hand_made_bodies import ball, cubes, lopsided, rotation
+from hand_made_bodies import cubes, lopsided, rotation
 
 from volmap.kernels.energies import ENERGIES
 from volmap.kernels.predicates import orientation_signs
 from volmap.mapping import MapSettings, map_mesh, solve
+from volmap.mapping.matching import Residual
 from volmap.mapping.objective import Objective
 from volmap.types import InputError, LandmarkPairs, Status, TetMesh
 
@@ -245,9 +246,12 @@ def test_settings_out_of_range_are_refused(name, value):
         MapSettings(**{name: value})
 
 
-def test_surfaces_that_face_each_other_the_wrong_way_are_not_settled():
-    """A ball turned inside out: every match is rejected, and nothing matched is not a boundary reached."""
-    body = ball(2)
-    surface = body.interfaces
-    turned = type(surface)(surface.points, surface.triangles[:, ::-1], surface.sides)
-    assert map_mesh(body, turned).outcome.status is not Status.SETTLED
+@pytest.mark.parametrize(
+    ("rms_mm", "rejected", "reached"), [(0.1, 0.01, True), (0.11, 0.01, False), (0.0, 1.0, False)]
+)
+def test_what_counts_as_a_boundary_reached(plain, rms_mm, rejected, reached):
+    """Within a tenth of a voxel of 1 mm, and matched: where every match is rejected the residual is 0 too."""
+    solver = solve._Solver(
+        BODY, TARGET.interfaces, MapSettings(), alignment=plain.alignment, guides=None, voxel_mm=1.0
+    )
+    assert solver.boundary_reached(Residual(rms_mm, rms_mm, rms_mm, rejected)) is reached

@@ -70,8 +70,8 @@ def _solving(inputs: ReportInput, known: Mapping[str, Any]) -> str:
     density = "a distortion energy" if energy is None else f"the distortion energy “{_shown(energy)}”"
     sentence = (
         f"A piecewise affine map into the target ({scales.plain_text(inputs.target.name)}) was found by "
-        f"minimising {density}, symmetrised so that neither scan is preferred and measured against the source "
-        "enlarged or reduced to the target's volume, together with the squared "
+        f"minimising {density}, symmetrised so that neither scan is preferred and measured against the "
+        "source enlarged or reduced to the target's volume, together with the squared "
         "distances between matching label interfaces, measured in both directions"
     )
     sentence += _ladder(known)
