@@ -39,6 +39,12 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         "--one-order", action="store_true", help="do not solve on the other mesh too (order not assessed)"
     )
     parser.add_argument(
+        "--one-to-one",
+        action=argparse.BooleanOptionalAction,
+        default=True,
+        help="keep the image of the outer boundary from crossing itself",
+    )
+    parser.add_argument(
         "--allow-topology-change",
         action="store_true",
         help="go on when pieces or handles differ; the certificate fails that gate",
@@ -63,7 +69,10 @@ def run(options: argparse.Namespace, console: Console) -> int:
     job = pipeline.MapJob(
         mesh=pipeline.MeshSettings(edge_mm=options.edge),
         map=pipeline.MapSettings(
-            energy=options.energy, uncertainty_mm=options.uncertainty, seed=options.seed
+            energy=options.energy,
+            uncertainty_mm=options.uncertainty,
+            one_to_one=options.one_to_one,
+            seed=options.seed,
         ),
         both_orders=not options.one_order,
         allow_topology_change=options.allow_topology_change,

@@ -6,6 +6,7 @@ from skfem import MeshTet
 
 from volmap.kernels import blocksystem, observations
 from volmap.kernels.tets import EDGES
+from volmap.kernels.ties import Ties, no_ties
 
 
 @pytest.fixture
@@ -86,9 +87,15 @@ def test_product_and_solve_against_dense(mesh):
     blocksystem.multiply(pattern, diagonal, off_diagonal, x, out)
     np.testing.assert_allclose(out.ravel(), a @ x.ravel(), atol=1e-10)
     found = np.empty((n, 3))
-    steps = blocksystem.solve(pattern, diagonal, off_diagonal, out, 1e-12, 3 * n, found)
+    steps = blocksystem.solve(pattern, diagonal, off_diagonal, no_ties(), out, 1e-12, 3 * n, found)
     assert 0 < steps < 3 * n
     np.testing.assert_allclose(found, np.linalg.solve(a, out.ravel()).reshape(n, 3), atol=1e-8)
+    tie = Ties(np.array([[0, 9, 4, 2]]), np.array([[1.0, -0.5, -0.2, -0.3]]), np.eye(3)[:1], np.array([40.0]))
+    row = np.zeros((n, 3))
+    row[tie.corners[0], 0] = tie.weights[0]
+    tied = a + 40.0 * np.outer(row, row)
+    blocksystem.solve(pattern, diagonal, off_diagonal, tie, out, 1e-12, 3 * n, found)
+    np.testing.assert_allclose(found, np.linalg.solve(tied, out.ravel()).reshape(n, 3), atol=1e-8)
 
 
 def random_observations(tets, pattern, seed):

@@ -14,6 +14,7 @@ from numba import njit, prange
 from numpy.typing import NDArray
 
 from volmap.kernels.tets import EDGES
+from volmap.kernels.ties import add_diagonal, add_product
 from volmap.kernels.topology import unique_edges
 
 CHUNK = 512  # points whose products one thread sums
@@ -206,11 +207,13 @@ def _dot(a, b):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)
-def solve(pattern, diagonal, off_diagonal, right, tolerance, most, x):  # type: ignore[no-untyped-def]
+def solve(pattern, diagonal, off_diagonal, ties, right, tolerance, most, x):  # type: ignore[no-untyped-def]
     """Conjugate gradients with the inverse diagonal blocks as preconditioner, from x = 0.
 
     Parameters
     ----------
+    ties : Ties
+        Stiffness beside the edges of the mesh; part of the matrix.
     right : (n, 3) float64
     tolerance : float
         Wanted ``|r| / |right|``.
@@ -226,7 +229,9 @@ def solve(pattern, diagonal, off_diagonal, right, tolerance, most, x):  # type: 
     """
     n = len(right)
     inverse = np.empty((n, 3, 3))
-    invert_blocks(diagonal, inverse)
+    whole = diagonal.copy()
+    add_diagonal(ties, whole)
+    invert_blocks(whole, inverse)
     r, z, d, ad = right.copy(), np.zeros((n, 3)), np.zeros((n, 3)), np.zeros((n, 3))
     x[:] = 0.0
     rz, rr = _advance(x, r, z, d, ad, inverse, 0.0)
@@ -237,6 +242,7 @@ def solve(pattern, diagonal, off_diagonal, right, tolerance, most, x):  # type: 
             return k
         _turn(d, z, share)
         multiply(pattern, diagonal, off_diagonal, d, ad)
+        add_product(ties, d, ad)
         curvature = _dot(d, ad)
         if curvature <= 0.0:
             return k

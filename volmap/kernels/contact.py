@@ -23,6 +23,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 KEPT = 0.1  # share of a pair's distance that a step leaves at least
+ROOM = 48  # near cells that a query has room for at first
 ADVANCES = 500  # rounds of conservative advancement at most; stopping early is safe
 
 
@@ -202,7 +203,7 @@ def _first_meeting(of_edges, x, p, longest, weights, gap):  # type: ignore[no-un
 def _longest_steps(of_edges, tree, cells, queries, here, there, out):  # type: ignore[no-untyped-def]
     """Safe share in [0, 1] of the way from here to there, query by query."""
     for q in prange(len(queries)):
-        low, high = np.empty(3), np.empty(3)
+        low, high, low2, high2 = np.empty(3), np.empty(3), np.empty(3), np.empty(3)
         x, p = np.empty((4, 3)), np.empty((4, 3))
         weights, gap, corners = np.empty(4), np.empty(3), np.empty(4, np.int64)
         stack = np.empty(DEPTH, np.int64)
@@ -223,6 +224,9 @@ def _longest_steps(of_edges, tree, cells, queries, here, there, out):  # type: i
             for i in range(tree.first[node], tree.last[node]):
                 c = tree.order[i]
                 if (of_edges and c <= q) or _share_a_point(queries[q], cells[c]):
+                    continue
+                _box(cells[c], here, there, 0.0, low2, high2)
+                if _apart(low, high, low2, high2):
                     continue
                 _corners(of_edges, queries[q], cells[c], corners)
                 for k in range(4):
@@ -251,15 +255,15 @@ def longest_step(skin: Skin, here: Floats, there: Floats) -> float:
 
 
 @njit(cache=True, parallel=True)
-def _near(of_edges, tree, cells, queries, points, reach, start, corners, weights, gaps, fill):  # type: ignore[no-untyped-def]
-    """Count each query's pairs nearer than `reach` into start[q + 1], or fill them in from start[q] on."""
+def _near(of_edges, tree, cells, queries, points, reach, count, found):  # type: ignore[no-untyped-def]
+    """Cells nearer than `reach` to each query: how many into count (q,), as many as fit into found (q, m)."""
     for q in prange(len(queries)):
-        low, high = np.empty(3), np.empty(3)
-        x, four = np.empty((4, 3)), np.empty(4, np.int64)
+        low, high, low2, high2 = np.empty(3), np.empty(3), np.empty(3), np.empty(3)
+        x, corners = np.empty((4, 3)), np.empty(4, np.int64)
         w, gap = np.empty(4), np.empty(3)
         stack = np.empty(DEPTH, np.int64)
         _box(queries[q], points, points, reach, low, high)
-        found = 0
+        n = 0
         stack[0] = 0
         size = 1
         while size > 0:
@@ -276,21 +280,18 @@ def _near(of_edges, tree, cells, queries, points, reach, start, corners, weights
                 c = tree.order[i]
                 if (of_edges and c <= q) or _share_a_point(queries[q], cells[c]):
                     continue
-                _corners(of_edges, queries[q], cells[c], four)
+                _box(cells[c], points, points, 0.0, low2, high2)
+                if _apart(low, high, low2, high2):
+                    continue
+                _corners(of_edges, queries[q], cells[c], corners)
                 for k in range(4):
                     for d in range(3):
-                        x[k, d] = points[four[k], d]
+                        x[k, d] = points[corners[k], d]
                 if _gap(of_edges, x, w, gap) < reach:
-                    if fill:
-                        row = start[q] + found
-                        for k in range(4):
-                            corners[row, k] = four[k]
-                            weights[row, k] = w[k]
-                        for d in range(3):
-                            gaps[row, d] = gap[d]
-                    found += 1
-        if not fill:
-            start[q + 1] = found
+                    if n < found.shape[1]:
+                        found[q, n] = c
+                    n += 1
+        count[q] = n
 
 
 class Pairs(NamedTuple):
@@ -302,31 +303,80 @@ class Pairs(NamedTuple):
     weights : (k, 4) float64
     gaps : (k, 3) float64, mm
         ``sum_c weight_c x_c``.
+    of_edges : (k,) bool
+        True for two edges, False for a point and a triangle.
     """
 
     corners: Ints
     weights: Floats
     gaps: Floats
+    of_edges: NDArray[np.bool_]
 
 
 def near_pairs(skin: Skin, points: Floats, reach_mm: float) -> Pairs:
     """All pairs of the skin nearer than `reach_mm`, point-triangle pairs first."""
-    parts = []
-    for of_edges, tree, cells, queries in (
-        (False, skin.triangle_tree, skin.triangles, skin.points),
-        (True, skin.edge_tree, skin.edges, skin.edges),
-    ):
-        _sweep(tree, cells, points, points)
-        start = np.zeros(len(queries) + 1, np.int64)
-        none = np.empty((0, 4), np.int64), np.empty((0, 4)), np.empty((0, 3))
-        _near(of_edges, tree, cells, queries, points, reach_mm, start, *none, False)
-        start = np.cumsum(start)
-        k = int(start[-1])
-        filled = np.empty((k, 4), np.int64), np.empty((k, 4)), np.empty((k, 3))
-        if k:
-            _near(of_edges, tree, cells, queries, points, reach_mm, start, *filled, True)
-        parts.append(filled)
-    return Pairs(*(np.concatenate(columns) for columns in zip(*parts, strict=True)))
+    lone, cell = _near_cells(False, skin.triangle_tree, skin.triangles, skin.points, points, reach_mm)
+    edge, other = _near_cells(True, skin.edge_tree, skin.edges, skin.edges, points, reach_mm)
+    corners = np.concatenate(
+        [
+            np.concatenate([skin.points[lone, :1], skin.triangles[cell]], axis=1),
+            np.concatenate([skin.edges[edge, :2], skin.edges[other, :2]], axis=1),
+        ]
+    )
+    k = len(corners)
+    of_edges = np.arange(k) >= len(lone)
+    pairs = Pairs(corners, np.empty((k, 4)), np.empty((k, 3)), of_edges)
+    _measure(pairs, points, pairs.weights, pairs.gaps)
+    return pairs
+
+
+def _near_cells(
+    of_edges: bool, tree: Tree, cells: Ints, queries: Ints, points: Floats, reach_mm: float
+) -> tuple[Ints, Ints]:
+    """(query, cell) of every near pair; searched again with more room where there were more than fit."""
+    _sweep(tree, cells, points, points)
+    count = np.empty(len(queries), np.int64)
+    found = np.empty((len(queries), ROOM), np.int64)
+    _near(of_edges, tree, cells, queries, points, reach_mm, count, found)
+    if count.max(initial=0) > ROOM:
+        found = np.empty((len(queries), int(count.max())), np.int64)
+        _near(of_edges, tree, cells, queries, points, reach_mm, count, found)
+    query = np.repeat(np.arange(len(queries)), count)
+    within = np.arange(len(query)) - np.repeat(np.cumsum(count) - count, count)
+    return query, found[query, within]
+
+
+@njit(cache=True)
+def _measure(pairs, points, weights, gaps):  # type: ignore[no-untyped-def]
+    x = np.empty((4, 3))
+    for k in range(len(pairs.corners)):
+        for c in range(4):
+            for d in range(3):
+                x[c, d] = points[pairs.corners[k, c], d]
+        _gap(pairs.of_edges[k], x, weights[k], gaps[k])
+
+
+def remeasured(pairs: Pairs, points: Floats, reach_mm: float) -> Pairs:
+    """Those of the pairs that are nearer than `reach_mm` where their points are now."""
+    weights, gaps = np.empty_like(pairs.weights), np.empty_like(pairs.gaps)
+    _measure(pairs, points, weights, gaps)
+    keep = np.linalg.norm(gaps, axis=1) < reach_mm
+    return Pairs(pairs.corners[keep], weights[keep], gaps[keep], pairs.of_edges[keep])
+
+
+@njit(cache=True)
+def longest_step_of(pairs, here, there):  # type: ignore[no-untyped-def]
+    """As `longest_step`, for these pairs alone."""
+    x, p = np.empty((4, 3)), np.empty((4, 3))
+    weights, gap = np.empty(4), np.empty(3)
+    safe = 1.0
+    for k in range(len(pairs.corners)):
+        for c in range(4):
+            for d in range(3):
+                x[c, d] = here[pairs.corners[k, c], d]
+                p[c, d] = there[pairs.corners[k, c], d] - x[c, d]
+        safe = min(safe, _first_meeting(pairs.of_edges[k], x, p, safe, weights, gap))
+    return safe
 
 
 @njit(cache=True)

@@ -10,6 +10,8 @@ from numpy.typing import NDArray
 from volmap.kernels import blocksystem, distortion, observations, steps, tets
 from volmap.kernels.energies import ENERGIES
 from volmap.kernels.observations import Observations
+from volmap.kernels.ties import no_ties
+from volmap.mapping.contact import Contact
 
 Floats = NDArray[np.float64]
 
@@ -33,6 +35,8 @@ class Objective:
         Of the source mesh.
     mesh_tets : (m, 4) int64
     energy : str
+    contact : Contact, optional
+        Keeps the image of the outer boundary from crossing itself.
     growth : float
         Volume of the target body over that of the source.  Distortion is measured against the source
         enlarged to the target's volume, so that size alone costs nothing: otherwise a soft boundary would
@@ -40,12 +44,20 @@ class Objective:
     """
 
     def __init__(
-        self, points: Floats, mesh_tets: NDArray[np.int64], *, energy: str, growth: float = 1.0
+        self,
+        points: Floats,
+        mesh_tets: NDArray[np.int64],
+        *,
+        energy: str,
+        contact: Contact | None = None,
+        growth: float = 1.0,
     ) -> None:
         n, m = len(points), len(mesh_tets)
         self.code = ENERGIES[energy]
         self.tets = mesh_tets
         self.pattern = blocksystem.pattern_of(mesh_tets, n)
+        self.contact = contact
+        self.ties = no_ties()
         self.growth = growth
         rest = np.cbrt(growth) * points
         self.shape_gradients = tets.shape_gradients(rest, mesh_tets)
@@ -61,7 +73,10 @@ class Objective:
         """The objective at image points (n, 3) mm."""
         distortion.energies(self.code, images, self.tets, self.shape_gradients, self.densities)
         spent = float(self.weights @ self.densities)
-        return Value(spent + observations.misfit(pulls, images), spent)
+        total = spent + observations.misfit(pulls, images)
+        if self.contact is not None and np.isfinite(total):
+            total += self.contact.energy(images)
+        return Value(total, spent)
 
     def differentiate(self, images: Floats, pulls: Observations) -> Value:
         """The objective, with its gradient and convex second-derivative model kept for `newton_step`."""
@@ -81,21 +96,34 @@ class Objective:
         )
         pulled = observations.add_pull(pulls, images, self.gradient, self.diagonal, self.off_diagonal)
         spent = float(self.weights @ self.densities)
-        return Value(spent + pulled, spent)
+        if self.contact is None:
+            return Value(spent + pulled, spent)
+        repelled, self.ties = self.contact.add(images, self.gradient)
+        return Value(spent + pulled + repelled, spent)
 
     def newton_step(self, *, tolerance: float, most: int) -> tuple[Floats, float, int]:
         """Direction (n, 3) mm, its slope (negative), and the linear iterations it took."""
         direction = np.empty_like(self.gradient)
         iterations = blocksystem.solve(
-            self.pattern, self.diagonal, self.off_diagonal, -self.gradient, tolerance, most, direction
+            self.pattern,
+            self.diagonal,
+            self.off_diagonal,
+            self.ties,
+            -self.gradient,
+            tolerance,
+            most,
+            direction,
         )
         return direction, float((self.gradient * direction).sum()), int(iterations)
 
     def largest_step(self, images: Floats, direction: Floats) -> float:
-        """Largest step in [0, 1] that surely keeps every tet positive."""
+        """Largest step in [0, 1] that surely keeps every tet positive and the boundary free of crossings."""
         bounds = self.densities  # work space of the right size
         steps.step_bounds(images, direction, self.tets, 1.0 / SAFETY, bounds)
-        return SAFETY * float(bounds.min())
+        length = min(1.0, SAFETY * float(bounds.min()))
+        if self.contact is not None:
+            length *= self.contact.longest_step(images, length * direction)
+        return length
 
     def smallest_ratio(self, images: Floats) -> float:
         """Smallest volume in TARGET over volume in SOURCE."""

@@ -24,6 +24,10 @@ class MapSettings:
     across : float
         Share of a boundary match that acts across the normal.  It acts as friction against sliding: it
         damps steps, and the smaller it is, the fewer of them sliding takes.
+    one_to_one : bool
+        Keep the image of the outer boundary from crossing itself, at every step.
+    contact_voxels : float
+        Parts of that boundary nearer than this share of a voxel repel each other.
     first_weight, weight_factor, last_weight : float
         The ladder of boundary weights, in units of ``(0.02 V^(1/3))^-2``, V the volume of the target body.
     steps_a_rung : int
@@ -43,6 +47,8 @@ class MapSettings:
     uncertainty_mm: float | None = None
     uncertainty_voxels: float = 0.1
     across: float = 0.01
+    one_to_one: bool = True
+    contact_voxels: float = 0.15
     first_weight: float = 0.01
     weight_factor: float = 3.1622776601683795
     last_weight: float = 10.0
@@ -64,6 +70,7 @@ class MapSettings:
                 found=str(self.uncertainty_mm),
             )
         _require(self.uncertainty_voxels > 0, "uncertainty_voxels", self.uncertainty_voxels, "above 0")
+        _require(0 < self.contact_voxels <= 1, "contact_voxels", self.contact_voxels, "above 0, up to 1")
         _require(0 <= self.across <= 1, "across", self.across, "from 0 to 1")
         _require(
             0 < self.first_weight <= self.last_weight, "first_weight", self.first_weight, "up to the last"

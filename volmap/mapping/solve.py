@@ -9,9 +9,10 @@ from numpy.typing import NDArray
 
 from volmap.kernels.observations import Observations, joined
 from volmap.mapping.alignment import Alignment, align, doubts
+from volmap.mapping.contact import Contact
 from volmap.mapping.guides import guide_observations, guide_rms
 from volmap.mapping.matching import Matcher, Residual
-from volmap.mapping.objective import Objective
+from volmap.mapping.objective import Objective, Value
 from volmap.mapping.patches import matching_patches, steady_contacts
 from volmap.mapping.settings import MapSettings
 from volmap.types import (
@@ -90,7 +91,10 @@ class _Solver:
         self.settings = settings
         self.uncertainty_mm = settings.uncertainty_mm or settings.uncertainty_voxels * voxel_mm
         growth = _body_volume(target) / _body_volume(mesh.interfaces)
-        self.objective = Objective(points, tets, energy=settings.energy, growth=growth)
+        self.contact = None
+        if settings.one_to_one:
+            self.contact = Contact(mesh.interfaces, reach_mm=settings.contact_voxels * voxel_mm)
+        self.objective = Objective(points, tets, energy=settings.energy, contact=self.contact, growth=growth)
         steady, self.notes = steady_contacts(mesh.interfaces, target, alignment.matrix)
         patches = matching_patches(mesh.interfaces, target, steady)
         self.matcher = Matcher(
@@ -107,6 +111,8 @@ class _Solver:
         self.unit = (0.02 * np.cbrt(_body_volume(target))) ** -2.0
 
     def pulls(self, state: _State) -> tuple[Observations, Residual]:
+        if self.contact is not None:
+            self.contact.weight = state.boundary_weight
         matches, residual = self.matcher.match(state.images)
         parts = [_weighted(matches, state.boundary_weight)]
         if self.guides is not None:
@@ -119,26 +125,24 @@ class _Solver:
     def guides_reached(self, images: Floats) -> bool:
         return self.guides is None or guide_rms(self.guides, images) <= self.guide_sd_mm
 
-    def search(self, images: Floats, pulls: Observations, *, at: float) -> tuple[Floats, float, int]:
-        """One Newton step from objective value `at`: new images, share of it taken, linear iterations."""
+    def search(self, images: Floats, pulls: Observations, *, at: Value) -> tuple[Floats, Value, float, int]:
+        """One Newton step from a value: new images, value there, share of it taken, linear iterations."""
         direction, slope, iterations = self.objective.newton_step(tolerance=FORCING, most=LINEAR_ITERATIONS)
-        length = min(1.0, self.objective.largest_step(images, direction))
+        length = self.objective.largest_step(images, direction)
         while length > SMALLEST_STEP:
             trial = images + length * direction
             value = self.objective.value(trial, pulls)
-            if value.total <= at + ARMIJO * length * slope and self.objective.all_positive(trial):
-                return trial, length, iterations
+            if value.total <= at.total + ARMIJO * length * slope and self.objective.all_positive(trial):
+                return trial, value, length, iterations
             length *= 0.5
-        return images, 0.0, iterations
+        return images, at, 0.0, iterations
 
 
 def _step(solver: _Solver, state: _State) -> tuple[float, Residual]:
     """Match, differentiate, move; returns the relative decrease of the objective and the residual before."""
     pulls, residual = solver.pulls(state)
     before = solver.objective.differentiate(state.images, pulls)
-    images, length, iterations = solver.search(state.images, pulls, at=before.total)
-    after = solver.objective.value(images, pulls)
-    state.images = images
+    state.images, after, length, iterations = solver.search(state.images, pulls, at=before)
     state.levels.append(before.total)
     decrease = (before.total - after.total) / max(before.total, NOTHING)
     state.history.append(
@@ -150,7 +154,7 @@ def _step(solver: _Solver, state: _State) -> tuple[float, Residual]:
             residual.rms_mm,
             length,
             iterations,
-            solver.objective.smallest_ratio(images),
+            solver.objective.smallest_ratio(state.images),
         )
     )
     state.idle = state.idle + 1 if length < 1e-3 else 0

@@ -118,7 +118,8 @@ def _words(folder: MapFolder, measures: Mapping[str, Any]) -> Iterator[tuple[str
     for name, sidecar in fresh.items():
         yield from certifying.unlike(f"{name}.json: ", dict(folder.sidecars[name]), certifying.plain(sidecar))
     stored = folder.certificate
-    mesh = mesh_document(folder.map, scan_document(folder.source))
+    side = folder.solved_on
+    mesh = mesh_document(folder.own_meshes[side], scan_document(getattr(folder, side)), side=side)
     pairs = {
         "source": (stored.source, scan_document(folder.source)),
         "target": (stored.target, scan_document(folder.target)),

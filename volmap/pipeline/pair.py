@@ -298,7 +298,8 @@ def _settings_document(job: MapJob, solutions: _Solutions, order: _Order) -> dic
 
 def _mesh_document(folder: MapFolder, meshes: list[MeshResult]) -> dict[str, Any]:
     own = {side: result.quality.as_dict() for side, result in zip(("source", "target"), meshes, strict=True)}
-    told = mesh_document(folder.map, folder.certificate.source)
+    side = folder.solved_on
+    told = mesh_document(folder.own_meshes[side], getattr(folder.certificate, side), side=side)
     return told | {"edge_mm": meshes[0].settings.edge_mm, "own": own}
 
 

@@ -15,7 +15,7 @@ from volmap import carry as carrying
 from volmap.kernels.distortion import energies
 from volmap.kernels.energies import ENERGIES
 from volmap.kernels.tets import dihedral_degrees, shape_gradients
-from volmap.types import GridField, LabelVolume, VolumeMap
+from volmap.types import GridField, LabelVolume, TetMesh, VolumeMap
 
 
 def sidecars_of(
@@ -72,11 +72,11 @@ def scan_document(volume: LabelVolume) -> dict[str, Any]:
     }
 
 
-def mesh_document(volume_map: VolumeMap, source: Mapping[str, Any]) -> dict[str, Any]:
-    """What a certificate says of the map's tets in SOURCE, whose `scan_document` is given."""
-    mesh = volume_map.mesh
-    voxels = {int(k): v["volume_mm3"] for k, v in source["labels"].items()}
+def mesh_document(mesh: TetMesh, scan: Mapping[str, Any], *, side: str) -> dict[str, Any]:
+    """What a certificate says of the mesh a pair was solved on: that of `side`, with its `scan_document`."""
+    voxels = {int(k): v["volume_mm3"] for k, v in scan["labels"].items()}
     return {
+        "of": side,
         "points": len(mesh.points),
         "tets": len(mesh.tets),
         "min_dihedral_deg": float(dihedral_degrees(mesh.points, mesh.tets).min()),

@@ -57,8 +57,14 @@ def _meshing(inputs: ReportInput, known: Mapping[str, Any]) -> str:
         parts.append(f"a smallest dihedral angle of {number(angle)}°")
     n = len(inputs.labels)
     labels = "one label" if n == 1 else f"{n} labels with shared interfaces"
-    source = scales.plain_text(inputs.source.name)
-    return f"The source segmentation ({source}; {labels}) was meshed with {_and(parts)}."
+    side = "target" if known.get("solved_on") == "target" else "source"
+    name = scales.plain_text(getattr(inputs, side).name)
+    sentence = f"The {side} segmentation ({name}; {labels}) was meshed with {_and(parts)}."
+    if side == "target":
+        sentence += (
+            " The pair was solved on that mesh, and the map handed out is the exact inverse of the solution."
+        )
+    return sentence
 
 
 def _and(parts: list[str]) -> str:
