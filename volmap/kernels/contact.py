@@ -24,6 +24,7 @@ Ints = NDArray[np.int64]
 
 KEPT = 0.1  # share of a pair's distance that a step leaves at least
 ROOM = 48  # near cells that a query has room for at first
+CHUNK = 64  # queries that share one set of work arrays
 ADVANCES = 500  # rounds of conservative advancement at most; stopping early is safe
 
 
@@ -199,42 +200,58 @@ def _first_meeting(of_edges, x, p, longest, weights, gap):  # type: ignore[no-un
     return t
 
 
+@njit(cache=True)
+def _leaves(tree, low, high, stack, leaves):  # type: ignore[no-untyped-def]
+    """Leaves of a tree whose boxes overlap a box, into leaves; returns how many."""
+    n = 0
+    stack[0] = 0
+    size = 1
+    while size > 0:
+        size -= 1
+        node = stack[size]
+        if _apart(low, high, tree.low[node], tree.high[node]):
+            continue
+        if tree.child[node] < 0:
+            leaves[n] = node
+            n += 1
+        else:
+            stack[size] = tree.child[node]
+            stack[size + 1] = tree.child[node] + 1
+            size += 2
+    return n
+
+
+@njit(cache=True)
+def _worth_a_look(of_edges, cells, queries, q, c, here, there, low, high, low2, high2):  # type: ignore[no-untyped-def]
+    """True when query q and cell c have no point in common, boxes that overlap, and are not met twice."""
+    if (of_edges and c <= q) or _share_a_point(queries[q], cells[c]):
+        return False
+    _box(cells[c], here, there, 0.0, low2, high2)
+    return not _apart(low, high, low2, high2)
+
+
 @njit(cache=True, parallel=True)
 def _longest_steps(of_edges, tree, cells, queries, here, there, out):  # type: ignore[no-untyped-def]
     """Safe share in [0, 1] of the way from here to there, query by query."""
-    for q in prange(len(queries)):
+    for chunk in prange((len(queries) + CHUNK - 1) // CHUNK):
         low, high, low2, high2 = np.empty(3), np.empty(3), np.empty(3), np.empty(3)
         x, p = np.empty((4, 3)), np.empty((4, 3))
         weights, gap, corners = np.empty(4), np.empty(3), np.empty(4, np.int64)
-        stack = np.empty(DEPTH, np.int64)
-        _box(queries[q], here, there, 0.0, low, high)
-        safe = 1.0
-        stack[0] = 0
-        size = 1
-        while size > 0:
-            size -= 1
-            node = stack[size]
-            if _apart(low, high, tree.low[node], tree.high[node]):
-                continue
-            if tree.child[node] >= 0:
-                stack[size] = tree.child[node]
-                stack[size + 1] = tree.child[node] + 1
-                size += 2
-                continue
-            for i in range(tree.first[node], tree.last[node]):
-                c = tree.order[i]
-                if (of_edges and c <= q) or _share_a_point(queries[q], cells[c]):
-                    continue
-                _box(cells[c], here, there, 0.0, low2, high2)
-                if _apart(low, high, low2, high2):
-                    continue
-                _corners(of_edges, queries[q], cells[c], corners)
-                for k in range(4):
-                    for d in range(3):
-                        x[k, d] = here[corners[k], d]
-                        p[k, d] = there[corners[k], d] - here[corners[k], d]
-                safe = min(safe, _first_meeting(of_edges, x, p, safe, weights, gap))
-        out[q] = safe
+        stack, leaves = np.empty(DEPTH, np.int64), np.empty(len(tree.child), np.int64)
+        for q in range(chunk * CHUNK, min(len(queries), (chunk + 1) * CHUNK)):
+            safe = 1.0
+            _box(queries[q], here, there, 0.0, low, high)
+            for n in range(_leaves(tree, low, high, stack, leaves)):
+                for i in range(tree.first[leaves[n]], tree.last[leaves[n]]):
+                    c = tree.order[i]
+                    if _worth_a_look(of_edges, cells, queries, q, c, here, there, low, high, low2, high2):
+                        _corners(of_edges, queries[q], cells[c], corners)
+                        for k in range(4):
+                            for d in range(3):
+                                x[k, d] = here[corners[k], d]
+                                p[k, d] = there[corners[k], d] - here[corners[k], d]
+                        safe = min(safe, _first_meeting(of_edges, x, p, safe, weights, gap))
+            out[q] = safe
 
 
 def longest_step(skin: Skin, here: Floats, there: Floats) -> float:
@@ -257,41 +274,26 @@ def longest_step(skin: Skin, here: Floats, there: Floats) -> float:
 @njit(cache=True, parallel=True)
 def _near(of_edges, tree, cells, queries, points, reach, count, found):  # type: ignore[no-untyped-def]
     """Cells nearer than `reach` to each query: how many into count (q,), as many as fit into found (q, m)."""
-    for q in prange(len(queries)):
+    for chunk in prange((len(queries) + CHUNK - 1) // CHUNK):
         low, high, low2, high2 = np.empty(3), np.empty(3), np.empty(3), np.empty(3)
         x, corners = np.empty((4, 3)), np.empty(4, np.int64)
-        w, gap = np.empty(4), np.empty(3)
-        stack = np.empty(DEPTH, np.int64)
-        _box(queries[q], points, points, reach, low, high)
-        n = 0
-        stack[0] = 0
-        size = 1
-        while size > 0:
-            size -= 1
-            node = stack[size]
-            if _apart(low, high, tree.low[node], tree.high[node]):
-                continue
-            if tree.child[node] >= 0:
-                stack[size] = tree.child[node]
-                stack[size + 1] = tree.child[node] + 1
-                size += 2
-                continue
-            for i in range(tree.first[node], tree.last[node]):
-                c = tree.order[i]
-                if (of_edges and c <= q) or _share_a_point(queries[q], cells[c]):
-                    continue
-                _box(cells[c], points, points, 0.0, low2, high2)
-                if _apart(low, high, low2, high2):
-                    continue
-                _corners(of_edges, queries[q], cells[c], corners)
-                for k in range(4):
-                    for d in range(3):
-                        x[k, d] = points[corners[k], d]
-                if _gap(of_edges, x, w, gap) < reach:
-                    if n < found.shape[1]:
-                        found[q, n] = c
-                    n += 1
-        count[q] = n
+        weights, gap = np.empty(4), np.empty(3)
+        stack, leaves = np.empty(DEPTH, np.int64), np.empty(len(tree.child), np.int64)
+        for q in range(chunk * CHUNK, min(len(queries), (chunk + 1) * CHUNK)):
+            count[q] = 0
+            _box(queries[q], points, points, reach, low, high)
+            for n in range(_leaves(tree, low, high, stack, leaves)):
+                for i in range(tree.first[leaves[n]], tree.last[leaves[n]]):
+                    c = tree.order[i]
+                    if _worth_a_look(of_edges, cells, queries, q, c, points, points, low, high, low2, high2):
+                        _corners(of_edges, queries[q], cells[c], corners)
+                        for k in range(4):
+                            for d in range(3):
+                                x[k, d] = points[corners[k], d]
+                        if _gap(of_edges, x, weights, gap) < reach:
+                            if count[q] < found.shape[1]:
+                                found[q, count[q]] = c
+                            count[q] += 1
 
 
 class Pairs(NamedTuple):
