@@ -4,12 +4,15 @@ The verbs are those of the command line::
 
     import volmap
     folder = volmap.map_pair(volmap.read_labels("visit0.nii.gz"), volmap.read_labels("visit1.nii.gz"))
-    moved = volmap.carry(volmap.read_landmarks("beads.csv"), folder.map)
+    moved = volmap.carry(volmap.read_landmarks("beads.csv"), folder.map).thing
 
-Names are imported when they are first used, so that ``import volmap`` stays cheap.
+Names are imported when they are first used, so that ``import volmap`` stays cheap.  A verb and the package
+that holds it share a name (``volmap.carry``, ``volmap.mesh``, ``volmap.screen``): such a package is callable.
 """
 
+import sys
 from importlib import import_module
+from types import ModuleType
 from typing import Any
 
 _HOME = {
@@ -52,8 +55,21 @@ __all__ = sorted(_HOME)
 def __getattr__(name: str) -> Any:
     if name not in _HOME:
         raise AttributeError(f"module 'volmap' has no attribute {name!r}")
-    return getattr(import_module(f"volmap.{_HOME[name]}"), name)
+    home = import_module(f"volmap.{_HOME[name]}")
+    return home if _HOME[name] == name else getattr(home, name)
 
 
 def __dir__() -> list[str]:
     return __all__
+
+
+class _Front(ModuleType):
+    """This package: a part that is named after its verb becomes callable when Python binds it here."""
+
+    def __setattr__(self, name: str, value: Any) -> None:
+        if _HOME.get(name) == name and isinstance(value, ModuleType):
+            value.__class__ = type("Verb", (ModuleType,), {"__call__": staticmethod(getattr(value, name))})
+        super().__setattr__(name, value)
+
+
+sys.modules[__name__].__class__ = _Front
