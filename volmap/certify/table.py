@@ -110,13 +110,20 @@ def read_gate_table(path: str | Path | None = None) -> GateTable:
             remedy="check the name; start from a copy of the project's gates.toml",
         ) from fault
     except tomllib.TOMLDecodeError as fault:
-        raise InputError("the gate table is not TOML", where=where, found=str(fault)) from fault
+        raise InputError(
+            "the gate table is not TOML",
+            where=where,
+            found=str(fault),
+            expected="a TOML file",
+            remedy="start from a copy of the project's gates.toml",
+        ) from fault
     if document.get("schema") != SCHEMA:
         raise InputError(
             "the gate table has another schema",
             where=where,
             found=repr(document.get("schema")),
             expected=SCHEMA,
+            remedy="start from a copy of the project's gates.toml",
         )
     gates = document.get("gate", {})
     if not isinstance(gates, dict) or set(gates) != set(STATISTICS):
