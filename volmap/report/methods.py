@@ -96,10 +96,9 @@ def _ladder(known: Mapping[str, Any]) -> str:
         told = f", whose weight rose by factors of {factor} from {first} to at most {last} (0.02 V^(1/3))⁻²"
     elif known.get("ladder") is not None:
         told = f", whose weight rose over the ladder {_shown(known['ladder'])}"
-    if told and known.get("uncertainty_mm") is not None:
-        told += f", until the residual was within the declared {number(known['uncertainty_mm'])} mm"
-    elif told and known.get("uncertainty_voxels") is not None:
-        told += f", until the residual was within the declared {number(known['uncertainty_voxels'])} voxel"
+    for key, unit in (("uncertainty_mm", "mm"), ("uncertainty_voxels", "voxel")):
+        if told and known.get(key) is not None:
+            return f"{told}, and no further once the residual was within the declared {number(known[key])} {unit}"
     return told
 
 

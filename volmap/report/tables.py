@@ -159,9 +159,13 @@ PER_LABEL = "per_label"
 
 
 def _unit_of(kind: str, leaf: Any, unit: str, watched: Collection[str]) -> str:
-    """Unit of one entry: a length where its name says so, none for a pure number or a side count."""
+    """Unit of one entry: the one its name ends with, else the gate's; none for a pure number."""
     if kind.endswith("_mm") or kind.startswith("shell"):
         return "mm"
+    if kind.endswith("_voxels"):
+        return "voxel"
+    if kind == "coverage":
+        return ""
     if unit in ("1", "count", "ratio", "Dice"):
         return ""
     if unit == "mm":
@@ -183,7 +187,7 @@ def _named(key: str, names: Mapping[int, str]) -> str:
     if percentile:
         whole, part, rest = percentile.groups(default="")
         key = f"P{whole}.{part}{rest}" if part else f"P{whole}{rest}"
-    return scales.plain_text(key.removesuffix("_mm").replace("_", " "), 60)
+    return scales.plain_text(re.sub("_(mm|voxels)$", "", key).replace("_", " "), 60)
 
 
 def _amount(leaf: Any, unit: str) -> str:
