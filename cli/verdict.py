@@ -11,12 +11,14 @@ if TYPE_CHECKING:
 
 
 def show(certificate: Certificate, console: Console, *, more: dict[str, Any] | None = None) -> int:
-    """Print every gate and the verdict, or the JSON document (with `more`); returns 1 when a gate failed."""
+    """Print gates, notes and verdict, or the JSON document (with `more`); returns 1 when a gate failed."""
     from volmap.certify import as_document
     from volmap.types import Verdict
 
     for gate in certificate.gates:
         console.say(f"  {gate.verdict.value:12s} {gate.name}: {gate.sentence}")
+    for note in certificate.notes:
+        console.say(f"  {'note':12s} {note}")
     console.say(f"verdict: {certificate.verdict.value}. {certificate.status}")
     console.result(as_document(certificate) | (more or {}))
     return int(certificate.verdict is Verdict.FAIL)

@@ -30,6 +30,12 @@ def test_volume_ratio_is_target_over_source():
     assert not pair.refused
 
 
+def test_the_same_volume_twice_is_told():
+    # Law: equal digests of voxels and affine are one scan, whatever the files are called.
+    assert codes(screen_pair(ball(10), ball(10, name="b.nii")), Level.WARN) == {"same_volume"}
+    assert screen_pair(ball(10), ball(10, spacing=1.01, name="b.nii")).comparison == ()
+
+
 def test_limits_of_the_volume_ratio():
     assert screen_pair(ball(10), ball(10, spacing=1.44, name="b")).comparison == ()
     assert codes(screen_pair(ball(10), ball(10, spacing=1.45, name="b")), Level.WARN) == {"volume_ratio"}

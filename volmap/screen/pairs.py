@@ -87,8 +87,8 @@ def screen_pair(
 
 
 def compare(source: ScreenResult, target: ScreenResult, *, allow_topology_change: bool = False) -> PairResult:
-    """Compare two screened volumes: label sets, pieces, Euler numbers, volume ratios."""
-    findings = _of_label_sets(source, target)
+    """Compare two screened volumes: the same twice, label sets, pieces, Euler numbers, volume ratios."""
+    findings = _of_sameness(source, target) + _of_label_sets(source, target)
     ratios = []
     shared = sorted({e.label for e in source.labels} & {e.label for e in target.labels})
     for label in shared:
@@ -98,6 +98,14 @@ def compare(source: ScreenResult, target: ScreenResult, *, allow_topology_change
         ratios.append((label, b.volume_mm3 / a.volume_mm3))
         findings += _of_ratio(ratios[-1][1], where)
     return PairResult(source, target, tuple(ratios), by_gravity(findings))
+
+
+def _of_sameness(source: ScreenResult, target: ScreenResult) -> list[Finding]:
+    if source.sha256 != target.sha256:
+        return []
+    sentence = "hold the same voxels at the same places: the map between them says nothing about change"
+    where = f"{source.name} and {target.name}"
+    return [Finding(Level.WARN, "same_volume", where, sentence, "check that two scans were named")]
 
 
 def _of_label_sets(source: ScreenResult, target: ScreenResult) -> list[Finding]:
