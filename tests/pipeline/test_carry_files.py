@@ -12,7 +12,8 @@ from vtkmodules.util.numpy_support import vtk_to_numpy
 from vtkmodules.vtkIOXML import vtkXMLUnstructuredGridReader
 
 from volmap import pipeline
-from volmap.types import InputError
+from volmap.pipeline.files import turned_round
+from volmap.types import Grid, ImageVolume, InputError, LabelVolume
 
 HEADER = ["name", "x_mm", "y_mm", "z_mm"]
 
@@ -87,6 +88,18 @@ def test_the_scans_own_labels_arrive_on_the_other_scans(tmp_path, small_pair, re
     for label in (1, 2):
         assert 2 * ((a == label) & (b == label)).sum() / ((a == label).sum() + (b == label).sum()) > 0.93
     assert codes == ["carried-as-labels"]
+
+
+def test_a_volume_on_the_grid_it_is_carried_onto_is_told():
+    # law: where the grids of two scans differ, a volume's own grid tells which of them it belongs to
+    here, there = (
+        LabelVolume(Grid((2, 2, 2), np.diag([mm, mm, mm, 1.0])), np.ones((2, 2, 2), np.uint16), {}, name)
+        for mm, name in ((1.0, "here"), (2.0, "there"))
+    )
+    image = ImageVolume(there.grid, np.zeros((2, 2, 2), np.float32), "", "image")
+    assert [f.code for f in turned_round(image, here, there)] == ["turned-round"]
+    assert turned_round(image, there, here) == ()
+    assert turned_round(image, there, there) == ()
 
 
 def test_an_image_is_sampled_where_each_voxel_comes_from(tmp_path, small_pair):

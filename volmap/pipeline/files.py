@@ -280,7 +280,26 @@ def carry_file(
     start, end = (folder.target, folder.source) if reverse else (folder.source, folder.target)
     carried = carrying.carry(loaded, folder.map, reverse=reverse, onto=end.grid, reach_mm=start.grid.voxel_mm)
     _write_thing(out, carried.thing, overwrite)
-    return (*findings, *carried.findings)
+    return (*findings, *turned_round(loaded, start, end), *carried.findings)
+
+
+def turned_round(thing: Any, start: LabelVolume, end: LabelVolume) -> tuple[Finding, ...]:
+    """A volume on the very grid it is to be carried onto most likely goes the other way.
+
+    Parameters
+    ----------
+    thing : noun
+        What is carried; only volumes have a grid to tell by.
+    start, end : LabelVolume
+        The scan it is carried from, and the one it is carried onto.
+    """
+    if not isinstance(thing, LabelVolume | ImageVolume) or start.grid.same_place(end.grid):
+        return ()
+    if not thing.grid.same_place(end.grid):
+        return ()
+    sentence = f"has the voxels of {end.name}, but was carried as if it belonged to {start.name}"
+    remedy = "check the direction: --reverse carries from TARGET to SOURCE"
+    return (Finding(Level.WARN, "turned-round", thing.name, sentence, remedy),)
 
 
 def _endings(thing: Path) -> tuple[str, ...]:
