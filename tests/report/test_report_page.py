@@ -279,8 +279,8 @@ def test_values_of_gates_carry_the_units_they_have() -> None:
     [
         (
             {"first_weight": 0.01, "weight_factor": 3.1623, "last_weight": 10.0, "uncertainty_voxels": 0.1},
-            "rose by factors of 3.16 from 0.01 to at most 10 (0.02 V^(1/3))⁻², and no further once the residual "
-            "was within the declared 0.1 voxel",
+            "rose by factors of 3.16 from 0.01 to at most 10 (0.02 V^(1/3))⁻², and no further once "
+            "the residual was within the declared 0.1 voxel",
         ),
         ({"energy": "log-strain"}, "the distortion energy “log-strain”, symmetrised"),
         ({}, "minimising a distortion energy, symmetrised"),

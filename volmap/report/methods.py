@@ -98,7 +98,8 @@ def _ladder(known: Mapping[str, Any]) -> str:
         told = f", whose weight rose over the ladder {_shown(known['ladder'])}"
     for key, unit in (("uncertainty_mm", "mm"), ("uncertainty_voxels", "voxel")):
         if told and known.get(key) is not None:
-            return f"{told}, and no further once the residual was within the declared {number(known[key])} {unit}"
+            limit = f"{number(known[key])} {unit}"
+            return f"{told}, and no further once the residual was within the declared {limit}"
     return told
 
 
