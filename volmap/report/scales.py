@@ -12,7 +12,6 @@ import math
 from functools import cache
 
 import numpy as np
-from matplotlib.colors import LinearSegmentedColormap
 from numpy.typing import ArrayLike, NDArray
 
 from volmap.types import Verdict
@@ -94,11 +93,6 @@ def ratio_colours(position: ArrayLike) -> Floats:
 
 
 @cache
-def ratio_colormap() -> LinearSegmentedColormap:
-    """The same scale for matplotlib, from -1 to 1."""
-    return LinearSegmentedColormap.from_list("volume ratio", ratio_colours(np.linspace(-1, 1, 257)), N=513)
-
-
 def channels(colour: str) -> tuple[float, float, float]:
     """Red, green and blue, 0 to 1, of a colour written "#rrggbb"."""
     return int(colour[1:3], 16) / 255, int(colour[3:5], 16) / 255, int(colour[5:7], 16) / 255
