@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 from volmap.io.opening import existing_file, shown_name
 from volmap.types.errors import InputError
 
-FORMATS = {".stl": "stl", ".ply": "ply", ".off": "off", ".obj": "obj", ".vtk": "vtk", ".vtu": "vtu",
+FORMATS = {".stl": "stl", ".ply": "ply", ".off": "off", ".obj": "obj", ".vtk": "vtk",
            ".msh": "gmsh", ".mesh": "medit", ".wkt": "wkt"}  # fmt: skip
 LARGEST_MM = 1e7
 
