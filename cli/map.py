@@ -42,12 +42,12 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         "--one-to-one",
         action=argparse.BooleanOptionalAction,
         default=True,
-        help="keep the image of the outer boundary from crossing itself",
+        help="keep the image of the outer boundary from crossing itself (default: yes)",
     )
     parser.add_argument(
         "--allow-topology-change",
         action="store_true",
-        help="go on when pieces or handles differ; the certificate fails that gate",
+        help="go on when pieces or handles differ; the certificate warns of it",
     )
     parser.add_argument(
         "--seed", type=whole_number(0), default=0, help="of the subsamples the alignment uses"
