@@ -213,6 +213,7 @@ def read_certificate(path: Path) -> Certificate:
         raise InputError(
             "is not a map folder",
             where=shown_name(path.absolute()),
+            found="" if path.exists() else "nothing of that name",
             expected=f"a folder that `volmap map` has written, with {CERTIFICATE}",
             remedy="check the name, or map the pair first",
         )
