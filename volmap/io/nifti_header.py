@@ -174,7 +174,7 @@ def _parsed(stream: BinaryIO, where: str) -> dict[str, Any]:
     first = stream.read(4)
     sizes = {int.from_bytes(first, "little"), int.from_bytes(first, "big")} if len(first) == 4 else set()
     if not sizes & {348, 540}:
-        raise _not_nifti(where, f"a file that begins with {first!r}")
+        raise _not_nifti(where, f"a file that begins with {first.decode('latin-1')!r}")
     kind: Any = nib.Nifti1Header if 348 in sizes else nib.Nifti2Header
     length = max(sizes & {348, 540})
     block = first + stream.read(length - 4)
