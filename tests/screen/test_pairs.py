@@ -1,6 +1,7 @@
 """Screening of pairs."""
 
 import json
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -34,6 +35,17 @@ def test_the_same_volume_twice_is_told():
     # Law: equal digests of voxels and affine are one scan, whatever the files are called.
     assert codes(screen_pair(ball(10), ball(10, name="b.nii")), Level.WARN) == {"same_volume"}
     assert screen_pair(ball(10), ball(10, spacing=1.01, name="b.nii")).comparison == ()
+
+
+def test_two_names_for_one_number_are_told():
+    # Law: labels are matched by number, so only names that both tables give can disagree.
+    def named(name, names):
+        return replace(ball(10 if name == "a.nii" else 11, name=name), names=names)
+
+    liver, spleen = named("a.nii", {1: "liver"}), named("b.nii", {1: "spleen"})
+    assert codes(screen_pair(liver, spleen), Level.WARN) == {"names_differ"}
+    assert screen_pair(liver, named("b.nii", {1: "liver"})).comparison == ()
+    assert screen_pair(liver, named("b.nii", {})).comparison == ()
 
 
 def test_limits_of_the_volume_ratio():

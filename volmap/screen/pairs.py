@@ -87,13 +87,14 @@ def screen_pair(
 
 
 def compare(source: ScreenResult, target: ScreenResult, *, allow_topology_change: bool = False) -> PairResult:
-    """Compare two screened volumes: the same twice, label sets, pieces, Euler numbers, volume ratios."""
+    """Compare two screened volumes: sameness, label sets, names, pieces, Euler numbers, volume ratios."""
     findings = _of_sameness(source, target) + _of_label_sets(source, target)
     ratios = []
     shared = sorted({e.label for e in source.labels} & {e.label for e in target.labels})
     for label in shared:
         a, b = source.of_label(label), target.of_label(label)
         where = f"{source.name} and {target.name}, {a.name}"
+        findings += _of_names(a, b, f"{source.name} and {target.name}, label {label}")
         findings += _of_topology(a, b, where, allow_topology_change)
         ratios.append((label, b.volume_mm3 / a.volume_mm3))
         findings += _of_ratio(ratios[-1][1], where)
@@ -119,6 +120,14 @@ def _of_label_sets(source: ScreenResult, target: ScreenResult) -> list[Finding]:
             remedy = "segment it in both, or remove it from the other"
             found.append(Finding(Level.REFUSE, "missing_label", here.name, sentence, remedy))
     return found
+
+
+def _of_names(a: LabelScreen, b: LabelScreen, where: str) -> list[Finding]:
+    """Labels are matched by number: two names for one number may be two structures."""
+    if a.name == b.name or f"label {a.label}" in (a.name, b.name):
+        return []
+    sentence = f"is called {a.name} in one and {b.name} in the other; labels are matched by number"
+    return [Finding(Level.WARN, "names_differ", where, sentence, "check both tables of names")]
 
 
 def _of_topology(a: LabelScreen, b: LabelScreen, where: str, allowed: bool) -> list[Finding]:
