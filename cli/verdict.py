@@ -19,6 +19,8 @@ def show(certificate: Certificate, console: Console, *, more: dict[str, Any] | N
         console.say(f"  {gate.verdict.value:12s} {gate.name}: {gate.sentence}")
     for note in certificate.notes:
         console.say(f"  {'note':12s} {note}")
-    console.say(f"verdict: {certificate.verdict.value}. {certificate.status}")
+    unseen = sum(gate.verdict is Verdict.NOT_ASSESSED for gate in certificate.gates)
+    beside = f" ({unseen} of {len(certificate.gates)} gates not assessed)" if unseen else ""
+    console.say(f"verdict: {certificate.verdict.value}{beside}. {certificate.status}")
     console.result(as_document(certificate) | (more or {}))
     return int(certificate.verdict is Verdict.FAIL)

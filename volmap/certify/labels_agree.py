@@ -50,7 +50,9 @@ def labels_agree(evidence: Evidence, limit: Limit) -> Gate:
             f"{t['pieces']} and {t['euler']} in target"
         )
     sentence = (
-        "; ".join(parts) + "." if parts else f"All {len(source)} labels agree in pieces and Euler number."
+        "; ".join(parts) + "."
+        if parts
+        else f"Every label agrees in pieces and Euler number ({len(source)} in all)."
     )
     counts = {"labels": len(lonely), "topology": len(changed)}
     return judged(limit, counts, value=value, sentence=sentence[0].upper() + sentence[1:])
