@@ -144,3 +144,14 @@ def test_faults_of_use_that_only_the_verb_can_see(arguments, said, capsys, tmp_p
     assert said in told.err
     assert "--help" in told.err
     assert list(tmp_path.iterdir()) == []
+
+
+def test_energies_offered_are_those_of_the_library():
+    # Law: the command line names them itself, so that its help starts at once; the two lists are one.
+    from volmap_cli import map as verb
+
+    from volmap.kernels.energies import ENERGIES
+    from volmap.mapping import MapSettings
+
+    assert sorted(verb.ENERGIES) == sorted(ENERGIES)
+    assert MapSettings().energy == verb.ENERGIES[0]
