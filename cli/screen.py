@@ -87,7 +87,8 @@ def _mend(options: argparse.Namespace, console: Console) -> int:
     mended = pipeline.mend_file(options.files[0], options.mend, overwrite=options.overwrite)
     for change in mended.changes:
         console.say(change.sentence)
-    console.say(f"{len(mended.changes)} changes; wrote {options.mend}")
+    many = "1 change" if len(mended.changes) == 1 else f"{len(mended.changes)} changes"
+    console.say(f"{many}; wrote {options.mend}")
     console.result({"changes": [change.as_dict() for change in mended.changes], "written": options.mend.name})
     console.end()
     return 0

@@ -141,7 +141,7 @@ def _of_size(entry: LabelScreen, where: str, edge_mm: float | None) -> list[Find
         sentence = f"has {_count(entry.voxels, 'voxel')}, too few to mesh (at least {SMALLEST_LABEL_VOXELS})"
         return [Finding(Level.REFUSE, "too_small", where, sentence, "remove it, or segment on finer voxels")]
     if edge_mm is not None and entry.volume_mm3 < 20 * edge_mm**3:
-        sentence = f"its {entry.volume_mm3:.4g} mm3 give few tets of edge {edge_mm:g} mm"
+        sentence = f"its {entry.volume_mm3:.1f} mm3 give few tets of edge {edge_mm:g} mm"
         return [Finding(Level.WARN, "coarse", where, sentence, "use a shorter edge")]
     return []
 
@@ -174,7 +174,7 @@ def _of_cavities(entry: LabelScreen, cavities: list[Region], where: str, limit: 
         found.append(Finding(Level.WARN, "cavity_specks", where, sentence, "--mend fills them"))
     if len(cavities) > len(tiny):
         many = _count(len(cavities) - len(tiny), "cavity")
-        sentence = f"encloses {many} of background, {entry.cavity_mm3:.4g} mm3"
+        sentence = f"encloses {many} of background, {entry.cavity_mm3:.1f} mm3"
         remedy = "--mend fills cavities that are not meant"
         found.append(Finding(Level.NOTE, "cavities", where, sentence, remedy))
     return found

@@ -137,7 +137,7 @@ class _Work:
         self.changes.append(
             Change(
                 kind, label, to_label, region.voxels, mm3, (x, y, z),
-                f"{kind}: {region.voxels} voxels ({mm3:.4g} mm3) near ({x:.1f}, {y:.1f}, {z:.1f}) mm, "
+                f"{kind}: {region.voxels} voxels ({mm3:.1f} mm3) near ({x:.1f}, {y:.1f}, {z:.1f}) mm, "
                 f"from {self.volume.name_of(label)} to {self.volume.name_of(to_label)}",
             )
         )  # fmt: skip
