@@ -274,6 +274,13 @@ def test_values_of_gates_carry_the_units_they_have() -> None:
     assert tables.told(None, "mm", names) == ["–"]
 
 
+def test_the_methods_tell_the_edge_of_the_mesh_not_the_one_asked_for() -> None:
+    given = make_inputs(3)
+    meshed = dataclasses.replace(given.certificate, mesh={"edge_mm": 3.15})
+    told = " ".join(methods.methods(dataclasses.replace(given, certificate=meshed)))
+    assert "an edge length of 3.15 mm" in told
+
+
 @pytest.mark.parametrize(
     ("settings", "words"),
     [

@@ -139,7 +139,7 @@ def _specks(labels: LabelVolume, specks: int) -> Finding:
 
 def _retried(labels: LabelVolume, n_tried: int, edge_mm: float) -> Finding:
     return Finding(
-        Level.NOTE,
+        Level.WARN,
         "retried",
         labels.name,
         f"{n_tried} attempts were made; the one kept has edges of {edge_mm:.3g} mm",

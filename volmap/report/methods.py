@@ -50,8 +50,9 @@ def methods(inputs: ReportInput) -> list[str]:
 def _meshing(inputs: ReportInput, known: Mapping[str, Any]) -> str:
     mesh = inputs.map.mesh
     parts = [f"{number(len(mesh.points))} points and {number(len(mesh.tets))} tetrahedra"]
-    if known.get("edge_mm") is not None:
-        parts.append(f"an edge length of {number(known['edge_mm'])} mm")
+    edge_mm = inputs.certificate.mesh.get("edge_mm", known.get("edge_mm"))  # as meshed; else as asked for
+    if edge_mm is not None:
+        parts.append(f"an edge length of {number(edge_mm)} mm")
     angle = inputs.certificate.mesh.get("min_dihedral_deg")
     if angle is not None:
         parts.append(f"a smallest dihedral angle of {number(angle)}°")
