@@ -12,6 +12,9 @@ HELP = "synthetic serial scans with known motion"
 EXAMPLE = "volmap phantom gel-column --out column"
 
 
+BROKEN = "broken"
+
+
 def arguments(parser: argparse.ArgumentParser) -> None:
     """Options of this verb."""
     parser.add_argument("name", nargs="?", metavar="NAME", help="which phantom")
@@ -27,11 +30,11 @@ def run(options: argparse.Namespace, console: Console) -> int:
     """Make one phantom, or list them."""
     import volmap_phantoms as phantoms
 
-    names = phantoms.names()
+    names = dict(phantoms.names()) | {BROKEN: "one bad input per thing that can be wrong with one"}
     if options.list:
         for name, line in names.items():
             console.say(f"{name:16s} {line}")
-        console.result({"phantoms": dict(names)})
+        console.result({"phantoms": names})
         console.end()
         return 0
     if options.name not in names:
@@ -40,9 +43,21 @@ def run(options: argparse.Namespace, console: Console) -> int:
     if options.out is None:
         raise UsageError(f"--out DIR is missing; for instance {EXAMPLE}")
     console.progress("phantom", 0, 0, options.name)
-    phantoms.write(phantoms.make(options.name, seed=options.seed, voxel_mm=options.voxel), options.out)
+    if options.name == BROKEN:
+        _write_broken(options.out)
+    else:
+        phantoms.write(phantoms.make(options.name, seed=options.seed, voxel_mm=options.voxel), options.out)
     written = sorted(p.name for p in options.out.iterdir())
     console.say(f"wrote {options.out}: {', '.join(written)}")
     console.result({"written": written})
     console.end()
     return 0
+
+
+def _write_broken(out: Path) -> None:
+    from volmap_phantoms import broken
+
+    from volmap.io.atomic import whole_folder
+
+    with whole_folder(out) as place:
+        broken.make_all(place)

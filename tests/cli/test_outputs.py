@@ -170,3 +170,19 @@ def test_progress_elsewhere_is_a_line_a_stage_and_one_now_and_then(monkeypatch, 
         console.progress(stage, step, 5)
     lines = [line.split("  ")[-1] for line in capsys.readouterr().err.splitlines()]
     assert lines == ["mesh 1/5", "mesh 4/5", "map 1/5"]
+
+
+def test_the_broken_set_can_be_written(tmp_path, capsys):
+    """As many folders as `make_all` names, each with its input; a taken place is refused."""
+    from volmap_phantoms import broken
+
+    named = {entry.name for entry in broken.make_all(tmp_path / "twin")}
+    out = tmp_path / "set"
+    assert main(["phantom", "broken", "--out", str(out), "--quiet"]) == 0
+    assert (
+        {p.name for p in out.iterdir()}
+        == {p.name for p in (tmp_path / "twin").iterdir()}
+        >= named - {"missing-file"}
+    )
+    assert main(["phantom", "broken", "--out", str(out), "--quiet"]) == 3
+    capsys.readouterr()
