@@ -5,9 +5,9 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from volmap.kernels.barrier import add_barrier
 from volmap.kernels.contact import (
     Pairs,
-    add_barrier,
     longest_step,
     longest_step_of,
     near_pairs,
