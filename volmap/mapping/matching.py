@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from volmap.kernels import closest
 from volmap.kernels.blocksystem import Pattern
 from volmap.kernels.observations import Observations, joined
-from volmap.mapping.patches import Patch, areas
+from volmap.mapping.patches import Patch, areas, face_normals
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -23,12 +23,6 @@ def edge_numbers(pattern: Pattern, first: Ints, second: Ints) -> Ints:
     wanted = np.minimum(first, second) * n + np.maximum(first, second)
     place = np.minimum(np.searchsorted(keys, wanted), len(keys) - 1)
     return np.asarray(np.where(keys[place] == wanted, place, -1))
-
-
-def face_normals(points: Floats, triangles: Ints) -> Floats:
-    """(k, 3) normals, length twice the area."""
-    p = points[triangles]
-    return np.asarray(np.cross(p[:, 1] - p[:, 0], p[:, 2] - p[:, 0]))
 
 
 def unit(vectors: Floats) -> Floats:

@@ -41,11 +41,15 @@ class Patch:
     target_share: NDArray[np.float64]
 
 
+def face_normals(points: NDArray[np.float64], triangles: NDArray[np.int64]) -> NDArray[np.float64]:
+    """(k, 3) normals, length twice the area."""
+    p = points[triangles]
+    return np.asarray(np.cross(p[:, 1] - p[:, 0], p[:, 2] - p[:, 0]))
+
+
 def areas(points: NDArray[np.float64], triangles: NDArray[np.int64]) -> NDArray[np.float64]:
     """(k,) areas, mm2."""
-    p = points[triangles]
-    normal = np.cross(p[:, 1] - p[:, 0], p[:, 2] - p[:, 0])
-    return np.asarray(0.5 * np.linalg.norm(normal, axis=1))
+    return np.asarray(0.5 * np.linalg.norm(face_normals(points, triangles), axis=1))
 
 
 @dataclass(frozen=True)
