@@ -4,9 +4,9 @@ import numpy as np
 import pytest
 from label_shapes import affine_of, ball, centres, volume_of
 
-from volmap.mesh.facts import is_thin
 from volmap.mesh.isotropic import signed_distance, stretched, subdivided, subdivision
 from volmap.mesh.prepare import prepare, targets
+from volmap.mesh.shapes import is_thin
 from volmap.types import Grid, InputError, LabelVolume
 
 

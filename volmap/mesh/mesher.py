@@ -65,14 +65,19 @@ def mesh(
     2007 and Boltcheva, Yvinec & Boissonnat 2009), improved by guarded relocation.  When a label misses its
     volume or falls apart, finer attempts follow and the best one is kept.
     """
-    settings = settings or MeshSettings()
-    prepared = prepare(labels)
-    _require_affordable(settings, _body_volume(prepared), labels.name)
+    return mesh_prepared(prepare(labels), labels, settings or MeshSettings(), progress)
+
+
+def mesh_prepared(
+    prepared: Prepared, labels: LabelVolume, settings: MeshSettings, progress: Progress
+) -> MeshResult:
+    """`mesh` of a volume that has been prepared already."""
+    _require_affordable(settings, prepared.body_volume, labels.name)
     best: tuple[float, Attempt, QualityTable] | None = None
     n_tried = 0
-    for rung in rungs(settings, _body_volume(prepared), prepared.grid.voxel_mm):
+    for rung in rungs(settings, prepared.body_volume, prepared.grid.voxel_mm):
         attempt = attempted(prepared, rung, progress, name=labels.name)
-        table = _table(attempt, prepared, labels)
+        table = table_of(attempt, prepared, labels)
         n_tried += 1
         shortfall = sum(row.voxel_mm3 for row in wrong_rows(table))
         shortfall += 1e12 * (table.min_dihedral_deg < LEAST_DIHEDRAL_DEG or table.inverted_tets > 0)
@@ -94,7 +99,8 @@ def mesh(
     return MeshResult(kept.mesh, table, findings, used)
 
 
-def _table(attempt: Attempt, prepared: Prepared, labels: LabelVolume) -> QualityTable:
+def table_of(attempt: Attempt, prepared: Prepared, labels: LabelVolume) -> QualityTable:
+    """How good an attempt is, held against the voxels."""
     facts = voxel_facts(prepared, attempt.targets)
     return quality_table(attempt.mesh, facts, {k: labels.name_of(k) for k in facts})
 
@@ -118,11 +124,6 @@ def _require_affordable(settings: MeshSettings, volume_mm3: float, name: str) ->
             remedy=f"ask for edges of {1.01 * lattice_edge(volume_mm3, MOST_TETS):.3g} mm or longer",
             refused=True,
         )
-
-
-def _body_volume(prepared: Prepared) -> float:
-    """Of all labelled voxels in the mesher's frame, mm3."""
-    return float((prepared.labels > 0).sum() * prepared.voxel_volume)
 
 
 def rungs(settings: MeshSettings, volume_mm3: float, voxel_mm: float) -> tuple[Rung, ...]:

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import ndimage
 
 from volmap.kernels.labelfield import LabelField
 from volmap.mesh.isotropic import subdivided, subdivision
+from volmap.mesh.shapes import LabelShape, label_shapes
 from volmap.types.errors import InputError
 from volmap.types.grid import Grid
 from volmap.types.volumes import LabelVolume
@@ -20,7 +21,7 @@ LEAST_PIECE = 0.5  # of the edge cubed: smaller pieces are not asked of the mesh
 
 @dataclass(frozen=True, eq=False)
 class Prepared:
-    """A label volume, ready to be meshed.
+    """A label volume, ready to be meshed, with any edge and any number of times.
 
     The mesher's own frame has its axes along the voxel axes, in mm; its labels are 0, 1, 2, ... in the order
     of `label_ids`.
@@ -62,6 +63,16 @@ class Prepared:
     def voxel_volume(self) -> float:
         """Of an uncut voxel in the mesher's frame (which has no shear), mm3."""
         return float(np.prod(self.coarse_spacing))
+
+    @cached_property
+    def shapes(self) -> tuple[LabelShape, ...]:
+        """Of the labels above 0, worked out once for all meshes of the volume."""
+        return label_shapes(self.labels)
+
+    @property
+    def body_volume(self) -> float:
+        """Of all labelled voxels in the mesher's frame, mm3."""
+        return float(sum(int(shape.piece_voxels.sum()) for shape in self.shapes) * self.voxel_volume)
 
     def field(self, width_voxels: float) -> LabelField:
         """The smoothed indicators of the fine voxels."""
@@ -132,12 +143,10 @@ class Targets:
 def targets(prepared: Prepared, edge_mm: float) -> Targets:
     """Volumes and pieces the voxels ask for; a body must not swell to make up for specks no mesh can show."""
     n = len(prepared.label_ids)
-    total = np.bincount(prepared.labels.ravel(), minlength=n) * prepared.voxel_volume
-    specks, pieces = np.zeros(n), np.ones(n, np.int64)
-    for label in range(1, n):
-        part, n_parts = ndimage.label(prepared.labels == label)
-        if n_parts > 1:
-            sizes = np.bincount(part.ravel())[1:] * prepared.voxel_volume
-            small = (sizes < LEAST_PIECE * edge_mm**3) & (sizes < sizes.max())
-            specks[label], pieces[label] = sizes[small].sum(), (~small).sum()
+    total, specks, pieces = np.zeros(n), np.zeros(n), np.ones(n, np.int64)
+    for label, shape in enumerate(prepared.shapes, start=1):
+        sizes = shape.piece_voxels * prepared.voxel_volume
+        total[label] = shape.piece_voxels.sum() * prepared.voxel_volume
+        small = (sizes < LEAST_PIECE * edge_mm**3) & (sizes < sizes.max())
+        specks[label], pieces[label] = sizes[small].sum(), (~small).sum()
     return Targets(total - specks, specks, pieces)
