@@ -73,9 +73,9 @@ def used_only(points: Floats, tets: Ints) -> tuple[Floats, Ints, Ints]:
     kept : (k,) int64
         Old numbers of the points.
     """
-    kept = np.unique(tets)
-    new = np.full(len(points), -1, np.int64)
-    new[kept] = np.arange(len(kept))
+    used = np.zeros(len(points), np.bool_)
+    used[tets] = True
+    kept, new = np.flatnonzero(used), np.cumsum(used) - 1
     return points[kept], new[tets], kept
 
 
@@ -149,7 +149,17 @@ def split_edges(tets: Ints, edges: Ints, edge_of_tet: Ints, *, middle: Ints, ran
 
 def edge_lengths(points: Floats, edges: Ints) -> Floats:
     """(e,) lengths, mm."""
-    return np.asarray(np.linalg.norm(points[edges[:, 0]] - points[edges[:, 1]], axis=1))
+    lengths = np.empty(len(edges))
+    _fill_lengths(points, edges, lengths)
+    return lengths
+
+
+@kernel
+def _fill_lengths(points, edges, lengths):  # type: ignore[no-untyped-def]
+    for e in range(edges.shape[0]):
+        a, b = edges[e, 0], edges[e, 1]
+        x, y, z = points[a, 0] - points[b, 0], points[a, 1] - points[b, 1], points[a, 2] - points[b, 2]
+        lengths[e] = np.sqrt(x * x + y * y + z * z)
 
 
 def longest_first(lengths: Floats) -> Ints:

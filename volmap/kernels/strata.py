@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.lattice import edge_lengths
-from volmap.kernels.topology import interfaces, match_faces, unique_edges
+from volmap.kernels.topology import interfaces, label_sets, unique_edges
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -60,21 +60,6 @@ def triangle_edges(triangles: Ints, n_points: int) -> tuple[Ints, Ints]:
     return np.stack([keys // n_points, keys % n_points], axis=1), counts
 
 
-def label_sets(tets: Ints, labels: Ints, n_points: int) -> Ints:
-    """(n, 8) labels around each point, ascending, filled up with -1; points of the hull also have 0."""
-    _, _, hull = match_faces(tets)
-    on_hull = np.unique(tets[hull // 4][np.arange(4)[None, :] != (hull % 4)[:, None]])
-    span = np.int64(labels.max() + 1)
-    keys = np.unique(np.concatenate([(tets * span + labels[:, None]).ravel(), on_hull * span]))
-    point, label = keys // span, keys % span
-    first = np.searchsorted(point, np.arange(n_points))
-    place = np.arange(len(keys)) - first[point]
-    sets = np.full((n_points, MOST_TIES), -1, np.int64)
-    fits = place < MOST_TIES
-    sets[point[fits], place[fits]] = label[fits]
-    return sets
-
-
 def _kinds(tets: Ints, labels: Ints, edges: Ints, counts: Ints, n_points: int) -> Ints:
     """Kind of each point: curves are interface edges that other than two triangles hold."""
     kind = np.full(n_points, BACKGROUND, np.int64)
@@ -88,10 +73,10 @@ def _kinds(tets: Ints, labels: Ints, edges: Ints, counts: Ints, n_points: int) -
 
 def _compressed(pairs: Ints, n_points: int) -> tuple[Ints, Ints]:
     """Second of each pair, grouped by the first."""
-    pairs = pairs[np.lexsort((pairs[:, 1], pairs[:, 0]))]
     start = np.zeros(n_points + 1, np.int64)
     np.cumsum(np.bincount(pairs[:, 0], minlength=n_points), out=start[1:])
-    return start, np.ascontiguousarray(pairs[:, 1])
+    keys = np.sort(pairs[:, 0] * np.int64(n_points) + pairs[:, 1])
+    return start, keys % n_points
 
 
 def _neighbours(inner: Ints, surface: Ints, curve: NDArray[np.bool_], kind: Ints) -> tuple[Ints, Ints]:
@@ -127,15 +112,17 @@ def new_strata(points: Floats, tets: Ints, labels: Ints) -> Strata:
     triangles, sides = label_interfaces(tets, labels)
     surface, counts = triangle_edges(triangles, len(points))
     kind = _kinds(tets, labels, surface, counts, len(points))
-    inner, _ = unique_edges(tets[labels > 0])
-    start, neighbour = _neighbours(inner, surface, counts != 2, kind)
+    edges, edge_of_tet = unique_edges(tets)
+    inner = np.zeros(len(edges), np.bool_)
+    inner[edge_of_tet[labels > 0]] = True
+    start, neighbour = _neighbours(edges[inner], surface, counts != 2, kind)
     return Strata(
         kind=kind,
-        ties=label_sets(tets, labels, len(points)),
+        ties=label_sets(tets, labels, len(points), most=MOST_TIES),
         start=start,
         neighbour=neighbour,
         triangles=triangles,
         sides=sides,
         normals=point_normals(points, triangles),
-        size_mm=_sizes(points, unique_edges(tets)[0]),
+        size_mm=_sizes(points, edges),
     )
