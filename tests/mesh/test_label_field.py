@@ -1,9 +1,18 @@
 """Smoothed label indicators against a slow twin, a general spline library and closed forms."""
 
+from itertools import pairwise
+
 import numpy as np
 from scipy.interpolate import BSpline
 
-from volmap.kernels.labelfield import LabelField, cut_edges, evaluate, new_scratch, owners
+from volmap.kernels.labelfield import (
+    LabelField,
+    cut_edges,
+    evaluate,
+    new_scratch,
+    owners,
+    voxel_changes,
+)
 from volmap.kernels.tie import TIED, project
 
 CUBIC = BSpline.basis_element([-2, -1, 0, 1, 2], extrapolate=False)
@@ -126,3 +135,18 @@ def test_projection_finds_the_line_and_the_point_where_more_labels_tie():
     assert project(field, place, ties, normals, 0, 4.0, scratch)
     values = slow_values(field, place)
     assert np.ptp(values) < 4 * TIED
+
+
+def test_voxel_changes_along_edges_are_those_of_a_slow_walk():
+    field, rng = random_field(), np.random.default_rng(8)
+    points = rng.uniform(-1.0, 9.0, (40, 3))  # some outside the array, where the label is 0
+    edges, owner = rng.integers(0, 40, (100, 2)), rng.integers(0, 4, 40)
+    found = voxel_changes(field, points, owner, edges, np.int64(11))
+    for (a, b), changes in zip(edges, found, strict=True):
+        run = [owner[a]]
+        for place in np.linspace(points[a], points[b], 13)[1:-1]:
+            voxel = np.rint(place / field.spacing).astype(int)
+            inside = ((voxel >= 0) & (voxel < field.labels.shape)).all()
+            run.append(field.labels[tuple(voxel)] if inside else 0)
+        run.append(owner[b])
+        assert changes == sum(one != other for one, other in pairwise(run))

@@ -35,6 +35,14 @@ def test_tets_are_those_of_sommerville(box):
     require_conforming(tets)
 
 
+def test_lattice_near_some_points_is_that_part_of_the_lattice(box):
+    points, tets = box
+    near = np.random.default_rng(4).random(len(points)) < 0.2
+    same_points, part = bcc(np.zeros(3), np.full(3, 2.0), 1.0, lambda places: near[: len(places)])
+    assert (same_points == points).all()
+    assert (part == tets[near[tets].any(axis=1)]).all()
+
+
 def test_lattice_covers_its_box(box):
     points, tets = box
     corners = points[tets]
@@ -49,7 +57,7 @@ def test_bisection_keeps_volume_hull_and_conformity(box):
     points, tets = box
     marked = np.zeros(len(tets), bool)
     marked[:5] = True
-    new_points, new_tets = bisected(points, tets, marked)
+    new_points, new_tets = bisected(points, tets, *unique_edges(tets), marked=marked)
     assert len(new_tets) > len(tets)
     assert signed_volumes(new_points, new_tets).min() > 0
     assert np.isclose(signed_volumes(new_points, new_tets).sum(), signed_volumes(points, tets).sum())
@@ -90,6 +98,6 @@ def test_repeated_bisection_keeps_the_shapes(box):
     points, tets = box
     rng = np.random.default_rng(1)
     for _ in range(4):
-        points, tets = bisected(points, tets, rng.random(len(tets)) < 0.05)
+        points, tets = bisected(points, tets, *unique_edges(tets), marked=rng.random(len(tets)) < 0.05)
     require_conforming(tets)
     assert dihedral_degrees(points, tets).min() > 44.9

@@ -185,6 +185,34 @@ def owners(field, points, scratch):  # type: ignore[no-untyped-def]
     return found
 
 
+@kernel
+def voxel_changes(field, points, owner, edges, n_samples):  # type: ignore[no-untyped-def]
+    """(m,) int64, how often the label changes along each edge.
+
+    From the label at its first point (`owner`), by the voxels at places spread evenly inside it, to the label
+    at its second point.
+    """
+    labels, spacing = field.labels, field.spacing
+    changes = np.zeros(edges.shape[0], np.int64)
+    for e in range(edges.shape[0]):
+        a, b = edges[e, 0], edges[e, 1]
+        before = owner[a]
+        for q in range(n_samples):
+            share = (q + 1.0) / (n_samples + 1.0)
+            i = int(np.rint((points[a, 0] + share * (points[b, 0] - points[a, 0])) / spacing[0]))
+            j = int(np.rint((points[a, 1] + share * (points[b, 1] - points[a, 1])) / spacing[1]))
+            k = int(np.rint((points[a, 2] + share * (points[b, 2] - points[a, 2])) / spacing[2]))
+            here = np.int64(0)
+            if 0 <= i < labels.shape[0] and 0 <= j < labels.shape[1] and 0 <= k < labels.shape[2]:
+                here = np.int64(labels[i, j, k])
+            if here != before:
+                changes[e] += 1
+            before = here
+        if owner[b] != before:
+            changes[e] += 1
+    return changes
+
+
 @inner_kernel
 def _holds(sets, row, label):  # type: ignore[no-untyped-def]
     """Whether a row of a table of label sets (filled with -1) holds a label."""

@@ -6,12 +6,13 @@ angles 60 and 90 degrees, edges a and a sqrt(3)/2.
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.compiled import inner_kernel, kernel
 from volmap.kernels.tets import signed_volumes
-from volmap.kernels.topology import unique_edges
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -28,18 +29,27 @@ def oriented(points: Floats, tets: Ints) -> Ints:
     return turned
 
 
-def _axis_tets(corner: Ints, centre: Ints, axis: int) -> Ints:
-    """The four tets around each face between two cubes that follow each other along an axis."""
+def _axis_tets(corner: Ints, centre: Ints, near: NDArray[np.bool_] | None, axis: int) -> Ints:
+    """The four tets around each face between two cubes that follow each other along an axis; positive."""
     order = (axis, (axis + 1) % 3, (axis + 2) % 3)
     centre, corner = np.transpose(centre, order), np.transpose(corner, order)[1:-1]
     before, after = centre[:-1].ravel(), centre[1:].ravel()
     ring = [corner[:, :-1, :-1], corner[:, 1:, :-1], corner[:, 1:, 1:], corner[:, :-1, 1:]]
     quads = [c.ravel() for c in ring]
-    tets = [np.stack([before, after, quads[i], quads[(i + 1) % 4]], axis=1) for i in range(4)]
+    tets = []
+    for i in range(4):
+        corners = (before, after, quads[i], quads[(i + 1) % 4])
+        kept = slice(None) if near is None else near[before] | near[after] | near[quads[i]] | near[corners[3]]
+        tets.append(np.stack([c[kept] for c in corners], axis=1))
     return np.concatenate(tets)
 
 
-def bcc(low: Floats, high: Floats, cell_mm: float) -> tuple[Floats, Ints]:
+def bcc(
+    low: Floats,
+    high: Floats,
+    cell_mm: float,
+    near: Callable[[Floats], NDArray[np.bool_]] | None = None,
+) -> tuple[Floats, Ints]:
     """Lattice tets that cover a box.
 
     Parameters
@@ -47,10 +57,13 @@ def bcc(low: Floats, high: Floats, cell_mm: float) -> tuple[Floats, Ints]:
     low, high : (3,) float64, mm
         The first cube corner is at `low`; the tets reach at least half a cell beyond `high`.
     cell_mm : float
+    near : callable, optional
+        Given (n, 3) points, tells which of them matter; tets without such a point are left out.
 
     Returns
     -------
     points : (n, 3) float64, mm
+        All of the box.
     tets : (m, 4) int64
         Positive.
     """
@@ -60,8 +73,8 @@ def bcc(low: Floats, high: Floats, cell_mm: float) -> tuple[Floats, Ints]:
     corner = np.arange(len(corners)).reshape(n + 1)
     centre = len(corners) + np.arange(len(centres)).reshape(n)
     points = low + cell_mm * np.concatenate([corners, centres])
-    tets = np.concatenate([_axis_tets(corner, centre, axis) for axis in range(3)])
-    return points, oriented(points, tets)
+    kept = None if near is None else near(points)
+    return points, np.concatenate([_axis_tets(corner, centre, kept, axis) for axis in range(3)])
 
 
 def used_only(points: Floats, tets: Ints) -> tuple[Floats, Ints, Ints]:
@@ -169,8 +182,16 @@ def longest_first(lengths: Floats) -> Ints:
     return rank
 
 
-def bisected(points: Floats, tets: Ints, marked: NDArray[np.bool_]) -> tuple[Floats, Ints]:
+def bisected(
+    points: Floats, tets: Ints, edges: Ints, edge_of_tet: Ints, *, marked: NDArray[np.bool_]
+) -> tuple[Floats, Ints]:
     """Halve the longest edge of the marked tets, and whatever conformity asks for (Rivara 1984).
+
+    Parameters
+    ----------
+    edges, edge_of_tet : arrays
+        Of these tets; see `topology.unique_edges`.
+    marked : (m,) bool
 
     Returns
     -------
@@ -179,7 +200,6 @@ def bisected(points: Floats, tets: Ints, marked: NDArray[np.bool_]) -> tuple[Flo
     tets : (m', 4) int64
         Positive.
     """
-    edges, edge_of_tet = unique_edges(tets)
     rank = longest_first(edge_lengths(points, edges))
     longest = edge_of_tet[np.arange(len(tets)), rank[edge_of_tet].argmin(axis=1)]
     cut = np.zeros(len(edges), bool)

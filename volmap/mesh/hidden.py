@@ -5,10 +5,9 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.kernels.labelfield import LabelField, Scratch, owners
+from volmap.kernels.labelfield import LabelField, Scratch, owners, voxel_changes
 from volmap.kernels.lattice import bisected, edge_lengths
 from volmap.kernels.topology import unique_edges
-from volmap.mesh.nearby import near_change
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -26,15 +25,6 @@ def _along(points: Floats, edges: Ints, n_samples: int) -> Floats:
     return np.asarray(first[:, None] + share[None, :, None] * (second - first)[:, None])
 
 
-def _voxel_labels(field: LabelField, places: Floats) -> Ints:
-    """Label of the nearest voxel at each place; 0 outside."""
-    index = np.rint(places / field.spacing).astype(np.int64)
-    inside = ((index >= 0) & (index < field.labels.shape)).all(axis=-1)
-    index[~inside] = 0
-    labels = field.labels[index[..., 0], index[..., 1], index[..., 2]].astype(np.int64)
-    return np.where(inside, labels, 0)
-
-
 def _changes(ends: Ints, between: Ints) -> Ints:
     """(m,) how often the label changes along each edge."""
     run = np.concatenate([ends[:, :1], between, ends[:, 1:]], axis=1)
@@ -48,13 +38,9 @@ def hiding_edges(
 
     Voxels are asked first, the smoothed field only where they raise a doubt.
     """
-    lengths = edge_lengths(points, edges)
-    middles = 0.5 * (points[edges[:, 0]] + points[edges[:, 1]])
     ends = owner[edges]
     told = (ends[:, 0] != ends[:, 1]).astype(np.int64)
-    doubtful = np.flatnonzero((told > 0) | near_change(field, middles, float(lengths.max())))
-    voxels = _voxel_labels(field, _along(points, edges[doubtful], VOXEL_SAMPLES))
-    doubtful = doubtful[_changes(ends[doubtful], voxels) > told[doubtful]]
+    doubtful = np.flatnonzero(voxel_changes(field, points, owner, edges, np.int64(VOXEL_SAMPLES)) > told)
     places = _along(points, edges[doubtful], FIELD_SAMPLES)
     between = owners(field, np.ascontiguousarray(places.reshape(-1, 3)), scratch).reshape(-1, FIELD_SAMPLES)
     ends, told = ends[doubtful], told[doubtful]
@@ -85,12 +71,13 @@ def refined(
     """
     for _ in range(3 * times):
         edges, edge_of_tet = unique_edges(tets)
-        hiding = hiding_edges(field, points, owner, edges, scratch)
-        longest = edge_lengths(points, edges)[edge_of_tet].max(axis=1)
-        marked = hiding[edge_of_tet].any(axis=1) & (longest > LONGEST * edge_mm / 2**times)
+        asking = np.flatnonzero(hiding_edges(field, points, owner, edges, scratch)[edge_of_tet].any(axis=1))
+        longest = edge_lengths(points, edges)[edge_of_tet[asking]].max(axis=1, initial=0.0)
+        marked = np.zeros(len(tets), np.bool_)
+        marked[asking[longest > LONGEST * edge_mm / 2**times]] = True
         if not marked.any():
             break
         n_old = len(points)
-        points, tets = bisected(points, tets, marked)
+        points, tets = bisected(points, tets, edges, edge_of_tet, marked=marked)
         owner = np.r_[owner, owners(field, np.array(points[n_old:]), scratch)]
     return points, tets, owner

@@ -22,6 +22,7 @@ Ints = NDArray[np.int64]
 
 CELL = 1.08  # cube of the lattice, in wanted edges
 ORIGIN = np.array([0.37, 0.41, 0.43])  # of a cell: keeps lattice points off the planes of voxels
+REACH = 1.25  # cells around the voxels of the body: the ring ends one edge (at most a cell) beyond the body
 SNAP_ROUNDS = 3
 SNAP_SHARE = 0.30  # of an edge: crossings nearer than this to an end draw it
 SHORT_BONUS = 1.15  # for the shorter edges of the lattice
@@ -84,12 +85,12 @@ def labelled_lattice(
 def _lattice_near_body(field: LabelField, edge_mm: float) -> tuple[Floats, Ints]:
     """The tets of the lattice that lie near the body."""
     cell = CELL * edge_mm
-    filled = np.argwhere(field.labels > 0)
-    low = (filled.min(axis=0) - 0.5) * field.spacing - cell * (2.0 + ORIGIN)
-    high = (filled.max(axis=0) + 0.5) * field.spacing + 2.0 * cell
-    points, tets = bcc(low, high, cell)
-    near = near_body(field, points, 2.5 * cell)
-    points, tets, _ = used_only(points, tets[near[tets].any(axis=1)])
+    body = field.labels > 0
+    spans = [np.flatnonzero(body.any(axis=tuple({0, 1, 2} - {axis}))) for axis in range(3)]
+    low = (np.array([span[0] for span in spans]) - 0.5) * field.spacing - cell * (2.0 + ORIGIN)
+    high = (np.array([span[-1] for span in spans]) + 0.5) * field.spacing + 2.0 * cell
+    points, tets = bcc(low, high, cell, lambda places: near_body(field, places, REACH * cell))
+    points, tets, _ = used_only(points, tets)
     return points, tets
 
 

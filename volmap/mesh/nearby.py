@@ -36,15 +36,3 @@ def near_body(field: LabelField, points: Floats, reach_mm: float) -> NDArray[np.
     for axis in range(3):
         full = ndimage.maximum_filter1d(full, 2 * int(radius[axis]) + 1, axis=axis)
     return np.asarray(full[_block_of(points, field, size, radius + 1, full.shape)])
-
-
-def near_change(field: LabelField, points: Floats, reach_mm: float) -> NDArray[np.bool_]:
-    """(n,) True for every point with voxels of two labels within reach, and for some others."""
-    size = np.maximum(1, np.ceil(0.5 * reach_mm / field.spacing)).astype(np.int64)
-    radius = 1 + int(np.ceil(0.5 * reach_mm / (size * field.spacing).min()))
-    largest = np.pad(_blocks(field.labels, size, np.max), 1)
-    smallest = np.pad(_blocks(field.labels, size, np.min), 1)
-    mixed = ndimage.maximum_filter(largest, 2 * radius + 1, mode="constant") != ndimage.minimum_filter(
-        smallest, 2 * radius + 1, mode="constant"
-    )
-    return np.asarray(mixed[_block_of(points, field, size, np.ones(3, np.int64), mixed.shape)])
