@@ -47,7 +47,7 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--allow-topology-change",
         action="store_true",
-        help="go on when pieces or handles differ; the certificate warns of it",
+        help="go on when pieces, handles or voids differ; the certificate then fails the gate labels_agree",
     )
     parser.add_argument(
         "--seed", type=whole_number(0), default=0, help="of the subsamples the alignment uses"

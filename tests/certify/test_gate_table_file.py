@@ -68,7 +68,7 @@ def test_a_users_own_table_counts(tmp_path):
         (lambda t: t.replace("max_above = 2.0", "max_above = true"), "not a number"),
         (lambda t: t.replace('unit = "Dice"', 'unit = " "'), "does not say its unit"),
         (lambda t: t.replace('unit = "Dice"', 'unit = "Dice"\ncolour = "red"'), "unknown keys"),
-        (lambda t: t.replace("warn = { topology", "warn_voxel = { topology"), "not a length"),
+        (lambda t: t.replace("fail = { labels", "fail_voxel = { labels"), "not a length"),
         (lambda t: t.replace("warn = { p95_above = 2.0 }", "warn = { mean_above = 2.0 }"), "two units"),
         (lambda t: t.replace("warn = { share_above = 0.0 }", "warn = 0.0"), "not a table"),
     ],

@@ -1,8 +1,16 @@
-"""Gate: the outer boundary crosses nothing, no piece lies inside another, and faces join two tets at most.
+"""Gate: the outer boundary crosses nothing, no part of it is buried, and faces join two tets at most.
 
-With every tet positive, these make the map one-to-one: a tet's neighbours then lie on the other side of
-its faces, so each piece covers evenly what its boundary encloses, and an embedded boundary encloses it
-once.
+With every tet positive, these make the map one-to-one.  Faces between tets cancel, so the tets cover a
+place as often as the boundary winds around it (its degree).  That number changes by one across a triangle
+of a boundary that meets nothing else, and it is 0 on the outer side of every part that is not buried: it is
+0 or 1 everywhere, and a place that two points of the body shared would be covered twice nearby.
+
+Pieces may touch at corners and edges that they share by number, in the mesh and so in its image; touching
+at any other place counts as crossing.
+
+G. H. Meisters & C. Olech, Locally one-to-one mappings and a classical theorem on schlicht functions, Duke
+Math. J. 30 (1963) 63-80; for meshes Y. Lipman, Bijective mappings of meshes with boundary and the degree in
+mesh processing, SIAM J. Imaging Sci. 7 (2014) (both from memory; the argument above needs neither).
 """
 
 from __future__ import annotations
@@ -11,22 +19,20 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.sparse import coo_array
-from scipy.sparse.csgraph import connected_components
 
+from volmap.certify.buried_boundary import buried_sheets
 from volmap.certify.evidence import Evidence
 from volmap.certify.judge import judged, not_assessed
 from volmap.certify.places import MOST, place
 from volmap.certify.table import Limit
 from volmap.kernels.crossings import triangle_crossings
-from volmap.kernels.predicates import orientation_signs
 from volmap.kernels.topology import face_corners, match_faces
 from volmap.types.certificate import Gate
 from volmap.types.tetmesh import TetMesh
 
 
 def boundary_crossings(evidence: Evidence, limit: Limit, *, inverted: Gate) -> Gate:
-    """Count crossing pairs of boundary triangles, nested pieces and wrongly joined faces, in both worlds.
+    """Count crossing pairs of boundary triangles, buried parts and wrongly joined faces, in both worlds.
 
     Parameters
     ----------
@@ -40,19 +46,20 @@ def boundary_crossings(evidence: Evidence, limit: Limit, *, inverted: Gate) -> G
     triangles = face_corners(mesh.tets, hull)
     wrong = wrongly_joined(mesh.tets, first, second)
     where = [_face_place(mesh, face) for face in wrong[:MOST]]
-    counts = {"crossing_pairs": 0, "nested_pieces": 0, "wrong_faces": len(wrong)}
+    counts = {"crossing_pairs": 0, "buried_parts": 0, "wrong_faces": len(wrong)}
     for space, body in {"target": image, "source": mesh}.items():
         try:
             pairs = triangle_crossings(body.points, triangles)
         except ValueError as fault:
             return not_assessed(limit, str(fault))
-        nested = nested_pieces(body, (first // 4, second // 4), space=space)
+        buried = buried_sheets(body, triangles, hull // 4)
         counts["crossing_pairs"] += len(pairs)
-        counts["nested_pieces"] += len(nested)
-        where += [_crossing_place(body, triangles[pair], space) for pair in pairs[:MOST]] + nested[:MOST]
-    total = sum(counts.values())
-    value = {"count": total, **counts, "triangles": len(triangles)}
-    sentence = _sentence(value, positive=inverted.value["count"] == 0)
+        counts["buried_parts"] += len(buried)
+        where += [_crossing_place(body, triangles[pair], space) for pair in pairs[:MOST]]
+        where += [place(centre, space, f"the boundary lies inside tet {t}") for centre, t in buried[:MOST]]
+    total, positive = sum(counts.values()), inverted.value["count"] == 0
+    value = {"count": total, **counts, "triangles": len(triangles), "one_to_one": positive and not total}
+    sentence = _sentence(value, positive=positive)
     return judged(limit, {"count": total}, value=value, sentence=sentence, where=where[:MOST])
 
 
@@ -60,14 +67,17 @@ def _sentence(value: dict[str, int], *, positive: bool) -> str:
     if value["count"]:
         return (
             f"{value['crossing_pairs']} pairs of boundary triangles cross, "
-            f"{value['nested_pieces']} pieces lie inside another "
+            f"{value['buried_parts']} parts of the boundary lie inside the body "
             f"and {value['wrong_faces']} faces join tets on one side: "
             "some places are covered twice."
         )
-    clean = f"The {value['triangles']} boundary triangles do not cross and no piece lies inside another"
+    clean = f"none of its {value['triangles']} triangles cross and no part of it lies inside the body"
     if positive:
-        return f"{clean}; with every tet positive, the map is one-to-one."
-    return f"{clean}, but some tets are not positive, so the map still folds."
+        return (
+            "The map is one-to-one: with every tet positive, a place is covered as often as the boundary "
+            f"winds around it, and that is once at most, because {clean}."
+        )
+    return f"The boundary is sound ({clean}), but some tets are not positive, so the map still folds."
 
 
 def wrongly_joined(
@@ -105,53 +115,3 @@ def _crossing_place(body: TetMesh, triangles: NDArray[np.int64], space: str) -> 
     corners = body.points[triangles]
     low, high = corners.min(axis=1).max(axis=0), corners.max(axis=1).min(axis=0)
     return place((low + high) / 2, space, "two triangles of the boundary cross")
-
-
-def nested_pieces(
-    mesh: TetMesh, shared: tuple[NDArray[np.int64], NDArray[np.int64]], *, space: str
-) -> list[dict[str, Any]]:
-    """Face-connected pieces of which a tet's centre lies in a tet of another piece.
-
-    Where no boundaries cross, one point decides for the whole piece.
-
-    Parameters
-    ----------
-    mesh : TetMesh
-    shared : two (k,) int64
-        The two tets of each shared face.
-    space : str
-        'source' or 'target', for the places.
-
-    Returns
-    -------
-    list of dict
-        A place each.
-    """
-    m = len(mesh.tets)
-    links = coo_array((np.ones(len(shared[0]), np.int8), shared), shape=(m, m))
-    n_pieces, piece = connected_components(links, directed=False)
-    if n_pieces == 1:
-        return []
-    corners = mesh.points[mesh.tets]
-    low, high = corners.min(axis=1), corners.max(axis=1)
-    found = []
-    for p in range(n_pieces):
-        centre = corners[np.flatnonzero(piece == p)[0]].mean(axis=0)
-        near = np.flatnonzero((piece != p) & (low <= centre).all(axis=1) & (centre <= high).all(axis=1))
-        holders = near[_holds(corners[near], centre)]
-        if len(holders):
-            found.append(place(centre, space, f"piece {p} lies inside piece {piece[holders[0]]}"))
-    return found
-
-
-def _holds(corners: NDArray[np.float64], centre: NDArray[np.float64]) -> NDArray[np.bool_]:
-    """(k,) True where the closed tet, positive or not, holds the centre; by exact signs."""
-    k = len(corners)
-    points = np.concatenate([corners.reshape(-1, 3), centre[None]])
-    tets = np.arange(4 * k).reshape(k, 4)
-    signs = np.empty((k, 4), np.int8)
-    for a in range(4):
-        swapped = tets.copy()
-        swapped[:, a] = 4 * k
-        signs[:, a] = orientation_signs(points, swapped)
-    return np.asarray((signs >= 0).all(axis=1) | (signs <= 0).all(axis=1))

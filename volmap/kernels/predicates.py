@@ -12,6 +12,7 @@ Products of three differences neither overflow nor underflow while every coordin
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from fractions import Fraction
 
 import numpy as np
@@ -174,14 +175,14 @@ def in_exact_range(points: NDArray[np.float64]) -> NDArray[np.bool_]:
     return np.asarray(((size == 0) | ((size >= SMALLEST) & (size <= LARGEST))).all(axis=1))
 
 
-def rational_sign(corners: NDArray[np.float64]) -> int:
+def rational_sign(corners: Iterable[Iterable[float | Fraction]]) -> int:
     """Sign of one tet by rational arithmetic, for finite coordinates of any size.
 
     Parameters
     ----------
-    corners : (4, 3) float64
+    corners : (4, 3) float64 or Fraction
     """
-    p = [[Fraction(float(c)) for c in corner] for corner in corners]
+    p = [[Fraction(c) for c in corner] for corner in corners]
     a, b, c = ([q[k] - p[0][k] for k in range(3)] for q in p[1:])
     det = (
         a[0] * (b[1] * c[2] - b[2] * c[1])

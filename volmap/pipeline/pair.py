@@ -42,7 +42,7 @@ class MapJob:
     both_orders : bool
         Solve on the other scan's mesh too, to measure how much the answer depends on whose mesh is used.
     allow_topology_change : bool
-        Go on when pieces or Euler numbers differ; the certificate fails that gate.
+        Go on when pieces or Euler numbers differ; the certificate fails the gate `labels_agree`.
     gates : Path, optional
         The user's own gate table.
     """

@@ -137,7 +137,7 @@ def _of_topology(a: LabelScreen, b: LabelScreen, where: str, allowed: bool) -> l
     sentence = f"pieces {a.pieces} and {b.pieces}, Euler numbers {a.euler} and {b.euler}: {_difference(a, b)}"
     remedy = "no map without tearing exists between them; correct the segmentation (--mend may help)"
     if allowed:
-        remedy = "the map will tear or close there; judge the boundary distance near it"
+        remedy = "the certificate will fail labels_agree; judge the boundary distance near the difference"
     return [Finding(level, "topology", where, sentence, remedy)]
 
 
