@@ -118,12 +118,13 @@ def test_rasterised_volume_of_a_rotated_box_converges_and_has_no_holes(known):
 def test_values_on_grid_are_exact_for_a_linear_function(known):
     """Patch test: linear interpolation reproduces linear functions."""
     mesh = known.jittered(known.box(4, -0.4, 9.3), 0.2)
-    slope = np.array([[0.5, -1, 2], [3, 0.25, -0.75]])
+    slope = np.array([[0.5, -1, 2], [3, 0.25, -0.75], [0, 0, 1]])
     owner = tets_on_grid(mesh.points, mesh.tets, (10, 10, 10))
-    found = values_on_grid(mesh.points, mesh.tets, mesh.points @ slope.T + 7.0, owner)
+    found = values_on_grid(mesh.points, mesh.tets, mesh.points @ slope.T + 7.0, (10, 10, 10))
     centres = np.stack(np.meshgrid(*[np.arange(10)] * 3, indexing="ij"), -1)
     assert (owner >= 0).all()
     np.testing.assert_allclose(found, centres @ slope.T + 7.0, rtol=3e-7, atol=3e-6)
     outside = tets_on_grid(mesh.points + 5, mesh.tets, (10, 10, 10))
-    assert np.isnan(values_on_grid(mesh.points + 5, mesh.tets, mesh.points, outside)[outside < 0]).all()
+    found = values_on_grid(mesh.points + 5, mesh.tets, mesh.points, (10, 10, 10))
+    np.testing.assert_array_equal(np.isnan(found), np.repeat(outside[..., None] < 0, 3, axis=-1))
     assert (outside < 0).any()

@@ -13,12 +13,14 @@ from volmap.types import LabelVolume, Verdict
 
 @pytest.fixture(scope="module")
 def torn(tmp_path_factory):
-    """A body, and the same one grown with a part of its outer label cut off by an empty layer."""
+    """A body around a core, and the same one grown, with a tunnel of four voxels through its outer label."""
     root = tmp_path_factory.mktemp("torn")
     whole, other = body(0), body(1)
     labels = other.labels.copy()
-    occupied = np.flatnonzero((labels > 0).any(axis=(1, 2)))
-    labels[occupied[0] + 4] = 0
+    across = np.stack(np.meshgrid(*map(np.arange, labels.shape), indexing="ij"), axis=-1)
+    off = other.grid.to_world(across.reshape(-1, 3).astype(float)).reshape(across.shape) - [0, -9, -1]
+    labels[(np.abs(off[..., 1:]) < 3).all(axis=-1)] = 0
+    assert (labels == 2).sum() == (other.labels == 2).sum()
     files = root / "a.nii.gz", root / "b.nii.gz"
     save_labels(whole, files[0])
     save_labels(LabelVolume(other.grid, labels, other.names), files[1])
@@ -32,7 +34,7 @@ def test_refused_before_anything_is_solved(torn, tmp_path, monkeypatch, capsys):
     monkeypatch.setattr(pipeline.pair, "map_mesh", solved)
     assert main(["map", *map(str, torn), "--out", str(tmp_path / "m")]) == 1
     told = capsys.readouterr().err
-    assert "pieces 1 and 2" in told
+    assert "1 enclosed voids against 0" in told
     assert not (tmp_path / "m").exists()
 
 

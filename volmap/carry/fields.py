@@ -31,9 +31,9 @@ def forward_field(volume_map: VolumeMap, grid: Grid) -> GridField:
         Exact at each voxel centre inside the mesh (linear in the tet that holds it), NaN outside.
     """
     mesh = volume_map.mesh
-    index_points = grid.to_index(mesh.points)
-    owner = tets_on_grid(index_points, mesh.tets, grid.shape)
-    displacement = values_on_grid(index_points, mesh.tets, volume_map.images - mesh.points, owner)
+    displacement = values_on_grid(
+        grid.to_index(mesh.points), mesh.tets, volume_map.images - mesh.points, grid.shape
+    )
     return GridField(grid, displacement, volume_map.source, volume_map.target)
 
 
@@ -75,7 +75,8 @@ def carried_solid(
         0 outside the image of the mesh.
     """
     owner = tets_at_centres(volume_map.image_mesh, grid)
-    labels = np.append(volume_map.mesh.labels, 0)[owner].astype(np.uint16)  # owner -1 takes the last
+    labels = np.append(volume_map.mesh.labels, 0).astype(np.uint16)[owner]  # owner -1 takes the last
+    labels.setflags(write=False)
     return LabelVolume(grid, labels, dict(names or {}), "carried_labels")
 
 
@@ -95,4 +96,5 @@ def volume_ratio_image(volume_map: VolumeMap, grid: Grid) -> ImageVolume:
     """
     owner = tets_at_centres(volume_map.mesh, grid)
     ratio = np.append(volume_map.volume_ratio, np.nan).astype(np.float32)[owner]
+    ratio.setflags(write=False)
     return ImageVolume(grid, ratio, "1", "volume_ratio")

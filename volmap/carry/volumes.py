@@ -72,9 +72,8 @@ def pull_image(
 def _preimages(of: Grid, volume_map: VolumeMap, onto: Grid) -> Iterator[tuple[slice, NDArray[np.float64]]]:
     """For each slab of `onto`, the voxel indices in `of` that its centres come from; NaN outside."""
     image_mesh = volume_map.image_mesh
-    owner = tets_at_centres(image_mesh, onto)
     index_values = of.to_index(volume_map.mesh.points)
-    return values_by_slab(onto.to_index(image_mesh.points), image_mesh.tets, index_values, owner)
+    return values_by_slab(onto.to_index(image_mesh.points), image_mesh.tets, index_values, onto.shape)
 
 
 def _covering(of: Grid, onto: Grid, volume_map: VolumeMap, name: str) -> tuple[Finding, ...]:

@@ -14,6 +14,9 @@ from volmap.types.errors import InputError
 def owned(values: ArrayLike, dtype: DTypeLike, shape: tuple[int | None, ...], name: str) -> NDArray[Any]:
     """A read-only copy of `values` with the wanted type and shape.
 
+    An array that is read-only already, owns its memory and is of that kind is taken as it is: whoever made
+    it gave it away.
+
     Parameters
     ----------
     values : array_like
@@ -28,7 +31,7 @@ def owned(values: ArrayLike, dtype: DTypeLike, shape: tuple[int | None, ...], na
     InputError
         When the shape does not fit.
     """
-    array = np.array(values, dtype=dtype, order="C", copy=True)
+    array = np.array(values, dtype=dtype, order="C", copy=not _given_away(values, dtype))
     if array.ndim != len(shape) or any(
         w is not None and w != n for w, n in zip(shape, array.shape, strict=True)
     ):
@@ -36,6 +39,12 @@ def owned(values: ArrayLike, dtype: DTypeLike, shape: tuple[int | None, ...], na
         raise InputError("an array has the wrong shape", where=name, found=str(array.shape), expected=wanted)
     array.setflags(write=False)
     return array
+
+
+def _given_away(values: ArrayLike, dtype: DTypeLike) -> bool:
+    if type(values) is not np.ndarray or values.dtype != dtype:
+        return False
+    return bool(values.flags.owndata and values.flags.c_contiguous and not values.flags.writeable)
 
 
 class Frozen:

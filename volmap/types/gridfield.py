@@ -33,9 +33,12 @@ class GridField(Frozen):
 
     def __post_init__(self) -> None:
         u = self._own("displacement", np.float32, (*self.grid.shape, 3))
-        holes = np.isnan(u)
-        if any((holes[..., 0] != holes[..., d]).any() for d in (1, 2)):
-            raise InputError("a displacement is either a whole vector or NaN", where="GridField.displacement")
+        for plane in u:  # one at a time: a large field is large enough
+            holes = np.isnan(plane)
+            if (holes != holes[..., :1]).any():
+                raise InputError(
+                    "a displacement is either a whole vector or NaN", where="GridField.displacement"
+                )
 
     @property
     def support(self) -> NDArray[np.uint8]:
