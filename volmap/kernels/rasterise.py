@@ -171,8 +171,8 @@ def _planes(low, high, n_planes):  # type: ignore[no-untyped-def]
 def _enter(rows, t, i, line, edge):  # type: ignore[no-untyped-def]
     """Cut tet t with plane i.
 
-    Fills ``line[r]``, value at (0, 0), slope along j and slope along k of coordinate r, and ``edge[r]``: it is
-    INSIDE at ``k = edge[r, 0] + j * edge[r, 1]``.
+    Fills ``line[r]``, value at (0, 0), slope along j and slope along k of coordinate r, and ``edge[r]``: it
+    is INSIDE at ``k = edge[r, 0] + j * edge[r, 1]``.
     """
     x = i - rows[t, 3, 0]
     line[3, 0], line[3, 1], line[3, 2] = 1.0, 0.0, 0.0
