@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.compiled import inner_kernel, kernel
-from volmap.kernels.stars import star_sine, star_sine_at
+from volmap.kernels.stars import move_to, star_sine, star_sine_at
 from volmap.kernels.tie import project
 
 REACH = 0.6  # of a point's size: how far a projection may take it
@@ -46,8 +46,7 @@ def _keep_if_good(stars, strata, v, place, floor):  # type: ignore[no-untyped-de
     sine = star_sine_at(stars, v, place, floor - SLACK, strata.size_mm[v])
     if sine < floor or sine <= 0.0:
         return False
-    for d in range(3):
-        stars.points[v, d] = place[d]
+    move_to(stars, v, place)
     return True
 
 
@@ -81,7 +80,7 @@ def relax(field, stars, strata, good, shares, wish, place, scratch):  # type: ig
         share = shares[1] if kind > 0 else shares[0]
         if kind < 0 or (kind == 0 and share == 0.0):
             continue
-        now = star_sine(stars, v, -2.0, size)
+        now = star_sine(stars, v, size)
         if kind == 0 and now > 0.62:  # still as good as the lattice
             continue
         _average_shift(stars, strata, v, wish)
@@ -135,8 +134,7 @@ def _descend(field, stars, strata, v, now, bad, slack_mm, directions, memory, sc
                     best_place[d] = place[d]
         if found:
             now, n_steps = best, n_steps + 1
-            for d in range(3):
-                stars.points[v, d] = best_place[d]
+            move_to(stars, v, best_place)
         else:
             step *= 0.5
         if now >= bad or step < 0.015 * size:
@@ -166,7 +164,7 @@ def search(field, stars, strata, bad, slack_mm, directions, memory, scratch):  #
     for v in range(stars.points.shape[0]):
         if strata.kind[v] < 0:
             continue
-        now = star_sine(stars, v, -2.0, strata.size_mm[v])
+        now = star_sine(stars, v, strata.size_mm[v])
         if now < bad:
             n_steps += _descend(field, stars, strata, v, now, bad, slack_mm, directions, memory, scratch)
     return n_steps

@@ -27,6 +27,8 @@ class Stars(NamedTuple):
         0 is the background ring, which only has to stay positive.
     start, cell : int64
         Tets of point v are ``cell[start[v]:start[v + 1]]``.
+    worth : (m,) float64
+        `least_sine` of labelled tets, `six_volumes` of background ones; NaN where a point has moved since.
     """
 
     points: Floats
@@ -34,12 +36,13 @@ class Stars(NamedTuple):
     labels: Ints
     start: Ints
     cell: Ints
+    worth: Floats
 
 
 def new_stars(points: Floats, tets: Ints, labels: Ints) -> Stars:
     """Stars of a mesh, with points of their own."""
     start, cell = incidence(tets, len(points))
-    return Stars(np.array(points), np.array(tets), np.array(labels), start, cell)
+    return Stars(np.array(points), np.array(tets), np.array(labels), start, cell, np.full(len(tets), np.nan))
 
 
 @kernel
@@ -83,30 +86,54 @@ def least_sine(points, tets, t):  # type: ignore[no-untyped-def]
     return volume * np.sqrt(least)
 
 
+@inner_kernel
+def _worth(stars, t):  # type: ignore[no-untyped-def]
+    if stars.labels[t] != 0:
+        return least_sine(stars.points, stars.tets, t)
+    return six_volumes(stars.points, stars.tets, t)
+
+
 @kernel
-def star_sine(stars, v, stop, size_mm):  # type: ignore[no-untyped-def]
+def star_sine(stars, v, size_mm):  # type: ignore[no-untyped-def]
     """Least sine of the labelled tets around a point; -1 when any tet is not positive.
 
-    Gives up as soon as it is not above `stop`.  Background tets must keep a little volume.
+    Background tets must keep a little volume.
     """
     worst, flat = 9.0, FLAT_SHARE * size_mm**3
     for s in range(stars.start[v], stars.start[v + 1]):
         t = stars.cell[s]
+        if np.isnan(stars.worth[t]):
+            stars.worth[t] = _worth(stars, t)
         if stars.labels[t] != 0:
-            worst = min(worst, least_sine(stars.points, stars.tets, t))
-        elif six_volumes(stars.points, stars.tets, t) <= flat:
+            worst = min(worst, stars.worth[t])
+        elif stars.worth[t] <= flat:
             worst = -1.0
-        if worst <= stop:
-            break
     return worst
 
 
 @inner_kernel
 def star_sine_at(stars, v, place, stop, size_mm):  # type: ignore[no-untyped-def]
-    """`star_sine` as if the point were at `place`."""
+    """`star_sine` as if the point were at `place`; gives up as soon as it is not above `stop`."""
     points = stars.points
     x, y, z = points[v, 0], points[v, 1], points[v, 2]
     points[v, 0], points[v, 1], points[v, 2] = place[0], place[1], place[2]
-    worst = star_sine(stars, v, stop, size_mm)
+    worst, flat = 9.0, FLAT_SHARE * size_mm**3
+    for s in range(stars.start[v], stars.start[v + 1]):
+        worth = _worth(stars, stars.cell[s])
+        if stars.labels[stars.cell[s]] != 0:
+            worst = min(worst, worth)
+        elif worth <= flat:
+            worst = -1.0
+        if worst <= stop:
+            break
     points[v, 0], points[v, 1], points[v, 2] = x, y, z
     return worst
+
+
+@inner_kernel
+def move_to(stars, v, place):  # type: ignore[no-untyped-def]
+    """Move a point; what its tets are worth is no longer known."""
+    for d in range(3):
+        stars.points[v, d] = place[d]
+    for s in range(stars.start[v], stars.start[v + 1]):
+        stars.worth[stars.cell[s]] = np.nan
