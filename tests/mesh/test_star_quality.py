@@ -106,9 +106,19 @@ def test_smoothing_and_search_never_lower_the_worst_tet(shaken):
     )
     assert steps > 0
     assert worst() > smoothed
-    known = np.flatnonzero(~np.isnan(stars.worth))  # slow twin of what is remembered between moves
-    assert len(known)
-    assert all(stars.worth[t] == least_sine(stars.points, stars.tets, t) for t in known)
+
+
+def test_what_is_remembered_of_a_star_is_forgotten_when_a_point_moves(shaken):
+    stars, strata = shaken
+    strata = fixed_hull(strata)
+    inner = np.flatnonzero(strata.kind == 0)
+    before = [star_sine(stars, v, 1.0) for v in inner]  # now every tet is remembered
+    relax(empty_field(), stars, strata, 1.0, SHARES, np.zeros(3), np.zeros(3), new_scratch())
+    search(empty_field(), stars, strata, 0.8, 0.1, search_directions(), np.zeros((3, 3)), new_scratch())
+    after = [star_sine(stars, v, 1.0) for v in inner]
+    around = [np.flatnonzero((stars.tets == v).any(axis=1)) for v in inner]
+    assert after == [min(least_sine(stars.points, stars.tets, t) for t in tets) for tets in around]
+    assert after != before
 
 
 def test_smoothing_leaves_the_hull(shaken):
