@@ -5,7 +5,8 @@ import pytest
 from hand_made_bodies import cubes, lopsided, rotation
 
 from volmap.mapping import align
-from volmap.mapping.alignment import Alignment, doubts, fit_affine, fit_rigid
+from volmap.mapping.alignment import Alignment, doubts
+from volmap.mapping.fits import fit_affine, fit_rigid
 from volmap.types import InputError, LandmarkPairs, TetMesh
 
 SHIFT = np.array([40.0, -25.0, 13.0])
@@ -73,6 +74,35 @@ def test_affine_fit_never_mirrors():
     assert np.linalg.det(fit_affine(points, points * (1, 1, -1), weight)[:3, :3]) > 0
 
 
+def test_rigid_fit_at_a_scale():
+    """Closed form: points enlarged by the scale, turned and shifted."""
+    points, weight = cloud()
+    turn = rotation((3, 1, 0.5), 77.0)
+    matrix = fit_rigid(points, 2.5 * points @ turn.T + SHIFT, weight, scale=2.5)
+    np.testing.assert_allclose(matrix[:3, :3], 2.5 * turn, atol=1e-11)
+    np.testing.assert_allclose(matrix[:3, 3], SHIFT, atol=1e-9)
+
+
+def test_affine_fit_with_normals_minimises_what_it_says():
+    """Truth: the same least squares stacked row by row and solved by NumPy's lstsq."""
+    points, weight = cloud(60)
+    rng = np.random.default_rng(8)
+    normals = rng.normal(size=(60, 3))
+    normals /= np.linalg.norm(normals, axis=1, keepdims=True)
+    anchors = points @ np.diag([1.1, 0.9, 1.0]) + SHIFT + rng.normal(size=(60, 3)) * 0.2
+    across = 0.07
+    rows, right = [], []
+    for p, y, n, w in zip(points, anchors, normals, weight, strict=True):
+        design = np.kron(np.eye(3), np.append(p, 1.0))
+        along, other = np.outer(n, n), np.eye(3) - np.outer(n, n)
+        for part, share in ((along, 1.0), (other, across)):
+            rows.append(np.sqrt(w * share) * part @ design)
+            right.append(np.sqrt(w * share) * part @ y)
+    expected = np.linalg.lstsq(np.concatenate(rows), np.concatenate(right), rcond=None)[0].reshape(3, 4)
+    matrix = fit_affine(points, anchors, weight, normals=normals, across=across)
+    np.testing.assert_allclose(matrix[:3], expected, atol=1e-8)
+
+
 @pytest.mark.parametrize("axis", np.eye(3).tolist())
 def test_half_turns_are_recovered(body, axis):
     best, _ = align(body.interfaces, placed(body, rotation(axis, 180.0)))
@@ -87,6 +117,12 @@ def test_a_turn_with_stretch_far_from_the_origin_is_recovered(body):
     best, _ = align(body.interfaces, placed(body, linear, SHIFT + 1000.0))
     moved = body.points @ linear.T + SHIFT + 1000.0
     assert np.abs(best.apply(body.points) - moved).max() < 0.05
+
+
+@pytest.mark.parametrize("scale", [10 ** (1 / 3), 10 ** (-1 / 3)])
+def test_ten_times_the_volume_upside_down_is_recovered(body, scale):
+    best, _ = align(body.interfaces, placed(body, scale * rotation((1, 0, 1), 180.0)))
+    np.testing.assert_allclose(best.matrix[:3, :3], scale * rotation((1, 0, 1), 180.0), atol=2e-3)
 
 
 def test_a_body_in_place_keeps_its_place(body):
@@ -133,6 +169,14 @@ def test_every_start_has_a_name_and_none_mirrors(body):
     assert best in tried
     assert all(np.linalg.det(a.matrix[:3, :3]) > 0 for a in tried)
     assert best.residual_mm <= 1.05 * min(a.residual_mm for a in tried)
+
+
+def test_starts_that_run_into_each_other_end_alike(body):
+    """Of an asymmetric body in place, world and centres are one start; it is told under both names."""
+    _, tried = align(body.interfaces, body.interfaces)
+    ended = {a.name: a for a in tried}
+    np.testing.assert_array_equal(ended["world"].matrix, ended["centres"].matrix)
+    assert ended["principal axes 1"].residual_mm != ended["principal axes 2"].residual_mm
 
 
 def test_more_labels_and_guides_give_more_starts():

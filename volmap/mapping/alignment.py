@@ -1,33 +1,62 @@
 """Where to start: rigid and affine alignments of two labelled surfaces.
 
 Several starts are refined by alternating closest points and least squares (Besl & McKay, IEEE PAMI 14(2),
-1992), first rigid, then affine; the smallest residual wins, and among nearly equal ones the smallest
-rotation.
+1992), first rigid (at the target's volume), then affine; the smallest residual wins, and among nearly
+equal ones the smallest rotation.  Starts that run into each other are followed once.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels import closest
-from volmap.mapping.patches import areas
+from volmap.mapping.fits import fit_affine, fit_rigid, homogeneous
+from volmap.mapping.patches import areas, face_normals
 from volmap.types import InputError, LandmarkPairs, Surface
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-SAMPLES = 1000  # points a label at most
-SCREEN_SAMPLES, SCREEN_ROUNDS = 200, 15  # for the first look at every start
-ROUNDS = 40  # for those that are still near the best
-HOPELESS = 1.5  # starts whose residual is larger than this factor times the best are not refined further
+SAMPLES = 1000  # points a label at most, for the last rounds of the starts that are left
+FEW_SAMPLES = 100  # for everything before
+SAME_PLACE = 0.02  # share of the body's size within which two starts have run into each other
 DOUBTFUL = 1.25  # residuals within this factor of the chosen one leave doubt when they are turned otherwise
 OTHERWISE_DEG = 45.0  # between two alignments that are not the same place
 NEARLY_EQUAL = 1.05  # residuals within this factor of the best count as equal
-AT_REST = 1e-4  # share of the body's size by which no point moves any more
-MOST_STRETCH = 3.0  # an affine start is held inside this range of stretches
+NO_GAP_MM = 1e-6  # and so do all below this
+AT_REST = 1e-3  # share of the body's size by which no point moves any more
+ACROSS = 0.03  # share of a match that acts across the normal in affine rounds
+
+
+@dataclass(frozen=True)
+class _Lap:
+    """Rounds of matching and fitting for every start still running.
+
+    Parameters
+    ----------
+    all_samples, rigid : bool
+    rounds : int
+        At most.
+    hopeless : float
+        Starts whose residual then is larger than this factor times the best run no further.
+    """
+
+    all_samples: bool
+    rigid: bool
+    rounds: int
+    hopeless: float
+
+
+LAPS = (
+    _Lap(all_samples=False, rigid=True, rounds=8, hopeless=np.inf),
+    _Lap(all_samples=False, rigid=False, rounds=6, hopeless=3.0),
+    _Lap(all_samples=False, rigid=False, rounds=6, hopeless=1.5),
+    _Lap(all_samples=True, rigid=False, rounds=6, hopeless=1.5),
+    _Lap(all_samples=True, rigid=False, rounds=14, hopeless=1.5),
+)
 
 
 @dataclass(frozen=True, eq=False)
@@ -72,6 +101,8 @@ class _Label:
     tree: closest.Tree
     sample: Floats
     weight: Floats
+    normals: Floats
+    volume_mm3: float
 
     @staticmethod
     def of(surface: Surface, label: int, rng: np.random.Generator) -> _Label:
@@ -84,80 +115,99 @@ class _Label:
         if len(keep) > SAMPLES:
             keep = np.sort(rng.choice(len(keep), SAMPLES, replace=False))
         share = weight[keep] / weight[keep].sum() * np.sqrt(area.sum())
-        return _Label(points, triangles, closest.build_tree(points, triangles), points[keep], share)
+        tree = closest.build_tree(points, triangles)
+        normals = _unit(face_normals(points, triangles))
+        volume = _enclosed_mm3(points, triangles)
+        return _Label(points, triangles, tree, points[keep], share, normals, volume)
 
     def thinned(self, most: int) -> _Label:
         """The same label with every k-th sample only."""
         k = max(1, -(-len(self.sample) // most))
         return replace(self, sample=self.sample[::k].copy(), weight=self.weight[::k] * k)
 
-    def nearest(self, queries: Floats) -> Floats:
-        triangle, barycentric, _ = closest.closest(self.tree, self.points, self.triangles, queries)
-        return np.asarray(np.einsum("qk,qkd->qd", barycentric, self.points[self.triangles[triangle]]))
+    def nearest(self, queries: Floats, guess: Ints | None) -> tuple[Floats, Ints]:
+        """Closest points, and their triangles, which are a good guess for queries that moved a little."""
+        triangle, barycentric, _ = closest.closest(
+            self.tree, self.points, self.triangles, queries, guess=guess
+        )
+        return np.einsum("qk,qkd->qd", barycentric, self.points[self.triangles[triangle]]), triangle
 
 
-def _homogeneous(linear: Floats, shift: Floats) -> Floats:
-    matrix = np.eye(4)
-    matrix[:3, :3], matrix[:3, 3] = linear, shift
-    return matrix
+_Bodies = tuple[list[_Label], list[_Label]]
 
 
-def fit_rigid(points: Floats, anchors: Floats, weight: Floats) -> Floats:
-    """Weighted best rotation and shift, (4, 4) (Kabsch, Acta Cryst. A32, 1976)."""
-    w = (weight / weight.sum())[:, None]
-    a, b = (w * points).sum(axis=0), (w * anchors).sum(axis=0)
-    u, _, v = np.linalg.svd((w * (points - a)).T @ (anchors - b))
-    rotation = (u @ np.diag([1, 1, np.sign(np.linalg.det(u @ v))]) @ v).T
-    return _homogeneous(rotation, b - rotation @ a)
+def _unit(vectors: Floats) -> Floats:
+    return np.asarray(vectors / np.maximum(np.linalg.norm(vectors, axis=1, keepdims=True), 1e-300))
 
 
-def fit_affine(points: Floats, anchors: Floats, weight: Floats) -> Floats:
-    """Weighted least-squares affine, (4, 4), its stretches held inside [1/3, 3]."""
-    w = (weight / weight.sum())[:, None]
-    a, b = (w * points).sum(axis=0), (w * anchors).sum(axis=0)
-    x, y = points - a, anchors - b
-    spread = (w * x).T @ x
-    linear = np.linalg.solve(spread + 1e-12 * np.trace(spread) * np.eye(3), (w * x).T @ y).T
-    u, s, v = np.linalg.svd(linear)
-    if np.linalg.det(u @ v) < 0:
-        v[2] = -v[2]
-    linear = u @ np.diag(np.clip(s, 1 / MOST_STRETCH, MOST_STRETCH)) @ v
-    return _homogeneous(linear, b - linear @ a)
-
-
-def _pairs(source: list[_Label], target: list[_Label], matrix: Floats) -> tuple[Floats, Floats, Floats]:
-    """Matched points, anchors and weights in both directions, for every label."""
-    inverse = np.linalg.inv(matrix)
-    points, anchors, weights = [], [], []
-    for s, t in zip(source, target, strict=True):
-        points.append(s.sample)
-        anchors.append(t.nearest(s.sample @ matrix[:3, :3].T + matrix[:3, 3]))
-        points.append(s.nearest(t.sample @ inverse[:3, :3].T + inverse[:3, 3]))
-        anchors.append(t.sample)
-        weights += [s.weight, t.weight]
-    return np.concatenate(points), np.concatenate(anchors), np.concatenate(weights)
+def _enclosed_mm3(points: Floats, triangles: Ints) -> float:
+    """Volume inside a closed surface (divergence theorem)."""
+    a, b, c = np.moveaxis((points - points.mean(axis=0))[triangles], 1, 0)
+    return float(np.einsum("ij,ij->", np.cross(a, b), c) / 6.0)
 
 
 def _change(before: Floats, after: Floats, points: Floats) -> float:
-    """Largest move of any point between two affines, as a share of the points' spread."""
+    """Largest move of any point between two affines, as a share of the images' spread."""
     difference = after - before
     moves = points @ difference[:3, :3].T + difference[:3, 3]
-    return float(np.linalg.norm(moves, axis=1).max() / np.sqrt(points.var(axis=0).sum()))
+    spread = np.sqrt((points @ after[:3, :3].T).var(axis=0).sum())
+    return float(np.sqrt((moves**2).sum(axis=1).max()) / spread)
 
 
-def _refine(
-    source: list[_Label], target: list[_Label], matrix: Floats, *, name: str, rounds: int, rigid: bool
-) -> Alignment:
-    for fit in (fit_rigid, fit_affine) if rigid else (fit_affine,):
+@dataclass(frozen=True)
+class _Matches:
+    """Points of the source, their anchors on the target, normals there, and weights."""
+
+    points: Floats
+    anchors: Floats
+    normals: Floats
+    weights: Floats
+
+    def rms(self, matrix: Floats) -> float:
+        gap = self.points @ matrix[:3, :3].T + matrix[:3, 3] - self.anchors
+        return float(np.sqrt(self.weights @ (gap**2).sum(axis=1) / self.weights.sum()))
+
+
+@dataclass(eq=False)
+class _Run:
+    """One start on its way: where it lies, and the triangles last found nearest, label by label."""
+
+    name: str
+    matrix: Floats
+    guesses: list[Ints | None] = field(default_factory=list)
+
+    def matches(self, bodies: _Bodies) -> _Matches:
+        """Closest points in both directions, for every label."""
+        inverse = np.linalg.inv(self.matrix)
+        guesses = self.guesses or [None] * (2 * len(bodies[0]))
+        points, anchors, normals, weights = [], [], [], []
+        for k, (s, t) in enumerate(zip(*bodies, strict=True)):
+            there, ahead = t.nearest(s.sample @ self.matrix[:3, :3].T + self.matrix[:3, 3], guesses[2 * k])
+            here, back = s.nearest(t.sample @ inverse[:3, :3].T + inverse[:3, 3], guesses[2 * k + 1])
+            points += [s.sample, here]
+            anchors += [there, t.sample]
+            normals += [t.normals[ahead], _unit(s.normals[back] @ inverse[:3, :3])]
+            weights += [s.weight, t.weight]
+            guesses[2 * k : 2 * k + 2] = ahead, back
+        self.guesses = guesses
+        return _Matches(*(np.concatenate(x) for x in (points, anchors, normals, weights)))
+
+    def refine(self, bodies: _Bodies, scale: float | None, rounds: int) -> None:
+        """Closest points and least squares in turn, until at rest; rigid at a scale, or affine for None."""
+        self.guesses = []
         for _ in range(rounds):
-            points, anchors, weights = _pairs(source, target, matrix)
-            before, matrix = matrix, fit(points, anchors, weights)
-            if _change(before, matrix, points) < AT_REST:
+            m = self.matches(bodies)
+            before = self.matrix
+            if scale is None:
+                fit = fit_affine(m.points, m.anchors, m.weights, normals=m.normals, across=ACROSS)
+            else:
+                fit = fit_rigid(m.points, m.anchors, m.weights, scale=scale)
+            self.matrix = fit
+            if _change(before, fit, m.points) < AT_REST:
                 break
-    points, anchors, weights = _pairs(source, target, matrix)
-    gap = points @ matrix[:3, :3].T + matrix[:3, 3] - anchors
-    rms = float(np.sqrt((weights * (gap**2).sum(axis=1)).sum() / weights.sum()))
-    return Alignment(name, matrix, rms)
+
+    def alignment(self, bodies: _Bodies) -> Alignment:
+        return Alignment(self.name, self.matrix, self.matches(bodies).rms(self.matrix))
 
 
 def _moments(labels: list[_Label]) -> tuple[Floats, Floats, Floats]:
@@ -171,27 +221,32 @@ def _moments(labels: list[_Label]) -> tuple[Floats, Floats, Floats]:
     return mean, axes, centres
 
 
-def _starts(
-    source: list[_Label], target: list[_Label], guides: LandmarkPairs | None
-) -> list[tuple[str, Floats]]:
+def _starts(bodies: _Bodies, guides: LandmarkPairs | None, growth: float) -> list[tuple[str, Floats]]:
+    """Every start by name; all but 'world' enlarge the source to the target's volume."""
+    source, target = bodies
     mean_s, axes_s, centres_s = _moments(source)
     mean_t, axes_t, centres_t = _moments(target)
-    starts = [("world", np.eye(4)), ("centres", _homogeneous(np.eye(3), mean_t - mean_s))]
+    even = growth * np.eye(3)
+    starts = [("world", np.eye(4)), ("centres", homogeneous(even, mean_t - growth * mean_s))]
     if len(source) >= 3:
-        starts.append(("label centres", fit_rigid(centres_s, centres_t, np.ones(len(source)))))
+        fitted = fit_rigid(centres_s, centres_t, np.ones(len(source)), scale=growth)
+        starts.append(("label centres", fitted))
     if guides is not None and len(guides.names) >= 3:
-        starts.append(("guides", fit_rigid(guides.points, guides.to_points, np.ones(len(guides.names)))))
+        fitted = fit_rigid(guides.points, guides.to_points, np.ones(len(guides.names)), scale=growth)
+        starts.append(("guides", fitted))
     for k, signs in enumerate(([1, 1, 1], [1, -1, -1], [-1, 1, -1], [-1, -1, 1])):
         turn = axes_t @ np.diag(signs) @ axes_s.T
         if np.linalg.det(turn) < 0:
             turn = axes_t @ np.diag([-signs[0], signs[1], signs[2]]) @ axes_s.T
-        starts.append((f"principal axes {k + 1}", _homogeneous(turn, mean_t - turn @ mean_s)))
+        starts.append(
+            (f"principal axes {k + 1}", homogeneous(growth * turn, mean_t - growth * turn @ mean_s))
+        )
     return starts
 
 
 def doubts(chosen: Alignment, tried: tuple[Alignment, ...]) -> tuple[str, ...]:
     """A sentence when another start fits nearly as well as the chosen one, but turned otherwise."""
-    others = [a for a in tried if a.residual_mm <= DOUBTFUL * chosen.residual_mm]
+    others = [a for a in tried if a.residual_mm <= DOUBTFUL * chosen.residual_mm + NO_GAP_MM]
     angles = {a: _angle_deg(np.linalg.inv(chosen.matrix) @ a.matrix) for a in others}
     turned = [a for a in others if angles[a] > OTHERWISE_DEG]
     if not turned:
@@ -231,22 +286,37 @@ def align(
     """
     rng = np.random.default_rng(seed)
     labels = sorted({int(v) for v in np.unique(source.sides) if v})
-    bodies = [[_Label.of(surface, label, rng) for label in labels] for surface in (source, target)]
-    thin = [[label.thinned(SCREEN_SAMPLES) for label in body] for body in bodies]
-    tried = [
-        _refine(thin[0], thin[1], matrix, name=name, rounds=SCREEN_ROUNDS, rigid=True)
-        for name, matrix in _starts(bodies[0], bodies[1], guides)
-        if start in ("auto", name)
-    ]
-    if not tried:
+    here, there = ([_Label.of(surface, label, rng) for label in labels] for surface in (source, target))
+    bodies = here, there
+    growth = np.cbrt(sum(x.volume_mm3 for x in bodies[1]) / sum(x.volume_mm3 for x in bodies[0]))
+    runs = [_Run(name, m) for name, m in _starts(bodies, guides, growth) if start in ("auto", name)]
+    if not runs:
         raise InputError("this start does not exist for these scans", where="start", found=start)
-    best = min(a.residual_mm for a in tried)
-    tried = [
-        _refine(bodies[0], bodies[1], a.matrix, name=a.name, rounds=ROUNDS, rigid=False)
-        if a.residual_mm <= HOPELESS * best
-        else a
-        for a in tried
+    tried = _raced(runs, bodies, growth)
+    equal = [
+        a for a in tried if a.residual_mm <= NEARLY_EQUAL * min(a.residual_mm for a in tried) + NO_GAP_MM
     ]
-    best = min(a.residual_mm for a in tried)
-    equal = [a for a in tried if a.residual_mm <= NEARLY_EQUAL * best]
-    return min(equal, key=lambda a: round(a.rotation_deg, 1)), tuple(tried)
+    return min(equal, key=lambda a: round(a.rotation_deg, 1)), tried
+
+
+def _raced(runs: list[_Run], bodies: _Bodies, growth: float) -> tuple[Alignment, ...]:
+    """Where every start ends; those that run into an earlier one end where that one does."""
+    few = [x.thinned(FEW_SAMPLES) for x in bodies[0]], [x.thinned(FEW_SAMPLES) for x in bodies[1]]
+    points = np.concatenate([label.sample for label in few[0]])
+    leader = {run: run for run in runs}
+    ended: dict[_Run, Alignment] = {}
+    running = runs
+    for lap in LAPS:
+        here = bodies if lap.all_samples else few
+        ahead: list[_Run] = []
+        for run in running:
+            run.refine(here, growth if lap.rigid else None, lap.rounds)
+            met = [r for r in ahead if _change(r.matrix, run.matrix, points) < SAME_PLACE]
+            if met:
+                leader = {r: met[0] if to is run else to for r, to in leader.items()}
+            else:
+                ahead.append(run)
+                ended[run] = run.alignment(here)
+        best = min(ended[r].residual_mm for r in ahead)
+        running = [r for r in ahead if ended[r].residual_mm <= lap.hopeless * best + NO_GAP_MM]
+    return tuple(replace(ended[leader[run]], name=run.name) for run in runs)
