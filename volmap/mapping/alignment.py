@@ -29,6 +29,7 @@ NEARLY_EQUAL = 1.05  # residuals within this factor of the best count as equal
 NO_GAP_MM = 1e-6  # and so do all below this
 AT_REST = 1e-3  # share of the body's size by which no point moves any more
 ACROSS = 0.03  # share of a match that acts across the normal in affine rounds
+HOLD = 0.02  # share by which a body is held where it was at the beginning of a lap
 
 
 @dataclass(frozen=True)
@@ -116,21 +117,27 @@ class _Label:
             keep = np.sort(rng.choice(len(keep), SAMPLES, replace=False))
         share = weight[keep] / weight[keep].sum() * np.sqrt(area.sum())
         tree = closest.build_tree(points, triangles)
-        normals = _unit(face_normals(points, triangles))
+        faces = np.repeat(face_normals(points, triangles), 3, axis=0)
+        sums = [np.bincount(triangles.ravel(), faces[:, d], len(points)) for d in range(3)]
         volume = _enclosed_mm3(points, triangles)
-        return _Label(points, triangles, tree, points[keep], share, normals, volume)
+        return _Label(points, triangles, tree, points[keep], share, _unit(np.stack(sums, axis=1)), volume)
 
     def thinned(self, most: int) -> _Label:
         """The same label with every k-th sample only."""
         k = max(1, -(-len(self.sample) // most))
         return replace(self, sample=self.sample[::k].copy(), weight=self.weight[::k] * k)
 
-    def nearest(self, queries: Floats, guess: Ints | None) -> tuple[Floats, Ints]:
-        """Closest points, and their triangles, which are a good guess for queries that moved a little."""
+    def nearest(self, queries: Floats, guess: Ints | None) -> tuple[Floats, Floats, Ints]:
+        """Closest points, normals there, and their triangles: a good guess for queries that moved a little.
+
+        Normals are interpolated between the points of a triangle, so that they do not jump at its edges.
+        """
         triangle, barycentric, _ = closest.closest(
             self.tree, self.points, self.triangles, queries, guess=guess
         )
-        return np.einsum("qk,qkd->qd", barycentric, self.points[self.triangles[triangle]]), triangle
+        corners = self.triangles[triangle]
+        place = np.einsum("qk,qkd->qd", barycentric, self.points[corners])
+        return place, np.einsum("qk,qkd->qd", barycentric, self.normals[corners]), triangle
 
 
 _Bodies = tuple[list[_Label], list[_Label]]
@@ -182,11 +189,13 @@ class _Run:
         guesses = self.guesses or [None] * (2 * len(bodies[0]))
         points, anchors, normals, weights = [], [], [], []
         for k, (s, t) in enumerate(zip(*bodies, strict=True)):
-            there, ahead = t.nearest(s.sample @ self.matrix[:3, :3].T + self.matrix[:3, 3], guesses[2 * k])
-            here, back = s.nearest(t.sample @ inverse[:3, :3].T + inverse[:3, 3], guesses[2 * k + 1])
+            moved = s.sample @ self.matrix[:3, :3].T + self.matrix[:3, 3]
+            there, facing, ahead = t.nearest(moved, guesses[2 * k])
+            moved = t.sample @ inverse[:3, :3].T + inverse[:3, 3]
+            here, looking, back = s.nearest(moved, guesses[2 * k + 1])
             points += [s.sample, here]
             anchors += [there, t.sample]
-            normals += [t.normals[ahead], _unit(s.normals[back] @ inverse[:3, :3])]
+            normals += [_unit(facing), _unit(looking @ inverse[:3, :3])]
             weights += [s.weight, t.weight]
             guesses[2 * k : 2 * k + 2] = ahead, back
         self.guesses = guesses
@@ -195,15 +204,23 @@ class _Run:
     def refine(self, bodies: _Bodies, scale: float | None, rounds: int) -> None:
         """Closest points and least squares in turn, until at rest; rigid at a scale, or affine for None."""
         self.guesses = []
+        first = self.matrix
         for _ in range(rounds):
             m = self.matches(bodies)
             before = self.matrix
             if scale is None:
-                fit = fit_affine(m.points, m.anchors, m.weights, normals=m.normals, across=ACROSS)
+                self.matrix = fit_affine(
+                    m.points,
+                    m.anchors,
+                    m.weights,
+                    normals=m.normals,
+                    across=ACROSS,
+                    before=first,
+                    hold=HOLD,
+                )
             else:
-                fit = fit_rigid(m.points, m.anchors, m.weights, scale=scale)
-            self.matrix = fit
-            if _change(before, fit, m.points) < AT_REST:
+                self.matrix = fit_rigid(m.points, m.anchors, m.weights, scale=scale)
+            if _change(before, self.matrix, m.points) < AT_REST:
                 break
 
     def alignment(self, bodies: _Bodies) -> Alignment:

@@ -43,6 +43,8 @@ def fit_affine(
     *,
     normals: Floats | None = None,
     across: float = 1.0,
+    before: Floats | None = None,
+    hold: float = 0.0,
 ) -> Floats:
     """Weighted least-squares affine, its stretches held inside [1/3, 3].
 
@@ -58,6 +60,10 @@ def fit_affine(
         Unit vectors at the anchors.
     across : float
         Share of what is left across the normals.
+    before : (4, 4) float64, optional
+        Where the points were; what moves them from there counts by the share `hold`, so that a round body,
+        which may turn freely, stays as it is.
+    hold : float
 
     Returns
     -------
@@ -76,6 +82,9 @@ def fit_affine(
         heavy = (1 - share) * w[:, None] * rows
         system += heavy.T @ rows
         right += heavy.T @ (normals * y).sum(axis=1)
+    if before is not None:
+        system += hold * np.kron(np.eye(3), wx.T @ x)
+        right += hold * ((points @ before[:3, :3].T + before[:3, 3] - b).T @ wx).ravel()
     found = np.linalg.solve(system + 1e-12 * np.eye(12), right).reshape(3, 4)
     return _held(found[:, :3] / size, a, b + found[:, 3])
 
