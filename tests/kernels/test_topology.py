@@ -50,7 +50,7 @@ def test_of_too_many_labels_the_smallest_stay(tets):
     labels = np.arange(len(tets)) % 13 + 1
     hull = match_faces(tets)[2]
     on_hull = set(np.delete(tets[hull // 4].ravel(), np.arange(len(hull)) * 4 + hull % 4).tolist())
-    for v, row in enumerate(label_sets(tets, labels, int(tets.max()) + 1, most=3)):
+    for v, row in enumerate(label_sets(tets, labels, hull, int(tets.max()) + 1, most=3)):
         wanted = set(labels[(tets == v).any(axis=1)].tolist()) | ({0} if v in on_hull else set())
         assert row.tolist() == (sorted(wanted) + [-1] * 3)[:3]
 

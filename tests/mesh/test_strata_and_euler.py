@@ -6,7 +6,7 @@ from skimage.measure import euler_number
 
 from volmap.kernels.lattice import bcc, oriented, used_only
 from volmap.kernels.strata import MOST_TIES, new_strata
-from volmap.kernels.topology import label_sets
+from volmap.kernels.topology import label_sets, match_faces
 from volmap.mesh.euler import euler_of_tets, euler_of_voxels
 from volmap.mesh.specks import pieces_of, point_pieces, without_specks
 
@@ -32,7 +32,7 @@ def test_label_sets_are_those_of_the_tets_around():
         for v in tet:
             wanted[v].add(int(label))
     kind = new_strata(points, tets, np.ones(len(tets), np.int64)).kind
-    for v, row in enumerate(label_sets(tets, labels, len(points), most=MOST_TIES)):
+    for v, row in enumerate(label_sets(tets, labels, match_faces(tets)[2], len(points), most=MOST_TIES)):
         assert len(row) == MOST_TIES
         found = [int(k) for k in row if k >= 0]
         assert found == sorted(wanted[v] | ({0} if kind[v] > 0 else set()))

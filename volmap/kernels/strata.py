@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.lattice import edge_lengths
-from volmap.kernels.topology import interfaces, label_sets, unique_edges
+from volmap.kernels.topology import Faces, interfaces, label_sets, match_faces, unique_edges
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -46,9 +46,9 @@ class Strata(NamedTuple):
     size_mm: Floats
 
 
-def label_interfaces(tets: Ints, labels: Ints) -> tuple[Ints, Ints]:
+def label_interfaces(tets: Ints, labels: Ints, faces: Faces | None = None) -> tuple[Ints, Ints]:
     """Faces between different labels, a background ring counting as outside; see `topology.interfaces`."""
-    triangles, sides = interfaces(tets, labels)
+    triangles, sides = interfaces(tets, labels, faces)
     real = sides[:, 0] != sides[:, 1]
     return triangles[real], sides[real]
 
@@ -109,7 +109,8 @@ def _sizes(points: Floats, edges: Ints) -> Floats:
 
 def new_strata(points: Floats, tets: Ints, labels: Ints) -> Strata:
     """Strata of a mesh with its background ring (label 0) or without (the hull is then an interface)."""
-    triangles, sides = label_interfaces(tets, labels)
+    faces = match_faces(tets)
+    triangles, sides = label_interfaces(tets, labels, faces)
     surface, counts = triangle_edges(triangles, len(points))
     kind = _kinds(tets, labels, surface, counts, len(points))
     edges, edge_of_tet = unique_edges(tets)
@@ -118,7 +119,7 @@ def new_strata(points: Floats, tets: Ints, labels: Ints) -> Strata:
     start, neighbour = _neighbours(edges[inner], surface, counts != 2, kind)
     return Strata(
         kind=kind,
-        ties=label_sets(tets, labels, len(points), most=MOST_TIES),
+        ties=label_sets(tets, labels, faces[2], len(points), most=MOST_TIES),
         start=start,
         neighbour=neighbour,
         triangles=triangles,

@@ -10,6 +10,7 @@ from volmap.kernels.compiled import kernel
 from volmap.kernels.tets import FACES
 
 Ints = NDArray[np.int64]
+Faces = tuple[Ints, Ints, Ints]
 
 # Which of the six edges of a tet (`tets.EDGES`) joins two of its corners.
 EDGE_BETWEEN = np.array([[-1, 0, 1, 2], [0, -1, 3, 4], [1, 3, -1, 5], [2, 4, 5, -1]])
@@ -70,7 +71,7 @@ def _fill_edges(tets, start, cell, edges, edge_of_tet):  # type: ignore[no-untyp
     return n
 
 
-def match_faces(tets: Ints) -> tuple[Ints, Ints, Ints]:
+def match_faces(tets: Ints) -> Faces:
     """Faces shared by two tets, and faces of the hull; a face is ``4 * tet + corner opposite``.
 
     Returns
@@ -125,8 +126,13 @@ def face_corners(tets: Ints, faces: Ints) -> Ints:
     return np.asarray(tets[faces // 4][np.arange(len(faces))[:, None], FACES[faces % 4]])
 
 
-def interfaces(tets: Ints, labels: Ints) -> tuple[Ints, Ints]:
+def interfaces(tets: Ints, labels: Ints, faces: Faces | None = None) -> tuple[Ints, Ints]:
     """Every face between two labels or between a label and the outside.
+
+    Parameters
+    ----------
+    faces : optional
+        Of `match_faces`, where they are at hand.
 
     Returns
     -------
@@ -135,7 +141,7 @@ def interfaces(tets: Ints, labels: Ints) -> tuple[Ints, Ints]:
     sides : (k, 2) int64
         (inside, outside); 0 is outside the body.
     """
-    first, second, hull = match_faces(tets)
+    first, second, hull = faces or match_faces(tets)
     a, b = labels[first // 4], labels[second // 4]
     split = a != b
     inner = np.where(a > b, first, second)[split]
@@ -178,9 +184,14 @@ def _fill_incidence(cells, start, cell):  # type: ignore[no-untyped-def]
             cell[start[cells[t, d]]] = t
 
 
-def label_sets(tets: Ints, labels: Ints, n_points: int, *, most: int) -> Ints:
-    """(n, most) labels around each point, ascending, filled up with -1; points of the hull also have 0."""
-    _, _, hull = match_faces(tets)
+def label_sets(tets: Ints, labels: Ints, hull: Ints, n_points: int, *, most: int) -> Ints:
+    """(n, most) labels around each point, ascending, filled up with -1; points of the hull also have 0.
+
+    Parameters
+    ----------
+    hull : (h,) int64
+        Faces, as `match_faces` gives them.
+    """
     sets = np.full((n_points, most), -1, np.int64)
     sets[face_corners(tets, hull), 0] = 0
     _fill_label_sets(tets, labels, sets)

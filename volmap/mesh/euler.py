@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.strata import label_interfaces, triangle_edges
-from volmap.kernels.topology import match_faces, unique_edges
+from volmap.kernels.topology import Faces, match_faces, unique_edges
 
 Ints = NDArray[np.int64]
 
@@ -28,16 +28,23 @@ def euler_of_voxels(inside: NDArray[np.bool_]) -> int:
     return total
 
 
-def euler_of_tets(tets: Ints, labels: Ints, n_points: int) -> dict[int, int]:
-    """For each label above 0: tets, less faces, plus edges, less points, all of them inside the label."""
-    triangles, _ = label_interfaces(tets, labels)
+def euler_of_tets(tets: Ints, labels: Ints, n_points: int, *, faces: Faces | None = None) -> dict[int, int]:
+    """For each label above 0: tets, less faces, plus edges, less points, all of them inside the label.
+
+    Parameters
+    ----------
+    faces : optional
+        Of `topology.match_faces`, where they are at hand.
+    """
+    faces = faces or match_faces(tets)
+    triangles, _ = label_interfaces(tets, labels, faces)
     surface, _ = triangle_edges(triangles, n_points)
     edges, edge_of_tet = unique_edges(tets)
     n = np.int64(n_points)
     inner_edge = ~np.isin(edges[:, 0] * n + edges[:, 1], surface[:, 0] * n + surface[:, 1])
     inner_point = np.ones(n_points, bool)
     inner_point[triangles] = False
-    first, second, _ = match_faces(tets)
+    first, second, _ = faces
     inner_face = labels[first // 4] == labels[second // 4]
     label_of_edge, label_of_point = np.zeros(len(edges), np.int64), np.zeros(n_points, np.int64)
     label_of_edge[edge_of_tet] = labels[:, None]

@@ -75,8 +75,9 @@ def labelled_lattice(
     points, tets, owner = _with_ring(points, tets, owner)
     sets = np.full((len(points), MOST_TIES), -1, np.int64)
     sets[:, 0] = owner
-    points = _snapped(field, points, tets, sets, scratch)
-    points, tets, sets = _split_at_crossings(field, points, tets, sets, scratch)
+    cuts = _no_cuts_yet(tets)
+    points = _snapped(field, points, tets, sets, cuts, scratch)
+    points, tets, sets = _split_at_crossings(field, points, tets, sets, cuts, scratch)
     labels = _labels_of_tets(field, points, tets, sets, scratch)
     labels, n_specks = without_specks(points, tets, labels)
     return Complex(points, tets, labels), n_specks
@@ -102,23 +103,39 @@ def _with_ring(points: Floats, tets: Ints, owner: Ints) -> tuple[Floats, Ints, I
     return points, tets, owner[kept]
 
 
-def _both_ways(
-    field: LabelField, points: Floats, sets: Ints, edges: Ints, scratch: Scratch
-) -> tuple[Floats, Ints, NDArray[np.bool_]]:
-    """Crossings seen from both ends of each edge.
+class _Cuts(NamedTuple):
+    """Where edges leave the labels of their ends, seen from both ends.
 
-    Returns
-    -------
-    where : (2, m) float64
-        Share of the edge from the end it is seen from.
-    labels : (2, m, 2) int64
-    crossed : (m,) bool
+    Attributes
+    ----------
+    edges : (e, 2) int64
+    edge_of_tet : (m, 6) int64
+    where : (2, e) float64
+        Share of the edge from the end it is seen from; NaN while nobody has looked.
+    labels : (2, e, 2) int64
+        The label left and the one entered (-1 when it does not change).
     """
-    ahead = cut_edges(field, points, sets, edges, scratch)
-    back = cut_edges(field, points, sets, np.ascontiguousarray(edges[:, ::-1]), scratch)
-    labels = np.stack([ahead[1], back[1]])
-    crossed = np.asarray((labels[:, :, 1] >= 0).all(axis=0))
-    return np.stack([ahead[0], back[0]]), labels, crossed
+
+    edges: Ints
+    edge_of_tet: Ints
+    where: Floats
+    labels: Ints
+
+
+def _no_cuts_yet(tets: Ints) -> _Cuts:
+    edges, edge_of_tet = unique_edges(tets)
+    unknown, none = np.full((2, len(edges)), np.nan), np.full((2, len(edges), 2), -1, np.int64)
+    return _Cuts(edges, edge_of_tet, unknown, none)
+
+
+def _look(field: LabelField, points: Floats, sets: Ints, cuts: _Cuts, scratch: Scratch) -> Ints:
+    """Numbers of the edges whose ends have no label in common; `cuts` is filled in for them."""
+    crossing = np.flatnonzero(disjoint(sets, cuts.edges))
+    new = crossing[np.isnan(cuts.where[0, crossing])]
+    ahead = cuts.edges[new]
+    for way, pairs in enumerate((ahead, np.ascontiguousarray(ahead[:, ::-1]))):
+        cuts.where[way, new], cuts.labels[way, new] = cut_edges(field, points, sets, pairs, scratch)
+    return crossing
 
 
 def _reaches(points: Floats, edges: Ints, edge_of_tet: Ints) -> Floats:
@@ -129,22 +146,21 @@ def _reaches(points: Floats, edges: Ints, edge_of_tet: Ints) -> Floats:
     return np.where(lengths >= 0.93 * longest, SNAP_SHARE, SNAP_SHARE * SHORT_BONUS)
 
 
-def _snapped(field: LabelField, points: Floats, tets: Ints, sets: Ints, scratch: Scratch) -> Floats:
+def _snapped(
+    field: LabelField, points: Floats, tets: Ints, sets: Ints, cuts: _Cuts, scratch: Scratch
+) -> Floats:
     """Points with those near a crossing moved onto it; their label sets grow in place."""
-    edges, edge_of_tet = unique_edges(tets)
-    reach = _reaches(points, edges, edge_of_tet)
+    reach = _reaches(points, cuts.edges, cuts.edge_of_tet)
     stars = new_stars(points, tets, np.ones(len(tets), np.int64))
     floors = LEAST_VOLUME * 6.0 * signed_volumes(points, tets)
     moved = np.zeros(len(points), np.int64)
     for _ in range(SNAP_ROUNDS):
-        crossing = np.flatnonzero(disjoint(sets, edges))
-        if not len(crossing):
-            break
-        pairs = edges[crossing]
-        where, labels, crossed = _both_ways(field, stars.points, sets, pairs, scratch)
+        crossing = _look(field, stars.points, sets, cuts, scratch)
+        pairs, where, labels = cuts.edges[crossing], cuts.where[:, crossing], cuts.labels[:, crossing]
         movers = np.concatenate([pairs[:, 0], pairs[:, 1]])
         others = np.concatenate([pairs[:, 1], pairs[:, 0]])
         urgency = (where / reach[crossing]).ravel()
+        crossed = (labels[:, :, 1] >= 0).all(axis=0)
         chosen = np.flatnonzero(np.tile(crossed, 2) & (urgency < 1.0))
         chosen = chosen[np.lexsort((movers[chosen], urgency[chosen]))]
         start, end = stars.points[movers[chosen]], stars.points[others[chosen]]
@@ -154,19 +170,18 @@ def _snapped(field: LabelField, points: Floats, tets: Ints, sets: Ints, scratch:
         if not done.any():
             break
         add_labels(sets, movers[chosen][done], labels[:, :, 1].ravel()[chosen][done])
+        cuts.where[:, (moved == 2)[cuts.edges].any(axis=1)] = np.nan
     return stars.points
 
 
 def _split_at_crossings(
-    field: LabelField, points: Floats, tets: Ints, sets: Ints, scratch: Scratch
+    field: LabelField, points: Floats, tets: Ints, sets: Ints, cuts: _Cuts, scratch: Scratch
 ) -> tuple[Floats, Ints, Ints]:
     """Split the edges whose ends have no label in common where the label changes."""
-    edges, edge_of_tet = unique_edges(tets)
-    crossing = np.flatnonzero(disjoint(sets, edges))
+    crossing = _look(field, points, sets, cuts, scratch)
     if not len(crossing):
         return points, tets, sets
-    pairs = edges[crossing]
-    where, labels, _ = _both_ways(field, points, sets, pairs, scratch)
+    pairs, where, labels = cuts.edges[crossing], cuts.where[:, crossing], cuts.labels[:, crossing]
     ahead, back = where[0], 1.0 - where[1]
     nearer = np.where(np.abs(ahead - 0.5) < np.abs(back - 0.5), ahead, back)
     share = np.where(labels[0, :, 1] == labels[1, :, 1], ahead, nearer)
@@ -176,10 +191,10 @@ def _split_at_crossings(
     new_sets[:, 0] = np.where(labels[0, :, 0] >= 0, labels[0, :, 0], sets[pairs[:, 0], 0])
     entered = np.where(labels[0, :, 1] >= 0, labels[0, :, 1], sets[pairs[:, 1], 0])
     add_labels(new_sets, np.arange(len(pairs)), entered)
-    middle = np.full(len(edges), -1, np.int64)
+    middle = np.full(len(cuts.edges), -1, np.int64)
     middle[crossing] = len(points) + np.arange(len(pairs))
-    rank = longest_first(edge_lengths(points, edges))
-    pieces, _ = split_edges(tets, edges, edge_of_tet, middle=middle, rank=rank)
+    rank = longest_first(edge_lengths(points, cuts.edges))
+    pieces, _ = split_edges(tets, cuts.edges, cuts.edge_of_tet, middle=middle, rank=rank)
     all_points = np.concatenate([points, new_points])
     return all_points, oriented(all_points, pieces), np.concatenate([sets, new_sets])
 

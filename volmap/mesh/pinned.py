@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from volmap.kernels.lattice import edge_lengths, longest_first, split_edges
 from volmap.kernels.strata import label_interfaces, triangle_edges
-from volmap.kernels.topology import unique_edges
+from volmap.kernels.topology import Faces, unique_edges
 from volmap.mesh.labelled import Complex
 
 Ints = NDArray[np.int64]
@@ -27,9 +27,10 @@ def _on_interfaces(complex_: Complex) -> tuple[Flags, Ints]:
     return held, triangle_edges(triangles, len(complex_.points))[0]
 
 
-def pinned_tets(complex_: Complex) -> Flags:
+def pinned_tets(complex_: Complex, *, faces: Faces | None = None) -> Flags:
     """(m,) True for labelled tets whose four corners all lie on interfaces."""
-    held, _ = _on_interfaces(complex_)
+    held = np.zeros(len(complex_.points), bool)
+    held[label_interfaces(complex_.tets, complex_.labels, faces)[0]] = True
     return np.asarray((complex_.labels > 0) & held[complex_.tets].all(axis=1))
 
 

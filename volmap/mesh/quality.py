@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.tets import dihedral_degrees
+from volmap.kernels.topology import match_faces
 from volmap.mesh.euler import euler_of_tets
 from volmap.mesh.labelled import Complex
 from volmap.mesh.pinned import pinned_tets
@@ -156,8 +157,9 @@ def quality_table(mesh: TetMesh, voxels: dict[int, VoxelFacts], names: dict[int,
     """
     points, tets, labels = np.array(mesh.points), np.array(mesh.tets), np.array(mesh.labels)
     angles = dihedral_degrees(points, tets)
-    euler = euler_of_tets(tets, labels, len(points))
-    piece, bundle = pieces_of(tets, labels), point_pieces(tets, labels)
+    faces = match_faces(tets)
+    euler = euler_of_tets(tets, labels, len(points), faces=faces)
+    piece, bundle = pieces_of(tets, labels, faces=faces), point_pieces(tets, labels)
     rows = []
     for label, facts in sorted(voxels.items()):
         of = labels == label
@@ -187,6 +189,6 @@ def quality_table(mesh: TetMesh, voxels: dict[int, VoxelFacts], names: dict[int,
         tets=len(tets),
         min_dihedral_deg=float(angles.min()),
         max_dihedral_deg=float(angles.max()),
-        pinned_tets=int(pinned_tets(Complex(points, tets, labels)).sum()),
+        pinned_tets=int(pinned_tets(Complex(points, tets, labels), faces=faces).sum()),
         inverted_tets=int((mesh.volumes <= 0).sum()),
     )
