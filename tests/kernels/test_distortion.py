@@ -6,10 +6,16 @@ from importlib.resources import files
 import numpy as np
 import pytest
 
+from volmap.kernels import energies as densities
+from volmap.kernels import steps
 from volmap.kernels import tets as tet_kernels
+from volmap.kernels.compiled import kernel
 from volmap.kernels.distortion import derivatives, energies, rotate_to_stretches, symmetrised
-from volmap.kernels.energies import ENERGIES, density
-from volmap.kernels.steps import first_root, step_bounds
+from volmap.kernels.energies import ENERGIES
+from volmap.kernels.steps import step_bounds
+
+density = kernel(densities.density.py_func)
+first_root = kernel(steps.first_root.py_func)
 
 UNIT_TET = np.array([[0.0, 0, 0], [1, 0, 0], [0, 1, 0], [0, 0, 1]])
 ONE = np.array([[0, 1, 2, 3]])

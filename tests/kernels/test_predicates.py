@@ -7,7 +7,11 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from volmap.kernels.predicates import orient_2d, orient_3d, orientation_signs
+from volmap.kernels import predicates
+from volmap.kernels.compiled import kernel
+from volmap.kernels.predicates import orientation_signs
+
+orient_2d, orient_3d = kernel(predicates.orient_2d.py_func), kernel(predicates.orient_3d.py_func)
 
 TET = np.array([[0, 1, 2, 3]])
 REFERENCE = np.array([[0.0, 0, 0], [1, 0, 0], [0, 1, 0], [0, 0, 1]])

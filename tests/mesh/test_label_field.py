@@ -5,15 +5,18 @@ from itertools import pairwise
 import numpy as np
 from scipy.interpolate import BSpline
 
+from volmap.kernels import labelfield, tie
+from volmap.kernels.compiled import kernel
 from volmap.kernels.labelfield import (
     LabelField,
     cut_edges,
-    evaluate,
     new_scratch,
     owners,
     voxel_changes,
 )
-from volmap.kernels.tie import TIED, project
+from volmap.kernels.tie import TIED
+
+evaluate, project = kernel(labelfield.evaluate.py_func), kernel(tie.project.py_func)
 
 CUBIC = BSpline.basis_element([-2, -1, 0, 1, 2], extrapolate=False)
 

@@ -4,13 +4,20 @@ import numpy as np
 import pytest
 from vtkmodules.vtkCommonDataModel import vtkTetra, vtkTriangle
 
+from volmap.kernels import stars as star_kernels
+from volmap.kernels.compiled import kernel
 from volmap.kernels.labelfield import LabelField, new_scratch
 from volmap.kernels.lattice import bcc
 from volmap.kernels.relocate import relax, search, search_directions
 from volmap.kernels.snap import add_labels, disjoint, snap
-from volmap.kernels.stars import least_sine, new_stars, six_volumes, star_sine
+from volmap.kernels.stars import new_stars
 from volmap.kernels.strata import new_strata
 from volmap.kernels.tets import dihedral_degrees, signed_volumes
+
+six_volumes, least_sine, star_sine = (
+    kernel(inner.py_func)
+    for inner in (star_kernels.six_volumes, star_kernels.least_sine, star_kernels.star_sine)
+)
 
 SHARES = np.array([1.0, 0.7])
 

@@ -5,10 +5,11 @@ from __future__ import annotations
 from math import log, sqrt
 
 import numpy as np
-from numba import njit
+
+from volmap.kernels.compiled import inner_kernel, kernel
 
 
-@njit(cache=True)
+@inner_kernel
 def barrier(distance, reach):  # type: ignore[no-untyped-def]
     """``-(d - r)^2 ln(d / r)`` with its first and second derivative; all 0 from d = r on, infinite at 0."""
     if distance >= reach:
@@ -23,7 +24,7 @@ def barrier(distance, reach):  # type: ignore[no-untyped-def]
     return value, first, second
 
 
-@njit(cache=True)
+@kernel
 def add_barrier(pairs, reach, strength, gradient, normals, stiffness):  # type: ignore[no-untyped-def]
     """Sum of the barriers of all pairs; its gradient is added, its stiffness along each gap written.
 

@@ -5,8 +5,9 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-from numba import njit
 from numpy.typing import ArrayLike, DTypeLike, NDArray
+
+from volmap.kernels.compiled import kernel
 
 # How far below zero a coordinate may be before a point counts as outside: rounding, not geometry.
 INSIDE = -1e-9
@@ -17,7 +18,7 @@ def plain(values: ArrayLike, dtype: DTypeLike) -> NDArray[Any]:
     return np.require(values, dtype, ["C", "W"])
 
 
-@njit(cache=True)
+@kernel
 def barycentric_rows(points, tets):  # type: ignore[no-untyped-def]
     """Tables from which the coordinates of any place follow.
 

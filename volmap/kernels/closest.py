@@ -11,6 +11,8 @@ import numpy as np
 from numba import njit, prange
 from numpy.typing import NDArray
 
+from volmap.kernels.compiled import inner_kernel, kernel
+
 LEAF = 4  # triangles in a leaf, at most
 DEPTH = 64  # room on the search stack; the tree is balanced, so its depth is log2 of the triangles
 
@@ -54,7 +56,7 @@ def build_tree(points: NDArray[np.float64], triangles: NDArray[np.int64]) -> Tre
     return tree
 
 
-@njit(cache=True)
+@kernel
 def _split(centres):  # type: ignore[no-untyped-def]
     """Halve the triangles along the longest side of their centres' box until a leaf holds few."""
     m = len(centres)
@@ -96,7 +98,7 @@ def _split(centres):  # type: ignore[no-untyped-def]
     return child[:used].copy(), first[:used].copy(), last[:used].copy(), order
 
 
-@njit(cache=True)
+@kernel
 def refit(tree, points, triangles):  # type: ignore[no-untyped-def]
     """Set the boxes of a tree to where the points are now (in place)."""
     for node in range(len(tree.child) - 1, -1, -1):
@@ -117,7 +119,7 @@ def refit(tree, points, triangles):  # type: ignore[no-untyped-def]
             tree.high[node, d] = high
 
 
-@njit(cache=True)
+@inner_kernel
 def on_triangle(px, py, pz, points, a, b, c):  # type: ignore[no-untyped-def]
     """Barycentric coordinates of the point of triangle abc closest to p, and the squared distance.
 
@@ -161,7 +163,7 @@ def on_triangle(px, py, pz, points, a, b, c):  # type: ignore[no-untyped-def]
     return 1.0 - v - w, v, w, rx * rx + ry * ry + rz * rz
 
 
-@njit(cache=True)
+@inner_kernel
 def _box_distance(tree, node, px, py, pz):  # type: ignore[no-untyped-def]
     dx = max(tree.low[node, 0] - px, 0.0, px - tree.high[node, 0])
     dy = max(tree.low[node, 1] - py, 0.0, py - tree.high[node, 1])

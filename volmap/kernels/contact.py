@@ -18,6 +18,7 @@ from numba import njit, prange
 from numpy.typing import NDArray
 
 from volmap.kernels.closest import DEPTH, Tree, build_tree, on_triangle
+from volmap.kernels.compiled import inner_kernel, kernel
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -64,7 +65,7 @@ def skin_of(points: Floats, triangles: Ints) -> Skin:
     return Skin(lone, edges, triangles, build_tree(points, edges), build_tree(points, triangles))
 
 
-@njit(cache=True)
+@kernel
 def _sweep(tree, cells, here, there):  # type: ignore[no-untyped-def]
     """Boxes around cells on their straight way from `here` to `there`, in place."""
     for node in range(len(tree.child) - 1, -1, -1):
@@ -84,7 +85,7 @@ def _sweep(tree, cells, here, there):  # type: ignore[no-untyped-def]
             tree.high[node, d] = high
 
 
-@njit(cache=True)
+@inner_kernel
 def _box(cell, here, there, margin, low, high):  # type: ignore[no-untyped-def]
     for d in range(3):
         low[d], high[d] = np.inf, -np.inf
@@ -95,14 +96,14 @@ def _box(cell, here, there, margin, low, high):  # type: ignore[no-untyped-def]
         high[d] += margin
 
 
-@njit(cache=True)
+@inner_kernel
 def _apart(low, high, low2, high2):  # type: ignore[no-untyped-def]
     x = low[0] > high2[0] or high[0] < low2[0]
     y = low[1] > high2[1] or high[1] < low2[1]
     return x or y or low[2] > high2[2] or high[2] < low2[2]
 
 
-@njit(cache=True)
+@inner_kernel
 def _share_a_point(a, b):  # type: ignore[no-untyped-def]
     for i in range(3):
         for j in range(3):
@@ -111,7 +112,7 @@ def _share_a_point(a, b):  # type: ignore[no-untyped-def]
     return False
 
 
-@njit(cache=True)
+@inner_kernel
 def _edge_weights(x, weights):  # type: ignore[no-untyped-def]
     """Weights of the closest points of segments x0 x1 and x2 x3 into weights (4,)
 
@@ -141,7 +142,7 @@ def _edge_weights(x, weights):  # type: ignore[no-untyped-def]
     weights[0], weights[1], weights[2], weights[3] = 1.0 - s, s, t - 1.0, -t
 
 
-@njit(cache=True)
+@inner_kernel
 def _gap(of_edges, x, weights, gap):  # type: ignore[no-untyped-def]
     """Weights and gap vector of four places x (4, 3); returns the distance."""
     if of_edges:
@@ -158,7 +159,7 @@ def _gap(of_edges, x, weights, gap):  # type: ignore[no-untyped-def]
     return sqrt(squared)
 
 
-@njit(cache=True)
+@inner_kernel
 def _corners(of_edges, query, cell, corners):  # type: ignore[no-untyped-def]
     if of_edges:
         corners[0], corners[1], corners[2], corners[3] = query[0], query[1], cell[0], cell[1]
@@ -166,7 +167,7 @@ def _corners(of_edges, query, cell, corners):  # type: ignore[no-untyped-def]
         corners[0], corners[1], corners[2], corners[3] = query[0], cell[0], cell[1], cell[2]
 
 
-@njit(cache=True)
+@inner_kernel
 def _first_meeting(of_edges, x, p, longest, weights, gap):  # type: ignore[no-untyped-def]
     """A step in [0, longest] on which the four places x (4, 3), moving by p (4, 3), surely do not meet.
 
@@ -200,7 +201,7 @@ def _first_meeting(of_edges, x, p, longest, weights, gap):  # type: ignore[no-un
     return t
 
 
-@njit(cache=True)
+@inner_kernel
 def _leaves(tree, low, high, stack, leaves):  # type: ignore[no-untyped-def]
     """Leaves of a tree whose boxes overlap a box, into leaves; returns how many."""
     n = 0
@@ -221,7 +222,7 @@ def _leaves(tree, low, high, stack, leaves):  # type: ignore[no-untyped-def]
     return n
 
 
-@njit(cache=True)
+@inner_kernel
 def _worth_a_look(of_edges, cells, queries, q, c, here, there, low, high, low2, high2):  # type: ignore[no-untyped-def]
     """True when query q and cell c have no point in common, boxes that overlap, and are not met twice."""
     if (of_edges and c <= q) or _share_a_point(queries[q], cells[c]):
@@ -348,7 +349,7 @@ def _near_cells(
     return query, found[query, within]
 
 
-@njit(cache=True)
+@kernel
 def _measure(pairs, points, weights, gaps):  # type: ignore[no-untyped-def]
     x = np.empty((4, 3))
     for k in range(len(pairs.corners)):
@@ -366,7 +367,7 @@ def remeasured(pairs: Pairs, points: Floats, reach_mm: float) -> Pairs:
     return Pairs(pairs.corners[keep], weights[keep], gaps[keep], pairs.of_edges[keep])
 
 
-@njit(cache=True)
+@kernel
 def longest_step_of(pairs, here, there):  # type: ignore[no-untyped-def]
     """As `longest_step`, for these pairs alone."""
     x, p = np.empty((4, 3)), np.empty((4, 3))

@@ -11,16 +11,16 @@ the overlap of the two boxes, so each pair is seen once and always in the same o
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from volmap.kernels.compiled import inner_kernel, kernel
 from volmap.kernels.predicates import in_exact_range, orient_2d, orient_3d
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
-@njit(cache=True)
+@inner_kernel
 def _segments_meet_2d(points: Floats, axis: int, a: int, b: int, c: int, d: int) -> bool:
     """True when the closed segments ab and cd meet, seen along `axis`."""
     sc, sd = orient_2d(points, axis, a, b, c), orient_2d(points, axis, a, b, d)
@@ -37,7 +37,7 @@ def _segments_meet_2d(points: Floats, axis: int, a: int, b: int, c: int, d: int)
     return True
 
 
-@njit(cache=True)
+@inner_kernel
 def _inside_2d(points: Floats, axis: int, tri: tuple[int, int, int], p: int) -> bool:
     """True when p lies in the closed triangle, seen along `axis` (in which it is not flat)."""
     s0 = orient_2d(points, axis, tri[0], tri[1], p)
@@ -46,7 +46,7 @@ def _inside_2d(points: Floats, axis: int, tri: tuple[int, int, int], p: int) -> 
     return min(s0, s1, s2) >= 0 or max(s0, s1, s2) <= 0
 
 
-@njit(cache=True)
+@inner_kernel
 def _axis_of(points: Floats, tri: tuple[int, int, int]) -> int:
     """An axis along which the triangle is not flat; -1 when it has no area at all."""
     for axis in range(3):
@@ -55,7 +55,7 @@ def _axis_of(points: Floats, tri: tuple[int, int, int]) -> int:
     return -1
 
 
-@njit(cache=True)
+@inner_kernel
 def _segment_meets_segment(points: Floats, p: int, q: int, a: int, b: int) -> bool:
     """True when two closed segments in space meet: in one plane, and meeting along all three axes."""
     if orient_3d(points, p, q, a, b) != 0:
@@ -66,7 +66,7 @@ def _segment_meets_segment(points: Floats, p: int, q: int, a: int, b: int) -> bo
     return True
 
 
-@njit(cache=True)
+@inner_kernel
 def _segment_meets_triangle(points: Floats, p: int, q: int, tri: tuple[int, int, int]) -> bool:
     """True when the closed segment pq meets the closed triangle."""
     a, b, c = tri
@@ -89,7 +89,7 @@ def _segment_meets_triangle(points: Floats, p: int, q: int, tri: tuple[int, int,
     )
 
 
-@njit(cache=True)
+@inner_kernel
 def _apart(points: Floats, s: tuple[int, int, int], t: tuple[int, int, int]) -> bool:
     """True when the plane of `s` has all of `t` strictly on one side."""
     s0 = orient_3d(points, s[0], s[1], s[2], t[0])
@@ -98,7 +98,7 @@ def _apart(points: Floats, s: tuple[int, int, int], t: tuple[int, int, int]) -> 
     return orient_3d(points, s[0], s[1], s[2], t[2]) == s0
 
 
-@njit(cache=True)
+@inner_kernel
 def _coplanar(points: Floats, s: tuple[int, int, int], t: tuple[int, int, int]) -> bool:
     """True when all of `t` lies in the plane of `s`."""
     for c in range(3):  # noqa: SIM110
@@ -107,7 +107,7 @@ def _coplanar(points: Floats, s: tuple[int, int, int], t: tuple[int, int, int]) 
     return True
 
 
-@njit(cache=True)
+@inner_kernel
 def _beside(points: Floats, axis: int, s: tuple[int, int, int], t: tuple[int, int, int]) -> bool:
     """True when an edge of `s` has all of `t` strictly on its outer side, seen along `axis`."""
     inner = orient_2d(points, axis, s[0], s[1], s[2])
@@ -123,7 +123,7 @@ def _beside(points: Floats, axis: int, s: tuple[int, int, int], t: tuple[int, in
     return False
 
 
-@njit(cache=True)
+@inner_kernel
 def _free_pair_crosses(points: Floats, s: tuple[int, int, int], t: tuple[int, int, int]) -> bool:
     """Two triangles without a common corner."""
     if _apart(points, s, t) or _apart(points, t, s):
@@ -138,13 +138,13 @@ def _free_pair_crosses(points: Floats, s: tuple[int, int, int], t: tuple[int, in
     return False
 
 
-@njit(cache=True)
+@inner_kernel
 def _corner_pair_crosses(points: Floats, s: tuple[int, int, int], t: tuple[int, int, int]) -> bool:
     """Two triangles whose first corner is common: anything more they share reaches an opposite edge."""
     return _segment_meets_triangle(points, s[1], s[2], t) or _segment_meets_triangle(points, t[1], t[2], s)
 
 
-@njit(cache=True)
+@inner_kernel
 def _hinge_crosses(points: Floats, u: int, v: int, a: int, b: int) -> bool:
     """Two triangles uva and uvb: only when they are folded flat onto each other."""
     if orient_3d(points, u, v, a, b) != 0:
@@ -156,7 +156,7 @@ def _hinge_crosses(points: Floats, u: int, v: int, a: int, b: int) -> bool:
     return False
 
 
-@njit(cache=True)
+@inner_kernel
 def _pair_crosses(points: Floats, s: Ints, t: Ints) -> bool:
     """True when the triangles have a point in common beyond the corners they share by number."""
     shared, last_s, last_t, sum_s, sum_t = 0, 0, 0, 0, 0
@@ -178,7 +178,7 @@ def _pair_crosses(points: Floats, s: Ints, t: Ints) -> bool:
     return True
 
 
-@njit(cache=True)
+@inner_kernel
 def _fill_cells(first: Ints, last: Ints, shape: Ints) -> tuple[Ints, Ints]:
     """Which triangles reach each cell, as a compressed list (ascending in each cell)."""
     start = np.zeros(shape[0] * shape[1] * shape[2] + 1, np.int64)
@@ -200,7 +200,7 @@ def _fill_cells(first: Ints, last: Ints, shape: Ints) -> tuple[Ints, Ints]:
     return start, held
 
 
-@njit(cache=True)
+@inner_kernel
 def _meets_first_here(
     low: Floats, high: Floats, first: Ints, here: tuple[int, int, int], s: int, t: int
 ) -> bool:
@@ -213,7 +213,7 @@ def _meets_first_here(
     return True
 
 
-@njit(cache=True)
+@kernel
 def _crossing_pairs(
     points: Floats, triangles: Ints, low: Floats, high: Floats, first: Ints, last: Ints
 ) -> Ints:

@@ -8,8 +8,9 @@ Prince, On finite difference Jacobian computation in deformable image registrati
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
+
+from volmap.kernels.compiled import inner_kernel, kernel
 
 # Corners of a cube as bits (i, j, k) = (4, 2, 1); each row a positive tet of the undeformed cube.
 TEN_TETS = np.array(
@@ -29,7 +30,7 @@ TEN_TETS = np.array(
 )
 
 
-@njit(cache=True)
+@inner_kernel
 def _determinant(y, a, b, c, d):  # type: ignore[no-untyped-def]
     """det[b - a, c - a, d - a] of four rows of y."""
     px, py, pz = y[b, 0] - y[a, 0], y[b, 1] - y[a, 1], y[b, 2] - y[a, 2]
@@ -38,7 +39,7 @@ def _determinant(y, a, b, c, d):  # type: ignore[no-untyped-def]
     return px * (qy * rz - qz * ry) - py * (qx * rz - qz * rx) + pz * (qx * ry - qy * rx)
 
 
-@njit(cache=True)
+@kernel
 def smallest_determinants(displacement, axes, tets):  # type: ignore[no-untyped-def]
     """Smallest of the ten determinants of every cube, as a volume ratio.
 

@@ -133,7 +133,7 @@ def _add_run(scratch, count, label, a, b, run, slope):  # type: ignore[no-untype
     return count
 
 
-@kernel
+@inner_kernel
 def evaluate(field, x, y, z, scratch):  # type: ignore[no-untyped-def]
     """Values and gradients (1/mm) of all labels near a point.
 

@@ -9,6 +9,7 @@ from numba import njit, prange
 from numpy.typing import NDArray
 
 from volmap.kernels.barycentric import INSIDE, barycentric_rows, plain
+from volmap.kernels.compiled import kernel
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -142,7 +143,7 @@ def _misses(rows, t, x, y, z, half):  # type: ignore[no-untyped-def]
     return rest + half * (abs(gx) + abs(gy) + abs(gz)) < INSIDE
 
 
-@njit(cache=True)
+@kernel
 def _sort_into_boxes(points, tets, rows, origin, width, counts):  # type: ignore[no-untyped-def]
     """Counting sort of tets into the boxes they may meet, ascending in each box."""
     start = np.zeros(counts[0] * counts[1] * counts[2] + 1, np.int64)

@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from volmap.kernels.barycentric import plain
+from volmap.kernels.compiled import kernel
 
 # A place half-way between two voxels belongs to the lower one, however its last bits were rounded.
 _HALF_WAY = 1e-6
@@ -33,7 +33,7 @@ def nearest_labels(labels: NDArray[np.uint16], index: NDArray[np.float64]) -> ND
     return found
 
 
-@njit(cache=True)
+@kernel
 def _look_up(labels, index, found):  # type: ignore[no-untyped-def]
     """Round each index, half-way down."""
     for n in range(index.shape[0]):

@@ -9,8 +9,9 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
+
+from volmap.kernels.compiled import inner_kernel, kernel
 
 
 class Observations(NamedTuple):
@@ -45,7 +46,7 @@ def joined(parts: list[Observations]) -> Observations:
     return Observations(*(np.concatenate(columns) for columns in zip(*parts, strict=True)))
 
 
-@njit(cache=True)
+@inner_kernel
 def _residual(o, k, points, r):  # type: ignore[no-untyped-def]
     """Residual vector of observation k into r; returns its part along the normal."""
     for i in range(3):
@@ -56,7 +57,7 @@ def _residual(o, k, points, r):  # type: ignore[no-untyped-def]
     return r[0] * o.normals[k, 0] + r[1] * o.normals[k, 1] + r[2] * o.normals[k, 2]
 
 
-@njit(cache=True)
+@kernel
 def misfit(o, points):  # type: ignore[no-untyped-def]
     """Sum of the weighted squared residuals."""
     total = 0.0
@@ -68,7 +69,7 @@ def misfit(o, points):  # type: ignore[no-untyped-def]
     return total
 
 
-@njit(cache=True)
+@kernel
 def add_pull(o, points, gradient, diagonal, off_diagonal):  # type: ignore[no-untyped-def]
     """Add first and second derivatives of `misfit` to a block system; returns the misfit."""
     total = 0.0

@@ -16,8 +16,9 @@ from collections.abc import Iterable
 from fractions import Fraction
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
+
+from volmap.kernels.compiled import inner_kernel, kernel
 
 SMALLEST, LARGEST = 1e-75, 1e75
 
@@ -30,7 +31,7 @@ _PERMUTATIONS = np.array(
 )
 
 
-@njit(cache=True)
+@inner_kernel
 def _two_sum(a: float, b: float) -> tuple[float, float]:
     """Rounded sum, and what rounding took away."""
     s = a + b
@@ -38,7 +39,7 @@ def _two_sum(a: float, b: float) -> tuple[float, float]:
     return s, (a - (s - t)) + (b - t)
 
 
-@njit(cache=True)
+@inner_kernel
 def _two_product(a: float, b: float) -> tuple[float, float]:
     """Rounded product, and what rounding took away."""
     p = a * b
@@ -51,7 +52,7 @@ def _two_product(a: float, b: float) -> tuple[float, float]:
     return p, a_low * b_low - (((p - a_high * b_high) - a_low * b_high) - a_high * b_low)
 
 
-@njit(cache=True)
+@inner_kernel
 def _grow(expansion: NDArray[np.float64], n: int, b: float) -> int:
     """Add `b` to an expansion of `n` numbers in place; returns its new length (zeros dropped)."""
     q = b
@@ -67,7 +68,7 @@ def _grow(expansion: NDArray[np.float64], n: int, b: float) -> int:
     return k
 
 
-@njit(cache=True)
+@inner_kernel
 def _sign_of(expansion: NDArray[np.float64], n: int) -> int:
     """Sign of an expansion: that of its last, largest number."""
     if n == 0:
@@ -75,7 +76,7 @@ def _sign_of(expansion: NDArray[np.float64], n: int) -> int:
     return 1 if expansion[n - 1] > 0.0 else -1
 
 
-@njit(cache=True)
+@inner_kernel
 def _differences(points: NDArray[np.float64], base: int, ends: tuple[int, int, int]) -> NDArray[np.float64]:
     """(3, 3, 2) exact differences ``points[end] - points[base]`` as two numbers each."""
     d = np.empty((3, 3, 2))
@@ -85,7 +86,7 @@ def _differences(points: NDArray[np.float64], base: int, ends: tuple[int, int, i
     return d
 
 
-@njit(cache=True)
+@inner_kernel
 def _exact_sign_3d(points: NDArray[np.float64], i: int, j: int, k: int, m: int) -> int:
     """Sign of det[pj - pi, pk - pi, pm - pi], without rounding."""
     d = _differences(points, i, (j, k, m))
@@ -108,7 +109,7 @@ def _exact_sign_3d(points: NDArray[np.float64], i: int, j: int, k: int, m: int) 
     return _sign_of(expansion, n)
 
 
-@njit(cache=True)
+@inner_kernel
 def orient_3d(points: NDArray[np.float64], i: int, j: int, k: int, m: int) -> int:
     """Sign of the tet ijkm: +1 when ijk runs counter-clockwise seen from m, 0 when flat.
 
@@ -133,7 +134,7 @@ def orient_3d(points: NDArray[np.float64], i: int, j: int, k: int, m: int) -> in
     return _exact_sign_3d(points, i, j, k, m)
 
 
-@njit(cache=True)
+@inner_kernel
 def orient_2d(points: NDArray[np.float64], axis: int, i: int, j: int, k: int) -> int:
     """Sign of the triangle ijk seen along `axis`: +1 counter-clockwise in the two that follow it.
 
@@ -161,7 +162,7 @@ def orient_2d(points: NDArray[np.float64], axis: int, i: int, j: int, k: int) ->
     return _sign_of(expansion, n)
 
 
-@njit(cache=True)
+@kernel
 def _signs(points: NDArray[np.float64], tets: NDArray[np.int64]) -> NDArray[np.int8]:
     signs = np.empty(len(tets), np.int8)
     for t in range(len(tets)):

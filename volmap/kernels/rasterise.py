@@ -16,6 +16,7 @@ from numba import njit, prange
 from numpy.typing import NDArray
 
 from volmap.kernels.barycentric import INSIDE, barycentric_rows, plain
+from volmap.kernels.compiled import kernel
 
 # Planes given out at a time by `values_by_slab`.
 _SLAB = 16
@@ -143,7 +144,7 @@ def _corner_range(
     return found
 
 
-@njit(cache=True)
+@kernel
 def _planes(low, high, n_planes):  # type: ignore[no-untyped-def]
     """Counting sort of tets into the planes that they meet, ascending in each."""
     start = np.zeros(n_planes + 1, np.int64)

@@ -7,7 +7,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.kernels.compiled import inner_kernel, kernel
+from volmap.kernels.compiled import inner_kernel
 from volmap.kernels.topology import incidence
 
 Floats = NDArray[np.float64]
@@ -45,7 +45,7 @@ def new_stars(points: Floats, tets: Ints, labels: Ints) -> Stars:
     return Stars(np.array(points), np.array(tets), np.array(labels), start, cell, np.full(len(tets), np.nan))
 
 
-@kernel
+@inner_kernel
 def six_volumes(points, tets, t):  # type: ignore[no-untyped-def]
     """Six times the signed volume of tet t, mm3."""
     a, b, c, d = tets[t, 0], tets[t, 1], tets[t, 2], tets[t, 3]
@@ -56,7 +56,7 @@ def six_volumes(points, tets, t):  # type: ignore[no-untyped-def]
     return (b1 * c2 - b2 * c1) * d0 + (b2 * c0 - b0 * c2) * d1 + (b0 * c1 - b1 * c0) * d2
 
 
-@kernel
+@inner_kernel
 def least_sine(points, tets, t):  # type: ignore[no-untyped-def]
     """Smallest sine of the six dihedral angles of tet t; -1 when its volume is not positive.
 
@@ -93,7 +93,7 @@ def _worth(stars, t):  # type: ignore[no-untyped-def]
     return six_volumes(stars.points, stars.tets, t)
 
 
-@kernel
+@inner_kernel
 def star_sine(stars, v, size_mm):  # type: ignore[no-untyped-def]
     """Least sine of the labelled tets around a point; -1 when any tet is not positive.
 

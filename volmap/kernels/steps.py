@@ -7,13 +7,15 @@ from math import sqrt
 import numpy as np
 from numba import njit, prange
 
+from volmap.kernels.compiled import inner_kernel
 
-@njit(cache=True)
+
+@inner_kernel
 def _value(a, b, c, t):  # type: ignore[no-untyped-def]
     return 1.0 + t * (a + t * (b + t * c))
 
 
-@njit(cache=True)
+@inner_kernel
 def first_root(a, b, c, limit):  # type: ignore[no-untyped-def]
     """A safe lower end of the smallest root of 1 + a t + b t^2 + c t^3 in (0, limit], else `limit`.
 
@@ -54,7 +56,7 @@ def first_root(a, b, c, limit):  # type: ignore[no-untyped-def]
     return limit
 
 
-@njit(cache=True)
+@inner_kernel
 def _det(x, y, z):  # type: ignore[no-untyped-def]
     return (
         x[0] * (y[1] * z[2] - y[2] * z[1])

@@ -6,8 +6,10 @@ import numpy as np
 from numba import njit, prange
 from numpy.typing import NDArray
 
+from volmap.kernels.compiled import inner_kernel
 
-@njit(cache=True)
+
+@inner_kernel
 def _displaced(displacement, inverse, x, y, base, part):  # type: ignore[no-untyped-def]
     """Put ``x + u(x)`` into `y`; NaN where one of the voxels that count is undefined or missing."""
     for d in range(3):

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from volmap.kernels.compiled import inner_kernel, kernel
+from volmap.kernels.compiled import inner_kernel
 from volmap.kernels.labelfield import evaluate
 
 NEWTON_STEPS = 8
@@ -132,7 +132,7 @@ def _search_normal(field, place, ties, normals, row, reach_mm, scratch):  # type
     return True
 
 
-@kernel
+@inner_kernel
 def project(field, place, ties, normals, row, reach_mm, scratch):  # type: ignore[no-untyped-def]
     """Move a place to where the labels of a row of `ties` have equal values.
 

@@ -7,6 +7,7 @@ from numba import njit, prange
 from numpy.typing import NDArray
 
 from volmap.kernels.barycentric import plain
+from volmap.kernels.compiled import inner_kernel
 
 # A place this close to a voxel centre along an axis, in voxels, is at the centre: only rounding is nearer.
 _AT_CENTRE = 1e-9
@@ -71,7 +72,7 @@ def _locked(values: NDArray[np.float32]) -> NDArray[np.float32]:
     return view
 
 
-@njit(cache=True)
+@inner_kernel
 def _axis(x, n):  # type: ignore[no-untyped-def]
     """The voxel at or below x and the share of the next one; -1 when x is beyond the outer centres."""
     if not -_AT_CENTRE <= x <= n - 1 + _AT_CENTRE:
@@ -81,7 +82,7 @@ def _axis(x, n):  # type: ignore[no-untyped-def]
     return low, share if share > _AT_CENTRE else 0.0
 
 
-@njit(cache=True)
+@inner_kernel
 def _between(values, i, j, k, a, b, c, v):  # type: ignore[no-untyped-def]
     """Component v in the cell of voxel (i, j, k), at shares (a, b, c) of the next voxels."""
     total = 0.0
@@ -132,7 +133,7 @@ def _go_and_return(there, back, to_world, to_index, distance):  # type: ignore[n
                 distance[p, q, r] = np.sqrt(square)
 
 
-@njit(cache=True)
+@inner_kernel
 def _row(matrix, d, y):  # type: ignore[no-untyped-def]
     """Component d of an affine map."""
     return matrix[d, 0] * y[0] + matrix[d, 1] * y[1] + matrix[d, 2] * y[2] + matrix[d, 3]

@@ -9,21 +9,22 @@ rasterization", SIGGRAPH 1988).
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
+
+from volmap.kernels.compiled import inner_kernel, kernel
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Image = NDArray[np.float32]
 
 
-@njit(cache=True)
+@inner_kernel
 def _owns_edge(dx: float, dy: float) -> bool:
     """Whether pixels exactly on this edge are the triangle's own: one of the two that share it says yes."""
     return dy < 0.0 or (dy == 0.0 and dx > 0.0)
 
 
-@njit(cache=True)
+@kernel
 def _fill(screen: Floats, triangles: Ints, colours: Floats, rgba: Floats, depth: Floats, face: Ints) -> None:
     """Draw every triangle into `rgba`, `depth` and `face`, nearest first to be kept."""
     height, width = depth.shape
@@ -127,7 +128,7 @@ def shrink(image: Image, factor: int) -> Image:
     return np.asarray(sum(parts[1:], parts[0]) / np.float32(factor * factor))
 
 
-@njit(cache=True)
+@kernel
 def _mark_rims(group: Ints, depth: Floats, jump: float, marked: NDArray[np.bool_]) -> None:
     height, width = depth.shape
     for row in range(height):

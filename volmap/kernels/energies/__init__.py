@@ -7,8 +7,7 @@ It is symmetrised, differentiated in F and made convex in one place, `kernels/di
 
 from __future__ import annotations
 
-from numba import njit
-
+from volmap.kernels.compiled import inner_kernel
 from volmap.kernels.energies.arap import arap
 from volmap.kernels.energies.conformal import conformal
 from volmap.kernels.energies.log_strain import log_strain
@@ -28,7 +27,7 @@ ENERGIES = {
 }
 
 
-@njit(cache=True)
+@inner_kernel
 def density(code, s, gradient, hessian):  # type: ignore[no-untyped-def]
     """W of the energy with this code; gradient (3,) and hessian (3, 3) are written in place."""
     if code == 0:

@@ -5,10 +5,10 @@ Blind to volume: useful where angles matter and growth may vary freely.
 
 from __future__ import annotations
 
-from numba import njit
+from volmap.kernels.compiled import inner_kernel
 
 
-@njit(cache=True)
+@inner_kernel
 def conformal(s, gradient, hessian):  # type: ignore[no-untyped-def]
     """Value; gradient (3,) and Hessian (3, 3) in place."""
     scale = (s[0] * s[1] * s[2]) ** (-2.0 / 3.0) / 3.0

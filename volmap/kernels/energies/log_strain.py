@@ -4,10 +4,10 @@ from __future__ import annotations
 
 from math import log
 
-from numba import njit
+from volmap.kernels.compiled import inner_kernel
 
 
-@njit(cache=True)
+@inner_kernel
 def log_strain(s, gradient, hessian):  # type: ignore[no-untyped-def]
     """Value; gradient (3,) and Hessian (3, 3) in place."""
     value = 0.0

@@ -7,10 +7,10 @@ from __future__ import annotations
 
 from math import log
 
-from numba import njit
+from volmap.kernels.compiled import inner_kernel
 
 
-@njit(cache=True)
+@inner_kernel
 def neo_hookean(s, gradient, hessian, first_lame):  # type: ignore[no-untyped-def]
     """Value; gradient (3,) and Hessian (3, 3) in place; `first_lame` is lambda over mu."""
     log_j = log(s[0] * s[1] * s[2])

@@ -5,10 +5,10 @@ Schreiner, Asirvatham, Praun & Hoppe, ACM TOG 23(3), 2004.
 
 from __future__ import annotations
 
-from numba import njit
+from volmap.kernels.compiled import inner_kernel
 
 
-@njit(cache=True)
+@inner_kernel
 def symmetric_dirichlet(s, gradient, hessian):  # type: ignore[no-untyped-def]
     """Value; gradient (3,) and Hessian (3, 3) in place."""
     value = -3.0
