@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import ctypes
 import gc
+from collections.abc import Callable
 from typing import Any
 
 from numba import njit
@@ -14,8 +15,21 @@ from numba.core import event
 from numba.core.codegen import JITCodeLibrary
 from numba.core.compiler import Compiler
 
-# Called from Python: wrappers and all.  Division by zero gives infinity, as in numpy.
-kernel = njit(cache=True, error_model="numpy")
+WITHOUT_WRAPPERS: dict[str, Any] = {"no_cpython_wrapper": True, "no_cfunc_wrapper": True}
+
+
+def kernel(function: Callable[..., Any]) -> Any:
+    """Compile a function that Python calls; division by zero gives infinity, as in numpy."""
+    return njit(cache=True, error_model="numpy")(function)
+
+
+def inner_kernel(function: Callable[..., Any]) -> Any:
+    """Compile a function that only kernels call: once for each of these, without code of its own.
+
+    It goes without the wrappers that unpack Python's arguments, which take longer to compile than most
+    bodies.  To call it in a test, compile ``kernel(inner.py_func)``.
+    """
+    return njit(error_model="numpy", pipeline_class=_InnerCompiler, **WITHOUT_WRAPPERS)(function)
 
 
 class _NoEnvironment:
@@ -23,7 +37,7 @@ class _NoEnvironment:
         """Nothing to set: an inner kernel has no code of its own in memory."""
 
 
-class _HandedOn(JITCodeLibrary):  # type: ignore[misc]
+class _HandedOn(JITCodeLibrary):
     """Code of an inner kernel: handed to the kernels that call it, which optimise it together with theirs."""
 
     def finalize(self) -> None:
@@ -46,21 +60,14 @@ class _HandedOn(JITCodeLibrary):  # type: ignore[misc]
         return _NoEnvironment()
 
 
-class _InnerCompiler(Compiler):  # type: ignore[misc]
+class _InnerCompiler(Compiler):
     def define_pipelines(self) -> Any:
         codegen = self.state.targetctx.codegen()
         self.state.library = _HandedOn(codegen, self.state.func_id.func_qualname)
         return super().define_pipelines()
 
 
-# Called by kernels only: without the wrappers that unpack Python arguments, which take longer to compile
-# than most bodies.
-inner_kernel = njit(
-    error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True, pipeline_class=_InnerCompiler
-)
-
-
-class _WithoutCollections(event.Listener):  # type: ignore[misc]
+class _WithoutCollections(event.Listener):
     """Keeps Python's collector of cycles out of compilations, whose many objects it would visit in vain."""
 
     def __init__(self) -> None:

@@ -93,7 +93,7 @@ def locate(buckets: Buckets, points: Floats, tets: Ints, queries: Floats) -> tup
     """
     rows = barycentric_rows(plain(points, np.float64), plain(tets, np.int64))
     queries = plain(queries, np.float64).reshape(-1, 3)
-    return _search(rows, *buckets, queries)  # type: ignore[no-any-return]
+    return _search(rows, *buckets, queries)
 
 
 def interpolate(tets: Ints, values: Floats, tet: Ints, barycentric: Floats) -> Floats:

@@ -107,7 +107,7 @@ def draw_triangles(
         np.array(screen, np.float64, order="C"),
         np.array(triangles, np.int64, order="C"),
         np.array(colours, np.float64, order="C"),
-        rgba,  # type: ignore[arg-type]
+        rgba,
         depth,
         face,
     )
