@@ -141,23 +141,30 @@ def split_edges(tets: Ints, edges: Ints, edge_of_tet: Ints, *, middle: Ints, ran
     middle : (e,) int64
         Number of the new point on each edge, -1 where the edge stays.
     rank : (e,) int64
-        Distinct; smaller is cut first.
+        Of the edges with a new point: distinct; smaller is cut first.
 
     Returns
     -------
     tets : (k, 4) int64
         Orientation of each tet kept when the new points lie on their edges.
     parent : (k,) int64
-        The old tet each came from.
+        The old tet each came from; ascending.
     """
-    marked = middle[edge_of_tet] >= 0
+    touched = np.flatnonzero((middle >= 0)[edge_of_tet].any(axis=1))
+    some = edge_of_tet[touched]
+    marked = middle[some] >= 0
     n_cuts = marked.sum(axis=1)
-    order = np.argsort(np.where(marked, rank[edge_of_tet], np.iinfo(np.int64).max), axis=1, kind="stable")
+    order = np.argsort(np.where(marked, rank[some], np.iinfo(np.int64).max), axis=1, kind="stable")
     room = int(MOST_PIECES[n_cuts].sum())
-    pieces, parent = np.empty((room, 4), np.int64), np.empty(room, np.int64)
+    pieces, source = np.empty((room, 4), np.int64), np.empty(room, np.int64)
     stack = np.empty((int(MOST_PIECES[-1]) + 1, 4), np.int64)
-    n = _split(tets, edge_of_tet, edges, middle, order, n_cuts, pieces, parent, stack)
-    return pieces[:n].copy(), parent[:n].copy()
+    n = _split(tets[touched], some, edges, middle, order, n_cuts, pieces, source, stack)
+    n_pieces = np.ones(len(tets), np.int64)
+    n_pieces[touched] = np.bincount(source[:n], minlength=len(touched))
+    parent = np.repeat(np.arange(len(tets)), n_pieces)
+    split = tets[parent]
+    split[(n_pieces > 1)[parent]] = pieces[:n]
+    return split, parent
 
 
 def edge_lengths(points: Floats, edges: Ints) -> Floats:
@@ -182,6 +189,13 @@ def longest_first(lengths: Floats) -> Ints:
     return rank
 
 
+def rank_of(chosen: NDArray[np.bool_], lengths: Floats) -> Ints:
+    """(e,) rank of each of the chosen edges among them, longest first; 0 for the others."""
+    rank = np.zeros(len(lengths), np.int64)
+    rank[chosen] = longest_first(lengths[chosen])
+    return rank
+
+
 def bisected(
     points: Floats, tets: Ints, edges: Ints, edge_of_tet: Ints, *, marked: NDArray[np.bool_]
 ) -> tuple[Floats, Ints]:
@@ -200,17 +214,24 @@ def bisected(
     tets : (m', 4) int64
         Positive.
     """
-    rank = longest_first(edge_lengths(points, edges))
-    longest = edge_of_tet[np.arange(len(tets)), rank[edge_of_tet].argmin(axis=1)]
-    cut = np.zeros(len(edges), bool)
-    cut[longest[marked]] = True
-    while True:
-        asking = cut[edge_of_tet].any(axis=1) & ~cut[longest]
-        if not asking.any():
+    lengths = edge_lengths(points, edges)
+    cut, asking = np.zeros(len(edges), bool), np.flatnonzero(marked)
+    while len(asking):
+        before = int(cut.sum())
+        cut[_longest_of(edge_of_tet[asking], lengths)] = True
+        if int(cut.sum()) == before:
             break
-        cut[longest[asking]] = True
+        asking = np.flatnonzero(cut[edge_of_tet].any(axis=1))
     middle = np.full(len(edges), -1, np.int64)
     middle[cut] = len(points) + np.arange(cut.sum())
     halves = 0.5 * (points[edges[cut, 0]] + points[edges[cut, 1]])
+    rank = rank_of(cut, lengths)
     pieces, _ = split_edges(tets, edges, edge_of_tet, middle=middle, rank=rank)
     return np.concatenate([points, halves]), pieces
+
+
+def _longest_of(edge_of_tet: Ints, lengths: Floats) -> Ints:
+    """(m,) the edge of each tet that `longest_first` puts first."""
+    rounded = np.round(lengths[edge_of_tet], 9)
+    longest = rounded == rounded.max(axis=1, keepdims=True)
+    return np.asarray(np.where(longest, edge_of_tet, len(lengths)).min(axis=1))

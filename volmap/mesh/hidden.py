@@ -69,9 +69,13 @@ def refined(
     points, tets, owner : arrays
         `owner` is the label at each point.
     """
+    n_old, suspect = 0, np.zeros(len(points), np.bool_)  # ends of hiding edges
     for _ in range(3 * times):
         edges, edge_of_tet = unique_edges(tets)
-        asking = np.flatnonzero(hiding_edges(field, points, owner, edges, scratch)[edge_of_tet].any(axis=1))
+        new = np.flatnonzero((edges[:, 1] >= n_old) | suspect[edges].all(axis=1))
+        hiding = np.zeros(len(edges), np.bool_)
+        hiding[new] = hiding_edges(field, points, owner, edges[new], scratch)
+        asking = np.flatnonzero(hiding[edge_of_tet].any(axis=1))
         longest = edge_lengths(points, edges)[edge_of_tet[asking]].max(axis=1, initial=0.0)
         marked = np.zeros(len(tets), np.bool_)
         marked[asking[longest > LONGEST * edge_mm / 2**times]] = True
@@ -80,4 +84,6 @@ def refined(
         n_old = len(points)
         points, tets = bisected(points, tets, edges, edge_of_tet, marked=marked)
         owner = np.r_[owner, owners(field, np.array(points[n_old:]), scratch)]
+        suspect = np.zeros(len(points), np.bool_)
+        suspect[edges[hiding]] = True
     return points, tets, owner

@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.labelfield import LabelField, Scratch, cut_edges, owners
-from volmap.kernels.lattice import bcc, edge_lengths, longest_first, oriented, split_edges, used_only
+from volmap.kernels.lattice import bcc, edge_lengths, oriented, rank_of, split_edges, used_only
 from volmap.kernels.snap import MOST_TIES, add_labels, disjoint, snap
 from volmap.kernels.stars import new_stars
 from volmap.kernels.tets import signed_volumes
@@ -193,7 +193,7 @@ def _split_at_crossings(
     add_labels(new_sets, np.arange(len(pairs)), entered)
     middle = np.full(len(cuts.edges), -1, np.int64)
     middle[crossing] = len(points) + np.arange(len(pairs))
-    rank = longest_first(edge_lengths(points, cuts.edges))
+    rank = rank_of(middle >= 0, edge_lengths(points, cuts.edges))
     pieces, _ = split_edges(tets, cuts.edges, cuts.edge_of_tet, middle=middle, rank=rank)
     all_points = np.concatenate([points, new_points])
     return all_points, oriented(all_points, pieces), np.concatenate([sets, new_sets])

@@ -53,19 +53,19 @@ def without_specks(points: Floats, tets: Ints, labels: Ints) -> tuple[Ints, int]
     n_specks : int
     """
     shared, partner, _ = match_faces(tets)
-    first, second, areas = shared // 4, partner // 4, _face_areas(points, tets, shared)
+    first, second = shared // 4, partner // 4
     labels, n_specks = labels.copy(), 0
     for _ in range(ROUNDS):
         piece = _components(first, second, labels)
         small = np.bincount(piece) < LEAST_TETS
-        unlike = labels[first] != labels[second]
+        unlike = np.flatnonzero(labels[first] != labels[second])
         inner = np.concatenate([first[unlike], second[unlike]])
         outer = np.concatenate([second[unlike], first[unlike]])
-        asked = small[piece[inner]]
-        if not asked.any():
+        asked = np.flatnonzero(small[piece[inner]])
+        if not len(asked):
             break
-        area = np.tile(areas[unlike], 2)[asked]
-        around = _label_around(piece[inner][asked], labels[outer][asked], area, len(small))
+        area = _face_areas(points, tets, shared[np.tile(unlike, 2)[asked]])
+        around = _label_around(piece[inner[asked]], labels[outer[asked]], area, len(small))
         swallowed = around[piece] >= 0
         labels[swallowed] = around[piece][swallowed]
         n_specks += int((around >= 0).sum())
