@@ -36,7 +36,9 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--target-image", type=Path, metavar="NII", help="intensities to show in the report")
     parser.add_argument("--gates", type=Path, metavar="TOML", help="a gate table of your own")
     parser.add_argument(
-        "--one-order", action="store_true", help="do not solve on the other mesh too (order not assessed)"
+        "--one-order",
+        action="store_true",
+        help="do not solve on the other mesh too: a map of one mesh, order not assessed",
     )
     parser.add_argument(
         "--one-to-one",

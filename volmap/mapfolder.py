@@ -33,6 +33,7 @@ from volmap.types import (
 from volmap.types.notice import caution
 
 MAP, OTHER = "map.vtu", "other_order.vtu"
+ALONE = "alone_mm"  # point array of both: where the points went before the solves were drawn together
 SURFACES = {"source": "source_surface.vtp", "target": "target_surface.vtp"}
 LABELS = {"source": "source_labels.nii.gz", "target": "target_labels.nii.gz"}
 FIELDS = ("forward", "backward")
@@ -64,6 +65,8 @@ class MapFolder:
     certificate : Certificate
     other : VolumeMap, optional
         The pair solved on the other scan's mesh, from TARGET into SOURCE.
+    alone : (VolumeMap, VolumeMap), optional
+        `map` and `other` before the two solves were drawn together; None when they never were.
     pairs : LandmarkPairs, optional
         Guides and checks.
     status : Status
@@ -86,6 +89,7 @@ class MapFolder:
     sidecars: Mapping[str, dict[str, Any]]
     certificate: Certificate
     other: VolumeMap | None = None
+    alone: tuple[VolumeMap, VolumeMap] | None = None
     pairs: LandmarkPairs | None = None
     status: Status = Status.OUT_OF_STEPS
     history: tuple[IterationRecord, ...] = ()
@@ -139,10 +143,11 @@ def _write_meshes(place: Path, folder: MapFolder) -> None:
     if len(folder.distortion):
         cells["distortion"] = folder.distortion
     names = {"source": here.source, "target": here.target}
+    main_alone, other_alone = _alone_arrays(folder)
     write_mesh(
         place / MAP,
         here.mesh,
-        point_data={"image_mm": here.images},
+        point_data={"image_mm": here.images} | main_alone,
         cell_data=cells,
         field_data=names | {"solved_on": folder.solved_on},
     )
@@ -150,11 +155,40 @@ def _write_meshes(place: Path, folder: MapFolder) -> None:
         write_mesh(
             place / OTHER,
             folder.other.mesh,
-            point_data={"image_mm": folder.other.images},
+            point_data={"image_mm": folder.other.images} | other_alone,
             field_data={"source": names["target"], "target": names["source"]},
         )
     for side, file in SURFACES.items():
         write_surface(place / file, getattr(folder, f"{side}_surface"))
+
+
+def _alone_arrays(folder: MapFolder) -> tuple[dict[str, NDArray[np.float64]], ...]:
+    """Point arrays `alone_mm` of both maps: where each solve alone put the points of its mesh."""
+    if folder.alone is None:
+        return {}, {}
+    here, there = folder.alone
+    if folder.solved_on == "source":
+        return {ALONE: here.images}, {ALONE: there.images}
+    return {ALONE: here.mesh.points}, {ALONE: there.mesh.points}
+
+
+def _alone(
+    volume_map: VolumeMap,
+    other: VolumeMap | None,
+    solved_on: str,
+    arrays: tuple[NDArray[Any] | None, NDArray[Any] | None],
+) -> tuple[VolumeMap, VolumeMap] | None:
+    """What `_alone_arrays` laid down; None when one of the arrays is missing."""
+    here, there = arrays
+    if other is None or here is None or there is None:
+        return None
+    found = []
+    for now, alone in ((volume_map, here), (other, there)):
+        if solved_on == "source":
+            found.append(VolumeMap(now.mesh, alone, now.source, now.target))
+        else:
+            found.append(VolumeMap(now.mesh.moved(alone), now.images, now.source, now.target))
+    return found[0], found[1]
 
 
 def read_map_folder(path: Path) -> MapFolder:
@@ -171,11 +205,13 @@ def read_map_folder(path: Path) -> MapFolder:
     volume_map = VolumeMap(mesh, _images(points, MAP), names["source"], names["target"])
     _require_cells(cells, volume_map)
     source, target = (_labels(path, side, certificate) for side in ("source", "target"))
+    other, other_alone = _other(path, names)
+    solved_on = _solved_on(told)
     status, history = _steps(path)
     pairs = read_pairs(path / PAIRS) if (path / PAIRS).exists() else None
     folder = MapFolder(
         map=volume_map,
-        solved_on=_solved_on(told),
+        solved_on=solved_on,
         source=source,
         target=target,
         source_surface=read_surface(_file(path, SURFACES["source"])),
@@ -190,7 +226,8 @@ def read_map_folder(path: Path) -> MapFolder:
         volume_ratio=read_image(_file(path, RATIO)),
         sidecars={name: read_json(_file(path, f"{name}.json")) for name in FIELDS},
         certificate=certificate,
-        other=_other(path, names),
+        other=other,
+        alone=_alone(volume_map, other, solved_on, (points.get(ALONE), other_alone)),
         pairs=pairs,
         status=status,
         history=history,
@@ -277,11 +314,12 @@ def _labels(path: Path, side: str, certificate: Certificate) -> LabelVolume:
     return LabelVolume(stored.grid, stored.labels, names, str(told.get("name", side)))
 
 
-def _other(path: Path, names: Mapping[str, str]) -> VolumeMap | None:
+def _other(path: Path, names: Mapping[str, str]) -> tuple[VolumeMap | None, NDArray[Any] | None]:
     if not (path / OTHER).exists():
-        return None
+        return None, None
     mesh, points, _, _ = read_mesh(path / OTHER)
-    return VolumeMap(mesh, _images(points, OTHER), names["target"], names["source"])
+    other = VolumeMap(mesh, _images(points, OTHER), names["target"], names["source"])
+    return other, points.get(ALONE)
 
 
 def _steps(path: Path) -> tuple[Status, tuple[IterationRecord, ...]]:

@@ -231,6 +231,21 @@ def test_the_two_orders_differ_by_what_was_planted(sound, table):
     assert failing(run(replace(sound, other=far), table)) == {"order_difference_mm"}
 
 
+def test_solves_drawn_together_are_measured_as_they_were_alone_too(sound, table):
+    other = sound.other
+    shifted = VolumeMap(other.mesh, other.images + np.array([0.3, 0, 0.4]))
+    gate = run(replace(sound, alone=(sound.map, shifted)), table)["order_difference_mm"]
+    assert gate.value["max"] < 1e-9
+    assert gate.value["alone"]["mean"] == pytest.approx(0.5, abs=1e-9)
+    assert gate.verdict is Verdict.WARN  # half a millimetre is half a voxel; 0.35 warns
+    assert "independent measure" in gate.sentence
+    far = VolumeMap(other.mesh, other.images + np.array([1.2, 0, 0]))
+    assert failing(run(replace(sound, alone=(sound.map, far)), table)) == {"order_difference_mm"}
+    single = run(sound, table)["order_difference_mm"]
+    assert "alone" not in single.value
+    assert "drawn together" not in single.sentence
+
+
 def test_check_points_are_judged_and_guides_are_not(sound, table):
     points = np.array([[4.0, 5, 5], [8, 6, 5], [100, 0, 0]])
     pairs = LandmarkPairs(

@@ -102,7 +102,7 @@ def test_map_vtu(mapped, small_pair):
     assert kinds == {10}  # VTK_TETRA
     x = vtk_to_numpy(mapped.GetPoints().GetData())
     points, cells = arrays(mapped.GetPointData()), arrays(mapped.GetCellData())
-    assert set(points) == {"image_mm"}
+    assert set(points) == {"image_mm", "alone_mm"}
     assert set(cells) == {"label", "volume_ratio", "stretch", "distortion"}
     y, tets = points["image_mm"], corners(mapped)
     assert y.shape == x.shape

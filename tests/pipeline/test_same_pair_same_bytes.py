@@ -71,6 +71,9 @@ def test_the_pair_asked_for_the_other_way_is_the_exact_inverse(small_pair, turne
     assert np.array_equal(one.forward.displacement, two.backward.displacement, equal_nan=True)
     assert np.array_equal(one.backward.displacement, two.forward.displacement, equal_nan=True)
     assert np.array_equal(one.other.mesh.points, two.other.images)
+    for here, there in zip(one.alone, two.alone, strict=True):
+        assert np.array_equal(here.mesh.points, there.images)
+        assert np.array_equal(here.images, there.mesh.points)
     affine = [np.array(f.certificate.settings["alignment"]["affine"]) for f in (one, two)]
     assert np.allclose(affine[0] @ affine[1], np.eye(4), atol=1e-9)
     assert one.certificate.verdict is two.certificate.verdict
@@ -81,12 +84,23 @@ def test_the_number_of_threads_changes_no_bit(small_pair, small_job):
     scans = [read_labels(small_pair.source), read_labels(small_pair.target)]
     try:
         pipeline.use_threads(1)
-        alone = pipeline.map_pair(*scans, replace(small_job, both_orders=False))
+        by_one = pipeline.map_pair(*scans, small_job)
     finally:
         pipeline.use_threads(threads)
     stored = read_map_folder(small_pair.folder)
-    assert np.array_equal(alone.map.images, stored.map.images)
-    assert np.array_equal(alone.map.mesh.points, stored.map.mesh.points)
+    assert np.array_equal(by_one.map.images, stored.map.images)
+    assert np.array_equal(by_one.map.mesh.points, stored.map.mesh.points)
+
+
+def test_one_order_is_the_map_before_it_was_drawn_to_the_other(small_pair, small_job):
+    scans = [read_labels(small_pair.source), read_labels(small_pair.target)]
+    single = pipeline.map_pair(*scans, replace(small_job, both_orders=False))
+    stored = read_map_folder(small_pair.folder)
+    assert single.alone is None
+    assert np.array_equal(single.map.images, stored.alone[0].images)
+    assert np.array_equal(single.map.mesh.points, stored.alone[0].mesh.points)
+    apart = np.abs(stored.map.mesh.points - stored.alone[0].mesh.points).max()
+    assert 0 < max(apart, np.abs(stored.map.images - stored.alone[0].images).max()) < 0.5  # of a 1 mm voxel
 
 
 def test_the_report_made_again_is_the_same_page(small_pair):

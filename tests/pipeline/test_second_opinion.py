@@ -191,7 +191,23 @@ def landmark(folder):
     return "check_points_mm: value"
 
 
+def alone(folder):
+    def change(data):
+        array = vtk_to_numpy(data.GetPointData().GetArray("alone_mm"))
+        array += 0.1
+
+    change_vtk(folder / "other_order.vtu", change)
+    return "order_difference_mm: value.alone.mean"
+
+
+def not_alone(folder):
+    change_vtk(folder / "map.vtu", lambda data: data.GetPointData().RemoveArray("alone_mm"))
+    return "order_difference_mm: value.alone"
+
+
 DISAGREE = [
+    alone,
+    not_alone,
     better_value,
     lost_gate,
     gate_verdict,

@@ -29,6 +29,8 @@ class Evidence:
         On TARGET's grid, pointing into SOURCE.
     other : VolumeMap, optional
         The same pair solved on TARGET's mesh: its mesh is TARGET's body, its images lie in SOURCE.
+    alone : (VolumeMap, VolumeMap), optional
+        `map` and `other` as they were before the two solves were drawn together; None when they never were.
     checks : LandmarkPairs, optional
         Of these only the pairs of role 'check' are used.
     status : Status, optional
@@ -45,6 +47,7 @@ class Evidence:
     forward: GridField | None = None
     backward: GridField | None = None
     other: VolumeMap | None = None
+    alone: tuple[VolumeMap, VolumeMap] | None = None
     checks: LandmarkPairs | None = None
     status: Status | None = None
     source_mesh_labels: LabelVolume | None = None

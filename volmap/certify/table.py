@@ -21,7 +21,7 @@ STATISTICS: Mapping[str, tuple[str, ...]] = {
     "overlap": ("shell",),
     "volume_ratio": ("min", "p0_1", "p99_9", "max"),
     "round_trip_mm": ("mean", "p95", "max"),
-    "order_difference_mm": ("mean", "p95", "max"),
+    "order_difference_mm": ("mean", "p95", "max", "alone_mean", "alone_p95", "alone_max"),
     "field_folds": ("count", "share"),
     "check_points_mm": ("mean", "p95", "max"),
     "labels_agree": ("labels", "topology"),

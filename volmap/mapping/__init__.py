@@ -1,7 +1,8 @@
 """Mapping stage: a mesh and a target's label surfaces in, a fold-free map out."""
 
 from volmap.mapping.alignment import Alignment, align
+from volmap.mapping.coupling import Coupling, couple
 from volmap.mapping.settings import MapSettings
 from volmap.mapping.solve import Solved, map_mesh
 
-__all__ = ["Alignment", "MapSettings", "Solved", "align", "map_mesh"]
+__all__ = ["Alignment", "Coupling", "MapSettings", "Solved", "align", "couple", "map_mesh"]

@@ -43,11 +43,13 @@ MOST_UNMATCHED = 0.05  # of the boundary's area, for a boundary that counts as r
 
 @dataclass(frozen=True)
 class Solved:
-    """An outcome with the alignment it started from and every alignment that was tried."""
+    """An outcome with the alignment it started from and every alignment tried; what is needed to go on."""
 
     outcome: Outcome
     alignment: Alignment
     tried: tuple[Alignment, ...]
+    solver: _Solver
+    state: _State
 
 
 @dataclass
@@ -61,6 +63,7 @@ class _State:
     levels: list[float] = field(default_factory=list)  # objective, freshly matched, since weights rose
     settling: bool = False
     idle: int = 0
+    beside: Observations | None = None  # pulls beside the boundary's and the guides'
 
 
 def _weighted(o: Observations, factor: float) -> Observations:
@@ -117,6 +120,8 @@ class _Solver:
         parts = [_weighted(matches, state.boundary_weight)]
         if self.guides is not None:
             parts.append(_weighted(self.guides, state.guide_weight))
+        if state.beside is not None:
+            parts.append(state.beside)
         return joined(parts), residual
 
     def boundary_reached(self, residual: Residual) -> bool:
@@ -276,4 +281,4 @@ def map_mesh(
     start = f"{alignment.name}, turned by {alignment.rotation_deg:.0f} degrees (residuals: {words})"
     notes = (*doubts(alignment, tried), *solver.notes)
     outcome = Outcome(VolumeMap(mesh, state.images), status, tuple(state.history), start, notes)
-    return Solved(outcome, alignment, tried)
+    return Solved(outcome, alignment, tried, solver, state)

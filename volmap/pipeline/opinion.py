@@ -24,6 +24,7 @@ def evidence_of(folder: MapFolder) -> certifying.Evidence:
         forward=folder.forward,
         backward=folder.backward,
         other=folder.other,
+        alone=folder.alone,
         checks=folder.pairs,
         status=folder.status,
         source_mesh_labels=_voxelised(own.get("source"), folder.source),

@@ -13,7 +13,7 @@ from volmap import certify as certifying
 from volmap import mesh as meshing
 from volmap import screen as screening
 from volmap.mapfolder import MapFolder
-from volmap.mapping import MapSettings, Solved, map_mesh
+from volmap.mapping import Coupling, MapSettings, Solved, couple, map_mesh
 from volmap.mesh import MeshResult, MeshSettings
 from volmap.pipeline.machine import Stopwatch, announce_compiling, peak_mb, use_threads, versions
 from volmap.pipeline.opinion import evidence_of
@@ -40,7 +40,8 @@ class MapJob:
     mesh : MeshSettings
     map : MapSettings
     both_orders : bool
-        Solve on the other scan's mesh too, to measure how much the answer depends on whose mesh is used.
+        Solve on the other scan's mesh too, to measure how much the answer depends on whose mesh is used, and
+        draw the two solves together into one map and its inverse.
     allow_topology_change : bool
         Go on when pieces or Euler numbers differ; the certificate fails the gate `labels_agree`.
     gates : Path, optional
@@ -70,10 +71,15 @@ class _Order:
 
 @dataclass(frozen=True, eq=False)
 class _Solutions:
-    """The pair solved on the first scan's mesh and, when asked for, on the second's."""
+    """The pair solved on the first scan's mesh and, when asked for, on the second's.
+
+    `alone` holds both maps before they were drawn together, and is None when they were not.
+    """
 
     main: Solved
-    other: Solved | None
+    other: Solved | None = None
+    alone: tuple[VolumeMap, VolumeMap] | None = None
+    notes: tuple[str, ...] = ()
 
 
 def map_pair(
@@ -144,7 +150,7 @@ def map_pair(
         mesh=_mesh_document(folder, meshes),
         seconds=watch.seconds,
         peak_mb=peak_mb(),
-        notes=(*notes, *solutions.main.outcome.notes, *_sentences(findings)),
+        notes=(*notes, *solutions.main.outcome.notes, *solutions.notes, *_sentences(findings)),
     )
     return replace(folder, certificate=certificate)
 
@@ -211,7 +217,7 @@ def _solve(
             progress=progress,
         )
     if not job.both_orders:
-        return _Solutions(main, None)
+        return _Solutions(main)
     with watch.measuring("map the other way"):
         other = map_mesh(
             second.mesh,
@@ -221,7 +227,11 @@ def _solve(
             guides=forward.reversed() if forward is not None else None,
             progress=_prefixed(progress, "the other way"),
         )
-    return _Solutions(main, other)
+    with watch.measuring("couple"):
+        coupled = couple(main, other, voxel_mm=voxel_mm, progress=progress)
+    if coupled.how is not Coupling.DRAWN:
+        return _Solutions(main, other, notes=(coupled.how.value,))
+    return _Solutions(coupled.main, coupled.other, (main.outcome.map, other.outcome.map))
 
 
 def _sampled(
@@ -246,9 +256,11 @@ def _sampled(
         progress("fields", 2, 3)
         carried = carrying.carried_solid(named, target.grid, names=source.names)
         ratio = carrying.volume_ratio_image(named, source.grid)
-    other = None
+    other = alone = None
     if solutions.other is not None:
         other = replace(order.turned(solutions.other.outcome.map), source=target.name, target=source.name)
+    if solutions.alone is not None:
+        alone = (order.turned(solutions.alone[0]), order.turned(solutions.alone[1]))
     outcome = solutions.main.outcome
     return MapFolder(
         map=named,
@@ -270,6 +282,7 @@ def _sampled(
             status=outcome.status.value,
         ),
         other=other,
+        alone=alone,
         pairs=pairs,
         status=outcome.status,
         history=outcome.history,
