@@ -8,10 +8,10 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit, prange
 from numpy.typing import NDArray
 
 from volmap.kernels.compiled import inner_kernel, kernel
+from volmap.kernels.threads import on_threads
 
 LEAF = 4  # triangles in a leaf, at most
 DEPTH = 64  # room on the search stack; the tree is balanced, so its depth is log2 of the triangles
@@ -171,10 +171,13 @@ def _box_distance(tree, node, px, py, pz):  # type: ignore[no-untyped-def]
     return dx * dx + dy * dy + dz * dz
 
 
-@njit(cache=True, parallel=True)
-def closest_from(tree, points, triangles, queries, guess, triangle, barycentric, squared):  # type: ignore[no-untyped-def]
+@kernel
+def _closest_from(  # type: ignore[no-untyped-def]
+    begin, end, tree, points, triangles, queries, guess, triangle, barycentric, squared
+):
     """Closest points, each search starting from a guessed triangle (-1: none); results in place."""
-    for q in prange(len(queries)):
+    stack = np.empty(DEPTH, np.int64)
+    for q in range(begin, end):
         px, py, pz = queries[q, 0], queries[q, 1], queries[q, 2]
         best = np.inf
         found = -1
@@ -183,7 +186,6 @@ def closest_from(tree, points, triangles, queries, guess, triangle, barycentric,
             found = guess[q]
             a, b, c = triangles[found, 0], triangles[found, 1], triangles[found, 2]
             u0, v0, w0, best = on_triangle(px, py, pz, points, a, b, c)
-        stack = np.empty(DEPTH, np.int64)
         stack[0] = 0
         size = 1
         while size > 0:
@@ -245,5 +247,5 @@ def closest(
     n = len(queries)
     triangle, barycentric, squared = np.empty(n, np.int64), np.empty((n, 3)), np.empty(n)
     start = np.full(n, -1) if guess is None else guess
-    closest_from(tree, points, triangles, queries, start, triangle, barycentric, squared)
+    on_threads(_closest_from, n, tree, points, triangles, queries, start, triangle, barycentric, squared)
     return triangle, barycentric, squared

@@ -19,8 +19,11 @@ WITHOUT_WRAPPERS: dict[str, Any] = {"no_cpython_wrapper": True, "no_cfunc_wrappe
 
 
 def kernel(function: Callable[..., Any]) -> Any:
-    """Compile a function that Python calls; division by zero gives infinity, as in numpy."""
-    return njit(cache=True, error_model="numpy")(function)
+    """Compile a function that Python calls; division by zero gives infinity, as in numpy.
+
+    It runs without Python's lock, so that `threads.on_threads` can share it out.
+    """
+    return njit(cache=True, nogil=True, error_model="numpy")(function)
 
 
 def inner_kernel(function: Callable[..., Any]) -> Any:

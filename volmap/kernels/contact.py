@@ -14,18 +14,17 @@ from math import sqrt
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit, prange
 from numpy.typing import NDArray
 
 from volmap.kernels.closest import DEPTH, Tree, build_tree, on_triangle
 from volmap.kernels.compiled import inner_kernel, kernel
+from volmap.kernels.threads import on_threads
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 KEPT = 0.1  # share of a pair's distance that a step leaves at least
 ROOM = 48  # near cells that a query has room for at first
-CHUNK = 64  # queries that share one set of work arrays
 ADVANCES = 500  # rounds of conservative advancement at most; stopping early is safe
 
 
@@ -231,28 +230,27 @@ def _worth_a_look(of_edges, cells, queries, q, c, here, there, low, high, low2, 
     return not _apart(low, high, low2, high2)
 
 
-@njit(cache=True, parallel=True)
-def _longest_steps(of_edges, tree, cells, queries, here, there, out):  # type: ignore[no-untyped-def]
+@kernel
+def _longest_steps(first, last, of_edges, tree, cells, queries, here, there, out):  # type: ignore[no-untyped-def]
     """Safe share in [0, 1] of the way from here to there, query by query."""
-    for chunk in prange((len(queries) + CHUNK - 1) // CHUNK):
-        low, high, low2, high2 = np.empty(3), np.empty(3), np.empty(3), np.empty(3)
-        x, p = np.empty((4, 3)), np.empty((4, 3))
-        weights, gap, corners = np.empty(4), np.empty(3), np.empty(4, np.int64)
-        stack, leaves = np.empty(DEPTH, np.int64), np.empty(len(tree.child), np.int64)
-        for q in range(chunk * CHUNK, min(len(queries), (chunk + 1) * CHUNK)):
-            safe = 1.0
-            _box(queries[q], here, there, 0.0, low, high)
-            for n in range(_leaves(tree, low, high, stack, leaves)):
-                for i in range(tree.first[leaves[n]], tree.last[leaves[n]]):
-                    c = tree.order[i]
-                    if _worth_a_look(of_edges, cells, queries, q, c, here, there, low, high, low2, high2):
-                        _corners(of_edges, queries[q], cells[c], corners)
-                        for k in range(4):
-                            for d in range(3):
-                                x[k, d] = here[corners[k], d]
-                                p[k, d] = there[corners[k], d] - here[corners[k], d]
-                        safe = min(safe, _first_meeting(of_edges, x, p, safe, weights, gap))
-            out[q] = safe
+    low, high, low2, high2 = np.empty(3), np.empty(3), np.empty(3), np.empty(3)
+    x, p = np.empty((4, 3)), np.empty((4, 3))
+    weights, gap, corners = np.empty(4), np.empty(3), np.empty(4, np.int64)
+    stack, leaves = np.empty(DEPTH, np.int64), np.empty(len(tree.child), np.int64)
+    for q in range(first, last):
+        safe = 1.0
+        _box(queries[q], here, there, 0.0, low, high)
+        for n in range(_leaves(tree, low, high, stack, leaves)):
+            for i in range(tree.first[leaves[n]], tree.last[leaves[n]]):
+                c = tree.order[i]
+                if _worth_a_look(of_edges, cells, queries, q, c, here, there, low, high, low2, high2):
+                    _corners(of_edges, queries[q], cells[c], corners)
+                    for k in range(4):
+                        for d in range(3):
+                            x[k, d] = here[corners[k], d]
+                            p[k, d] = there[corners[k], d] - here[corners[k], d]
+                    safe = min(safe, _first_meeting(of_edges, x, p, safe, weights, gap))
+        out[q] = safe
 
 
 def longest_step(skin: Skin, here: Floats, there: Floats) -> float:
@@ -266,35 +264,46 @@ def longest_step(skin: Skin, here: Floats, there: Floats) -> float:
     """
     by_point, by_edge = np.empty(len(skin.points)), np.empty(len(skin.edges))
     _sweep(skin.triangle_tree, skin.triangles, here, there)
-    _longest_steps(False, skin.triangle_tree, skin.triangles, skin.points, here, there, by_point)
+    on_threads(
+        _longest_steps,
+        len(skin.points),
+        False,
+        skin.triangle_tree,
+        skin.triangles,
+        skin.points,
+        here,
+        there,
+        by_point,
+    )
     _sweep(skin.edge_tree, skin.edges, here, there)
-    _longest_steps(True, skin.edge_tree, skin.edges, skin.edges, here, there, by_edge)
+    on_threads(
+        _longest_steps, len(skin.edges), True, skin.edge_tree, skin.edges, skin.edges, here, there, by_edge
+    )
     return float(min(by_point.min(), by_edge.min()))
 
 
-@njit(cache=True, parallel=True)
-def _near(of_edges, tree, cells, queries, points, reach, count, found):  # type: ignore[no-untyped-def]
+@kernel
+def _near(first, last, of_edges, tree, cells, queries, points, reach, count, found):  # type: ignore[no-untyped-def]
     """Cells nearer than `reach` to each query: how many into count (q,), as many as fit into found (q, m)."""
-    for chunk in prange((len(queries) + CHUNK - 1) // CHUNK):
-        low, high, low2, high2 = np.empty(3), np.empty(3), np.empty(3), np.empty(3)
-        x, corners = np.empty((4, 3)), np.empty(4, np.int64)
-        weights, gap = np.empty(4), np.empty(3)
-        stack, leaves = np.empty(DEPTH, np.int64), np.empty(len(tree.child), np.int64)
-        for q in range(chunk * CHUNK, min(len(queries), (chunk + 1) * CHUNK)):
-            count[q] = 0
-            _box(queries[q], points, points, reach, low, high)
-            for n in range(_leaves(tree, low, high, stack, leaves)):
-                for i in range(tree.first[leaves[n]], tree.last[leaves[n]]):
-                    c = tree.order[i]
-                    if _worth_a_look(of_edges, cells, queries, q, c, points, points, low, high, low2, high2):
-                        _corners(of_edges, queries[q], cells[c], corners)
-                        for k in range(4):
-                            for d in range(3):
-                                x[k, d] = points[corners[k], d]
-                        if _gap(of_edges, x, weights, gap) < reach:
-                            if count[q] < found.shape[1]:
-                                found[q, count[q]] = c
-                            count[q] += 1
+    low, high, low2, high2 = np.empty(3), np.empty(3), np.empty(3), np.empty(3)
+    x, corners = np.empty((4, 3)), np.empty(4, np.int64)
+    weights, gap = np.empty(4), np.empty(3)
+    stack, leaves = np.empty(DEPTH, np.int64), np.empty(len(tree.child), np.int64)
+    for q in range(first, last):
+        count[q] = 0
+        _box(queries[q], points, points, reach, low, high)
+        for n in range(_leaves(tree, low, high, stack, leaves)):
+            for i in range(tree.first[leaves[n]], tree.last[leaves[n]]):
+                c = tree.order[i]
+                if _worth_a_look(of_edges, cells, queries, q, c, points, points, low, high, low2, high2):
+                    _corners(of_edges, queries[q], cells[c], corners)
+                    for k in range(4):
+                        for d in range(3):
+                            x[k, d] = points[corners[k], d]
+                    if _gap(of_edges, x, weights, gap) < reach:
+                        if count[q] < found.shape[1]:
+                            found[q, count[q]] = c
+                        count[q] += 1
 
 
 class Pairs(NamedTuple):
@@ -340,10 +349,10 @@ def _near_cells(
     _sweep(tree, cells, points, points)
     count = np.empty(len(queries), np.int64)
     found = np.empty((len(queries), ROOM), np.int64)
-    _near(of_edges, tree, cells, queries, points, reach_mm, count, found)
+    on_threads(_near, len(queries), of_edges, tree, cells, queries, points, reach_mm, count, found)
     if count.max(initial=0) > ROOM:
         found = np.empty((len(queries), int(count.max())), np.int64)
-        _near(of_edges, tree, cells, queries, points, reach_mm, count, found)
+        on_threads(_near, len(queries), of_edges, tree, cells, queries, points, reach_mm, count, found)
     query = np.repeat(np.arange(len(queries)), count)
     within = np.arange(len(query)) - np.repeat(np.cumsum(count) - count, count)
     return query, found[query, within]

@@ -5,11 +5,12 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
 
 from volmap.kernels.barycentric import INSIDE, barycentric_rows, plain
 from volmap.kernels.compiled import kernel
+from volmap.kernels.threads import on_threads
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -93,7 +94,10 @@ def locate(buckets: Buckets, points: Floats, tets: Ints, queries: Floats) -> tup
     """
     rows = barycentric_rows(plain(points, np.float64), plain(tets, np.int64))
     queries = plain(queries, np.float64).reshape(-1, 3)
-    return _search(rows, *buckets, queries)
+    n = len(queries)
+    tet, barycentric = np.empty(n, np.int64), np.empty((n, 4))
+    on_threads(_search, n, rows, *buckets, queries, tet, barycentric)
+    return tet, barycentric
 
 
 def interpolate(tets: Ints, values: Floats, tet: Ints, barycentric: Floats) -> Floats:
@@ -176,12 +180,12 @@ def _sort_into_boxes(points, tets, rows, origin, width, counts):  # type: ignore
     return start, members
 
 
-@njit(cache=True, parallel=True)
-def _search(rows, origin, width, counts, start, members, queries):  # type: ignore[no-untyped-def]
+@kernel
+def _search(  # type: ignore[no-untyped-def]
+    first, last, rows, origin, width, counts, start, members, queries, tet, barycentric
+):
     """Try every tet of the query's box; keep the one it is deepest in."""
-    n = queries.shape[0]
-    tet, barycentric = np.empty(n, np.int64), np.empty((n, 4))
-    for q in prange(n):
+    for q in range(first, last):
         x, y, z = queries[q, 0], queries[q, 1], queries[q, 2]
         best, deepest = -1, -np.inf
         i, j, k = (x - origin[0]) / width, (y - origin[1]) / width, (z - origin[2]) / width
@@ -201,7 +205,6 @@ def _search(rows, origin, width, counts, start, members, queries):  # type: igno
                 barycentric[q, r + 1] = value
                 rest -= value
             barycentric[q, 0] = rest
-    return tet, barycentric
 
 
 @njit(cache=True, inline="always")

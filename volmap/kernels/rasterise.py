@@ -12,11 +12,12 @@ from collections.abc import Iterator
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
 
 from volmap.kernels.barycentric import INSIDE, barycentric_rows, plain
 from volmap.kernels.compiled import kernel
+from volmap.kernels.threads import on_threads
 
 # Planes given out at a time by `values_by_slab`.
 _SLAB = 16
@@ -75,7 +76,8 @@ def tets_on_grid(
         -1 outside the mesh.
     """
     owner = np.empty(shape, np.int32)
-    _draw(*_ready(plain(index_points, np.float64), plain(tets, np.int64), shape), owner)
+    drawing = _ready(plain(index_points, np.float64), plain(tets, np.int64), shape)
+    on_threads(_draw, shape[0], *drawing, owner)
     return owner
 
 
@@ -105,7 +107,7 @@ def values_on_grid(
     tets, values = plain(tets, np.int64), plain(values, np.float64)
     drawing = _ready(plain(index_points, np.float64), tets, shape)
     found = np.empty((*shape, 3), np.float32)
-    _paint(*drawing, tets, values, np.int64(0), found)
+    on_threads(_paint, shape[0], *drawing, tets, values, np.int64(0), found)
     found.setflags(write=False)
     return found
 
@@ -130,7 +132,7 @@ def values_by_slab(
     for first in range(0, shape[0], _SLAB):
         slab = slice(first, min(first + _SLAB, shape[0]))
         found = np.empty((slab.stop - first, *shape[1:], 3))
-        _paint(*drawing, tets, values, np.int64(first), found)
+        on_threads(_paint, len(found), *drawing, tets, values, np.int64(first), found)
         yield slab, found
 
 
@@ -202,10 +204,10 @@ def _run(line, edge, j, low, high):  # type: ignore[no-untyped-def]
     return int(np.ceil(first)), int(np.floor(last))
 
 
-@njit(cache=True, parallel=True)
-def _draw(rows, low, high, start, members, owner):  # type: ignore[no-untyped-def]
+@kernel
+def _draw(first_plane, last_plane, rows, low, high, start, members, owner):  # type: ignore[no-untyped-def]
     """Give each voxel centre to the first tet that holds it."""
-    for i in prange(owner.shape[0]):
+    for i in range(first_plane, last_plane):
         line, edge = np.empty((4, 3)), np.empty((4, 2))
         for j in range(owner.shape[1]):
             for k in range(owner.shape[2]):
@@ -220,10 +222,12 @@ def _draw(rows, low, high, start, members, owner):  # type: ignore[no-untyped-de
                         owner[i, j, k] = t
 
 
-@njit(cache=True, parallel=True)
-def _paint(rows, low, high, start, members, tets, values, begin, found):  # type: ignore[no-untyped-def]
+@kernel
+def _paint(  # type: ignore[no-untyped-def]
+    first_plane, last_plane, rows, low, high, start, members, tets, values, begin, found
+):
     """Write what the first tet that holds each voxel centre says there; plane 0 of `found` is `begin`."""
-    for p in prange(found.shape[0]):
+    for p in range(first_plane, last_plane):
         i = begin + p
         line, edge, tilt = np.empty((4, 3)), np.empty((4, 2)), np.empty((3, 3))
         for j in range(found.shape[1]):

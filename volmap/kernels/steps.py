@@ -5,9 +5,10 @@ from __future__ import annotations
 from math import sqrt
 
 import numpy as np
-from numba import njit, prange
+from numpy.typing import NDArray
 
-from volmap.kernels.compiled import inner_kernel
+from volmap.kernels.compiled import inner_kernel, kernel
+from volmap.kernels.threads import on_threads
 
 
 @inner_kernel
@@ -65,8 +66,13 @@ def _det(x, y, z):  # type: ignore[no-untyped-def]
     )
 
 
-@njit(cache=True, parallel=True)
-def step_bounds(points, directions, tets, limit, out):  # type: ignore[no-untyped-def]
+def step_bounds(
+    points: NDArray[np.float64],
+    directions: NDArray[np.float64],
+    tets: NDArray[np.int64],
+    limit: float,
+    out: NDArray[np.float64],
+) -> None:
     """Largest t of each tet with det(D + t dD) > 0 on [0, t], at most `limit`, into out (m,).
 
     Parameters
@@ -76,9 +82,13 @@ def step_bounds(points, directions, tets, limit, out):  # type: ignore[no-untype
         All positive at `points`; a tet that is not gets 0.
     limit : float
     """
-    for t in prange(len(tets)):
-        e = np.empty((3, 3))
-        d = np.empty((3, 3))
+    on_threads(_step_bounds, len(tets), points, directions, tets, limit, out)
+
+
+@kernel
+def _step_bounds(first, last, points, directions, tets, limit, out):  # type: ignore[no-untyped-def]
+    e, d = np.empty((3, 3)), np.empty((3, 3))
+    for t in range(first, last):
         for k in range(3):
             for i in range(3):
                 e[k, i] = points[tets[t, k + 1], i] - points[tets[t, 0], i]
