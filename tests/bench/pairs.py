@@ -18,7 +18,7 @@ import numpy as np
 from volmap_phantoms.hard_pairs import HARD, make_hard
 from volmap_phantoms.random_pairs import KINDS, draw
 
-from volmap.certify.boundary_crossings import nested_pieces
+from volmap.certify.buried_boundary import buried_sheets
 from volmap.kernels.crossings import triangle_crossings
 from volmap.kernels.predicates import orientation_signs
 from volmap.kernels.topology import face_corners, match_faces
@@ -51,7 +51,7 @@ def solved_row(pair, tets: int) -> dict:
     )
     ended = time.process_time()
     outcome = solved.outcome
-    inverted, crossing, nested = validity(outcome.map)
+    inverted, crossing, buried = validity(outcome.map)
     ratio = outcome.map.volume_ratio
     row |= {
         "tets": len(results[0].mesh.tets),
@@ -65,7 +65,7 @@ def solved_row(pair, tets: int) -> dict:
         "distortion": outcome.history[-1].distortion,
         "inverted_tets": inverted,
         "crossings": crossing,
-        "nested_pieces": nested,
+        "buried_parts": buried,
         "J": [float(ratio.min()), *np.percentile(ratio, [0.1, 99.9]), float(ratio.max())],
         "aligned_mm": solved.alignment.residual_mm,
         "start": outcome.start,
@@ -81,13 +81,13 @@ def solved_row(pair, tets: int) -> dict:
 
 
 def validity(volume_map) -> tuple[int, int, int]:
-    """Inverted tets (mesh and image, exact signs), crossing pairs of triangles (exact), nested pieces."""
+    """Inverted tets (mesh and image, exact signs), crossings of the image boundary (exact), buried parts."""
     here, image = volume_map.mesh, volume_map.image_mesh
     inverted = sum(int((orientation_signs(m.points, m.tets) <= 0).sum()) for m in (here, image))
-    first, second, hull = match_faces(here.tets)
-    crossing = triangle_crossings(image.points, face_corners(here.tets, hull))
-    nested = nested_pieces(image, (first // 4, second // 4), space="target")
-    return inverted, len(crossing), len(nested)
+    _, _, hull = match_faces(here.tets)
+    triangles = face_corners(here.tets, hull)
+    crossing = triangle_crossings(image.points, triangles)
+    return inverted, len(crossing), len(buried_sheets(image, triangles, hull // 4))
 
 
 def _guides_mm(volume_map, guides) -> float:
@@ -121,7 +121,7 @@ def table(rows: list[dict]) -> str:
         lines.append(
             f"{kind:10s} {len(of):5d} {settled:7d} {len(of) - settled:4d} "
             f"{sum(r['inverted_tets'] for r in of):7d} "
-            f"{sum(r['crossings'] + r['nested_pieces'] for r in of):6d} "
+            f"{sum(r['crossings'] + r['buried_parts'] for r in of):6d} "
             f"{np.median(steps):6.0f} {max(steps):6d} {np.median([r['tets'] for r in of]):6.0f} "
             f"{worst:21.2f} "
             f"{min(r['J'][1] for r in of):9.2f}-{max(r['J'][2] for r in of):.2f}   "

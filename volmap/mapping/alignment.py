@@ -88,6 +88,11 @@ class Alignment:
         return _angle_deg(self.matrix)
 
 
+def turned_deg(one: Alignment, other: Alignment) -> float:
+    """Angle by which one alignment is turned against another, degrees."""
+    return _angle_deg(np.linalg.inv(one.matrix) @ other.matrix)
+
+
 def _angle_deg(matrix: Floats) -> float:
     u, _, v = np.linalg.svd(matrix[:3, :3])
     return float(np.degrees(np.arccos(np.clip((np.trace(u @ v) - 1) / 2, -1, 1))))
@@ -264,7 +269,7 @@ def _starts(bodies: _Bodies, guides: LandmarkPairs | None, growth: float) -> lis
 def doubts(chosen: Alignment, tried: tuple[Alignment, ...]) -> tuple[str, ...]:
     """A sentence when another start fits nearly as well as the chosen one, but turned otherwise."""
     others = [a for a in tried if a.residual_mm <= DOUBTFUL * chosen.residual_mm + NO_GAP_MM]
-    angles = {a: _angle_deg(np.linalg.inv(chosen.matrix) @ a.matrix) for a in others}
+    angles = {a: turned_deg(chosen, a) for a in others}
     turned = [a for a in others if angles[a] > OTHERWISE_DEG]
     if not turned:
         return ()
