@@ -192,6 +192,16 @@ def test_more_labels_and_guides_give_more_starts():
     assert best.residual_mm < 1e-9
 
 
+@pytest.mark.parametrize("flipped", [False, True])
+def test_guides_decide_where_shapes_do_not(flipped):
+    """A bar of square section fits either way round; two guides along it say which."""
+    bar = cubes(np.ones((10, 3, 3), int))
+    ends = np.array([[1.0, 1.5, 1.5], [9.0, 1.5, 1.5]])
+    pairs = LandmarkPairs(("one", "two"), ends, ends[::-1] if flipped else ends)
+    best, _ = align(bar.interfaces, bar.interfaces, guides=pairs)
+    np.testing.assert_allclose(best.apply(ends), pairs.to_points, atol=1e-6)
+
+
 @pytest.mark.parametrize("start", ["guides", "label centres", "sideways"])
 def test_a_start_that_does_not_exist_is_refused(body, start):
     with pytest.raises(InputError, match=r"this start does not exist"):

@@ -1,8 +1,9 @@
 """Where to start: rigid and affine alignments of two labelled surfaces.
 
 Several starts are refined by alternating closest points and least squares (Besl & McKay, IEEE PAMI 14(2),
-1992), first rigid (at the target's volume), then affine; the smallest residual wins, and among nearly
-equal ones the smallest rotation.  Starts that run into each other are followed once.
+1992), first rigid (at the target's volume), then affine; the smallest residual wins, among nearly equal
+ones the one that leaves the guides nearest, and then the smallest rotation.  Starts that run into each other
+are followed once.
 """
 
 from __future__ import annotations
@@ -26,7 +27,8 @@ SAME_PLACE = 0.02  # share of the body's size within which two starts have run i
 DOUBTFUL = 1.25  # residuals within this factor of the chosen one leave doubt when they are turned otherwise
 OTHERWISE_DEG = 45.0  # between two alignments that are not the same place
 NEARLY_EQUAL = 1.05  # residuals within this factor of the best count as equal
-NO_GAP_MM = 1e-6  # and so do all below this
+ROUGH = 0.02  # and so do those that differ by less than this share of a mesh edge
+NO_GAP_MM = 1e-6  # no residual below this tells anything
 AT_REST = 1e-3  # share of the body's size by which no point moves any more
 ACROSS = 0.03  # share of a match that acts across the normal in affine rounds
 HOLD = 0.02  # share by which a body is held where it was at the beginning of a lap
@@ -298,7 +300,7 @@ def align(
     start : str
         'auto', or the name of one start.
     guides : LandmarkPairs, optional
-        Three or more give a start of their own.
+        They decide between starts that fit equally well; three or more give a start of their own.
     seed : int
 
     Raises
@@ -315,10 +317,25 @@ def align(
     if not runs:
         raise InputError("this start does not exist for these scans", where="start", found=start)
     tried = _raced(runs, bodies, growth)
-    equal = [
-        a for a in tried if a.residual_mm <= NEARLY_EQUAL * min(a.residual_mm for a in tried) + NO_GAP_MM
-    ]
+    best = min(a.residual_mm for a in tried)
+    rough_mm = ROUGH * float(np.median(np.linalg.norm(_sides(target), axis=1)))
+    equal = [a for a in tried if a.residual_mm <= NEARLY_EQUAL * best + rough_mm]
+    if guides is not None and len(guides.names):
+        nearest_mm = min(_guides_mm(a, guides) for a in equal)
+        equal = [a for a in equal if _guides_mm(a, guides) <= NEARLY_EQUAL * nearest_mm + rough_mm]
     return min(equal, key=lambda a: round(a.rotation_deg, 1)), tried
+
+
+def _sides(surface: Surface) -> Floats:
+    """(m, 3) first side of every triangle, mm."""
+    return surface.points[surface.triangles[:, 1]] - surface.points[surface.triangles[:, 0]]
+
+
+def _guides_mm(alignment: Alignment, guides: LandmarkPairs) -> float:
+    """Root mean square distance at which an alignment leaves the guides, weighted by 1 / sd^2."""
+    assert guides.sd_mm is not None
+    gap = alignment.apply(guides.points) - guides.to_points
+    return float(np.sqrt(np.average((gap**2).sum(axis=1), weights=guides.sd_mm**-2.0)))
 
 
 def _raced(runs: list[_Run], bodies: _Bodies, growth: float) -> tuple[Alignment, ...]:
