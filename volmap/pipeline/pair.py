@@ -15,6 +15,7 @@ from volmap import screen as screening
 from volmap.mapfolder import MapFolder
 from volmap.mapping import Coupling, MapSettings, Solved, couple, map_mesh
 from volmap.mesh import MeshResult, MeshSettings
+from volmap.pipeline.at_once import on_both
 from volmap.pipeline.machine import Stopwatch, announce_compiling, peak_mb, use_threads, versions
 from volmap.pipeline.opinion import evidence_of
 from volmap.pipeline.told import distortion_of, mesh_document, scan_document, sidecars_of
@@ -131,10 +132,12 @@ def map_pair(
         screened.require_mappable()
         placed = _placed(pairs, source, target, pairs_name)
     with watch.measuring("mesh"):
-        meshes = [
-            meshing.mesh(volume, job.mesh, progress=_prefixed(progress, side))
-            for volume, side in ((source, "source"), (target, "target"))
-        ]
+        meshes = on_both(
+            lambda volume, told: meshing.mesh(volume, job.mesh, progress=told),
+            (source, target),
+            progress,
+            n_threads=use_threads(None),
+        )
     _require_every_label(meshes, (source, target))
     order = _Order.of(source, target)
     solutions = _solve(meshes, source, target, job, order, pairs, watch, progress)
