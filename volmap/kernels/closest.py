@@ -56,46 +56,42 @@ def build_tree(points: NDArray[np.float64], triangles: NDArray[np.int64]) -> Tre
     return tree
 
 
-@kernel
-def _split(centres):  # type: ignore[no-untyped-def]
-    """Halve the triangles along the longest side of their centres' box until a leaf holds few."""
-    m = len(centres)
-    room = 2 * m + 1
-    child = np.full(room, -1, np.int64)
-    first = np.zeros(room, np.int64)
-    last = np.zeros(room, np.int64)
-    order = np.arange(m)
-    last[0] = m
-    used = 1
-    node = 0
-    while node < used:
-        a, b = first[node], last[node]
-        if b - a > LEAF:
-            part = order[a:b].copy()
-            axis = 0
-            widest = -1.0
-            for d in range(3):
-                low = np.inf
-                high = -np.inf
-                for t in part:
-                    low = min(low, centres[t, d])
-                    high = max(high, centres[t, d])
-                if high - low > widest:
-                    widest = high - low
-                    axis = d
-            keys = np.empty(b - a)
-            for i in range(b - a):
-                keys[i] = centres[part[i], axis]
-            rank = np.argsort(keys, kind="mergesort")
-            for i in range(b - a):
-                order[a + i] = part[rank[i]]
-            middle = (a + b) // 2
-            child[node] = used
-            first[used], last[used] = a, middle
-            first[used + 1], last[used + 1] = middle, b
-            used += 2
-        node += 1
-    return child[:used].copy(), first[:used].copy(), last[:used].copy(), order
+def _split(
+    centres: NDArray[np.float64],
+) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.int64], NDArray[np.int64]]:
+    """Halve the triangles along the longest side of their centres' box until a leaf holds few.
+
+    All nodes of a level at once; child, first and last of the nodes level by level, and the order.
+    """
+    order = np.arange(len(centres))
+    child: list[NDArray[np.int64]] = []
+    first, last = [np.zeros(1, np.int64)], [np.full(1, len(centres))]
+    n_nodes = 1
+    while len(first[-1]):
+        begin, end = first[-1], last[-1]
+        large = end - begin > LEAF
+        child.append(np.where(large, n_nodes + 2 * (np.cumsum(large) - 1), -1))
+        begin, end = begin[large], end[large]
+        n_nodes += 2 * len(begin)
+        if len(begin):
+            _sort_level(centres, order, begin, end - begin)
+        middle = (begin + end) // 2
+        first.append(np.stack([begin, middle], axis=1).ravel())
+        last.append(np.stack([middle, end], axis=1).ravel())
+    return np.concatenate(child), np.concatenate(first), np.concatenate(last), order
+
+
+def _sort_level(
+    centres: NDArray[np.float64], order: NDArray[np.int64], begin: NDArray[np.int64], size: NDArray[np.int64]
+) -> None:
+    """Sort what each node of a level holds along its longest side, in place; equal ones keep their order."""
+    start = np.cumsum(size) - size
+    node = np.repeat(np.arange(len(size)), size)
+    held = np.arange(len(node)) + (begin - start)[node]
+    members = order[held]
+    places = centres[members]
+    axis = (np.maximum.reduceat(places, start) - np.minimum.reduceat(places, start)).argmax(axis=1)
+    order[held] = members[np.lexsort((places[np.arange(len(node)), axis[node]], node))]
 
 
 @kernel

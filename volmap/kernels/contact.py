@@ -147,7 +147,7 @@ def _gap(of_edges, x, weights, gap):  # type: ignore[no-untyped-def]
     if of_edges:
         _edge_weights(x, weights)
     else:
-        u, v, w, _ = on_triangle(x[0, 0], x[0, 1], x[0, 2], x, 1, 2, 3)
+        u, v, w, _ = on_triangle(x[0, 0], x[0, 1], x[0, 2], x, np.int64(1), np.int64(2), np.int64(3))
         weights[0], weights[1], weights[2], weights[3] = 1.0, -u, -v, -w
     squared = 0.0
     for i in range(3):

@@ -14,13 +14,14 @@ from math import sqrt
 import numpy as np
 from numba import njit, prange
 
+from volmap.kernels.compiled import inner_kernel
 from volmap.kernels.energies import density
 
 CHUNK = 256  # tets that share one set of work arrays
 SWEEPS = 30  # Jacobi sweeps at most; five are enough for any F met so far
 
 
-@njit(cache=True)
+@inner_kernel
 def rotate_to_stretches(a, v):  # type: ignore[no-untyped-def]
     """One-sided Jacobi: turn the columns of `a` (3, 3) until orthogonal, in place; `v` collects the turns.
 
@@ -54,7 +55,7 @@ def rotate_to_stretches(a, v):  # type: ignore[no-untyped-def]
             break
 
 
-@njit(cache=True)
+@inner_kernel
 def symmetrised(code, s, gradient, hessian, t, inverse_gradient, inverse_hessian):  # type: ignore[no-untyped-def]
     """W_S and its derivatives in s, by the chain rule with t = 1/s; the last three arrays are work space."""
     jacobian = s[0] * s[1] * s[2]
@@ -75,7 +76,7 @@ def symmetrised(code, s, gradient, hessian, t, inverse_gradient, inverse_hessian
     return 0.5 * (there + jacobian * back)
 
 
-@njit(cache=True)
+@inner_kernel
 def clamp_symmetric(h, a, v):  # type: ignore[no-untyped-def]
     """Replace a symmetric 3x3 matrix by its positive semidefinite part, in place; `a`, `v` are work space."""
     minor = h[0, 0] * h[1, 1] - h[0, 1] * h[0, 1]
@@ -105,7 +106,7 @@ def clamp_symmetric(h, a, v):  # type: ignore[no-untyped-def]
                     h[i, j] += value * v[i, k] * v[j, k]
 
 
-@njit(cache=True)
+@inner_kernel
 def _gradient_of(points, tets, shape_gradients, t, f):  # type: ignore[no-untyped-def]
     """F of tet t into f (3, 3); returns its determinant."""
     for i in range(3):
@@ -121,7 +122,7 @@ def _gradient_of(points, tets, shape_gradients, t, f):  # type: ignore[no-untype
     )
 
 
-@njit(cache=True)
+@inner_kernel
 def _stretches(f, v, s):  # type: ignore[no-untyped-def]
     """Turn f into U diag(s), in place; v and s written."""
     rotate_to_stretches(f, v)
@@ -155,7 +156,7 @@ def energies(code, points, tets, shape_gradients, out):  # type: ignore[no-untyp
                 out[t] = symmetrised(code, s, g, h, w, g2, h2)
 
 
-@njit(cache=True)
+@inner_kernel
 def _forces(weight, shape_gradient, u, v, g, turned, force):  # type: ignore[no-untyped-def]
     """First derivative in the corners into force (4, 3); shape gradients in the frame of v into turned."""
     for c in range(4):
@@ -171,7 +172,7 @@ def _forces(weight, shape_gradient, u, v, g, turned, force):  # type: ignore[no-
             )
 
 
-@njit(cache=True)
+@inner_kernel
 def _parts(s, g, h, p, q, clamp, a, v):  # type: ignore[no-untyped-def]
     """Half sums and half differences of flips and twists into p, q (3, 3); h made positive."""
     for i in range(3):
@@ -189,7 +190,7 @@ def _parts(s, g, h, p, q, clamp, a, v):  # type: ignore[no-untyped-def]
         clamp_symmetric(h, a, v)
 
 
-@njit(cache=True)
+@inner_kernel
 def _block(weight, h, p, q, u, ga, gb, k, r, block):  # type: ignore[no-untyped-def]
     """weight U Khat U^T of two points whose rotated shape gradients are ga, gb, into block (3, 3)."""
     for i in range(3):

@@ -91,7 +91,7 @@ def _exact_sign_3d(points: NDArray[np.float64], i: int, j: int, k: int, m: int) 
     """Sign of det[pj - pi, pk - pi, pm - pi], without rounding."""
     d = _differences(points, i, (j, k, m))
     expansion = np.empty(200)
-    n = 0
+    n = np.int64(0)
     for p in range(6):
         ca, cb, cc = _PERMUTATIONS[p, 0], _PERMUTATIONS[p, 1], _PERMUTATIONS[p, 2]
         for part in range(8):
@@ -152,7 +152,7 @@ def orient_2d(points: NDArray[np.float64], axis: int, i: int, j: int, k: int) ->
         return 0
     d = _differences(points, i, (j, k, k))
     expansion = np.empty(20)
-    n = 0
+    n = np.int64(0)
     for part in range(4):
         a, b = part & 1, part >> 1
         high, low = _two_product(d[0, u, a], d[1, v, b])
