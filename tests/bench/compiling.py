@@ -113,7 +113,7 @@ def child(out: Path, arguments: list[str]) -> None:
         "import_numba_s": imported,
         "command_cpu_s": spent,
         "compiling_s": ledger.compiled,
-        "loading_s": ledger.bracketed - ledger.compiled,
+        "loading_or_storing_s": ledger.bracketed - ledger.compiled,
         "functions_compiled": len(ledger.count),
         "specialisations_compiled": sum(ledger.count.values()),
         "specialisations_loaded": loaded,
@@ -172,7 +172,7 @@ def show(result: dict, rows: int) -> None:
     for name in ("first", "second"):
         run = result[name]
         print(
-            f"{name:>6}: compiling {run['compiling_s']:.2f} s, loading {run['loading_s']:.2f} s, "
+            f"{name:>6}: compiling {run['compiling_s']:.2f} s, loading or storing {run['loading_or_storing_s']:.2f} s, "
             f"import numba {run['import_numba_s']:.2f} s, whole command {run['command_cpu_s']:.2f} s; "
             f"{run['functions_compiled']} functions and {run['specialisations_compiled']} specialisations "
             f"compiled, {run['specialisations_loaded']} loaded; exit {run['exit_status']}"

@@ -6,8 +6,8 @@ from importlib.resources import files
 import numpy as np
 import pytest
 
-from volmap.kernels import energies as densities
 from volmap.kernels import distortion, steps
+from volmap.kernels import energies as densities
 from volmap.kernels import tets as tet_kernels
 from volmap.kernels.compiled import kernel
 from volmap.kernels.distortion import derivatives, energies

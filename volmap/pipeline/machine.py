@@ -19,7 +19,7 @@ PACKAGES = ("volmap", "numpy", "scipy", "numba", "scikit-image", "nibabel", "vtk
 def announce_compiling(progress: Progress) -> None:
     """Say so when kernels have to be compiled first."""
     if not_compiled_yet():
-        progress("compile", 0, 0, "compiling the kernels, once per machine (one to two minutes)")
+        progress("compile", 0, 0, "compiling the kernels, once per machine (about a minute)")
 
 
 class Stopwatch:
