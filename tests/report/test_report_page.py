@@ -322,3 +322,16 @@ def test_the_methods_tell_the_exact_signs_only_when_they_were_found(value: objec
     assert words in told((gate,))
     assert "was not certified" in told((dataclasses.replace(gate, verdict=Verdict.NOT_ASSESSED),))
     assert "was not certified" in told(())
+
+
+def test_the_methods_tell_that_two_solves_were_drawn_together_only_when_they_were() -> None:
+    given = make_inputs(3)
+
+    def told(value: object) -> str:
+        gate = Gate("order_difference_mm", value, "mm", None, None, "", Verdict.PASS)
+        bare = Certificate({}, {}, (gate,))
+        return " ".join(methods.methods(dataclasses.replace(given, certificate=bare)))
+
+    assert "drawn to the middle of the two" in told({"mean": 0.1, "alone": {"mean": 0.2}})
+    assert "drawn to the middle" not in told({"mean": 0.1})
+    assert "drawn to the middle" not in told(None)

@@ -38,6 +38,7 @@ def methods(inputs: ReportInput) -> list[str]:
     told = [
         _meshing(inputs, known),
         _solving(inputs, known),
+        _drawing_together(inputs),
         _guiding(inputs),
         _signs(inputs),
         _ending(inputs),
@@ -102,6 +103,17 @@ def _ladder(known: Mapping[str, Any]) -> str:
             limit = f"{number(known[key])} {unit}"
             return f"{told}, and no further once the residual was within the declared {limit}"
     return told
+
+
+def _drawing_together(inputs: ReportInput) -> str:
+    """Only when the certificate measured the two solves before that as well."""
+    gate = _gate(inputs, "order_difference_mm")
+    if gate is None or not isinstance(gate.value, Mapping) or "alone" not in gate.value:
+        return ""
+    return (
+        "The pair was solved on the other scan's mesh as well, and both solutions were drawn to the middle "
+        "of the two, so that the map depends less on whose mesh it was solved on."
+    )
 
 
 def _guiding(inputs: ReportInput) -> str:
