@@ -173,7 +173,8 @@ def show(result: dict, rows: int) -> None:
         run = result[name]
         print(
             f"{name:>6}: compiling {run['compiling_s']:.2f} s, "
-            f"loading or storing {run['loading_or_storing_s']:.2f} s, import numba {run['import_numba_s']:.2f} s, whole command {run['command_cpu_s']:.2f} s; "
+            f"loading or storing {run['loading_or_storing_s']:.2f} s, "
+            f"import numba {run['import_numba_s']:.2f} s, whole command {run['command_cpu_s']:.2f} s; "
             f"{run['functions_compiled']} functions and {run['specialisations_compiled']} specialisations "
             f"compiled, {run['specialisations_loaded']} loaded; exit {run['exit_status']}"
         )
