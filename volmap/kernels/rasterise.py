@@ -246,11 +246,8 @@ def _paint(  # type: ignore[no-untyped-def]
                         tilt[v, d] += rise * line[r, d]
             for j in range(low[t, 1], high[t, 1] + 1):
                 first, last = _run(line, edge, j, low[t, 2], high[t, 2])
-                a, b, c = (
-                    tilt[0, 0] + tilt[0, 1] * j,
-                    tilt[1, 0] + tilt[1, 1] * j,
-                    tilt[2, 0] + tilt[2, 1] * j,
-                )
+                a, b = tilt[0, 0] + tilt[0, 1] * j, tilt[1, 0] + tilt[1, 1] * j
+                c = tilt[2, 0] + tilt[2, 1] * j
                 for k in range(first, last + 1):
                     if np.isnan(found[p, j, k, 0]):
                         found[p, j, k, 0] = a + tilt[0, 2] * k

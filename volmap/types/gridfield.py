@@ -35,7 +35,7 @@ class GridField(Frozen):
         u = self._own("displacement", np.float32, (*self.grid.shape, 3))
         for plane in u:  # one at a time: a large field is large enough
             holes = np.isnan(plane)
-            if (holes != holes[..., :1]).any():
+            if any((holes[..., 0] != holes[..., d]).any() for d in (1, 2)):
                 raise InputError(
                     "a displacement is either a whole vector or NaN", where="GridField.displacement"
                 )
