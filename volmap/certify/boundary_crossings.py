@@ -97,7 +97,12 @@ def wrongly_joined(
         Faces, ``4 * tet + corner``.
     """
     same = _turn(face_corners(tets, first)) == _turn(face_corners(tets, second))
-    return np.union1d(first[same], np.intersect1d(first, second))
+    opens = np.zeros(4 * len(tets), bool)
+    opens[first] = True
+    wrong = np.zeros(4 * len(tets), bool)
+    wrong[first[same]] = True
+    wrong[second[opens[second]]] = True  # the second of one pair and the first of another
+    return np.flatnonzero(wrong)
 
 
 def _turn(corners: NDArray[np.int64]) -> NDArray[np.bool_]:

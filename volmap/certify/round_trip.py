@@ -12,7 +12,7 @@ from volmap.certify.judge import judged, not_assessed
 from volmap.certify.places import largest, ranked, worst_places
 from volmap.certify.statistics import even_summary
 from volmap.certify.table import Limit
-from volmap.kernels.there_and_back import round_trip_errors
+from volmap.kernels.trilinear import homecoming
 from volmap.types.certificate import Gate
 
 
@@ -28,9 +28,8 @@ def round_trip(evidence: Evidence, limit: Limit) -> Gate:
     value: dict[str, Any] = {}
     places: list[tuple[float, dict[str, Any]]] = []
     for name, (first, second, space) in orders.items():
-        errors = round_trip_errors(
-            first.displacement, first.grid.affine, second.displacement, second.grid.affine
-        )
+        to_index = np.asarray(np.linalg.inv(second.grid.affine), np.float64)
+        errors = homecoming(first.displacement, second.displacement, first.grid.affine, to_index)
         known = np.flatnonzero(np.isfinite(errors))
         if not len(known):
             return not_assessed(limit, "the two fields have no place in common", voxel_mm=voxel_mm)

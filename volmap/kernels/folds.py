@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.compiled import inner_kernel, kernel
+from volmap.kernels.threads import on_threads
 
 # Corners of a cube as bits (i, j, k) = (4, 2, 1); each row a positive tet of the undeformed cube.
 TEN_TETS = np.array(
@@ -40,35 +41,31 @@ def _determinant(y, a, b, c, d):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def smallest_determinants(displacement, axes, tets):  # type: ignore[no-untyped-def]
+def smallest_determinants(first, last, displacement, axes, found):  # type: ignore[no-untyped-def]
     """Smallest of the ten determinants of every cube, as a volume ratio.
 
     Parameters
     ----------
+    first, last : int
+        Planes to fill.
     displacement : (I, J, K, 3) float32, mm
         NaN where undefined.
     axes : (3, 3) float64, mm
         Linear part of the grid's affine; its determinant, sign included, is divided out.
-    tets : (10, 4) int64
-        `TEN_TETS`.
-
-    Returns
-    -------
-    (I - 1, J - 1, K - 1) float64
-        1 for the identity; the two central tets are halved, being twice as large.  NaN where a corner is
-        undefined.
+    found : (I - 1, J - 1, K - 1) float64
+        Filled: 1 for the identity; the two central tets are halved, being twice as large.  NaN where a
+        corner is undefined.
     """
-    ni, nj, nk = displacement.shape[0] - 1, displacement.shape[1] - 1, displacement.shape[2] - 1
-    found = np.full((ni, nj, nk), np.nan)
     volume = (
         axes[0, 0] * (axes[1, 1] * axes[2, 2] - axes[1, 2] * axes[2, 1])
         - axes[0, 1] * (axes[1, 0] * axes[2, 2] - axes[1, 2] * axes[2, 0])
         + axes[0, 2] * (axes[1, 0] * axes[2, 1] - axes[1, 1] * axes[2, 0])
     )
     y = np.empty((8, 3))
-    for i in range(ni):
-        for j in range(nj):
-            for k in range(nk):
+    for i in range(first, last):
+        for j in range(found.shape[1]):
+            for k in range(found.shape[2]):
+                found[i, j, k] = np.nan
                 whole = True
                 for corner in range(8):
                     if np.isnan(
@@ -86,10 +83,9 @@ def smallest_determinants(displacement, axes, tets):  # type: ignore[no-untyped-
                 smallest = np.inf
                 for t in range(10):
                     size = volume if t < 8 else 2.0 * volume
-                    ratio = _determinant(y, tets[t, 0], tets[t, 1], tets[t, 2], tets[t, 3]) / size
-                    smallest = min(smallest, ratio)
+                    a, b, c, d = TEN_TETS[t, 0], TEN_TETS[t, 1], TEN_TETS[t, 2], TEN_TETS[t, 3]
+                    smallest = min(smallest, _determinant(y, a, b, c, d) / size)
                 found[i, j, k] = smallest
-    return found
 
 
 def cube_determinants(displacement: NDArray[np.float32], affine: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -101,8 +97,8 @@ def cube_determinants(displacement: NDArray[np.float32], affine: NDArray[np.floa
     affine : (4, 4) float64
         Of the grid; may be left-handed.
     """
-    u = np.require(displacement, np.float32, ["C", "W"])
-    if min(u.shape[:3]) < 2:
-        return np.empty(tuple(max(n - 1, 0) for n in u.shape[:3]))
-    axes = np.array(affine[:3, :3], np.float64, order="C")
-    return np.asarray(smallest_determinants(u, axes, TEN_TETS.copy()))
+    u = np.ascontiguousarray(displacement, np.float32).view()
+    u.setflags(write=False)  # one kind of array for the kernel, without a copy of a big field
+    found = np.empty(tuple(max(n - 1, 0) for n in u.shape[:3]))
+    on_threads(smallest_determinants, len(found), u, np.array(affine[:3, :3], np.float64, order="C"), found)
+    return found

@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from functools import cached_property
 from types import MappingProxyType
 
 import numpy as np
@@ -47,10 +48,13 @@ class LabelVolume(Frozen):
     def __reduce__(self):  # type: ignore[no-untyped-def]
         return LabelVolume, (self.grid, self.labels, dict(self.names), self.name)
 
-    @property
+    @cached_property
     def present(self) -> tuple[int, ...]:
         """The labels above 0 that occur, ascending."""
-        return tuple(int(v) for v in np.flatnonzero(np.bincount(self.labels.ravel())) if v)
+        seen = np.zeros(65536, bool)
+        for plane in self.labels:  # nothing of the grid's size is made
+            seen[plane] = True
+        return tuple(int(v) for v in np.flatnonzero(seen) if v)
 
     def name_of(self, label: int) -> str:
         """Name of a label, in words."""
