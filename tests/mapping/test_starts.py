@@ -79,7 +79,7 @@ def test_a_start_that_falls_behind_is_given_up_and_loses():
     assert best.result == "CENTRES"
     assert second.given_up
     assert len(second.history) == 1
-    (sentence,) = told((best, second))
+    (sentence,) = told((best, second))  # and no doubt is left
     assert "'world' given up" in sentence
     assert "'centres' 0.180" in sentence
 
@@ -95,3 +95,12 @@ def test_a_boundary_reached_comes_first():
     assert best.result == "world"
     assert "without reaching the boundary" in told((best, second))[0]
     assert told(()) == ()
+
+
+def test_objectives_that_hardly_differ_leave_the_earlier_start_and_a_doubt():
+    other = turned("world", 180.0, 1.2)
+    ladders = {"centres": [(1.0, 0.50)], "world": [(1.0, 0.49)]}
+    best, second = tried_out((CHOSEN, other), climbing(ladders))
+    assert best.result == "CENTRES"
+    assert "still in doubt" in told((best, second))[1]
+    assert "180 degrees" in told((best, second))[1]

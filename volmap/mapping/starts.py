@@ -19,6 +19,9 @@ from volmap.types import IterationRecord
 IN_DOUBT = 1.5  # starts with a residual within this factor of the chosen one are tried when turned otherwise
 MOST_TRIED = 4  # starts, the chosen one included
 OTHERWISE_DEG = 45.0  # between alignments that are not the same place
+NEARLY_AS_GOOD = 1.25  # factor between two objectives within which they do not decide
+BETTER = 0.95  # share of the objective of an earlier start below which a later one is preferred
+NOTHING = 1e-6  # objectives that differ by less are alike: stretches of a thousandth
 GIVEN_UP = 2.0  # objective over that of the best start, at equal weight, above which a start is given up
 
 Result = TypeVar("Result")
@@ -74,7 +77,7 @@ def least_at(history: History, weight: float) -> float:
 def tried_out(
     starts: Sequence[Alignment], solve: Callable[[Alignment, Watch], tuple[Result, History, bool]]
 ) -> tuple[Trial[Result], ...]:
-    """Solve from every start, the best first.
+    """Solve from every start, the best first; where objectives hardly differ, the earlier start.
 
     Parameters
     ----------
@@ -86,6 +89,8 @@ def tried_out(
         ends there.
     """
     trials: list[Trial[Result]] = []
+    if not starts:
+        return ()
     for start in starts:
         ahead = [t.history for t in trials if not t.given_up]
         hopeless: list[bool] = []
@@ -93,28 +98,46 @@ def tried_out(
         def behind(history: History, ahead: list[History] = ahead, told: list[bool] = hopeless) -> bool:
             weight = history[-1].boundary_weight
             best = min((least_at(h, weight) for h in ahead), default=float("inf"))
-            if least_at(history, weight) > GIVEN_UP * best:
+            if least_at(history, weight) > GIVEN_UP * best + NOTHING:
                 told.append(True)
             return bool(told)
 
         result, history, reached = solve(start, behind)
-        trials.append(Trial(start, history, reached, bool(hopeless), result))
+        trials.append(Trial(start, tuple(history), reached, bool(hopeless), result))
     hardest = max(t.history[-1].boundary_weight for t in trials)
-    return tuple(sorted(trials, key=lambda t: (t.given_up, not t.reached, t.objective_at(hardest))))
+    ranked = sorted(trials, key=lambda t: (t.given_up, not t.reached, t.objective_at(hardest)))
+    least = ranked[0]
+    alike = [
+        t
+        for t in trials
+        if (t.given_up, t.reached) == (least.given_up, least.reached)
+        and BETTER * t.objective_at(hardest) <= least.objective_at(hardest) + NOTHING
+    ]
+    return (alike[0], *(t for t in ranked if t is not alike[0]))
 
 
 def told(trials: Sequence[Trial[Result]]) -> tuple[str, ...]:
-    """A sentence about what was tried, with the objectives."""
+    """Sentences about what was tried, with the objectives, and about the doubt that is left."""
     if not trials:
         return ()
     hardest = max(t.history[-1].boundary_weight for t in trials)
+    best, second = trials[0], trials[1]
     words = ", ".join(
         f"'{t.alignment.name}' "
         + ("given up as hopeless" if t.given_up else f"{t.objective_at(hardest):.3f}")
         + ("" if t.given_up or t.reached else " without reaching the boundary")
         for t in trials
     )
+    kept = (
+        f"How the bodies lie on each other was in doubt, so {len(trials)} starts were solved "
+        f"and the one with the least objective kept: {words}."
+    )
+    near = second.objective_at(hardest) <= NEARLY_AS_GOOD * best.objective_at(hardest) + NOTHING
+    if second.given_up or second.reached < best.reached or not near:
+        return (kept,)
     return (
-        f"How the bodies lie on each other was in doubt, so {len(trials)} starts were solved and the "
-        f"one with the least objective kept: {words}.",
+        kept,
+        f"It is still in doubt: start '{second.alignment.name}', turned by "
+        f"{turned_deg(best.alignment, second.alignment):.0f} degrees against the one kept, gives a map "
+        "nearly as good; check with landmarks, or give three guides.",
     )
