@@ -24,6 +24,18 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     )
     parser.add_argument("--guides", type=Path, metavar="CSV", help="landmark pairs, roles guide and check")
     parser.add_argument(
+        "--boundary",
+        type=Path,
+        metavar="FILE",
+        help="surface on SOURCE's boundary with `image_mm` on its points (VTP, VTU, VTK, PLY): keep it",
+    )
+    parser.add_argument(
+        "--boundary-tolerance",
+        type=positive_mm,
+        metavar="MM",
+        help="how far the map may leave it (default: a quarter of a voxel)",
+    )
+    parser.add_argument(
         "--energy", choices=ENERGIES, default=ENERGIES[0], help=f"distortion energy (default {ENERGIES[0]})"
     )
     parser.add_argument(
@@ -64,6 +76,8 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
     from .verdict import show
 
+    if options.boundary_tolerance is not None and options.boundary is None:
+        raise UsageError("--boundary-tolerance needs --boundary FILE")
     try:
         pipeline.use_threads(options.threads)
     except InputError as fault:
@@ -86,6 +100,8 @@ def run(options: argparse.Namespace, console: Console) -> int:
         options.out,
         job,
         guides=options.guides,
+        boundary=options.boundary,
+        boundary_tolerance_mm=options.boundary_tolerance,
         source_image=options.source_image,
         target_image=options.target_image,
         overwrite=options.overwrite,

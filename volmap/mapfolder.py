@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from volmap.certify import as_document, from_document
 from volmap.io.atomic import whole_folder
+from volmap.io.given_boundary import read_given_boundary, write_given_boundary
 from volmap.io.json_documents import read_json, write_json
 from volmap.io.landmarks import read_pairs, write_pairs
 from volmap.io.nifti import read_field, read_image, read_labels, write_field, write_image, write_labels
@@ -19,6 +20,8 @@ from volmap.io.opening import shown_name
 from volmap.io.vtk_xml import read_mesh, read_surface, write_mesh, write_surface
 from volmap.types import (
     Certificate,
+    GivenBoundary,
+    GivingWay,
     GridField,
     ImageVolume,
     InputError,
@@ -37,6 +40,7 @@ ALONE = "alone_mm"  # point array of both: where the points went before the solv
 SURFACES = {"source": "source_surface.vtp", "target": "target_surface.vtp"}
 LABELS = {"source": "source_labels.nii.gz", "target": "target_labels.nii.gz"}
 FIELDS = ("forward", "backward")
+GIVEN = "given_boundary.vtp"
 CARRIED, RATIO = "carried_labels.nii.gz", "volume_ratio.nii.gz"
 CERTIFICATE, REPORT, STEPS, PAIRS = "certificate.json", "report.html", "steps.json", "landmarks.csv"
 
@@ -74,6 +78,10 @@ class MapFolder:
     history : tuple of IterationRecord
     distortion : (m,) float64
         W_S of each tet.
+    given : GivenBoundary, optional
+        The boundary correspondence the map was asked to keep, from SOURCE to TARGET.
+    giving_way : tuple of GivingWay
+        What other tolerances would have cost.
     """
 
     map: VolumeMap
@@ -94,6 +102,8 @@ class MapFolder:
     status: Status = Status.OUT_OF_STEPS
     history: tuple[IterationRecord, ...] = ()
     distortion: NDArray[np.float64] = field(default_factory=lambda: np.zeros(0))
+    given: GivenBoundary | None = None
+    giving_way: tuple[GivingWay, ...] = ()
 
     @property
     def own_meshes(self) -> dict[str, TetMesh]:
@@ -130,9 +140,12 @@ def write_map_folder(path: Path, folder: MapFolder, *, report_html: str, overwri
             write_labels(place / file, getattr(folder, side))
         if folder.pairs is not None:
             write_pairs(place / PAIRS, folder.pairs)
+        if folder.given is not None:
+            write_given_boundary(place / GIVEN, folder.given)
         steps = [asdict(record) for record in folder.history]
         told = {"schema": "volmap-steps/1", "notice": caution(), "status": folder.status.name}
-        write_json(place / STEPS, told | {"steps": steps})
+        rows = {"giving_way": [asdict(row) for row in folder.giving_way]} if folder.giving_way else {}
+        write_json(place / STEPS, told | {"steps": steps} | rows)
         write_json(place / CERTIFICATE, as_document(folder.certificate))
         (place / REPORT).write_text(report_html, encoding="utf-8")
 
@@ -207,7 +220,7 @@ def read_map_folder(path: Path) -> MapFolder:
     source, target = (_labels(path, side, certificate) for side in ("source", "target"))
     other, other_alone = _other(path, names)
     solved_on = _solved_on(told)
-    status, history = _steps(path)
+    status, history, giving_way = _steps(path)
     pairs = read_pairs(path / PAIRS) if (path / PAIRS).exists() else None
     folder = MapFolder(
         map=volume_map,
@@ -232,6 +245,8 @@ def read_map_folder(path: Path) -> MapFolder:
         status=status,
         history=history,
         distortion=np.asarray(cells.get("distortion", np.zeros(0)), np.float64),
+        given=read_given_boundary(path / GIVEN) if (path / GIVEN).exists() else None,
+        giving_way=giving_way,
     )
     _require_same_grids(folder)
     _require_supports(path, folder)
@@ -322,11 +337,14 @@ def _other(path: Path, names: Mapping[str, str]) -> tuple[VolumeMap | None, NDAr
     return other, points.get(ALONE)
 
 
-def _steps(path: Path) -> tuple[Status, tuple[IterationRecord, ...]]:
+def _steps(path: Path) -> tuple[Status, tuple[IterationRecord, ...], tuple[GivingWay, ...]]:
     document = read_json(_file(path, STEPS))
     try:
         steps = tuple(IterationRecord(**step) for step in document.get("steps", []))
-        return Status[str(document.get("status"))], steps
+        rows = tuple(
+            GivingWay(**row | {"where_mm": tuple(row["where_mm"])}) for row in document.get("giving_way", [])
+        )
+        return Status[str(document.get("status"))], steps, rows
     except (TypeError, KeyError) as fault:
         raise InputError(
             "a step of the solve is not as written",

@@ -21,6 +21,7 @@ def settled(evidence, table, status):
     [
         (Status.SETTLED, Verdict.PASS, 0, 0),
         (Status.BOUNDARY_NOT_REACHED, Verdict.WARN, 1, 0),
+        (Status.GIVEN_BOUNDARY_NOT_KEPT, Verdict.WARN, 1, 0),
         (Status.OUT_OF_STEPS, Verdict.WARN, 0, 1),
         (Status.STALLED, Verdict.WARN, 0, 1),
     ],
@@ -36,6 +37,7 @@ def test_every_status_is_told_apart():
     assert {status.name for status in Status} == {
         "SETTLED",
         "BOUNDARY_NOT_REACHED",
+        "GIVEN_BOUNDARY_NOT_KEPT",
         "OUT_OF_STEPS",
         "STALLED",
     }

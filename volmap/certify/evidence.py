@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from volmap.types.given_boundary import GivenBoundary, GivingWay
 from volmap.types.gridfield import GridField
 from volmap.types.landmarks import LandmarkPairs
 from volmap.types.outcome import Status
@@ -37,6 +38,12 @@ class Evidence:
         How the solve ended.
     source_mesh_labels, target_mesh_labels : LabelVolume, optional
         A scan's own mesh drawn on its own grid: what Dice a mesh can score at all.
+    solved_on : str
+        'source' or 'target': whose own mesh the tets of the map are.
+    given : GivenBoundary, optional
+        The boundary correspondence the map was asked to keep, from SOURCE to TARGET.
+    giving_way : tuple of GivingWay
+        What other tolerances would cost, as the solver told it.
     """
 
     map: VolumeMap
@@ -52,6 +59,9 @@ class Evidence:
     status: Status | None = None
     source_mesh_labels: LabelVolume | None = None
     target_mesh_labels: LabelVolume | None = None
+    solved_on: str = "source"
+    given: GivenBoundary | None = None
+    giving_way: tuple[GivingWay, ...] = ()
 
     @property
     def voxel_mm(self) -> float:

@@ -10,6 +10,7 @@ from volmap.certify.boundary_distance import boundary_distance
 from volmap.certify.check_points import check_points
 from volmap.certify.evidence import Evidence
 from volmap.certify.field_folds import field_folds
+from volmap.certify.given_boundary import given_boundary
 from volmap.certify.inverted_tets import inverted_tets
 from volmap.certify.labels_agree import labels_agree
 from volmap.certify.measures import measures
@@ -43,7 +44,8 @@ def certify(
     Parameters
     ----------
     evidence : Evidence
-        What is missing in it makes its gates say "not-assessed".
+        What is missing in it makes its gates say "not-assessed"; the gate of a given boundary is only there
+        when one was given.
     table : GateTable
     progress : Progress
 
@@ -58,7 +60,9 @@ def certify(
     inverted = inverted_tets(evidence, table["inverted_tets"])
     progress("certify", 1, total, "boundary_crossings")
     gates = [inverted, boundary_crossings(evidence, table["boundary_crossings"], inverted=inverted)]
-    for name, gate in _AFTER_THE_SIGNS:
+    asked = (("given_boundary_mm", given_boundary),) if evidence.given is not None else ()
+    total += len(asked)
+    for name, gate in (*_AFTER_THE_SIGNS, *asked):
         progress("certify", len(gates), total, name)
         gates.append(gate(evidence, table[name]))
     progress("certify", total, total)

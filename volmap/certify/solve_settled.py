@@ -15,7 +15,7 @@ def solve_settled(evidence: Evidence, limit: Limit) -> Gate:
     if status is None:
         return not_assessed(limit, "how the solve ended is not known")
     counts = {
-        "unreached": float(status is Status.BOUNDARY_NOT_REACHED),
+        "unreached": float(status in (Status.BOUNDARY_NOT_REACHED, Status.GIVEN_BOUNDARY_NOT_KEPT)),
         "unfinished": float(status in (Status.OUT_OF_STEPS, Status.STALLED)),
     }
     return judged(limit, counts, value={"status": status.name, **counts}, sentence=status.value)

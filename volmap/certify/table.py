@@ -25,9 +25,17 @@ STATISTICS: Mapping[str, tuple[str, ...]] = {
     "field_folds": ("count", "share"),
     "check_points_mm": ("mean", "p95", "max"),
     "labels_agree": ("labels", "topology"),
+    "given_boundary_mm": ("mean", "p95", "max", "excess"),
     "solve_settled": ("unreached", "unfinished"),
 }
-_IN_MM = ("boundary_distance_mm", "overlap", "round_trip_mm", "order_difference_mm", "check_points_mm")
+_IN_MM = (
+    "boundary_distance_mm",
+    "overlap",
+    "round_trip_mm",
+    "order_difference_mm",
+    "check_points_mm",
+    "given_boundary_mm",
+)
 _LEVELS = ("warn", "fail", "warn_voxel", "fail_voxel")
 
 

@@ -10,6 +10,7 @@ import importlib
 import io
 import os
 import warnings
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -44,7 +45,7 @@ def read_closed_surface(
         edges, edges shared by more than two triangles or turned both ways, no volume enclosed.
     """
     file, where = existing_file(path), shown_name(path)
-    mesh = _parsed(file, where)
+    mesh = parsed(file, where)
     points, triangles = _triangles(mesh, where)
     points, triangles = _welded(points, triangles)
     _require_closed(triangles, where)
@@ -54,12 +55,27 @@ def read_closed_surface(
     return points, triangles if volume > 0 else np.ascontiguousarray(triangles[:, ::-1])
 
 
-def _parsed(file: Path, where: str) -> Any:
+def parsed(file: Path, where: str, *, formats: Mapping[str, str] = FORMATS) -> Any:
+    """The meshio mesh of a surface file.
+
+    Parameters
+    ----------
+    file : path
+    where : str
+        Its name in messages.
+    formats : mapping of str to str
+        Suffixes to name when the file's own is none of `FORMATS`.
+
+    Raises
+    ------
+    InputError
+        Format unknown, or file damaged.
+    """
     kind = FORMATS.get(file.suffix.lower())
     if kind is None:
         raise InputError(
             "is no surface file that can be read", where=where, found=file.suffix or "no suffix",
-            expected=" ".join(FORMATS), remedy="export the surface as STL or PLY",
+            expected=" ".join(formats), remedy="export the surface as STL or PLY",
         )  # fmt: skip
     reader = importlib.import_module(f"meshio.{kind}").read
     silence = io.StringIO()

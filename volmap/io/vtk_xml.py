@@ -125,12 +125,12 @@ def read_mesh(
             where=where,
             found=f"VTK cell types {kinds.astype(int).tolist()}",
         )
-    tets = _connectivity(piece, "Cells", 4, where)
+    tets = cells_of_kind(piece, "Cells", 4, where)
     point_data = _of_length(piece, "PointData", piece.counts.get("NumberOfPoints", -1), where)
     cell_data = _of_length(piece, "CellData", len(tets), where)
     labels = _whole(cell_data.pop("label", None), "label", where)
     try:
-        mesh = TetMesh(_coordinates(piece, where), tets, labels)
+        mesh = TetMesh(coordinates(piece, where), tets, labels)
     except InputError as fault:
         raise fault.at(where) from fault
     return mesh, point_data, cell_data, dict(piece.field_data)
@@ -149,11 +149,11 @@ def read_surface(path: PathLike) -> Surface:
     others = sum(piece.counts.get(f"NumberOf{kind}", 0) for kind in ("Verts", "Lines", "Strips"))
     if others or not piece.counts.get("NumberOfPolys", 0):
         raise InputError("does not hold a surface of triangles alone", where=where)
-    triangles = _connectivity(piece, "Polys", 3, where)
+    triangles = cells_of_kind(piece, "Polys", 3, where)
     cell_data = _of_length(piece, "CellData", len(triangles), where)
     sides = [_whole(cell_data.get(name), name, where) for name in ("label_inside", "label_outside")]
     try:
-        return Surface(_coordinates(piece, where), triangles, np.stack(sides, axis=1))
+        return Surface(coordinates(piece, where), triangles, np.stack(sides, axis=1))
     except InputError as fault:
         raise fault.at(where) from fault
 
@@ -244,7 +244,8 @@ def _captured() -> Iterator[Any]:
         vtkOutputWindow.SetInstance(usual)
 
 
-def _coordinates(piece: VtkPiece, where: str) -> NDArray[np.float64]:
+def coordinates(piece: VtkPiece, where: str) -> NDArray[np.float64]:
+    """(n, 3) points of a piece; InputError where they contradict themselves."""
     arrays = list(piece.sections.get("Points", {}).values())
     if len(arrays) != 1 or arrays[0].ndim != 2 or arrays[0].shape[1] != 3:
         raise InputError("holds no points", where=where)
@@ -253,7 +254,8 @@ def _coordinates(piece: VtkPiece, where: str) -> NDArray[np.float64]:
     return arrays[0].astype(np.float64)
 
 
-def _connectivity(piece: VtkPiece, section: str, corners: int, where: str) -> NDArray[np.int64]:
+def cells_of_kind(piece: VtkPiece, section: str, corners: int, where: str) -> NDArray[np.int64]:
+    """(m, corners) corners of the cells of a section; InputError where one has more or fewer."""
     arrays = piece.sections.get(section, {})
     flat, offsets = (arrays.get(name, np.empty(0)) for name in ("connectivity", "offsets"))
     ends = np.arange(corners, corners * len(offsets) + 1, corners)

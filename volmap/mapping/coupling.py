@@ -126,13 +126,20 @@ class _Side:
         return gains[0]
 
     @property
-    def reached(self) -> bool:
+    def matched(self) -> bool:
+        """Boundary matches and guides are inside their uncertainty."""
         assert self.residual is not None
         inside = self.solver.boundary_reached(self.residual)
         return inside and self.solver.guides_reached(self.images)
 
+    @property
+    def reached(self) -> bool:
+        assert self.residual is not None
+        return self.solver.ending(self.residual, self.images) is Status.SETTLED
+
     def ended(self, solved: Solved) -> Solved:
-        status = Status.SETTLED if self.reached else Status.BOUNDARY_NOT_REACHED
+        assert self.residual is not None
+        status = self.solver.ending(self.residual, self.images)
         history: tuple[IterationRecord, ...] = tuple(self.state.history)
         there = VolumeMap(solved.outcome.map.mesh, self.images)
         outcome = replace(solved.outcome, map=there, status=status, history=history)
@@ -173,7 +180,8 @@ def couple(main: Solved, other: Solved, *, voxel_mm: float, progress: Progress =
     -------
     Coupled
     """
-    if not all(s.outcome.status in (Status.SETTLED, Status.BOUNDARY_NOT_REACHED) for s in (main, other)):
+    settled = (Status.SETTLED, Status.BOUNDARY_NOT_REACHED, Status.GIVEN_BOUNDARY_NOT_KEPT)
+    if not all(s.outcome.status in settled for s in (main, other)):
         return Coupled(main, other, Coupling.UNFINISHED)
     sides = (_Side(main), _Side(other))
     parted = _parted(sides)
@@ -199,9 +207,10 @@ def _draw(sides: tuple[_Side, _Side], parted: tuple[Floats, Floats], progress: P
         gains = [side.draw(middle, rung) for side, middle in zip(sides, middles, strict=True)]
         progress("couple", sweep + 1, 0)
         if sweep + 1 >= FEWEST_SWEEPS:
-            reached = all(side.reached for side in sides)
-            if not reached and rung < 0.999 * top:
+            matched = all(side.matched for side in sides)
+            harder = [side.solver.raise_given(side.state) for side in sides]
+            if not matched and rung < 0.999 * top:
                 rung = min(top, rung * np.sqrt(settings.weight_factor))
-            elif max(gains) < AT_REST * settings.settle:
+            elif max(gains) < AT_REST * settings.settle and not any(harder):
                 return
         parted = _parted(sides)

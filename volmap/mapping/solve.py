@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from collections.abc import Callable
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -10,12 +11,16 @@ from numpy.typing import NDArray
 from volmap.kernels.observations import Observations, joined
 from volmap.mapping.alignment import Alignment, align, doubts
 from volmap.mapping.contact import Contact
+from volmap.mapping.given_boundary import KeptBoundary
+from volmap.mapping.giving_way import giving_way
 from volmap.mapping.guides import guide_observations, guide_rms
 from volmap.mapping.matching import Matcher, Residual
 from volmap.mapping.objective import Objective, Value
 from volmap.mapping.patches import matching_patches, steady_contacts
 from volmap.mapping.settings import MapSettings
 from volmap.types import (
+    GivenBoundary,
+    GivingWay,
     InputError,
     IterationRecord,
     LandmarkPairs,
@@ -38,6 +43,10 @@ GUIDE_REACH_VOXELS = 3.0  # guides farther outside the body are refused
 STALLED_STEPS = 3  # steps in a row that hardly move before it counts as stalled
 PLATEAU = 4  # steps over which the objective, freshly matched, must still fall
 NOTHING = 1e-9  # an objective this small has nothing left to fall: stretches of some 1e-5
+HARDEST_PULL = (
+    3.0  # of a given boundary at the edge of its tolerance, in units of the ladder and 0.02 V^(1/3)
+)
+STEPS_AGAIN = 60  # at most, at each other tolerance of a given boundary
 MOST_UNMATCHED = 0.05  # of the boundary's area, for a boundary that counts as reached
 
 
@@ -64,6 +73,7 @@ class _State:
     settling: bool = False
     idle: int = 0
     beside: Observations | None = None  # pulls beside the boundary's and the guides'
+    given_weight: float = 0.0
 
 
 def _weighted(o: Observations, factor: float) -> Observations:
@@ -89,6 +99,7 @@ class _Solver:
         alignment: Alignment,
         guides: LandmarkPairs | None,
         voxel_mm: float,
+        kept: KeptBoundary | None = None,
     ) -> None:
         points, tets = np.array(mesh.points), np.array(mesh.tets)
         self.settings = settings
@@ -103,6 +114,7 @@ class _Solver:
         self.matcher = Matcher(
             patches, points, np.array(target.points), pattern=self.objective.pattern, across=settings.across
         )
+        self.kept = kept
         self.guides = None
         self.guide_sd_mm = 0.0
         if guides is not None and guides.names:
@@ -115,9 +127,13 @@ class _Solver:
 
     def pulls(self, state: _State) -> tuple[Observations, Residual]:
         if self.contact is not None:
-            self.contact.weight = state.boundary_weight
+            self.contact.weight = max(state.boundary_weight, state.given_weight)
         matches, residual = self.matcher.match(state.images)
+        if self.kept is not None:
+            matches, residual = self.kept.beside(matches, state.images)
         parts = [_weighted(matches, state.boundary_weight)]
+        if self.kept is not None:
+            parts.append(_weighted(self.kept.pulls(state.images), state.given_weight))
         if self.guides is not None:
             parts.append(_weighted(self.guides, state.guide_weight))
         if state.beside is not None:
@@ -129,6 +145,35 @@ class _Solver:
 
     def guides_reached(self, images: Floats) -> bool:
         return self.guides is None or guide_rms(self.guides, images) <= self.guide_sd_mm
+
+    def given_kept(self, images: Floats) -> bool:
+        return self.kept is None or self.kept.kept(images)
+
+    @property
+    def last_given_weight(self) -> float:
+        """Where the weight of a given boundary stops rising: what needs a harder pull is given up."""
+        assert self.kept is not None
+        return HARDEST_PULL * float(np.sqrt(self.unit)) / self.kept.slack_mm
+
+    def raise_given(self, state: _State) -> bool:
+        """Raise the weight of a given boundary that is not kept; False when there is nothing to raise."""
+        if self.given_kept(state.images) or state.given_weight > 0.999 * self.last_given_weight:
+            return False
+        state.given_weight *= self.settings.weight_factor
+        return True
+
+    def ending(self, residual: Residual, images: Floats) -> Status:
+        """How a solve that came to rest ended."""
+        if not self.given_kept(images):
+            return Status.GIVEN_BOUNDARY_NOT_KEPT
+        reached = self.boundary_reached(residual) and self.guides_reached(images)
+        return Status.SETTLED if reached else Status.BOUNDARY_NOT_REACHED
+
+    def told_residual_mm(self, residual: Residual, images: Floats) -> float:
+        """The residual for the record: of the given boundary and of what it does not speak of, together."""
+        if self.kept is None:
+            return residual.rms_mm
+        return float(np.hypot(np.sqrt(self.kept.coverage) * self.kept.rms(images), residual.rms_mm))
 
     def search(self, images: Floats, pulls: Observations, *, at: Value) -> tuple[Floats, Value, float, int]:
         """One Newton step from a value: new images, value there, share of it taken, linear iterations."""
@@ -146,6 +191,7 @@ class _Solver:
 def _step(solver: _Solver, state: _State) -> tuple[float, Residual]:
     """Match, differentiate, move; returns the relative decrease of the objective and the residual before."""
     pulls, residual = solver.pulls(state)
+    told_mm = solver.told_residual_mm(residual, state.images)
     before = solver.objective.differentiate(state.images, pulls)
     state.images, after, length, iterations = solver.search(state.images, pulls, at=before)
     state.levels.append(before.total)
@@ -156,7 +202,7 @@ def _step(solver: _Solver, state: _State) -> tuple[float, Residual]:
             state.boundary_weight,
             after.total,
             after.distortion,
-            residual.rms_mm,
+            told_mm,
             length,
             iterations,
             solver.objective.smallest_ratio(state.images),
@@ -177,6 +223,7 @@ def _raise_weights(solver: _Solver, state: _State, residual: Residual) -> bool:
     if not solver.guides_reached(state.images) and state.guide_weight < 99.9 * last:
         state.guide_weight *= factor
         raised = True
+    raised = solver.raise_given(state) or raised
     if raised:
         state.levels = []
     return raised
@@ -190,26 +237,38 @@ def _at_rest(state: _State, decrease: float, settle: float) -> bool:
     return min(earlier) - min(recent) < PLATEAU * settle * min(earlier)
 
 
-def _climb(solver: _Solver, state: _State, progress: Progress) -> Status | None:
+def _climb(solver: _Solver, state: _State, progress: Progress, *, most_steps: int) -> Status | None:
     """Newton steps up the ladder and down to rest; None when steps ran out."""
     settings = solver.settings
     on_rung = 0
-    while len(state.history) < settings.most_steps:
+    while len(state.history) < most_steps:
         decrease, residual = _step(solver, state)
         on_rung += 1
-        note = f"boundary {residual.rms_mm:.3f} mm, distortion {state.history[-1].distortion:.4f}"
+        note = (
+            f"boundary {state.history[-1].residual_mm:.3f} mm, distortion {state.history[-1].distortion:.4f}"
+        )
         progress("map", len(state.history), 0, note)
         if state.idle >= STALLED_STEPS:
             return Status.STALLED
         if state.settling:
             if _at_rest(state, decrease, settings.settle):
-                reached = solver.boundary_reached(residual) and solver.guides_reached(state.images)
-                return Status.SETTLED if reached else Status.BOUNDARY_NOT_REACHED
+                return solver.ending(residual, state.images)
         elif on_rung >= settings.steps_a_rung or decrease < 20 * settings.settle:
             on_rung = 0
             _, residual = solver.pulls(state)
             state.settling = not _raise_weights(solver, state, residual)
     return None
+
+
+def _climbing(solver: _Solver) -> Callable[[_State], _State]:
+    """From a state to where a solve with the same weights settles; the state itself stays."""
+
+    def climb(state: _State) -> _State:
+        further = replace(state, history=[], levels=[], settling=False, idle=0)
+        _climb(solver, further, silent, most_steps=STEPS_AGAIN)
+        return further
+
+    return climb
 
 
 def map_mesh(
@@ -219,6 +278,8 @@ def map_mesh(
     *,
     voxel_mm: float = 1.0,
     guides: LandmarkPairs | None = None,
+    given: GivenBoundary | None = None,
+    other_tolerances: bool = True,
     progress: Progress = silent,
 ) -> Solved:
     """Map a mesh onto the label surfaces of another body.
@@ -234,6 +295,11 @@ def map_mesh(
         "One voxel" as a length, for the declared uncertainty.
     guides : LandmarkPairs, optional
         Pairs that steer the map.
+    given : GivenBoundary, optional
+        Where the boundary, or a part of it, goes, from SOURCE to TARGET.  What it does not speak of is
+        matched with the target's surface.
+    other_tolerances : bool
+        With a given boundary, also find out what smaller and larger tolerances would cost.
     progress : Progress
 
     Returns
@@ -243,8 +309,8 @@ def map_mesh(
     Raises
     ------
     InputError
-        The bodies hold different labels, a tet of the mesh is not positive, or a guide lies outside the
-        source body.
+        The bodies hold different labels, a tet of the mesh is not positive, a guide lies outside the
+        source body, or the given boundary speaks of no part of it.
     """
     settings = settings or MapSettings()
     here, there = set(mesh.present), {int(v) for v in np.unique(target.sides) if v}
@@ -265,7 +331,14 @@ def map_mesh(
             remedy="mesh the scan again",
         )
     progress("align", 0, 0)
-    alignment, tried = align(mesh.interfaces, target, start=settings.start, guides=guides, seed=settings.seed)
+    kept = KeptBoundary(mesh, given) if given is not None else None
+    if kept is not None:
+        alignment = kept.start()
+        tried: tuple[Alignment, ...] = (alignment,)
+    else:
+        alignment, tried = align(
+            mesh.interfaces, target, start=settings.start, guides=guides, seed=settings.seed
+        )
     solver = _Solver(
         mesh,
         target,
@@ -273,12 +346,17 @@ def map_mesh(
         alignment=alignment,
         guides=guides,
         voxel_mm=voxel_mm,
+        kept=kept,
     )
     weight = settings.first_weight * solver.unit
-    state = _State(alignment.apply(np.array(mesh.points)), weight, weight, [])
-    status = _climb(solver, state, progress) or Status.OUT_OF_STEPS
+    begin = _State(alignment.apply(np.array(mesh.points)), weight, weight, [], given_weight=weight)
+    state = replace(begin, history=[], levels=[])
+    status = _climb(solver, state, progress, most_steps=settings.most_steps) or Status.OUT_OF_STEPS
+    rows: tuple[GivingWay, ...] = ()
+    if kept is not None and other_tolerances:
+        rows = giving_way(mesh, kept, start=begin, found=state, climb=_climbing(solver), progress=progress)
     words = ", ".join(f"{a.name} {a.residual_mm:.2f} mm" for a in tried)
     start = f"{alignment.name}, turned by {alignment.rotation_deg:.0f} degrees (residuals: {words})"
     notes = (*doubts(alignment, tried), *solver.notes)
-    outcome = Outcome(VolumeMap(mesh, state.images), status, tuple(state.history), start, notes)
+    outcome = Outcome(VolumeMap(mesh, state.images), status, tuple(state.history), start, notes, rows)
     return Solved(outcome, alignment, tried, solver, state)

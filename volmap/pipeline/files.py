@@ -12,6 +12,7 @@ from volmap import carry as carrying
 from volmap import mesh as meshing
 from volmap import screen as screening
 from volmap.io.atomic import require_place, whole_file
+from volmap.io.given_boundary import read_given_boundary
 from volmap.io.landmarks import read_landmarks, read_pairs, write_landmarks
 from volmap.io.nifti import (
     VolumeKind,
@@ -31,6 +32,7 @@ from volmap.pipeline.reporting import report_of, write_map
 from volmap.screen import Mended, PairResult, ScreenResult
 from volmap.types import (
     Finding,
+    GivenBoundary,
     ImageVolume,
     InputError,
     LabelVolume,
@@ -141,12 +143,17 @@ def map_files(
     job: MapJob,
     *,
     guides: Path | None = None,
+    boundary: Path | None = None,
+    boundary_tolerance_mm: float | None = None,
     source_image: Path | None = None,
     target_image: Path | None = None,
     overwrite: bool = False,
     progress: Progress = silent,
 ) -> MapFolder:
     """Map one label file onto another and write the map folder.
+
+    A boundary is kept within `boundary_tolerance_mm` of where its `image_mm` sends it (default: a quarter of
+    a voxel, the mean of both scans).
 
     Raises
     ------
@@ -159,15 +166,38 @@ def map_files(
     b, findings_b = read_labels_with_findings(target)
     a, b = _told_apart(a, b)
     pairs = read_pairs(guides) if guides is not None else None
+    given = _given_boundary(boundary, boundary_tolerance_mm, a, b)
     images = [_picture(source_image, a), _picture(target_image, b)]
     notes = tuple(f"{f.where}: {f.sentence}" for f in (*findings_a, *findings_b))
     folder = map_pair(
-        a, b, job, pairs=pairs, pairs_name=guides.name if guides else "", notes=notes, progress=progress
+        a,
+        b,
+        job,
+        pairs=pairs,
+        pairs_name=guides.name if guides else "",
+        given=given,
+        notes=notes,
+        progress=progress,
     )
     write_map(
         out, folder, source_image=images[0], target_image=images[1], overwrite=overwrite, progress=progress
     )
     return folder
+
+
+TOLERANCE_VOXELS = 0.25  # a staircase of voxels lies that far from any smooth surface through it
+REACH_VOXELS = 1.5  # two surfaces of one segmentation lie nearer to each other than this
+
+
+def _given_boundary(
+    path: Path | None, tolerance_mm: float | None, source: LabelVolume, target: LabelVolume
+) -> GivenBoundary | None:
+    if path is None:
+        return None
+    voxel_mm = 0.5 * (source.grid.voxel_mm + target.grid.voxel_mm)
+    return read_given_boundary(
+        path, tolerance_mm=tolerance_mm or TOLERANCE_VOXELS * voxel_mm, reach_mm=REACH_VOXELS * voxel_mm
+    )
 
 
 def _picture(path: Path | None, labels: LabelVolume) -> ImageVolume | None:

@@ -29,6 +29,9 @@ def evidence_of(folder: MapFolder) -> certifying.Evidence:
         status=folder.status,
         source_mesh_labels=_voxelised(own.get("source"), folder.source),
         target_mesh_labels=_voxelised(own.get("target"), folder.target),
+        solved_on=folder.solved_on,
+        given=folder.given,
+        giving_way=folder.giving_way,
     )
 
 

@@ -22,6 +22,7 @@ from volmap.pipeline.told import distortion_of, mesh_document, scan_document, si
 from volmap.types import (
     Certificate,
     Finding,
+    GivenBoundary,
     InputError,
     LabelVolume,
     LandmarkPairs,
@@ -90,6 +91,7 @@ def map_pair(
     *,
     pairs: LandmarkPairs | None = None,
     pairs_name: str = "landmarks",
+    given: GivenBoundary | None = None,
     notes: tuple[str, ...] = (),
     progress: Progress = silent,
 ) -> MapFolder:
@@ -106,6 +108,8 @@ def map_pair(
         Guides and checks, from SOURCE to TARGET.
     pairs_name : str
         What to call them in messages.
+    given : GivenBoundary, optional
+        A boundary correspondence to keep, from SOURCE to TARGET.
     notes : tuple of str
         Sentences to keep with the certificate.
     progress : Progress
@@ -118,7 +122,8 @@ def map_pair(
     Raises
     ------
     InputError
-        What the screen refuses, what cannot be meshed, a guide outside the body.
+        What the screen refuses, what cannot be meshed, a guide outside the body, a given boundary that lies
+        elsewhere.
     """
     job = job or MapJob()
     announce_compiling(progress)
@@ -139,17 +144,19 @@ def map_pair(
             n_threads=use_threads(None),
         )
     _require_every_label(meshes, (source, target))
+    spoken = _screened_boundary(given, meshes, _voxel_mm(source, target))
     order = _Order.of(source, target)
-    solutions = _solve(meshes, source, target, job, order, pairs, watch, progress)
+    solutions = _solve(meshes, source, target, job, order, pairs, given, watch, progress)
     folder = _sampled(solutions, meshes, source, target, order, pairs, watch, progress, energy=job.map.energy)
+    folder = replace(folder, given=given, giving_way=solutions.main.outcome.giving_way)
     with watch.measuring("certify"):
         gates, measures = certifying.certify(evidence_of(folder), table, progress=progress)
-    findings = [*screened.findings, *placed, *meshes[0].findings, *meshes[1].findings]
+    findings = [*screened.findings, *placed, *spoken, *meshes[0].findings, *meshes[1].findings]
     certificate = replace(
         folder.certificate,
         gates=gates,
         measures=measures,
-        settings=_settings_document(job, solutions, order),
+        settings=_settings_document(job, solutions, order, given),
         mesh=_mesh_document(folder, meshes),
         seconds=watch.seconds,
         peak_mb=peak_mb(),
@@ -165,6 +172,24 @@ def _placed(
     if pairs is None:
         return ()
     findings = screening.screen_pairs_of_landmarks(pairs, source, target, name=name)
+    screening.raise_refusal(findings)
+    return findings
+
+
+def _voxel_mm(source: LabelVolume, target: LabelVolume) -> float:
+    """ "One voxel" of a pair for the solver: the mean of both scans."""
+    return 0.5 * (source.grid.voxel_mm + target.grid.voxel_mm)
+
+
+def _screened_boundary(
+    given: GivenBoundary | None, meshes: list[MeshResult], voxel_mm: float
+) -> tuple[Finding, ...]:
+    """How a given boundary lies on the bodies; refused when it lies elsewhere."""
+    if given is None:
+        return ()
+    findings = screening.screen_given_boundary(
+        given, meshes[0].mesh.interfaces, meshes[1].mesh.interfaces, voxel_mm=voxel_mm
+    )
     screening.raise_refusal(findings)
     return findings
 
@@ -203,13 +228,15 @@ def _solve(
     job: MapJob,
     order: _Order,
     pairs: LandmarkPairs | None,
+    given: GivenBoundary | None,
     watch: Stopwatch,
     progress: Progress,
 ) -> _Solutions:
     first, second = (meshes[1], meshes[0]) if order.flipped else (meshes[0], meshes[1])
     guides = pairs.of_role("guide") if pairs is not None else None
     forward = guides.reversed() if guides is not None and order.flipped else guides
-    voxel_mm = 0.5 * (source.grid.voxel_mm + target.grid.voxel_mm)
+    boundary = given.reversed() if given is not None and order.flipped else given
+    voxel_mm = _voxel_mm(source, target)
     with watch.measuring("map"):
         main = map_mesh(
             first.mesh,
@@ -217,6 +244,7 @@ def _solve(
             job.map,
             voxel_mm=voxel_mm,
             guides=forward,
+            given=boundary,
             progress=progress,
         )
     if not job.both_orders:
@@ -228,6 +256,8 @@ def _solve(
             job.map,
             voxel_mm=voxel_mm,
             guides=forward.reversed() if forward is not None else None,
+            given=boundary.reversed() if boundary is not None else None,
+            other_tolerances=False,
             progress=_prefixed(progress, "the other way"),
         )
     with watch.measuring("couple"):
@@ -293,10 +323,23 @@ def _sampled(
     )
 
 
-def _settings_document(job: MapJob, solutions: _Solutions, order: _Order) -> dict[str, Any]:
+def _settings_document(
+    job: MapJob, solutions: _Solutions, order: _Order, given: GivenBoundary | None
+) -> dict[str, Any]:
     alignment = solutions.main.alignment
     matrix = np.linalg.inv(alignment.matrix) if order.flipped else alignment.matrix
-    return {
+    told = (
+        {}
+        if given is None
+        else {
+            "given_boundary": {
+                "file": given.name,
+                "tolerance_mm": given.tolerance_mm,
+                "reach_mm": given.reach_mm,
+            }
+        }
+    )
+    return told | {
         "mesh": asdict(job.mesh),
         "map": asdict(job.map),
         "both_orders": job.both_orders,

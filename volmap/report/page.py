@@ -50,6 +50,7 @@ def report(inputs: ReportInput, *, progress: Progress = silent) -> str:
             compared=tables.compared(inputs),
             labels=tables.label_rows(inputs),
             gates=tables.gate_rows(certificate, names),
+            given=tables.given_boundary(certificate),
             landmarks=evidence.landmark_table(inputs),
             places=evidence.worst_places(inputs),
             methods=methods.methods(inputs),

@@ -141,7 +141,7 @@ def told(value: Any, unit: str, names: Mapping[int, str], watched: Collection[st
         return ["–"]
     lines: dict[str, list[str]] = {}
     for path, leaf in leaves(value):
-        if PER_LABEL in path:
+        if PER_LABEL in path or GIVING_WAY in path:
             continue
         group = " · ".join(_named(p, names) for p in path[:-1])
         kind = _named(path[-1], names) if path else ""
@@ -153,6 +153,9 @@ def told(value: Any, unit: str, names: Mapping[int, str], watched: Collection[st
         groups = [*groups[:MOST_GROUPS], f"and {len(groups) - MOST_GROUPS} more in the certificate"]
     return own + groups or ["–"]
 
+
+GIVING_WAY = "giving_way"
+"""Part of a gate's value that is told in a table of its own."""
 
 PER_LABEL = "per_label"
 """Part of a gate's value that is told in the table of labels."""
@@ -231,6 +234,33 @@ def _spot(where: Mapping[str, Any]) -> str:
     point = where.get("point_mm")
     at = "" if point is None else f"{scales.place(point)} mm {space}".strip()
     return ": ".join(p for p in (at, note) if p)
+
+
+def given_boundary(certificate: Certificate) -> dict[str, Any] | None:
+    """The section of a given boundary; None when the map was not given one."""
+    gate = next((g for g in certificate.gates if g.name == "given_boundary_mm"), None)
+    if gate is None or not isinstance(gate.value, Mapping):
+        return None
+    at_file = gate.value.get("at_file_points", {})
+    return {
+        "sentence": scales.plain_text(gate.sentence, 600),
+        "at_file": {k: fixed(at_file[k], 2) for k in ("mean", "p95", "max")} if at_file else None,
+        "gap": fixed(gate.value.get("surface_gap_mm"), 2),
+        "places": [_spot(w) for w in gate.where],
+        "rows": [
+            {
+                "tolerance": fixed(row["tolerance_mm"], 3),
+                "asked": bool(row["tolerance_mm"] == gate.value.get("tolerance_mm")),
+                "kept": bool(row["kept"]),
+                "rms": fixed(row["rms_mm"], 3),
+                "max": fixed(row["max_mm"], 3),
+                "distortion": number(row["distortion"], 3),
+                "ratio": number(row["smallest_ratio"], 3),
+                "at": scales.place(row["where_mm"]),
+            }
+            for row in gate.value.get(GIVING_WAY, ())
+        ],
+    }
 
 
 def verdict_sentence(certificate: Certificate) -> str:

@@ -7,6 +7,7 @@ repairs nothing silently; its arrays are owned copies and read-only.
 from volmap.types.certificate import Certificate, Gate, Verdict
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding, Level
+from volmap.types.given_boundary import GivenBoundary, GivingWay
 from volmap.types.grid import Grid
 from volmap.types.gridfield import GridField
 from volmap.types.landmarks import LandmarkPairs, Landmarks
@@ -21,6 +22,8 @@ __all__ = [
     "Certificate",
     "Finding",
     "Gate",
+    "GivenBoundary",
+    "GivingWay",
     "Grid",
     "GridField",
     "ImageVolume",

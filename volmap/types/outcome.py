@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from enum import Enum
 
+from volmap.types.given_boundary import GivingWay
 from volmap.types.volume_map import VolumeMap
 
 
@@ -14,6 +15,9 @@ class Status(Enum):
     SETTLED = "The boundaries agree within the declared uncertainty and the distortion has settled."
     BOUNDARY_NOT_REACHED = (
         "The distortion has settled, but the boundaries still differ by more than the declared uncertainty."
+    )
+    GIVEN_BOUNDARY_NOT_KEPT = (
+        "The distortion has settled, but the given boundary is not kept within its tolerance everywhere."
     )
     OUT_OF_STEPS = "The allowed number of steps ran out before the map settled."
     STALLED = "No step that keeps every tet positive makes the map better; it stopped before it settled."
@@ -68,6 +72,8 @@ class Outcome:
         Which alignment start was chosen, with the residuals of all that were tried.
     notes : tuple of str
         What was treated in a special way (accidental contacts, for instance).
+    giving_way : tuple of GivingWay
+        With a given boundary: what other tolerances would cost, strictest first.
     """
 
     map: VolumeMap
@@ -75,3 +81,4 @@ class Outcome:
     history: tuple[IterationRecord, ...]
     start: str = ""
     notes: tuple[str, ...] = ()
+    giving_way: tuple[GivingWay, ...] = ()
