@@ -12,6 +12,7 @@ import pytest
 from volmap import pipeline
 from volmap.io.given_boundary import read_given_boundary, write_given_boundary
 from volmap.io.nifti import read_labels
+from volmap.kernels.surface_map import unit_normals
 from volmap.mapfolder import GIVEN, read_map_folder
 from volmap.types import GivenBoundary, InputError, Status, Surface, Verdict
 
@@ -107,9 +108,11 @@ def test_a_planted_fold_is_reported_at_its_place(small_pair, small_job, surface)
     """Two neighbouring points of the surface swapped: no inverted tet, and a place within an edge of them."""
     images = np.array(grown(surface.points))
     outer = surface.triangles[surface.sides[:, 1] == 0]
-    a = outer[np.argmax(surface.points[outer[:, 0], 0]), 0]
+    normals = np.repeat(unit_normals(surface.points, outer), 3, axis=0)
+    sums = np.stack([np.bincount(outer.ravel(), normals[:, i]) for i in range(3)], axis=1)
+    flatness = np.linalg.norm(sums, axis=1) / np.maximum(np.bincount(outer.ravel()), 1)
+    a, b = max(outer[:, :2].tolist(), key=lambda edge: flatness[edge].min())  # a fold needs a smooth place
     star = np.unique(outer[(outer == a).any(axis=1)])
-    b = star[star != a][0]
     images[[a, b]] = images[[b, a]]
     a_volume, b_volume = read_labels(small_pair.source), read_labels(small_pair.target)
     job = replace(small_job, both_orders=False)
