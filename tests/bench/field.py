@@ -79,6 +79,7 @@ def timed(call):  # type: ignore[no-untyped-def]
     """Seconds on the wall and of all processors, the least of some rounds, and the last answer."""
     wall, cpu = [], []
     for _ in range(ROUNDS):
+        answer = None  # two at once would be counted as peak memory
         a, b = time.perf_counter(), os.times()
         answer = call()
         c = os.times()
