@@ -84,6 +84,14 @@ def _Heard(start, end):  # noqa: N802 - makes a class of numba's, which is impor
     return Heard()
 
 
+def yardstick() -> float:
+    """Seconds of a fixed piece of Python: by how much other work slows this machine down just now."""
+    begin, total = time.thread_time(), 0
+    for i in range(3_000_000):
+        total += i * i % 7
+    return time.thread_time() - begin
+
+
 def child(out: Path, arguments: list[str]) -> None:
     """Run the command in this process and write what compiling cost it."""
     begin = time.process_time()
@@ -95,9 +103,11 @@ def child(out: Path, arguments: list[str]) -> None:
     from numba.core.dispatcher import Dispatcher
     from volmap_cli.main import main
 
+    yardsticks = [yardstick()]
     begin = time.process_time()
     status = main(arguments)
     spent = time.process_time() - begin
+    yardsticks.append(yardstick())
     loaded, own = 0, {}
     for thing in gc.get_objects():
         if not isinstance(thing, Dispatcher) or not thing.signatures:
@@ -110,6 +120,7 @@ def child(out: Path, arguments: list[str]) -> None:
     document = {
         "numba": numba.__version__,
         "exit_status": status,
+        "yardstick_s": yardsticks,
         "import_numba_s": imported,
         "command_cpu_s": spent,
         "compiling_s": ledger.compiled,
@@ -174,6 +185,7 @@ def show(result: dict, rows: int) -> None:
         print(
             f"{name:>6}: compiling {run['compiling_s']:.2f} s, "
             f"loading or storing {run['loading_or_storing_s']:.2f} s, "
+            f"yardstick {sum(run['yardstick_s']) / 2:.3f} s, "
             f"import numba {run['import_numba_s']:.2f} s, whole command {run['command_cpu_s']:.2f} s; "
             f"{run['functions_compiled']} functions and {run['specialisations_compiled']} specialisations "
             f"compiled, {run['specialisations_loaded']} loaded; exit {run['exit_status']}"

@@ -133,9 +133,9 @@ def _go_and_return(first, last, there, back, to_world, to_index, distance):  # t
                 for d in range(3):
                     y[d] = to_world[d, 0] * p + to_world[d, 1] * q + to_world[d, 2] * r + to_world[d, 3]
                     y[d] += there[p, q, r, d]
-                i, a = _axis(_row(to_index, 0, y), back.shape[0])
-                j, b = _axis(_row(to_index, 1, y), back.shape[1])
-                k, c = _axis(_row(to_index, 2, y), back.shape[2])
+                i, a = _axis(_row(to_index, np.int64(0), y), back.shape[0])
+                j, b = _axis(_row(to_index, np.int64(1), y), back.shape[1])
+                k, c = _axis(_row(to_index, np.int64(2), y), back.shape[2])
                 if i < 0 or j < 0 or k < 0:
                     continue
                 square = 0.0
