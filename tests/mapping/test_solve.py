@@ -7,7 +7,8 @@ from hand_made_bodies import cubes, lopsided, rotation
 
 from volmap.kernels.energies import ENERGIES
 from volmap.kernels.predicates import orientation_signs
-from volmap.mapping import MapSettings, map_mesh, solve
+from volmap.mapping import MapSettings, climbing, map_mesh
+from volmap.mapping.guides import guide_observations, guide_rms
 from volmap.mapping.matching import Residual
 from volmap.mapping.objective import Objective
 from volmap.types import InputError, LandmarkPairs, Status, TetMesh
@@ -47,7 +48,7 @@ def test_no_tet_is_inverted_at_any_step(monkeypatch, energy):
     radius = 5 + 1.4 * z
     bent = np.stack([radius * np.sin(x / 4), 0.6 * y, radius * np.cos(x / 4) + y * z * 0.2], axis=1)
     iterates = []
-    step = solve._step
+    step = climbing.step
 
     def recorded(solver, state):
         iterates.append(state.images)
@@ -55,8 +56,9 @@ def test_no_tet_is_inverted_at_any_step(monkeypatch, energy):
         iterates.append(state.images)
         return result
 
-    monkeypatch.setattr(solve, "_step", recorded)
+    monkeypatch.setattr(climbing, "step", recorded)
     hard = {"uncertainty_mm": 0.01, "first_weight": 10.0, "last_weight": 1000.0, "most_steps": 40}
+    hard["start"] = "world"  # one start, so that the iterates are those of one solve
     outcome = solved(bar, bar.moved(bent), energy=energy, **hard).outcome
     assert len(iterates) == 2 * len(outcome.history) > 10
     assert sum(h.step_length < 1.0 for h in outcome.history) >= 10
@@ -77,7 +79,7 @@ def test_a_moved_target_gives_the_moved_map(plain, degrees):
 def test_a_moved_source_gives_the_same_map(plain, degrees):
     turn = rotation((3, 1, -2), degrees)
     other = solved(BODY.moved(BODY.points @ turn.T + SHIFT))
-    assert np.abs(other.outcome.map.images - plain.outcome.map.images).max() < 1e-3
+    assert np.abs(other.outcome.map.images - plain.outcome.map.images).max() < 5e-3  # both settled to 1e-4
 
 
 def test_far_from_the_origin_nothing_changes(plain):
@@ -148,7 +150,7 @@ def test_any_number_of_threads_gives_the_same_bytes(shell):
 def test_history_makes_sense(shell):
     mesh, target = shell
     told = []
-    settings = MapSettings(uncertainty_mm=0.05)
+    settings = MapSettings(uncertainty_mm=0.05, start="world")
     outcome = map_mesh(mesh, target, settings, progress=lambda *args: told.append(args)).outcome
     history = outcome.history
     weights = np.array([h.boundary_weight for h in history])
@@ -181,8 +183,8 @@ def test_settled_means_settled(plain):
     ],
 )
 def test_rest_is_told_from_cycling(levels, decrease, rests):
-    state = solve._State(BENT, 1.0, 1.0, [], levels)
-    assert solve._at_rest(state, decrease, 1e-4) is rests
+    state = climbing.State(BENT, 1.0, 1.0, [], levels=levels)
+    assert climbing._at_rest(state, decrease, 1e-4) is rests
 
 
 def test_out_of_steps_is_told(plain):
@@ -201,7 +203,7 @@ def test_a_boundary_that_is_not_reached_is_told():
 
 def test_a_stalled_solve_is_told(monkeypatch):
     """No step is ever acceptable: the alignment stays as it is, and is not called done."""
-    monkeypatch.setattr(Objective, "all_positive", lambda self, images: False)
+    monkeypatch.setattr(Objective, "largest_step", lambda self, images, direction: 0.0)
     result = solved(uncertainty_mm=1e-3)
     assert result.outcome.status is Status.STALLED
     assert [h.step_length for h in result.outcome.history] == [0.0, 0.0, 0.0]
@@ -214,13 +216,12 @@ def test_guides_are_reached_within_their_deviation():
     guides = LandmarkPairs(("g",), inside, np.add(inside, (1.5, 0, 0)), ("guide",), sd_mm=[0.1])
     outcome = solved(target=BODY, guides=guides).outcome
     assert outcome.status is Status.SETTLED
-    placed = solve.guide_observations(
+    placed = guide_observations(
         BODY,
         guides,
         pattern=Objective(np.array(BODY.points), np.array(BODY.tets), energy="arap").pattern,
-        reach_mm=1.0,
     )
-    assert solve.guide_rms(placed, outcome.map.images) <= 0.1
+    assert guide_rms(placed, outcome.map.images) <= 0.1
     assert (outcome.map.volume_ratio > 0).all()
 
 
@@ -251,7 +252,7 @@ def test_settings_out_of_range_are_refused(name, value):
 )
 def test_what_counts_as_a_boundary_reached(plain, rms_mm, rejected, reached):
     """Within a tenth of a voxel of 1 mm, and matched: where every match is rejected the residual is 0 too."""
-    solver = solve._Solver(
+    solver = climbing.Climber(
         BODY, TARGET.interfaces, MapSettings(), alignment=plain.alignment, guides=None, voxel_mm=1.0
     )
     assert solver.boundary_reached(Residual(rms_mm, rms_mm, rms_mm, rejected)) is reached

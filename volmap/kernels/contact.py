@@ -38,12 +38,13 @@ class Skin(NamedTuple):
     edges : (e, 3) int64
         Each edge, its second point twice.
     triangles : (t, 3) int64
-    edge_tree, triangle_tree : Tree
+    point_tree, edge_tree, triangle_tree : Tree
     """
 
     points: Ints
     edges: Ints
     triangles: Ints
+    point_tree: Tree
     edge_tree: Tree
     triangle_tree: Tree
 
@@ -59,14 +60,25 @@ def skin_of(points: Floats, triangles: Ints) -> Skin:
     used = np.unique(triangles)
     pairs = np.sort(triangles[:, [[0, 1], [1, 2], [2, 0]]].reshape(-1, 2), axis=1)
     edges = np.unique(pairs, axis=0)[:, [0, 1, 1]]
-    lone = np.ascontiguousarray(np.repeat(used[:, None], 3, axis=1))
-    edges, triangles = np.ascontiguousarray(edges), np.ascontiguousarray(triangles)
-    return Skin(lone, edges, triangles, build_tree(points, edges), build_tree(points, triangles))
+    kinds = [np.ascontiguousarray(cells) for cells in (np.repeat(used[:, None], 3, axis=1), edges, triangles)]
+    lone, edges, triangles = kinds
+    return Skin(lone, edges, triangles, *(build_tree(points, cells) for cells in kinds))
+
+
+class _Cells(NamedTuple):
+    """Triples of points with their tree, and boxes (m, 6) around them in the tree's order."""
+
+    corners: Ints
+    tree: Tree
+    boxes: Floats
 
 
 @kernel
-def _sweep(tree, cells, here, there):  # type: ignore[no-untyped-def]
-    """Boxes around cells on their straight way from `here` to `there`, in place."""
+def _sweep(tree, cells, here, there, boxes):  # type: ignore[no-untyped-def]
+    """Boxes around cells on their straight way from `here` to `there`.
+
+    Those of the tree's nodes are set in place; those of the cells go into boxes (m, 6), in the tree's order.
+    """
     for node in range(len(tree.child) - 1, -1, -1):
         c = tree.child[node]
         for d in range(3):
@@ -76,37 +88,31 @@ def _sweep(tree, cells, here, there):  # type: ignore[no-untyped-def]
                 high = max(tree.high[c, d], tree.high[c + 1, d])
             else:
                 for i in range(tree.first[node], tree.last[node]):
+                    least, most = np.inf, -np.inf
                     for k in range(3):
                         p = cells[tree.order[i], k]
-                        low = min(low, here[p, d], there[p, d])
-                        high = max(high, here[p, d], there[p, d])
+                        least = min(least, here[p, d], there[p, d])
+                        most = max(most, here[p, d], there[p, d])
+                    boxes[i, d], boxes[i, d + 3] = least, most
+                    low, high = min(low, least), max(high, most)
             tree.low[node, d] = low
             tree.high[node, d] = high
 
 
 @inner_kernel
-def _box(cell, here, there, margin, low, high):  # type: ignore[no-untyped-def]
+def _boxes_apart(boxes, i, margin, boxes2, j):  # type: ignore[no-untyped-def]
+    """True when box i, wider by a margin, and box j of another list have nothing in common."""
     for d in range(3):
-        low[d], high[d] = np.inf, -np.inf
-        for k in range(3):
-            low[d] = min(low[d], here[cell[k], d], there[cell[k], d])
-            high[d] = max(high[d], here[cell[k], d], there[cell[k], d])
-        low[d] -= margin
-        high[d] += margin
+        if boxes[i, d] - margin > boxes2[j, d + 3] or boxes[i, d + 3] + margin < boxes2[j, d]:
+            return True
+    return False
 
 
 @inner_kernel
-def _apart(low, high, low2, high2):  # type: ignore[no-untyped-def]
-    x = low[0] > high2[0] or high[0] < low2[0]
-    y = low[1] > high2[1] or high[1] < low2[1]
-    return x or y or low[2] > high2[2] or high[2] < low2[2]
-
-
-@inner_kernel
-def _share_a_point(a, b):  # type: ignore[no-untyped-def]
+def _share_a_point(queries, q, cells, c):  # type: ignore[no-untyped-def]
     for i in range(3):
         for j in range(3):
-            if a[i] == b[j]:
+            if queries[q, i] == cells[c, j]:
                 return True
     return False
 
@@ -147,7 +153,7 @@ def _gap(of_edges, x, weights, gap):  # type: ignore[no-untyped-def]
     if of_edges:
         _edge_weights(x, weights)
     else:
-        u, v, w, _ = on_triangle(x[0, 0], x[0, 1], x[0, 2], x, np.int64(1), np.int64(2), np.int64(3))
+        u, v, w, _ = on_triangle(x[0, 0], x[0, 1], x[0, 2], x, 1, 2, 3)
         weights[0], weights[1], weights[2], weights[3] = 1.0, -u, -v, -w
     squared = 0.0
     for i in range(3):
@@ -159,11 +165,12 @@ def _gap(of_edges, x, weights, gap):  # type: ignore[no-untyped-def]
 
 
 @inner_kernel
-def _corners(of_edges, query, cell, corners):  # type: ignore[no-untyped-def]
+def _corners(of_edges, queries, q, cells, c, corners):  # type: ignore[no-untyped-def]
+    corners[0] = queries[q, 0]
     if of_edges:
-        corners[0], corners[1], corners[2], corners[3] = query[0], query[1], cell[0], cell[1]
+        corners[1], corners[2], corners[3] = queries[q, 1], cells[c, 0], cells[c, 1]
     else:
-        corners[0], corners[1], corners[2], corners[3] = query[0], cell[0], cell[1], cell[2]
+        corners[1], corners[2], corners[3] = cells[c, 0], cells[c, 1], cells[c, 2]
 
 
 @inner_kernel
@@ -201,15 +208,19 @@ def _first_meeting(of_edges, x, p, longest, weights, gap):  # type: ignore[no-un
 
 
 @inner_kernel
-def _leaves(tree, low, high, stack, leaves):  # type: ignore[no-untyped-def]
-    """Leaves of a tree whose boxes overlap a box, into leaves; returns how many."""
+def _leaves(tree, query_tree, query_node, margin, stack, leaves):  # type: ignore[no-untyped-def]
+    """Leaves of a tree whose boxes overlap a node's of another, wider by a margin; returns how many."""
     n = 0
     stack[0] = 0
     size = 1
     while size > 0:
         size -= 1
         node = stack[size]
-        if _apart(low, high, tree.low[node], tree.high[node]):
+        apart = False
+        for d in range(3):
+            apart |= query_tree.low[query_node, d] - margin > tree.high[node, d]
+            apart |= query_tree.high[query_node, d] + margin < tree.low[node, d]
+        if apart:
             continue
         if tree.child[node] < 0:
             leaves[n] = node
@@ -221,36 +232,74 @@ def _leaves(tree, low, high, stack, leaves):  # type: ignore[no-untyped-def]
     return n
 
 
-@inner_kernel
-def _worth_a_look(of_edges, cells, queries, q, c, here, there, low, high, low2, high2):  # type: ignore[no-untyped-def]
-    """True when query q and cell c have no point in common, boxes that overlap, and are not met twice."""
-    if (of_edges and c <= q) or _share_a_point(queries[q], cells[c]):
-        return False
-    _box(cells[c], here, there, 0.0, low2, high2)
-    return not _apart(low, high, low2, high2)
-
-
 @kernel
-def _longest_steps(first, last, of_edges, tree, cells, queries, here, there, out):  # type: ignore[no-untyped-def]
-    """Safe share in [0, 1] of the way from here to there, query by query."""
-    low, high, low2, high2 = np.empty(3), np.empty(3), np.empty(3), np.empty(3)
+def _visit(first, last, of_edges, searching, queries, cells, nodes, here, there, reach, out, found):  # type: ignore[no-untyped-def]
+    """Look at every query and cell that share no point and whose boxes, wider by `reach`, overlap.
+
+    Searching: how many cells lie nearer than `reach` into out (q,), as many as fit into found (q, m).
+    Else: the safe share in [0, 1] of each query's way from `here` to `there` into out.
+    """
     x, p = np.empty((4, 3)), np.empty((4, 3))
     weights, gap, corners = np.empty(4), np.empty(3), np.empty(4, np.int64)
-    stack, leaves = np.empty(DEPTH, np.int64), np.empty(len(tree.child), np.int64)
-    for q in range(first, last):
-        safe = 1.0
-        _box(queries[q], here, there, 0.0, low, high)
-        for n in range(_leaves(tree, low, high, stack, leaves)):
-            for i in range(tree.first[leaves[n]], tree.last[leaves[n]]):
-                c = tree.order[i]
-                if _worth_a_look(of_edges, cells, queries, q, c, here, there, low, high, low2, high2):
-                    _corners(of_edges, queries[q], cells[c], corners)
-                    for k in range(4):
+    stack, leaves = np.empty(DEPTH, np.int64), np.empty(len(cells.tree.child), np.int64)
+    for m in range(first, last):
+        n = _leaves(cells.tree, queries.tree, nodes[m], reach, stack, leaves)
+        for i in range(queries.tree.first[nodes[m]], queries.tree.last[nodes[m]]):
+            q = queries.tree.order[i]
+            out[q] = 0.0 if searching else 1.0
+            for k in range(n):
+                for j in range(cells.tree.first[leaves[k]], cells.tree.last[leaves[k]]):
+                    c = cells.tree.order[j]
+                    if (of_edges and c <= q) or _boxes_apart(queries.boxes, i, reach, cells.boxes, j):
+                        continue
+                    if _share_a_point(queries.corners, q, cells.corners, c):
+                        continue
+                    _corners(of_edges, queries.corners, q, cells.corners, c, corners)
+                    for a in range(4):
                         for d in range(3):
-                            x[k, d] = here[corners[k], d]
-                            p[k, d] = there[corners[k], d] - here[corners[k], d]
-                    safe = min(safe, _first_meeting(of_edges, x, p, safe, weights, gap))
-        out[q] = safe
+                            x[a, d] = here[corners[a], d]
+                            p[a, d] = there[corners[a], d] - here[corners[a], d]
+                    if not searching:
+                        out[q] = min(out[q], _first_meeting(of_edges, x, p, out[q], weights, gap))
+                    elif _gap(of_edges, x, weights, gap) < reach:
+                        if out[q] < found.shape[1]:
+                            found[q, np.int64(out[q])] = c
+                        out[q] += 1.0
+
+
+def _swept(corners: Ints, tree: Tree, here: Floats, there: Floats) -> _Cells:
+    boxes = np.empty((len(corners), 6))
+    _sweep(tree, corners, here, there, boxes)
+    return _Cells(corners, tree, boxes)
+
+
+def _visited(
+    skin: Skin, of_edges: bool, here: Floats, there: Floats, *, reach_mm: float, found: Ints
+) -> Floats:
+    """What `_visit` leaves in `out`, of points and triangles or of edges and edges."""
+    if of_edges:
+        queries = cells = _swept(skin.edges, skin.edge_tree, here, there)
+    else:
+        queries = _swept(skin.points, skin.point_tree, here, there)
+        cells = _swept(skin.triangles, skin.triangle_tree, here, there)
+    out = np.empty(len(queries.corners))
+    nodes = np.flatnonzero(queries.tree.child < 0)
+    searching = found.shape[1] > 0
+    on_threads(
+        _visit,
+        len(nodes),
+        of_edges,
+        searching,
+        queries,
+        cells,
+        nodes,
+        here,
+        there,
+        reach_mm,
+        out,
+        found,
+    )
+    return out
 
 
 def longest_step(skin: Skin, here: Floats, there: Floats) -> float:
@@ -262,48 +311,10 @@ def longest_step(skin: Skin, here: Floats, there: Floats) -> float:
         Must not touch itself at `here`.
     here, there : (n, 3) float64, mm
     """
-    by_point, by_edge = np.empty(len(skin.points)), np.empty(len(skin.edges))
-    _sweep(skin.triangle_tree, skin.triangles, here, there)
-    on_threads(
-        _longest_steps,
-        len(skin.points),
-        False,
-        skin.triangle_tree,
-        skin.triangles,
-        skin.points,
-        here,
-        there,
-        by_point,
+    none = np.empty((0, 0), np.int64)
+    return min(
+        float(_visited(skin, kind, here, there, reach_mm=0.0, found=none).min()) for kind in (False, True)
     )
-    _sweep(skin.edge_tree, skin.edges, here, there)
-    on_threads(
-        _longest_steps, len(skin.edges), True, skin.edge_tree, skin.edges, skin.edges, here, there, by_edge
-    )
-    return float(min(by_point.min(), by_edge.min()))
-
-
-@kernel
-def _near(first, last, of_edges, tree, cells, queries, points, reach, count, found):  # type: ignore[no-untyped-def]
-    """Cells nearer than `reach` to each query: how many into count (q,), as many as fit into found (q, m)."""
-    low, high, low2, high2 = np.empty(3), np.empty(3), np.empty(3), np.empty(3)
-    x, corners = np.empty((4, 3)), np.empty(4, np.int64)
-    weights, gap = np.empty(4), np.empty(3)
-    stack, leaves = np.empty(DEPTH, np.int64), np.empty(len(tree.child), np.int64)
-    for q in range(first, last):
-        count[q] = 0
-        _box(queries[q], points, points, reach, low, high)
-        for n in range(_leaves(tree, low, high, stack, leaves)):
-            for i in range(tree.first[leaves[n]], tree.last[leaves[n]]):
-                c = tree.order[i]
-                if _worth_a_look(of_edges, cells, queries, q, c, points, points, low, high, low2, high2):
-                    _corners(of_edges, queries[q], cells[c], corners)
-                    for k in range(4):
-                        for d in range(3):
-                            x[k, d] = points[corners[k], d]
-                    if _gap(of_edges, x, weights, gap) < reach:
-                        if count[q] < found.shape[1]:
-                            found[q, count[q]] = c
-                        count[q] += 1
 
 
 class Pairs(NamedTuple):
@@ -327,8 +338,8 @@ class Pairs(NamedTuple):
 
 def near_pairs(skin: Skin, points: Floats, reach_mm: float) -> Pairs:
     """All pairs of the skin nearer than `reach_mm`, point-triangle pairs first."""
-    lone, cell = _near_cells(False, skin.triangle_tree, skin.triangles, skin.points, points, reach_mm)
-    edge, other = _near_cells(True, skin.edge_tree, skin.edges, skin.edges, points, reach_mm)
+    lone, cell = _near_cells(skin, False, points, reach_mm)
+    edge, other = _near_cells(skin, True, points, reach_mm)
     corners = np.concatenate(
         [
             np.concatenate([skin.points[lone, :1], skin.triangles[cell]], axis=1),
@@ -342,18 +353,15 @@ def near_pairs(skin: Skin, points: Floats, reach_mm: float) -> Pairs:
     return pairs
 
 
-def _near_cells(
-    of_edges: bool, tree: Tree, cells: Ints, queries: Ints, points: Floats, reach_mm: float
-) -> tuple[Ints, Ints]:
+def _near_cells(skin: Skin, of_edges: bool, points: Floats, reach_mm: float) -> tuple[Ints, Ints]:
     """(query, cell) of every near pair; searched again with more room where there were more than fit."""
-    _sweep(tree, cells, points, points)
-    count = np.empty(len(queries), np.int64)
-    found = np.empty((len(queries), ROOM), np.int64)
-    on_threads(_near, len(queries), of_edges, tree, cells, queries, points, reach_mm, count, found)
+    n = len(skin.edges) if of_edges else len(skin.points)
+    found = np.empty((n, ROOM), np.int64)
+    count = _visited(skin, of_edges, points, points, reach_mm=reach_mm, found=found).astype(np.int64)
     if count.max(initial=0) > ROOM:
-        found = np.empty((len(queries), int(count.max())), np.int64)
-        on_threads(_near, len(queries), of_edges, tree, cells, queries, points, reach_mm, count, found)
-    query = np.repeat(np.arange(len(queries)), count)
+        found = np.empty((n, int(count.max())), np.int64)
+        _visited(skin, of_edges, points, points, reach_mm=reach_mm, found=found)
+    query = np.repeat(np.arange(n), count)
     within = np.arange(len(query)) - np.repeat(np.cumsum(count) - count, count)
     return query, found[query, within]
 

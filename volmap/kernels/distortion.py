@@ -18,7 +18,10 @@ from volmap.kernels.compiled import inner_kernel
 from volmap.kernels.energies import density
 
 CHUNK = 256  # tets that share one set of work arrays
-SWEEPS = 30  # Jacobi sweeps at most; five are enough for any F met so far
+SWEEPS = 30  # Jacobi sweeps at most; four are enough for any F met so far
+ROUNDING = 1e-30  # squared cosine of columns that are left alone
+LAST_SWEEP = 1e-16  # a sweep that met no larger squared cosine was the last: it leaves the square of that
+FLAT = 1e-12  # share of its volume in the source that a tet must keep to count as positive
 
 
 @inner_kernel
@@ -31,18 +34,18 @@ def rotate_to_stretches(a, v):  # type: ignore[no-untyped-def]
         for j in range(3):
             v[i, j] = 1.0 if i == j else 0.0
     for _ in range(SWEEPS):
-        turned = False
+        largest = 0.0
         for p in range(2):
             for q in range(p + 1, 3):
                 alpha = a[0, p] * a[0, p] + a[1, p] * a[1, p] + a[2, p] * a[2, p]
                 beta = a[0, q] * a[0, q] + a[1, q] * a[1, q] + a[2, q] * a[2, q]
                 gamma = a[0, p] * a[0, q] + a[1, p] * a[1, q] + a[2, p] * a[2, q]
-                if abs(gamma) <= 1e-15 * sqrt(alpha * beta):
+                if gamma * gamma <= ROUNDING * alpha * beta:
                     continue
-                turned = True
-                zeta = (beta - alpha) / (2.0 * gamma)
-                t = 1.0 / (abs(zeta) + sqrt(1.0 + zeta * zeta))
-                if zeta < 0.0:
+                largest = max(largest, gamma * gamma / (alpha * beta))
+                half = 0.5 * (beta - alpha)
+                t = gamma / (abs(half) + sqrt(half * half + gamma * gamma))
+                if half < 0.0:
                     t = -t
                 c = 1.0 / sqrt(1.0 + t * t)
                 s = c * t
@@ -51,7 +54,7 @@ def rotate_to_stretches(a, v):  # type: ignore[no-untyped-def]
                     a[i, p], a[i, q] = c * x - s * y, s * x + c * y
                     x, y = v[i, p], v[i, q]
                     v[i, p], v[i, q] = c * x - s * y, s * x + c * y
-        if not turned:
+        if largest < LAST_SWEEP:
             break
 
 
@@ -132,7 +135,7 @@ def _stretches(f, v, s):  # type: ignore[no-untyped-def]
 
 @njit(cache=True, parallel=True)
 def energies(code, points, tets, shape_gradients, out):  # type: ignore[no-untyped-def]
-    """W_S of every tet into out (m,); infinity where a tet is not positive.
+    """W_S of every tet into out (m,), infinity where a tet is not positive; returns the smallest det F.
 
     Parameters
     ----------
@@ -144,16 +147,25 @@ def energies(code, points, tets, shape_gradients, out):  # type: ignore[no-untyp
     shape_gradients : (m, 4, 3) float64
         Of the source mesh, 1/mm.
     """
-    for chunk in prange((len(tets) + CHUNK - 1) // CHUNK):
+    smallest = np.empty((len(tets) + CHUNK - 1) // CHUNK)
+    for chunk in prange(len(smallest)):
         f, v, s = np.empty((3, 3)), np.empty((3, 3)), np.empty(3)
         g, h, w = np.empty(3), np.empty((3, 3)), np.empty(3)
         g2, h2 = np.empty(3), np.empty((3, 3))
+        least = np.inf
         for t in range(chunk * CHUNK, min(len(tets), (chunk + 1) * CHUNK)):
-            if _gradient_of(points, tets, shape_gradients, t, f) <= 0.0:
+            determinant = _gradient_of(points, tets, shape_gradients, t, f)
+            least = min(least, determinant)
+            if determinant <= FLAT:
                 out[t] = np.inf
             else:
                 _stretches(f, v, s)
                 out[t] = symmetrised(code, s, g, h, w, g2, h2)
+        smallest[chunk] = least
+    least = np.inf
+    for chunk in range(len(smallest)):
+        least = min(least, smallest[chunk])
+    return least
 
 
 @inner_kernel
@@ -222,7 +234,7 @@ def derivatives(code, points, tets, shape_gradients, weights, clamp, out, forces
         W_S, not weighted; infinity where a tet is not positive.
     forces : (m, 4, 3) float64
         Weighted first derivative in each corner.
-    blocks : (m, 6, 3, 3) float64
+    blocks : (m, 6, 3, 3) float32
         Weighted second derivative for the corner pairs of `tets.EDGES`.  ``K_ba = K_ab^T`` and
         the rows of K sum to zero, so six blocks are the whole matrix.
     """
@@ -232,10 +244,15 @@ def derivatives(code, points, tets, shape_gradients, weights, clamp, out, forces
         g2, h2, u = np.empty(3), np.empty((3, 3)), np.empty((3, 3))
         p, q, turned = np.zeros((3, 3)), np.zeros((3, 3)), np.empty((4, 3))
         for t in range(chunk * CHUNK, min(len(tets), (chunk + 1) * CHUNK)):
-            if _gradient_of(points, tets, shape_gradients, t, f) <= 0.0:
+            if _gradient_of(points, tets, shape_gradients, t, f) <= FLAT:
                 out[t] = np.inf
-                forces[t] = 0.0
-                blocks[t] = 0.0
+                for a in range(4):
+                    for i in range(3):
+                        forces[t, a, i] = 0.0
+                for e in range(6):
+                    for i in range(3):
+                        for j in range(3):
+                            blocks[t, e, i, j] = 0.0
                 continue
             _stretches(f, v, s)
             for k in range(3):

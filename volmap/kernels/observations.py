@@ -70,7 +70,7 @@ def misfit(o, points):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def add_pull(o, points, gradient, diagonal, off_diagonal):  # type: ignore[no-untyped-def]
+def add_pull(o, points, pattern, gradient, rows):  # type: ignore[no-untyped-def]
     """Add first and second derivatives of `misfit` to a block system; returns the misfit."""
     total = 0.0
     r = np.empty(3)
@@ -94,12 +94,13 @@ def add_pull(o, points, gradient, diagonal, off_diagonal):  # type: ignore[no-un
                 for i in range(3):
                     gradient[p, i] += wa * (m[i, 0] * r[0] + m[i, 1] * r[1] + m[i, 2] * r[2])
                     for j in range(3):
-                        diagonal[p, i, j] += wa * wa * m[i, j]
+                        rows[pattern.own_slot[p], i, j] += wa * wa * m[i, j]
             for b in range(a + 1, 4):
                 e += 1
                 both = wa * o.weights[k, b]
                 if both != 0.0:
                     for i in range(3):
                         for j in range(3):
-                            off_diagonal[o.edges[k, e], i, j] += both * m[i, j]
+                            rows[pattern.edge_slot[o.edges[k, e], 0], i, j] += both * m[i, j]
+                            rows[pattern.edge_slot[o.edges[k, e], 1], i, j] += both * m[i, j]
     return total

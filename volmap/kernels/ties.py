@@ -7,7 +7,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.kernels.compiled import inner_kernel
+from volmap.kernels.compiled import kernel
 
 
 class Ties(NamedTuple):
@@ -34,7 +34,7 @@ def no_ties() -> Ties:
     return Ties(np.empty((0, 4), np.int64), np.empty((0, 4)), np.empty((0, 3)), np.empty(0))
 
 
-@inner_kernel
+@kernel
 def add_product(ties, x, out):  # type: ignore[no-untyped-def]
     """out += K x, both (n, 3)."""
     for k in range(len(ties.stiffness)):
@@ -51,7 +51,7 @@ def add_product(ties, x, out):  # type: ignore[no-untyped-def]
                 out[p, i] += ties.weights[k, c] * along * ties.normals[k, i]
 
 
-@inner_kernel
+@kernel
 def add_diagonal(ties, diagonal):  # type: ignore[no-untyped-def]
     """diagonal += the diagonal blocks of K, (n, 3, 3); for a preconditioner."""
     for k in range(len(ties.stiffness)):

@@ -2,7 +2,8 @@
 
 from volmap.mapping.alignment import Alignment, align
 from volmap.mapping.coupling import Coupling, couple
+from volmap.mapping.levels import Bodies
 from volmap.mapping.settings import MapSettings
 from volmap.mapping.solve import Solved, map_mesh
 
-__all__ = ["Alignment", "Coupling", "MapSettings", "Solved", "align", "couple", "map_mesh"]
+__all__ = ["Alignment", "Bodies", "Coupling", "MapSettings", "Solved", "align", "couple", "map_mesh"]

@@ -14,6 +14,7 @@ from volmap.kernels.contact import (
     remeasured,
     skin_of,
 )
+from volmap.kernels.crossings import triangle_crossings
 from volmap.kernels.ties import Ties
 from volmap.types import Surface
 
@@ -76,6 +77,10 @@ class Contact:
         strength = self.weight / len(self.skin.points)
         energy = add_barrier(pairs, self.reach_mm, strength, gradient, normals, stiffness)
         return float(energy), Ties(pairs.corners, pairs.weights, normals, stiffness)
+
+    def crosses(self, images: Floats) -> bool:
+        """True when the image of the boundary crosses itself (exact signs)."""
+        return len(triangle_crossings(images, self.skin.triangles)) > 0
 
     def longest_step(self, images: Floats, step: Floats) -> float:
         """Share in [0, 1] of a step (n, 3) mm on which no two parts meet."""

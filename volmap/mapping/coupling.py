@@ -18,8 +18,9 @@ from volmap.kernels import closest
 from volmap.kernels.locate import build_buckets, interpolate, locate
 from volmap.kernels.observations import Observations
 from volmap.kernels.topology import face_corners, match_faces
+from volmap.mapping.climbing import step
 from volmap.mapping.matching import Residual
-from volmap.mapping.solve import Solved, _step
+from volmap.mapping.solve import Solved
 from volmap.types import IterationRecord, Progress, Status, TetMesh, VolumeMap, silent
 
 Floats = NDArray[np.float64]
@@ -95,6 +96,7 @@ class _Side:
     def __init__(self, solved: Solved) -> None:
         mesh = solved.outcome.map.mesh
         self.solver, self.settings = solved.solver, solved.solver.settings
+        self.solver.objective.multigrid.forget()
         self.inverse = _Inverse(mesh)
         self.points = self.inverse.points
         shares = np.bincount(mesh.tets.ravel(), np.repeat(mesh.volumes, 4), len(mesh.points))
@@ -117,7 +119,7 @@ class _Side:
         self.state.beside = _towards(middle, DRAW * self.solver.unit * self.shares)
         gains = []
         for _ in range(STEPS_A_SWEEP):
-            gain, _ = _step(self.solver, self.state)
+            gain, _ = step(self.solver, self.state)
             gains.append(gain)
             if gain < self.settings.settle:
                 break

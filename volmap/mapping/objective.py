@@ -6,24 +6,40 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy import sparse
 
 from volmap.kernels import blocksystem, distortion, observations, steps, tets
 from volmap.kernels.energies import ENERGIES
 from volmap.kernels.observations import Observations
 from volmap.kernels.ties import no_ties
 from volmap.mapping.contact import Contact
+from volmap.mapping.multigrid import Multigrid
 
 Floats = NDArray[np.float64]
 
 SAFETY = 0.9  # of the largest step that keeps every tet positive
+ARMIJO = 1e-4
+SMALLEST_STEP = 1e-6
+LINEAR_ITERATIONS = 400  # at most, a Newton step
 
 
 @dataclass(frozen=True, eq=False)
 class Value:
-    """Total objective and its distortion part; both infinite where a tet is not positive."""
+    """Total objective and its distortion part, both infinite where a tet is not positive; the smallest J."""
 
     total: float
     distortion: float
+    smallest_ratio: float = np.nan
+
+
+@dataclass(frozen=True, eq=False)
+class Step:
+    """Where a Newton step led: images, value there, share of it taken, linear iterations it took."""
+
+    images: Floats
+    value: Value
+    length: float
+    iterations: int
 
 
 class Objective:
@@ -65,18 +81,24 @@ class Objective:
         self.volume_mm3 = float(volumes.sum())
         self.weights = volumes / self.volume_mm3
         self.densities = np.empty(m)
-        self.forces, self.blocks = np.empty((m, 4, 3)), np.empty((m, 6, 3, 3))
-        self.gradient, self.diagonal = np.empty((n, 3)), np.empty((n, 3, 3))
-        self.off_diagonal = np.empty((len(self.pattern.edges), 3, 3))
+        self.forces, self.blocks = np.empty((m, 4, 3)), np.empty((m, 6, 3, 3), np.float32)
+        self.gradient = np.empty((n, 3))
+        blocks = np.empty((len(self.pattern.row_column), 3, 3), np.float32)
+        self.matrix = sparse.bsr_matrix(
+            (blocks, self.pattern.row_column, self.pattern.row_start), shape=(3 * n, 3 * n)
+        )
+        a, b = self.pattern.edges.T
+        edge_mm = float(np.linalg.norm(points[a] - points[b], axis=1).mean())
+        self.multigrid = Multigrid(points, edge_mm)
 
     def value(self, images: Floats, pulls: Observations) -> Value:
         """The objective at image points (n, 3) mm."""
-        distortion.energies(self.code, images, self.tets, self.shape_gradients, self.densities)
+        smallest = distortion.energies(self.code, images, self.tets, self.shape_gradients, self.densities)
         spent = float(self.weights @ self.densities)
         total = spent + observations.misfit(pulls, images)
         if self.contact is not None and np.isfinite(total):
             total += self.contact.energy(images)
-        return Value(total, spent)
+        return Value(total, spent, float(smallest) * self.growth)
 
     def differentiate(self, images: Floats, pulls: Observations) -> Value:
         """The objective, with its gradient and convex second-derivative model kept for `newton_step`."""
@@ -91,30 +113,38 @@ class Objective:
             self.forces,
             self.blocks,
         )
-        blocksystem.gather(
-            self.pattern, self.forces, self.blocks, self.gradient, self.diagonal, self.off_diagonal
-        )
-        pulled = observations.add_pull(pulls, images, self.gradient, self.diagonal, self.off_diagonal)
+        blocksystem.gather(self.pattern, self.forces, self.blocks, self.gradient, self.matrix.data)
+        pulled = observations.add_pull(pulls, images, self.pattern, self.gradient, self.matrix.data)
         spent = float(self.weights @ self.densities)
         if self.contact is None:
             return Value(spent + pulled, spent)
         repelled, self.ties = self.contact.add(images, self.gradient)
         return Value(spent + pulled + repelled, spent)
 
+    def descend(self, images: Floats, pulls: Observations, *, at: Value, forcing: float) -> Step:
+        """One Newton step from where `differentiate` gave `at`, as long as it may and pays.
+
+        Parameters
+        ----------
+        forcing : float
+            Relative residual of the linear solve.
+        """
+        direction, slope, iterations = self.newton_step(tolerance=forcing, most=LINEAR_ITERATIONS)
+        length = self.largest_step(images, direction)
+        while length > SMALLEST_STEP:
+            trial = images + length * direction
+            value = self.value(trial, pulls)
+            if value.total <= at.total + ARMIJO * length * slope:
+                return Step(trial, value, length, iterations)
+            length *= 0.5
+        return Step(images, self.value(images, pulls), 0.0, iterations)
+
     def newton_step(self, *, tolerance: float, most: int) -> tuple[Floats, float, int]:
         """Direction (n, 3) mm, its slope (negative), and the linear iterations it took."""
-        direction = np.empty_like(self.gradient)
-        iterations = blocksystem.solve(
-            self.pattern,
-            self.diagonal,
-            self.off_diagonal,
-            self.ties,
-            -self.gradient,
-            tolerance,
-            most,
-            direction,
+        direction, iterations = self.multigrid.solve(
+            self.matrix, self.ties, -self.gradient, tolerance=tolerance, most=most
         )
-        return direction, float((self.gradient * direction).sum()), int(iterations)
+        return direction, float((self.gradient * direction).sum()), iterations
 
     def largest_step(self, images: Floats, direction: Floats) -> float:
         """Largest step in [0, 1] that surely keeps every tet positive and the boundary free of crossings."""
@@ -125,12 +155,9 @@ class Objective:
             length *= self.contact.longest_step(images, length * direction)
         return length
 
-    def smallest_ratio(self, images: Floats) -> float:
-        """Smallest volume in TARGET over volume in SOURCE."""
-        rest = self.weights * self.volume_mm3 / self.growth
-        return float((tets.signed_volumes(images, self.tets) / rest).min())
-
-    def all_positive(self, images: Floats) -> bool:
-        """Plain signs, with a margin above rounding."""
+    def is_valid(self, images: Floats) -> bool:
+        """True when every tet is positive by a margin and, with contact, the outer boundary is embedded."""
         volumes = tets.signed_volumes(images, self.tets)
-        return bool((volumes > 1e-12 * self.weights * self.volume_mm3).all())
+        if not (volumes > distortion.FLAT * self.weights * self.volume_mm3).all():
+            return False
+        return self.contact is None or not self.contact.crosses(images)

@@ -46,7 +46,7 @@ class MapSettings:
     energy: str = "soft-tissue"
     uncertainty_mm: float | None = None
     uncertainty_voxels: float = 0.1
-    across: float = 0.01
+    across: float = 0.003
     one_to_one: bool = True
     contact_voxels: float = 0.15
     first_weight: float = 0.01

@@ -1,28 +1,28 @@
-"""From an alignment to a settled map: a ladder of boundary weights, Newton steps that never invert a tet."""
+"""From an alignment to a settled map, through coarser meshes and, in doubt, from several starts.
+
+Coarser meshes of the same bodies, where there are any, go up the ladder of boundary weights first; each
+finer one starts where the coarser one left off.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass, field, replace
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
-from numpy.typing import NDArray
 
-from volmap.kernels.observations import Observations, joined
-from volmap.mapping.alignment import Alignment, align, doubts
-from volmap.mapping.contact import Contact
+from volmap.mapping.alignment import Alignment, align
+from volmap.mapping.climbing import Climber, State, climb, climbing_again
 from volmap.mapping.given_boundary import KeptBoundary
 from volmap.mapping.giving_way import giving_way
-from volmap.mapping.guides import guide_observations, guide_rms
-from volmap.mapping.matching import Matcher, Residual
-from volmap.mapping.objective import Objective, Value
-from volmap.mapping.patches import matching_patches, steady_contacts
+from volmap.mapping.guides import refuse_far_guides
+from volmap.mapping.levels import Bodies, carried, facet_noise_mm, valid_start
 from volmap.mapping.settings import MapSettings
+from volmap.mapping.starts import History, Trial, Watch, in_doubt, told, tried_out
 from volmap.types import (
     GivenBoundary,
     GivingWay,
     InputError,
-    IterationRecord,
     LandmarkPairs,
     Outcome,
     Progress,
@@ -33,21 +33,7 @@ from volmap.types import (
     silent,
 )
 
-Floats = NDArray[np.float64]
-
-ARMIJO = 1e-4
-SMALLEST_STEP = 1e-6
-FORCING = 0.02  # relative residual of the linear solves
-LINEAR_ITERATIONS = 400  # at most, a Newton step
 GUIDE_REACH_VOXELS = 3.0  # guides farther outside the body are refused
-STALLED_STEPS = 3  # steps in a row that hardly move before it counts as stalled
-PLATEAU = 4  # steps over which the objective, freshly matched, must still fall
-NOTHING = 1e-9  # an objective this small has nothing left to fall: stretches of some 1e-5
-HARDEST_PULL = (
-    3.0  # of a given boundary at the edge of its tolerance, in units of the ladder and 0.02 V^(1/3)
-)
-STEPS_AGAIN = 60  # at most, at each other tolerance of a given boundary
-MOST_UNMATCHED = 0.05  # of the boundary's area, for a boundary that counts as reached
 
 
 @dataclass(frozen=True)
@@ -57,218 +43,94 @@ class Solved:
     outcome: Outcome
     alignment: Alignment
     tried: tuple[Alignment, ...]
-    solver: _Solver
-    state: _State
+    solver: Climber
+    state: State
 
 
-@dataclass
-class _State:
-    """Where the solve is; replaced piece by piece."""
+@dataclass(frozen=True, eq=False)
+class _Task:
+    """What is asked for: the levels, coarsest first, and what holds on all of them."""
 
-    images: Floats
-    boundary_weight: float
-    guide_weight: float
-    history: list[IterationRecord]
-    levels: list[float] = field(default_factory=list)  # objective, freshly matched, since weights rose
-    settling: bool = False
-    idle: int = 0
-    beside: Observations | None = None  # pulls beside the boundary's and the guides'
-    given_weight: float = 0.0
+    levels: tuple[Bodies, ...]
+    settings: MapSettings
+    guides: LandmarkPairs | None
+    voxel_mm: float
+    progress: Progress
+    kept: KeptBoundary | None = None
 
-
-def _weighted(o: Observations, factor: float) -> Observations:
-    return o._replace(strengths=o.strengths * factor)
-
-
-def _body_volume(surface: Surface) -> float:
-    """What the faces towards the outside enclose, mm3 (divergence theorem)."""
-    corners = surface.points[surface.triangles[surface.sides[:, 1] == 0]]
-    a, b, c = np.moveaxis(corners - surface.points.mean(axis=0), 1, 0)
-    return float(np.einsum("ij,ij->", np.cross(a, b), c) / 6.0)
-
-
-class _Solver:
-    """The pieces one solve needs."""
-
-    def __init__(
-        self,
-        mesh: TetMesh,
-        target: Surface,
-        settings: MapSettings,
-        *,
-        alignment: Alignment,
-        guides: LandmarkPairs | None,
-        voxel_mm: float,
-        kept: KeptBoundary | None = None,
-    ) -> None:
-        points, tets = np.array(mesh.points), np.array(mesh.tets)
-        self.settings = settings
-        self.uncertainty_mm = settings.uncertainty_mm or settings.uncertainty_voxels * voxel_mm
-        growth = _body_volume(target) / _body_volume(mesh.interfaces)
-        self.contact = None
-        if settings.one_to_one:
-            self.contact = Contact(mesh.interfaces, reach_mm=settings.contact_voxels * voxel_mm)
-        self.objective = Objective(points, tets, energy=settings.energy, contact=self.contact, growth=growth)
-        steady, self.notes = steady_contacts(mesh.interfaces, target, alignment.matrix)
-        patches = matching_patches(mesh.interfaces, target, steady)
-        self.matcher = Matcher(
-            patches, points, np.array(target.points), pattern=self.objective.pattern, across=settings.across
-        )
-        self.kept = kept
-        self.guides = None
-        self.guide_sd_mm = 0.0
-        if guides is not None and guides.names:
-            assert guides.sd_mm is not None
-            self.guides = guide_observations(
-                mesh, guides, pattern=self.objective.pattern, reach_mm=GUIDE_REACH_VOXELS * voxel_mm
+    def climber(self, depth: int, alignment: Alignment) -> Climber:
+        level, finest = self.levels[depth], self.levels[-1]
+        noise = 0.0
+        if level is not finest:
+            noise = float(
+                np.hypot(
+                    facet_noise_mm(level.mesh.interfaces, finest.mesh.interfaces),
+                    facet_noise_mm(level.target, finest.target),
+                )
             )
-            self.guide_sd_mm = float(np.sqrt(len(guides.sd_mm) / (guides.sd_mm**-2.0).sum()))
-        self.unit = (0.02 * np.cbrt(_body_volume(target))) ** -2.0
-
-    def pulls(self, state: _State) -> tuple[Observations, Residual]:
-        if self.contact is not None:
-            self.contact.weight = max(state.boundary_weight, state.given_weight)
-        matches, residual = self.matcher.match(state.images)
-        if self.kept is not None:
-            matches, residual = self.kept.beside(matches, state.images)
-        parts = [_weighted(matches, state.boundary_weight)]
-        if self.kept is not None:
-            parts.append(_weighted(self.kept.pulls(state.images), state.given_weight))
-        if self.guides is not None:
-            parts.append(_weighted(self.guides, state.guide_weight))
-        if state.beside is not None:
-            parts.append(state.beside)
-        return joined(parts), residual
-
-    def boundary_reached(self, residual: Residual) -> bool:
-        return residual.rms_mm <= self.uncertainty_mm and residual.rejected <= MOST_UNMATCHED
-
-    def guides_reached(self, images: Floats) -> bool:
-        return self.guides is None or guide_rms(self.guides, images) <= self.guide_sd_mm
-
-    def given_kept(self, images: Floats) -> bool:
-        return self.kept is None or self.kept.kept(images)
-
-    @property
-    def last_given_weight(self) -> float:
-        """Where the weight of a given boundary stops rising: what needs a harder pull is given up."""
-        assert self.kept is not None
-        return HARDEST_PULL * float(np.sqrt(self.unit)) / self.kept.slack_mm
-
-    def raise_given(self, state: _State) -> bool:
-        """Raise the weight of a given boundary that is not kept; False when there is nothing to raise."""
-        if self.given_kept(state.images) or state.given_weight > 0.999 * self.last_given_weight:
-            return False
-        state.given_weight *= self.settings.weight_factor
-        return True
-
-    def ending(self, residual: Residual, images: Floats) -> Status:
-        """How a solve that came to rest ended."""
-        if not self.given_kept(images):
-            return Status.GIVEN_BOUNDARY_NOT_KEPT
-        reached = self.boundary_reached(residual) and self.guides_reached(images)
-        return Status.SETTLED if reached else Status.BOUNDARY_NOT_REACHED
-
-    def told_residual_mm(self, residual: Residual, images: Floats) -> float:
-        """The residual for the record: of the given boundary and of what it does not speak of, together."""
-        if self.kept is None:
-            return residual.rms_mm
-        return float(np.hypot(np.sqrt(self.kept.coverage) * self.kept.rms(images), residual.rms_mm))
-
-    def search(self, images: Floats, pulls: Observations, *, at: Value) -> tuple[Floats, Value, float, int]:
-        """One Newton step from a value: new images, value there, share of it taken, linear iterations."""
-        direction, slope, iterations = self.objective.newton_step(tolerance=FORCING, most=LINEAR_ITERATIONS)
-        length = self.objective.largest_step(images, direction)
-        while length > SMALLEST_STEP:
-            trial = images + length * direction
-            value = self.objective.value(trial, pulls)
-            if value.total <= at.total + ARMIJO * length * slope and self.objective.all_positive(trial):
-                return trial, value, length, iterations
-            length *= 0.5
-        return images, at, 0.0, iterations
-
-
-def _step(solver: _Solver, state: _State) -> tuple[float, Residual]:
-    """Match, differentiate, move; returns the relative decrease of the objective and the residual before."""
-    pulls, residual = solver.pulls(state)
-    told_mm = solver.told_residual_mm(residual, state.images)
-    before = solver.objective.differentiate(state.images, pulls)
-    state.images, after, length, iterations = solver.search(state.images, pulls, at=before)
-    state.levels.append(before.total)
-    decrease = (before.total - after.total) / max(before.total, NOTHING)
-    state.history.append(
-        IterationRecord(
-            len(state.history) + 1,
-            state.boundary_weight,
-            after.total,
-            after.distortion,
-            told_mm,
-            length,
-            iterations,
-            solver.objective.smallest_ratio(state.images),
+        return Climber(
+            level.mesh,
+            level.target,
+            self.settings,
+            alignment=alignment,
+            guides=self.guides,
+            voxel_mm=self.voxel_mm,
+            facet_noise_mm=noise,
+            kept=self.kept,
         )
-    )
-    state.idle = state.idle + 1 if length < 1e-3 else 0
-    return decrease, residual
 
 
-def _raise_weights(solver: _Solver, state: _State, residual: Residual) -> bool:
-    """Raise what is not inside its uncertainty yet; False when nothing is left to raise."""
-    last = solver.settings.last_weight * solver.unit
-    factor = solver.settings.weight_factor
-    raised = False
-    if not solver.boundary_reached(residual) and state.boundary_weight < 0.999 * last:
-        state.boundary_weight = min(last, state.boundary_weight * factor)
-        raised = True
-    if not solver.guides_reached(state.images) and state.guide_weight < 99.9 * last:
-        state.guide_weight *= factor
-        raised = True
-    raised = solver.raise_given(state) or raised
-    if raised:
-        state.levels = []
-    return raised
+@dataclass(frozen=True, eq=False)
+class _Reached:
+    """How far a solve from one start has come."""
+
+    alignment: Alignment
+    solver: Climber
+    state: State
+    status: Status
 
 
-def _at_rest(state: _State, decrease: float, settle: float) -> bool:
-    """True when a step gains nothing, or when new matches have eaten up the gain of several steps."""
-    earlier, recent = state.levels[:-PLATEAU], state.levels[-PLATEAU:]
-    if decrease < settle or not earlier:
-        return decrease < settle
-    return min(earlier) - min(recent) < PLATEAU * settle * min(earlier)
+def _first(task: _Task, alignment: Alignment, solver: Climber) -> State:
+    """Before the first step, on the coarsest level."""
+    weight = task.settings.first_weight * solver.unit
+    start = alignment.apply(np.array(task.levels[0].mesh.points))
+    return State(start, weight, weight, [], settles=len(task.levels) == 1, given_weight=weight)
 
 
-def _climb(solver: _Solver, state: _State, progress: Progress, *, most_steps: int) -> Status | None:
-    """Newton steps up the ladder and down to rest; None when steps ran out."""
-    settings = solver.settings
-    on_rung = 0
-    while len(state.history) < most_steps:
-        decrease, residual = _step(solver, state)
-        on_rung += 1
-        note = (
-            f"boundary {state.history[-1].residual_mm:.3f} mm, distortion {state.history[-1].distortion:.4f}"
-        )
-        progress("map", len(state.history), 0, note)
-        if state.idle >= STALLED_STEPS:
-            return Status.STALLED
-        if state.settling:
-            if _at_rest(state, decrease, settings.settle):
-                return solver.ending(residual, state.images)
-        elif on_rung >= settings.steps_a_rung or decrease < 20 * settings.settle:
-            on_rung = 0
-            _, residual = solver.pulls(state)
-            state.settling = not _raise_weights(solver, state, residual)
-    return None
+def _begun(task: _Task, alignment: Alignment, watch: Watch | None = None) -> _Reached:
+    """Climb on the coarsest level."""
+    solver = task.climber(0, alignment)
+    state = _first(task, alignment, solver)
+    status = climb(solver, state, task.progress, watch=watch) or Status.OUT_OF_STEPS
+    return _Reached(alignment, solver, state, status)
 
 
-def _climbing(solver: _Solver) -> Callable[[_State], _State]:
-    """From a state to where a solve with the same weights settles; the state itself stays."""
+def _refined(task: _Task, reached: _Reached) -> _Reached:
+    """Go on from the coarsest level to each finer one; settle on the finest."""
+    for depth in range(1, len(task.levels)):
+        solver = task.climber(depth, reached.alignment)
+        points = np.array(task.levels[depth].mesh.points)
+        wanted = carried(task.levels[depth - 1].mesh, reached.state.images, points)
+        safe = reached.alignment.apply(points)
+        start = valid_start(solver.objective, safe, wanted, unit=solver.unit)
+        settles = depth == len(task.levels) - 1
+        state = replace(reached.state, images=start, settles=settles, levels=[], settling=False, idle=0)
+        status = climb(solver, state, task.progress) or Status.OUT_OF_STEPS
+        reached = _Reached(reached.alignment, solver, state, status)
+    return reached
 
-    def climb(state: _State) -> _State:
-        further = replace(state, history=[], levels=[], settling=False, idle=0)
-        _climb(solver, further, silent, most_steps=STEPS_AGAIN)
-        return further
 
-    return climb
+def _from_every_start(task: _Task, starts: Sequence[Alignment]) -> tuple[Trial[_Reached], ...]:
+    """Solve on the coarsest level from every start in doubt, the best first."""
+
+    def solve(start: Alignment, watch: Watch) -> tuple[_Reached, History, bool]:
+        reached = _begun(task, start, watch)
+        _, residual = reached.solver.pulls(reached.state)
+        inside = reached.solver.boundary_reached(residual)
+        inside = inside and reached.solver.guides_reached(reached.state.images)
+        return reached, reached.state.history, inside
+
+    return tried_out(starts, solve)
 
 
 def map_mesh(
@@ -280,6 +142,7 @@ def map_mesh(
     guides: LandmarkPairs | None = None,
     given: GivenBoundary | None = None,
     other_tolerances: bool = True,
+    coarser: Sequence[Bodies] = (),
     progress: Progress = silent,
 ) -> Solved:
     """Map a mesh onto the label surfaces of another body.
@@ -300,6 +163,9 @@ def map_mesh(
         matched with the target's surface.
     other_tolerances : bool
         With a given boundary, also find out what smaller and larger tolerances would cost.
+    coarser : sequence of Bodies, optional
+        Coarser meshes of the same bodies, next to `mesh` first: the solve starts on the coarsest.  They save
+        time, and are no part of the answer; with a given boundary they are not used.
     progress : Progress
 
     Returns
@@ -330,33 +196,38 @@ def map_mesh(
             expected="every tet positive",
             remedy="mesh the scan again",
         )
+    if guides is not None:
+        refuse_far_guides(mesh, guides, reach_mm=GUIDE_REACH_VOXELS * voxel_mm)
     progress("align", 0, 0)
     kept = KeptBoundary(mesh, given) if given is not None else None
-    if kept is not None:
-        alignment = kept.start()
-        tried: tuple[Alignment, ...] = (alignment,)
-    else:
-        alignment, tried = align(
-            mesh.interfaces, target, start=settings.start, guides=guides, seed=settings.seed
-        )
-    solver = _Solver(
-        mesh,
-        target,
-        settings,
-        alignment=alignment,
-        guides=guides,
-        voxel_mm=voxel_mm,
-        kept=kept,
-    )
-    weight = settings.first_weight * solver.unit
-    begin = _State(alignment.apply(np.array(mesh.points)), weight, weight, [], given_weight=weight)
-    state = replace(begin, history=[], levels=[])
-    status = _climb(solver, state, progress, most_steps=settings.most_steps) or Status.OUT_OF_STEPS
+    levels = (Bodies(mesh, target),) if kept is not None else (*reversed(coarser), Bodies(mesh, target))
+    task = _Task(levels, settings, guides, voxel_mm, progress, kept)
+    alignment, tried = _aligned(task)
+    starts = in_doubt(alignment, tried) if settings.start == "auto" else ()
+    trials = _from_every_start(task, starts) if starts else ()
+    reached = _refined(task, trials[0].result if trials else _begun(task, alignment))
     rows: tuple[GivingWay, ...] = ()
     if kept is not None and other_tolerances:
-        rows = giving_way(mesh, kept, start=begin, found=state, climb=_climbing(solver), progress=progress)
+        again = climbing_again(reached.solver)
+        first = _first(task, alignment, reached.solver)
+        rows = giving_way(mesh, kept, start=first, found=reached.state, climb=again, progress=progress)
     words = ", ".join(f"{a.name} {a.residual_mm:.2f} mm" for a in tried)
-    start = f"{alignment.name}, turned by {alignment.rotation_deg:.0f} degrees (residuals: {words})"
-    notes = (*doubts(alignment, tried), *solver.notes)
-    outcome = Outcome(VolumeMap(mesh, state.images), status, tuple(state.history), start, notes, rows)
-    return Solved(outcome, alignment, tried, solver, state)
+    chosen = reached.alignment
+    start = f"{chosen.name}, turned by {chosen.rotation_deg:.0f} degrees (residuals: {words})"
+    history = tuple(reached.state.history)
+    notes = (*told(trials), *reached.solver.notes)
+    images = VolumeMap(mesh, reached.state.images)
+    outcome = Outcome(images, reached.status, history, start, notes, rows)
+    return Solved(outcome, chosen, tried, reached.solver, reached.state)
+
+
+def _aligned(task: _Task) -> tuple[Alignment, tuple[Alignment, ...]]:
+    """The alignment to start from, and all that were tried: by the given boundary, if there is one."""
+    if task.kept is not None:
+        start = task.kept.start()
+        return start, (start,)
+    coarsest = task.levels[0]
+    surface = coarsest.mesh.interfaces
+    return align(
+        surface, coarsest.target, start=task.settings.start, guides=task.guides, seed=task.settings.seed
+    )

@@ -15,7 +15,7 @@ from volmap.types.findings import Finding, Level
 from volmap.types.progress import Progress, silent
 from volmap.types.volumes import LabelVolume
 
-COARSE_VOLUME_LIMIT_PCT = 3.0  # a start may be a little off; the fine mesh may not
+COARSE_VOLUME_LIMIT_PCT = 50.0  # it is where to start, no more: its surfaces count as that much less certain
 
 
 @dataclass(frozen=True, eq=False)

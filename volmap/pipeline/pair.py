@@ -13,8 +13,8 @@ from volmap import certify as certifying
 from volmap import mesh as meshing
 from volmap import screen as screening
 from volmap.mapfolder import MapFolder
-from volmap.mapping import Coupling, MapSettings, Solved, couple, map_mesh
-from volmap.mesh import MeshResult, MeshSettings
+from volmap.mapping import Bodies, Coupling, MapSettings, Solved, couple, map_mesh
+from volmap.mesh import MeshLevels, MeshResult, MeshSettings
 from volmap.pipeline.at_once import on_both
 from volmap.pipeline.machine import Stopwatch, announce_compiling, peak_mb, use_threads, versions
 from volmap.pipeline.opinion import evidence_of
@@ -137,16 +137,17 @@ def map_pair(
         screened.require_mappable()
         placed = _placed(pairs, source, target, pairs_name)
     with watch.measuring("mesh"):
-        meshes = on_both(
-            lambda volume, told: meshing.mesh(volume, job.mesh, progress=told),
+        levels = on_both(
+            lambda volume, told: meshing.mesh_levels(volume, job.mesh, progress=told),
             (source, target),
             progress,
             n_threads=use_threads(None),
         )
+        meshes = [side.fine for side in levels]
     _require_every_label(meshes, (source, target))
     spoken = _screened_boundary(given, meshes, _voxel_mm(source, target))
     order = _Order.of(source, target)
-    solutions = _solve(meshes, source, target, job, order, pairs, given, watch, progress)
+    solutions = _solve(levels, source, target, job, order, pairs, given, watch, progress)
     folder = _sampled(solutions, meshes, source, target, order, pairs, watch, progress, energy=job.map.energy)
     folder = replace(folder, given=given, giving_way=solutions.main.outcome.giving_way)
     with watch.measuring("certify"):
@@ -221,8 +222,25 @@ def _prefixed(progress: Progress, name: str) -> Progress:
     return told
 
 
+def _coarser(here: MeshLevels, there: MeshLevels) -> tuple[Bodies, ...]:
+    """Coarse meshes of one scan, each with surfaces of the other whose edges are most alike."""
+    surfaces = [there.fine, *there.coarser]
+    return tuple(
+        Bodies(
+            coarse.mesh,
+            min(surfaces, key=lambda s, c=coarse: abs(_log_edge(s) - _log_edge(c))).mesh.interfaces,  # type: ignore[misc]
+        )
+        for coarse in here.coarser
+    )
+
+
+def _log_edge(result: MeshResult) -> float:
+    assert result.settings.edge_mm is not None
+    return float(np.log(result.settings.edge_mm))
+
+
 def _solve(
-    meshes: list[MeshResult],
+    levels: list[MeshLevels],
     source: LabelVolume,
     target: LabelVolume,
     job: MapJob,
@@ -232,32 +250,34 @@ def _solve(
     watch: Stopwatch,
     progress: Progress,
 ) -> _Solutions:
-    first, second = (meshes[1], meshes[0]) if order.flipped else (meshes[0], meshes[1])
+    first, second = (levels[1], levels[0]) if order.flipped else (levels[0], levels[1])
     guides = pairs.of_role("guide") if pairs is not None else None
     forward = guides.reversed() if guides is not None and order.flipped else guides
     boundary = given.reversed() if given is not None and order.flipped else given
     voxel_mm = _voxel_mm(source, target)
     with watch.measuring("map"):
         main = map_mesh(
-            first.mesh,
-            second.mesh.interfaces,
+            first.fine.mesh,
+            second.fine.mesh.interfaces,
             job.map,
             voxel_mm=voxel_mm,
             guides=forward,
             given=boundary,
+            coarser=_coarser(first, second),
             progress=progress,
         )
     if not job.both_orders:
         return _Solutions(main)
     with watch.measuring("map the other way"):
         other = map_mesh(
-            second.mesh,
-            first.mesh.interfaces,
+            second.fine.mesh,
+            first.fine.mesh.interfaces,
             job.map,
             voxel_mm=voxel_mm,
             guides=forward.reversed() if forward is not None else None,
             given=boundary.reversed() if boundary is not None else None,
             other_tolerances=False,
+            coarser=_coarser(second, first),
             progress=_prefixed(progress, "the other way"),
         )
     with watch.measuring("couple"):

@@ -46,6 +46,8 @@ class IterationRecord:
     linear_iterations : int
     smallest_ratio : float
         Smallest J.
+    tets : int
+        Of the mesh the step was taken on.
     """
 
     step: int
@@ -56,6 +58,7 @@ class IterationRecord:
     step_length: float
     linear_iterations: int
     smallest_ratio: float
+    tets: int = 0
 
 
 @dataclass(frozen=True)
