@@ -22,8 +22,8 @@ from volmap.certify.buried_boundary import buried_sheets
 from volmap.kernels.crossings import triangle_crossings
 from volmap.kernels.predicates import orientation_signs
 from volmap.kernels.topology import face_corners, match_faces
-from volmap.mapping import MapSettings, map_mesh
-from volmap.mesh import MeshSettings, mesh
+from volmap.mapping import Bodies, MapSettings, map_mesh
+from volmap.mesh import MeshLevels, MeshSettings, mesh_levels
 from volmap.screen import screen_pair
 from volmap.types import InputError
 
@@ -39,7 +39,8 @@ def solved_row(pair, tets: int) -> dict:
         screen_pair(pair.source, pair.target).require_mappable()
     except InputError as refusal:
         return row | {"status": "REFUSED", "why": str(refusal), "expected": bool(pair.refusal)}
-    results = [mesh(volume, MeshSettings(wanted_tets=tets)) for volume in (pair.source, pair.target)]
+    here, there = (mesh_levels(v, MeshSettings(wanted_tets=tets)) for v in (pair.source, pair.target))
+    results = [here.fine, there.fine]
     meshed = time.process_time()
     settings = MapSettings()
     solved = map_mesh(
@@ -48,6 +49,7 @@ def solved_row(pair, tets: int) -> dict:
         settings,
         voxel_mm=pair.voxel_mm,
         guides=pair.guides,
+        coarser=coarser_bodies(here, there),
     )
     ended = time.process_time()
     outcome = solved.outcome
@@ -67,6 +69,7 @@ def solved_row(pair, tets: int) -> dict:
         "crossings": crossing,
         "buried_parts": buried,
         "J": [float(ratio.min()), *np.percentile(ratio, [0.1, 99.9]), float(ratio.max())],
+        "levels": 1 + len(here.coarser),
         "aligned_mm": solved.alignment.residual_mm,
         "start": outcome.start,
         "notes": list(outcome.notes),
@@ -78,6 +81,15 @@ def solved_row(pair, tets: int) -> dict:
     if pair.truth is not None:
         row["truth_mm"] = _truth_mm(outcome.map, pair.truth)
     return row
+
+
+def coarser_bodies(here: MeshLevels, there: MeshLevels) -> tuple[Bodies, ...]:
+    """Coarser meshes of a pair, level by level; where the target has none as coarse, its coarsest."""
+    targets = [there.fine, *there.coarser]
+    return tuple(
+        Bodies(level.mesh, targets[min(k, len(targets) - 1)].mesh.interfaces)
+        for k, level in enumerate(here.coarser, start=1)
+    )
 
 
 def validity(volume_map) -> tuple[int, int, int]:

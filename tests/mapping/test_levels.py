@@ -6,7 +6,7 @@ from hand_made_bodies import cubes
 
 from volmap.kernels.crossings import triangle_crossings
 from volmap.kernels.predicates import orientation_signs
-from volmap.mapping import Bodies, MapSettings, map_mesh
+from volmap.mapping import Bodies, MapSettings, map_mesh, solve
 from volmap.mapping.contact import Contact
 from volmap.mapping.levels import carried, facet_noise_mm, valid_start
 from volmap.mapping.objective import Objective
@@ -97,7 +97,7 @@ def sphere(halvings):
     return Surface(10.0 * points, triangles, np.tile((1, 0), (len(triangles), 1)))
 
 
-def test_the_answer_does_not_hang_on_the_coarse_start():
+def test_the_answer_does_not_hang_on_the_coarse_start(monkeypatch):
     """The same minimum from a coarse start as from the alignment, in no more steps on the fine mesh."""
     mesh = fine(3)
     bent = np.array(mesh.points)
@@ -107,6 +107,7 @@ def test_the_answer_does_not_hang_on_the_coarse_start():
     small[:, 0] += 0.15 * (small[:, 2] - 2) ** 2
     coarse = Bodies(COARSE, TetMesh(small, COARSE.tets, COARSE.labels).interfaces)
     settings = MapSettings(uncertainty_mm=0.03)
+    monkeypatch.setattr(solve, "FEWEST_TETS", len(COARSE.tets))
     alone = map_mesh(mesh, target, settings).outcome
     through = map_mesh(mesh, target, settings, coarser=(coarse,)).outcome
     assert through.status is alone.status
@@ -114,3 +115,11 @@ def test_the_answer_does_not_hang_on_the_coarse_start():
     assert sum(h.tets == len(mesh.tets) for h in through.history) <= len(alone.history)
     gap = np.linalg.norm(through.map.images - alone.map.images, axis=1)
     assert gap.mean() < 0.03
+
+
+def test_a_mesh_of_few_tets_is_no_start():
+    """Nothing is gained on a mesh whose facets are all one sees: the solve is that of the fine mesh alone."""
+    coarse = Bodies(COARSE, COARSE.interfaces)
+    outcome = map_mesh(COARSE, COARSE.interfaces, coarser=(coarse,)).outcome
+    assert len(COARSE.tets) < solve.FEWEST_TETS
+    assert len(outcome.history) == len(map_mesh(COARSE, COARSE.interfaces).outcome.history)

@@ -2,11 +2,12 @@
 
 import numpy as np
 import pytest
-from hand_made_bodies import rotation
+from hand_made_bodies import cubes, lopsided, rotation
 
-from volmap.mapping.alignment import Alignment
+from volmap.mapping import map_mesh, solve
+from volmap.mapping.alignment import Alignment, align
 from volmap.mapping.starts import in_doubt, told, tried_out
-from volmap.types import IterationRecord
+from volmap.types import IterationRecord, Status
 
 
 def turned(name, degrees, residual_mm, axis=(0, 0, 1)):
@@ -104,3 +105,28 @@ def test_objectives_that_hardly_differ_leave_the_earlier_start_and_a_doubt():
     assert best.result == "CENTRES"
     assert "still in doubt" in told((best, second))[1]
     assert "180 degrees" in told((best, second))[1]
+
+
+def test_the_map_rights_an_alignment_that_lies_the_wrong_way_round(monkeypatch):
+    """Law: a body without symmetry onto itself stays; its alignment is made to prefer it upside down."""
+    body = lopsided()
+    right, _ = align(body.interfaces, body.interfaces)
+    centre = body.points.mean(axis=0)
+    wrong = np.eye(4)
+    wrong[:3, :3] = rotation((1, 0, 0), 180.0)
+    wrong[:3, 3] = centre - wrong[:3, :3] @ centre
+    right, wrong = Alignment("right", right.matrix, 1.2), Alignment("wrong", wrong, 1.0)
+    monkeypatch.setattr(solve, "align", lambda *_, **__: (wrong, (right, wrong)))
+    outcome = map_mesh(body, body.interfaces).outcome
+    assert outcome.status is Status.SETTLED
+    assert outcome.start.startswith("right")
+    assert np.abs(outcome.map.images - body.points).max() < 1e-3
+    assert len(outcome.notes) == 1
+    assert "kept: 'right'" in outcome.notes[0]
+
+
+def test_a_bar_that_fits_either_way_stays_and_says_so():
+    bar = cubes(np.ones((10, 3, 3), int))
+    outcome = map_mesh(bar, bar.interfaces).outcome
+    assert np.abs(outcome.map.images - bar.points).max() < 1e-6
+    assert "still in doubt" in outcome.notes[1]

@@ -33,6 +33,8 @@ from volmap.types import (
     silent,
 )
 
+FEWEST_TETS = 2000  # of a coarser mesh that is used: facets of fewer say little about starts and boundary
+RUNGS_BACK = 2  # down the ladder on a finer mesh, whose facets ask for less weight than the coarse one's
 GUIDE_REACH_VOXELS = 3.0  # guides farther outside the body are refused
 
 
@@ -114,7 +116,16 @@ def _refined(task: _Task, reached: _Reached) -> _Reached:
         safe = reached.alignment.apply(points)
         start = valid_start(solver.objective, safe, wanted, unit=solver.unit)
         settles = depth == len(task.levels) - 1
-        state = replace(reached.state, images=start, settles=settles, levels=[], settling=False, idle=0)
+        lower = reached.state.boundary_weight / task.settings.weight_factor**RUNGS_BACK
+        state = replace(
+            reached.state,
+            images=start,
+            boundary_weight=max(lower, task.settings.first_weight * solver.unit),
+            settles=settles,
+            levels=[],
+            settling=False,
+            idle=0,
+        )
         status = climb(solver, state, task.progress) or Status.OUT_OF_STEPS
         reached = _Reached(reached.alignment, solver, state, status)
     return reached
@@ -200,7 +211,8 @@ def map_mesh(
         refuse_far_guides(mesh, guides, reach_mm=GUIDE_REACH_VOXELS * voxel_mm)
     progress("align", 0, 0)
     kept = KeptBoundary(mesh, given) if given is not None else None
-    levels = (Bodies(mesh, target),) if kept is not None else (*reversed(coarser), Bodies(mesh, target))
+    useful = [bodies for bodies in reversed(coarser) if len(bodies.mesh.tets) >= FEWEST_TETS]
+    levels = (Bodies(mesh, target),) if kept is not None else (*useful, Bodies(mesh, target))
     task = _Task(levels, settings, guides, voxel_mm, progress, kept)
     alignment, tried = _aligned(task)
     starts = in_doubt(alignment, tried) if settings.start == "auto" else ()
@@ -226,8 +238,8 @@ def _aligned(task: _Task) -> tuple[Alignment, tuple[Alignment, ...]]:
     if task.kept is not None:
         start = task.kept.start()
         return start, (start,)
-    coarsest = task.levels[0]
-    surface = coarsest.mesh.interfaces
+    finest = task.levels[-1]  # it costs by samples, not by faces, and facets are noise to it
+    surface = finest.mesh.interfaces
     return align(
-        surface, coarsest.target, start=task.settings.start, guides=task.guides, seed=task.settings.seed
+        surface, finest.target, start=task.settings.start, guides=task.guides, seed=task.settings.seed
     )
