@@ -22,7 +22,7 @@ from volmap.types import IterationRecord, LandmarkPairs, Progress, Status, Surfa
 Floats = NDArray[np.float64]
 Watch = Callable[[Sequence[IterationRecord]], bool]
 
-FORCING = 0.02  # relative residual of the linear solves
+LOOSEST, TIGHTEST = 0.1, 0.002  # relative residual of the linear solves: the forcing rule stays between
 STALLED_STEPS = 3  # steps in a row that hardly move before it counts as stalled
 PLATEAU = 4  # steps over which the objective, freshly matched, must still fall
 NOTHING = 1e-9  # an objective this small has nothing left to fall: stretches of some 1e-5
@@ -47,6 +47,12 @@ class State:
     idle: int = 0
     beside: Observations | None = None  # pulls beside the boundary's and the guides'
     given_weight: float = 0.0
+    gain: float = 1.0  # relative decrease of the objective by the last step
+
+    @property
+    def forcing(self) -> float:
+        """Relative residual of the next linear solve: loose while steps gain much, tight near rest."""
+        return float(np.clip(np.sqrt(max(self.gain, 0.0)), TIGHTEST, LOOSEST))
 
 
 def _weighted(o: Observations, factor: float) -> Observations:
@@ -154,10 +160,10 @@ def step(solver: Climber, state: State) -> tuple[float, Residual]:
     pulls, residual = solver.pulls(state)
     told_mm = solver.told_residual_mm(residual, state.images)
     before = solver.objective.differentiate(state.images, pulls)
-    step = solver.objective.descend(state.images, pulls, at=before, forcing=FORCING)
+    step = solver.objective.descend(state.images, pulls, at=before, forcing=state.forcing)
     state.images = step.images
     state.levels.append(before.total)
-    decrease = (before.total - step.value.total) / max(before.total, NOTHING)
+    state.gain = decrease = (before.total - step.value.total) / max(before.total, NOTHING)
     state.history.append(
         IterationRecord(
             len(state.history) + 1,
