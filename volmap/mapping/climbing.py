@@ -23,6 +23,7 @@ Floats = NDArray[np.float64]
 Watch = Callable[[Sequence[IterationRecord]], bool]
 
 LOOSEST, TIGHTEST = 0.1, 0.002  # relative residual of the linear solves: the forcing rule stays between
+A_RUNG = 1.7  # by which a residual grows at most from a rung to the one below, as measured on phantoms
 STALLED_STEPS = 3  # steps in a row that hardly move before it counts as stalled
 PLATEAU = 4  # steps over which the objective, freshly matched, must still fall
 NOTHING = 1e-9  # an objective this small has nothing left to fall: stretches of some 1e-5
@@ -42,6 +43,7 @@ class State:
     guide_weight: float
     history: list[IterationRecord]
     settles: bool = True  # else the last rung is left as soon as a step gains little
+    lowering: bool = False  # the weight came from a coarser mesh, whose facets may have asked for too much
     levels: list[float] = field(default_factory=list)  # objective, freshly matched, since weights rose
     settling: bool = False
     idle: int = 0
@@ -194,8 +196,18 @@ def _raise_weights(solver: Climber, state: State, residual: Residual) -> bool:
         raised = True
     raised = solver.raise_given(state) or raised
     if raised:
-        state.levels = []
+        state.levels, state.lowering = [], False
     return raised
+
+
+def _lower_weight(solver: Climber, state: State, residual: Residual) -> bool:
+    """Go down a rung where the boundary would be reached there too; False when it would not."""
+    lower = state.boundary_weight / solver.settings.weight_factor
+    inside = replace(residual, rms_mm=A_RUNG * residual.rms_mm)
+    if lower < solver.settings.first_weight * solver.unit or not solver.boundary_reached(inside):
+        return False
+    state.boundary_weight, state.levels, state.settling = lower, [], False
+    return True
 
 
 def _at_rest(state: State, decrease: float, settle: float) -> bool:
@@ -225,6 +237,9 @@ def climb(
         progress("map", len(state.history), 0, note)
         if state.idle >= STALLED_STEPS:
             return Status.STALLED
+        if state.lowering and on_rung > 1 and _lower_weight(solver, state, residual):
+            on_rung = 0
+            continue
         if state.settling:
             if _at_rest(state, decrease, settings.settle):
                 return solver.ending(residual, state.images)

@@ -34,7 +34,6 @@ from volmap.types import (
 )
 
 FEWEST_TETS = 2000  # of a coarser mesh that is used: facets of fewer say little about starts and boundary
-RUNGS_BACK = 2  # down the ladder on a finer mesh, whose facets ask for less weight than the coarse one's
 GUIDE_REACH_VOXELS = 3.0  # guides farther outside the body are refused
 
 
@@ -116,15 +115,15 @@ def _refined(task: _Task, reached: _Reached) -> _Reached:
         safe = reached.alignment.apply(points)
         start = valid_start(solver.objective, safe, wanted, unit=solver.unit)
         settles = depth == len(task.levels) - 1
-        lower = reached.state.boundary_weight / task.settings.weight_factor**RUNGS_BACK
         state = replace(
             reached.state,
             images=start,
-            boundary_weight=max(lower, task.settings.first_weight * solver.unit),
             settles=settles,
             levels=[],
             settling=False,
+            lowering=True,
             idle=0,
+            gain=1.0,
         )
         status = climb(solver, state, task.progress) or Status.OUT_OF_STEPS
         reached = _Reached(reached.alignment, solver, state, status)
