@@ -20,7 +20,8 @@ def sound(small_pair):
 
 
 def written(folder, volume_map, place):
-    write_map_folder(place, replace(folder, map=volume_map, distortion=np.zeros(0), alone=None), report_html="-")
+    folder = replace(folder, map=volume_map, distortion=np.zeros(0), alone=None)
+    write_map_folder(place, folder, report_html="-")
     return place
 
 
