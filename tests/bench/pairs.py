@@ -22,8 +22,9 @@ from volmap.certify.buried_boundary import buried_sheets
 from volmap.kernels.crossings import triangle_crossings
 from volmap.kernels.predicates import orientation_signs
 from volmap.kernels.topology import face_corners, match_faces
-from volmap.mapping import Bodies, MapSettings, map_mesh
-from volmap.mesh import MeshLevels, MeshSettings, mesh_levels
+from volmap.mapping import MapSettings, map_mesh
+from volmap.mesh import MeshSettings, mesh_levels
+from volmap.pipeline.pair import coarser_bodies
 from volmap.screen import screen_pair
 from volmap.types import InputError
 
@@ -81,15 +82,6 @@ def solved_row(pair, tets: int) -> dict:
     if pair.truth is not None:
         row["truth_mm"] = _truth_mm(outcome.map, pair.truth)
     return row
-
-
-def coarser_bodies(here: MeshLevels, there: MeshLevels) -> tuple[Bodies, ...]:
-    """Coarser meshes of a pair, level by level; where the target has none as coarse, its coarsest."""
-    targets = [there.fine, *there.coarser]
-    return tuple(
-        Bodies(level.mesh, targets[min(k, len(targets) - 1)].mesh.interfaces)
-        for k, level in enumerate(here.coarser, start=1)
-    )
 
 
 def validity(volume_map) -> tuple[int, int, int]:

@@ -222,7 +222,7 @@ def _prefixed(progress: Progress, name: str) -> Progress:
     return told
 
 
-def _coarser(here: MeshLevels, there: MeshLevels) -> tuple[Bodies, ...]:
+def coarser_bodies(here: MeshLevels, there: MeshLevels) -> tuple[Bodies, ...]:
     """Coarse meshes of one scan, each with surfaces of the other whose edges are most alike."""
     surfaces = [there.fine, *there.coarser]
     return tuple(
@@ -263,7 +263,7 @@ def _solve(
             voxel_mm=voxel_mm,
             guides=forward,
             given=boundary,
-            coarser=_coarser(first, second),
+            coarser=coarser_bodies(first, second),
             progress=progress,
         )
     if not job.both_orders:
@@ -277,7 +277,7 @@ def _solve(
             guides=forward.reversed() if forward is not None else None,
             given=boundary.reversed() if boundary is not None else None,
             other_tolerances=False,
-            coarser=_coarser(second, first),
+            coarser=coarser_bodies(second, first),
             progress=_prefixed(progress, "the other way"),
         )
     with watch.measuring("couple"):
