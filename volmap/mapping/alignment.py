@@ -24,8 +24,6 @@ Ints = NDArray[np.int64]
 SAMPLES = 1000  # points a label at most, for the last rounds of the starts that are left
 FEW_SAMPLES = 100  # for everything before
 SAME_PLACE = 0.02  # share of the body's size within which two starts have run into each other
-DOUBTFUL = 1.25  # residuals within this factor of the chosen one leave doubt when they are turned otherwise
-OTHERWISE_DEG = 45.0  # between two alignments that are not the same place
 NEARLY_EQUAL = 1.05  # residuals within this factor of the best count as equal
 ROUGH = 0.02  # and so do those that differ by less than this share of a mesh edge
 NO_GAP_MM = 1e-6  # no residual below this tells anything
@@ -266,21 +264,6 @@ def _starts(bodies: _Bodies, guides: LandmarkPairs | None, growth: float) -> lis
             (f"principal axes {k + 1}", homogeneous(growth * turn, mean_t - growth * turn @ mean_s))
         )
     return starts
-
-
-def doubts(chosen: Alignment, tried: tuple[Alignment, ...]) -> tuple[str, ...]:
-    """A sentence when another start fits nearly as well as the chosen one, but turned otherwise."""
-    others = [a for a in tried if a.residual_mm <= DOUBTFUL * chosen.residual_mm + NO_GAP_MM]
-    angles = {a: turned_deg(chosen, a) for a in others}
-    turned = [a for a in others if angles[a] > OTHERWISE_DEG]
-    if not turned:
-        return ()
-    other = min(turned, key=lambda a: a.residual_mm)
-    return (
-        f"How the bodies lie on each other is in doubt: start '{other.name}' fits about as well as "
-        f"'{chosen.name}' ({other.residual_mm:.2f} mm and {chosen.residual_mm:.2f} mm), but turned by "
-        f"{angles[other]:.0f} degrees against it; check with landmarks, or give three guides.",
-    )
 
 
 def align(
