@@ -28,12 +28,12 @@ from scipy.optimize import minimize
 from volmap.kernels.distortion import CHUNK, FLAT, _forces, _gradient_of, _stretches, symmetrised
 from volmap.kernels.observations import Observations
 from volmap.mapping import Solved
-from volmap.mapping.climbing import FORCING
 from volmap.mapping.objective import Objective
 
 Floats = NDArray[np.float64]
 HERE = Path(__file__).parent
 SIZES = (10_000, 30_000, 100_000)
+FORCING = 0.02  # relative residual of our linear solves
 WITHIN = 1.01  # times the converged value
 MOST_S = 600.0
 MEMORIES = (10, 20, 50)  # pairs of vectors L-BFGS-B keeps

@@ -109,14 +109,15 @@ def _begun(task: _Task, alignment: Alignment, watch: Watch | None = None) -> _Re
 def _refined(task: _Task, reached: _Reached) -> _Reached:
     """Go on from the coarsest level to each finer one; settle on the finest."""
     for depth in range(1, len(task.levels)):
-        solver = task.climber(depth, reached.alignment)
+        alignment, state = reached.alignment, reached.state
+        del reached  # the coarse solver's memory is free for the finer one
+        solver = task.climber(depth, alignment)
         points = np.array(task.levels[depth].mesh.points)
-        wanted = carried(task.levels[depth - 1].mesh, reached.state.images, points)
-        safe = reached.alignment.apply(points)
-        start = valid_start(solver.objective, safe, wanted, unit=solver.unit)
+        wanted = carried(task.levels[depth - 1].mesh, state.images, points)
+        start = valid_start(solver.objective, alignment.apply(points), wanted, unit=solver.unit)
         settles = depth == len(task.levels) - 1
         state = replace(
-            reached.state,
+            state,
             images=start,
             settles=settles,
             levels=[],
@@ -126,7 +127,7 @@ def _refined(task: _Task, reached: _Reached) -> _Reached:
             gain=1.0,
         )
         status = climb(solver, state, task.progress) or Status.OUT_OF_STEPS
-        reached = _Reached(reached.alignment, solver, state, status)
+        reached = _Reached(alignment, solver, state, status)
     return reached
 
 
