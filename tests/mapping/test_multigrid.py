@@ -7,7 +7,7 @@ from scipy.sparse.linalg import spsolve
 
 from volmap.kernels.observations import Observations
 from volmap.kernels.ties import Ties, no_ties
-from volmap.mapping.multigrid import Multigrid, conjugate_gradients, lattice_weights
+from volmap.mapping.multigrid import Multigrid, coarse_matrix, conjugate_gradients, lattice_weights
 from volmap.mapping.objective import Objective
 from volmap.types import TetMesh
 
@@ -99,3 +99,20 @@ def test_iterations_hardly_grow_with_the_mesh():
         alone.append(plain)
     assert counts[1] <= 1.34 * counts[0] + 1
     assert alone[1] > 2 * counts[1]
+
+
+def test_a_coarse_matrix_in_strips_is_the_whole_product():
+    """Independent library: NumPy's dense products; law: the strip's size does not enter, to the last bit."""
+    objective = system(cubes(np.ones((14, 9, 7), int)))
+    transfer = objective.multigrid._blockwise[0]
+    dense = transfer.toarray().astype(float)
+    whole = coarse_matrix(objective.matrix, transfer, strip=10**6)
+    expected = dense.T @ objective.matrix.toarray().astype(float) @ dense
+    assert np.abs(whole.toarray() - expected).max() < 1e-5 * np.abs(expected).max()
+    for strip in (7, 20):
+        part = coarse_matrix(objective.matrix, transfer, strip=strip)
+        assert whole.shape[0] > 3 * strip
+        assert all(
+            np.array_equal(getattr(whole, name), getattr(part, name))
+            for name in ("data", "indices", "indptr")
+        )

@@ -28,6 +28,7 @@ SMALLEST_WEIGHT = 1e-3  # of a lattice node in a point; less is left out
 DAMPING = 0.5  # tets, pulls and ties touch 4 points at most, so no eigenvalue of D^-1 A exceeds 4
 POWER_ROUNDS = 10  # to find the largest eigenvalue of a coarse level
 SHIFT = 1e-5  # added to the coarsest diagonal (share of it): nodes beyond the body may make it singular
+STRIP = 4000  # coarse points whose rows are multiplied out at a time
 WORN = 1.5  # times the iterations of a new preconditioner: time for another
 
 
@@ -75,6 +76,41 @@ def _inverted(blocks: Floats) -> Floats:
 def _own_blocks(matrix: sparse.bsr_matrix) -> Floats:
     row = np.repeat(np.arange(len(matrix.indptr) - 1), np.diff(matrix.indptr))
     return np.asarray(matrix.data[row == matrix.indices], np.float64)
+
+
+def _rows(matrix: sparse.bsr_matrix, rows: NDArray[np.int32]) -> sparse.bsr_matrix:
+    """Some block rows of a matrix."""
+    counts = np.diff(matrix.indptr)[rows]
+    start = np.concatenate([[0], np.cumsum(counts)])
+    take = np.repeat(matrix.indptr[rows] - start[:-1], counts) + np.arange(start[-1])
+    parts = (matrix.data[take], matrix.indices[take], start)
+    return sparse.bsr_matrix(parts, shape=(3 * len(rows), matrix.shape[1]))
+
+
+def coarse_matrix(matrix: sparse.bsr_matrix, transfer: sparse.bsr_matrix, *, strip: int) -> sparse.bsr_matrix:
+    """``P^T A P`` of a transfer P, some coarse rows after others, because all of ``A P`` is large.
+
+    Parameters
+    ----------
+    matrix : (3 n, 3 n) sparse of 3x3 blocks
+    transfer : (3 n, 3 k) sparse of 3x3 blocks
+    strip : int
+        Coarse points at a time; the result does not depend on it, to the last bit.
+    """
+    back = transfer.T
+    parts = []
+    for first in range(0, back.shape[0] // 3, strip):
+        start = back.indptr[first : first + strip + 1]
+        inside = slice(start[0], start[-1])
+        rows, place = np.unique(back.indices[inside], return_inverse=True)
+        shape = (3 * (len(start) - 1), 3 * len(rows))
+        here = sparse.bsr_matrix((back.data[inside], place, start - start[0]), shape=shape)
+        parts.append(here @ (_rows(matrix, rows) @ transfer))
+    counts = np.concatenate([np.diff(p.indptr) for p in parts])
+    blocks = np.concatenate([p.data for p in parts])
+    columns = np.concatenate([p.indices for p in parts])
+    start = np.concatenate([[0], np.cumsum(counts)])
+    return sparse.bsr_matrix((blocks, columns, start), shape=(back.shape[0], transfer.shape[1]))
 
 
 @dataclass(frozen=True, eq=False)
@@ -129,7 +165,8 @@ class Multigrid:
                 spacing *= 2.0  # thinner than the lattice: the next one
                 continue
             self.transfers.append(weights)
-            self._blockwise.append(sparse.kron(weights, np.eye(3, dtype=np.float32), "bsr"))
+            blocks = weights.data[:, None, None] * np.eye(3, dtype=np.float32)
+            self._blockwise.append(sparse.bsr_matrix((blocks, weights.indices, weights.indptr)))
             points, spacing = nodes, 2.0 * spacing
         self._restrictions = [t.T.tocsr() for t in self.transfers]
         self._coarse: list[_Level] = []
@@ -143,7 +180,7 @@ class Multigrid:
     def _renew(self, matrix: sparse.bsr_matrix) -> None:
         self._coarse = []
         for transfer in self._blockwise:
-            matrix = (transfer.T @ (matrix @ transfer)).tobsr((3, 3))
+            matrix = coarse_matrix(matrix, transfer, strip=STRIP)
             self._coarse.append(_Level.of(matrix))
         coarsest = sparse.csc_matrix(matrix, dtype=np.float64)
         coarsest.setdiag(coarsest.diagonal() * (1.0 + SHIFT))
