@@ -31,7 +31,7 @@ from volmap.mapping.objective import Objective
 from volmap.mesh import MeshLevels, MeshSettings, levels, mesh_levels
 from volmap.pipeline.at_once import on_both
 from volmap.pipeline.machine import use_threads
-from volmap.pipeline.pair import _coarser, _voxel_mm
+from volmap.pipeline.pair import _voxel_mm, coarser_bodies
 from volmap.types import LabelVolume, silent
 
 HERE = Path(__file__).parent
@@ -129,7 +129,10 @@ def solved(pair: tuple[LabelVolume, LabelVolume], both: list[MeshLevels]) -> Sol
     """The map of the pair, as the program solves it."""
     here, there = both
     return map_mesh(
-        here.fine.mesh, there.fine.mesh.interfaces, voxel_mm=_voxel_mm(*pair), coarser=_coarser(here, there)
+        here.fine.mesh,
+        there.fine.mesh.interfaces,
+        voxel_mm=_voxel_mm(*pair),
+        coarser=coarser_bodies(here, there),
     )
 
 
