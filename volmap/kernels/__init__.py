@@ -2,9 +2,8 @@
 
 Each fast kernel has a plain slow twin in the tests.
 
-Threads come from numba's own work queue unless NUMBA_THREADING_LAYER says otherwise: its idle threads do not
-spin, which on a machine with other work made a whole solve four times faster than OpenMP.  The queue serves
-one calling thread at a time.
+Kernels run on Python's threads (`threads.py`), none on numba's.  numba keeps how many there may be; its own
+threads are those of its work queue unless NUMBA_THREADING_LAYER says otherwise, as idle ones do not spin.
 """
 
 import os

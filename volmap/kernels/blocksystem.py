@@ -11,16 +11,18 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit, prange
 from numpy.typing import NDArray
 
+from volmap.kernels.compiled import kernel
 from volmap.kernels.tets import EDGES
+from volmap.kernels.threads import on_threads
 from volmap.kernels.topology import unique_edges
 
-CHUNK = 512  # edges or points that share one set of work arrays
+FEWEST_ROWS = 4096  # a thread multiplies: waking one takes as long as some thousand rows
 
 Ints = NDArray[np.int32]
 Floats = NDArray[np.float64]
+Singles = NDArray[np.float32]
 
 
 class Pattern(NamedTuple):
@@ -93,49 +95,82 @@ def pattern_of(tets: NDArray[np.int64], n_points: int) -> Pattern:
     )
 
 
-@njit(cache=True, parallel=True)
-def gather(pattern, forces, blocks, gradient, rows):  # type: ignore[no-untyped-def]
-    """Sum the parts of tets: gradient (n, 3) float64 and rows (n + 2 e, 3, 3) float32, both overwritten."""
-    n_edges, n = len(pattern.edges), len(gradient)
-    for chunk in prange((n_edges + CHUNK - 1) // CHUNK):
-        total = np.empty((3, 3))
-        for e in range(chunk * CHUNK, min(n_edges, (chunk + 1) * CHUNK)):
-            total[:] = 0.0
-            for k in range(pattern.edge_start[e], pattern.edge_start[e + 1]):
-                place = pattern.edge_item[k] >> 1
-                t, pair = place // 6, place % 6
+def gather(pattern: Pattern, forces: Floats, blocks: Singles, gradient: Floats, rows: Singles) -> None:
+    """Sum the parts of tets: gradient (n, 3) float64 and rows (n + 2 e, 3, 3) float32, both overwritten.
+
+    Parameters
+    ----------
+    forces : (m, 4, 3) float64
+    blocks : (m, 6, 3, 3) float32
+        As `distortion.derivatives` writes them.
+    """
+    p = pattern
+    on_threads(_gather_edges, len(p.edges), p.edge_start, p.edge_item, p.edge_slot, blocks, rows)
+    on_threads(
+        _gather_points,
+        len(gradient),
+        p.row_start,
+        p.own_slot,
+        p.corner_start,
+        p.corner_item,
+        forces,
+        gradient,
+        rows,
+    )
+
+
+@kernel
+def _gather_edges(first, last, edge_start, edge_item, edge_slot, blocks, rows):  # type: ignore[no-untyped-def]
+    total = np.empty((3, 3))
+    for e in range(first, last):
+        for i in range(3):
+            for j in range(3):
+                total[i, j] = 0.0
+        for k in range(edge_start[e], edge_start[e + 1]):
+            place = edge_item[k] >> 1
+            t, pair = place // 6, place % 6
+            for i in range(3):
+                for j in range(3):
+                    if edge_item[k] & 1:
+                        total[i, j] += blocks[t, pair, j, i]
+                    else:
+                        total[i, j] += blocks[t, pair, i, j]
+        for i in range(3):
+            for j in range(3):
+                rows[edge_slot[e, 0], i, j] = total[i, j]
+                rows[edge_slot[e, 1], j, i] = total[i, j]
+
+
+@kernel
+def _gather_points(first, last, row_start, own_slot, corner_start, corner_item, forces, gradient, rows):  # type: ignore[no-untyped-def]
+    """A point's own block is minus the other blocks of its row: a shift of all points costs nothing."""
+    total = np.empty((3, 3))
+    for p in range(first, last):
+        for i in range(3):
+            gradient[p, i] = 0.0
+            for j in range(3):
+                total[i, j] = 0.0
+        for k in range(row_start[p], row_start[p + 1]):
+            if k != own_slot[p]:
                 for i in range(3):
                     for j in range(3):
-                        if pattern.edge_item[k] & 1:
-                            total[i, j] += blocks[t, pair, j, i]
-                        else:
-                            total[i, j] += blocks[t, pair, i, j]
+                        total[i, j] -= rows[k, i, j]
+        for i in range(3):
+            for j in range(3):
+                rows[own_slot[p], i, j] = total[i, j]
+        for k in range(corner_start[p], corner_start[p + 1]):
             for i in range(3):
-                for j in range(3):
-                    rows[pattern.edge_slot[e, 0], i, j] = total[i, j]
-                    rows[pattern.edge_slot[e, 1], j, i] = total[i, j]
-    for chunk in prange((n + CHUNK - 1) // CHUNK):
-        total = np.empty((3, 3))
-        for p in range(chunk * CHUNK, min(n, (chunk + 1) * CHUNK)):
-            total[:] = 0.0  # minus the other blocks of the row: a shift of all points costs nothing
-            for k in range(pattern.row_start[p], pattern.row_start[p + 1]):
-                if k != pattern.own_slot[p]:
-                    for i in range(3):
-                        for j in range(3):
-                            total[i, j] -= rows[k, i, j]
-            for i in range(3):
-                gradient[p, i] = 0.0
-                for j in range(3):
-                    rows[pattern.own_slot[p], i, j] = total[i, j]
-            for k in range(pattern.corner_start[p], pattern.corner_start[p + 1]):
-                for i in range(3):
-                    gradient[p, i] += forces[pattern.corner_item[k] >> 2, pattern.corner_item[k] & 3, i]
+                gradient[p, i] += forces[corner_item[k] >> 2, corner_item[k] & 3, i]
 
 
-@njit(cache=True, parallel=True)
-def multiply(row_start, row_column, rows, x, out):  # type: ignore[no-untyped-def]
+def multiply(row_start: Ints, row_column: Ints, rows: Singles, x: Floats, out: Floats) -> None:
     """out = A x, both (n, 3); for any matrix of 3x3 blocks stored row by row."""
-    for p in prange(len(row_start) - 1):
+    on_threads(_multiply, len(row_start) - 1, row_start, row_column, rows, x, out, fewest=FEWEST_ROWS)
+
+
+@kernel
+def _multiply(first, last, row_start, row_column, rows, x, out):  # type: ignore[no-untyped-def]
+    for p in range(first, last):
         a, b, c = 0.0, 0.0, 0.0
         for k in range(row_start[p], row_start[p + 1]):
             q = row_column[k]

@@ -12,12 +12,15 @@ from __future__ import annotations
 from math import sqrt
 
 import numpy as np
-from numba import njit, prange
+from numpy.typing import NDArray
 
-from volmap.kernels.compiled import inner_kernel
+from volmap.kernels.compiled import inner_kernel, kernel
 from volmap.kernels.energies import density
+from volmap.kernels.threads import on_threads
 
-CHUNK = 256  # tets that share one set of work arrays
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
 SWEEPS = 30  # Jacobi sweeps at most; four are enough for any F met so far
 ROUNDING = 1e-30  # squared cosine of columns that are left alone
 LAST_SWEEP = 1e-16  # a sweep that met no larger squared cosine was the last: it leaves the square of that
@@ -133,41 +136,6 @@ def _stretches(f, v, s):  # type: ignore[no-untyped-def]
         s[k] = sqrt(f[0, k] ** 2 + f[1, k] ** 2 + f[2, k] ** 2)
 
 
-@njit(cache=True, parallel=True)
-def energies(code, points, tets, shape_gradients, out):  # type: ignore[no-untyped-def]
-    """W_S of every tet into out (m,), infinity where a tet is not positive; returns the smallest det F.
-
-    Parameters
-    ----------
-    code : int
-        See `energies.ENERGIES`.
-    points : (n, 3) float64
-        Image points, mm.
-    tets : (m, 4) int64
-    shape_gradients : (m, 4, 3) float64
-        Of the source mesh, 1/mm.
-    """
-    smallest = np.empty((len(tets) + CHUNK - 1) // CHUNK)
-    for chunk in prange(len(smallest)):
-        f, v, s = np.empty((3, 3)), np.empty((3, 3)), np.empty(3)
-        g, h, w = np.empty(3), np.empty((3, 3)), np.empty(3)
-        g2, h2 = np.empty(3), np.empty((3, 3))
-        least = np.inf
-        for t in range(chunk * CHUNK, min(len(tets), (chunk + 1) * CHUNK)):
-            determinant = _gradient_of(points, tets, shape_gradients, t, f)
-            least = min(least, determinant)
-            if determinant <= FLAT:
-                out[t] = np.inf
-            else:
-                _stretches(f, v, s)
-                out[t] = symmetrised(code, s, g, h, w, g2, h2)
-        smallest[chunk] = least
-    least = np.inf
-    for chunk in range(len(smallest)):
-        least = min(least, smallest[chunk])
-    return least
-
-
 @inner_kernel
 def _forces(weight, shape_gradient, u, v, g, turned, force):  # type: ignore[no-untyped-def]
     """First derivative in the corners into force (4, 3); shape gradients in the frame of v into turned."""
@@ -220,12 +188,41 @@ def _block(weight, h, p, q, u, ga, gb, k, r, block):  # type: ignore[no-untyped-
             block[i, j] = weight * (r[i, 0] * u[j, 0] + r[i, 1] * u[j, 1] + r[i, 2] * u[j, 2])
 
 
-@njit(cache=True, parallel=True)
-def derivatives(code, points, tets, shape_gradients, weights, clamp, out, forces, blocks):  # type: ignore[no-untyped-def]
+def energies(code: int, points: Floats, tets: Ints, shape_gradients: Floats, out: Floats) -> float:
+    """W_S of every tet into out (m,), infinity where a tet is not positive; returns the smallest det F.
+
+    Parameters
+    ----------
+    code : int
+        See `energies.ENERGIES`.
+    points : (n, 3) float64
+        Image points, mm.
+    tets : (m, 4) int64
+    shape_gradients : (m, 4, 3) float64
+        Of the source mesh, 1/mm.
+    """
+    ratios, forces, blocks = np.empty(len(tets)), np.empty((0, 4, 3)), np.empty((0, 6, 3, 3), np.float32)
+    on_threads(_distort, len(tets), code, points, tets, shape_gradients, ratios, False, out, forces, blocks)
+    return float(ratios.min(initial=np.inf))
+
+
+def derivatives(
+    code: int,
+    points: Floats,
+    tets: Ints,
+    shape_gradients: Floats,
+    weights: Floats,
+    clamp: bool,
+    out: Floats,
+    forces: Floats,
+    blocks: NDArray[np.float32],
+) -> None:
     """Values and weighted derivatives of W_S, tet by tet.
 
     Parameters
     ----------
+    code, points, tets, shape_gradients
+        As for `energies`.
     weights : (m,) float64
         Factor of each tet in the objective (v_t / V).
     clamp : bool
@@ -238,31 +235,48 @@ def derivatives(code, points, tets, shape_gradients, weights, clamp, out, forces
         Weighted second derivative for the corner pairs of `tets.EDGES`.  ``K_ba = K_ab^T`` and
         the rows of K sum to zero, so six blocks are the whole matrix.
     """
-    for chunk in prange((len(tets) + CHUNK - 1) // CHUNK):
-        f, v, s = np.empty((3, 3)), np.empty((3, 3)), np.empty(3)
-        g, h, w = np.empty(3), np.empty((3, 3)), np.empty(3)
-        g2, h2, u = np.empty(3), np.empty((3, 3)), np.empty((3, 3))
-        p, q, turned = np.zeros((3, 3)), np.zeros((3, 3)), np.empty((4, 3))
-        for t in range(chunk * CHUNK, min(len(tets), (chunk + 1) * CHUNK)):
-            if _gradient_of(points, tets, shape_gradients, t, f) <= FLAT:
-                out[t] = np.inf
-                for a in range(4):
-                    for i in range(3):
-                        forces[t, a, i] = 0.0
-                for e in range(6):
-                    for i in range(3):
-                        for j in range(3):
-                            blocks[t, e, i, j] = 0.0
-                continue
-            _stretches(f, v, s)
-            for k in range(3):
-                for i in range(3):
-                    u[i, k] = f[i, k] / s[k]
-            out[t] = symmetrised(code, s, g, h, w, g2, h2)
-            _forces(weights[t], shape_gradients[t], u, v, g, turned, forces[t])
-            _parts(s, g, h, p, q, clamp, f, h2)
-            e = 0
-            for a in range(3):
-                for b in range(a + 1, 4):
-                    _block(weights[t], h, p, q, u, turned[a], turned[b], f, h2, blocks[t, e])
-                    e += 1
+    on_threads(_distort, len(tets), code, points, tets, shape_gradients, weights, clamp, out, forces, blocks)
+
+
+@kernel
+def _distort(first, last, code, points, tets, shape_gradients, weights, clamp, out, forces, blocks):  # type: ignore[no-untyped-def]
+    """Both of the above, so that the densities are compiled once; without `blocks`, det F into `weights`."""
+    f, v, s = np.empty((3, 3)), np.empty((3, 3)), np.empty(3)
+    g, h, w = np.empty(3), np.empty((3, 3)), np.empty(3)
+    g2, h2, u = np.empty(3), np.empty((3, 3)), np.empty((3, 3))
+    p, q, turned = np.empty((3, 3)), np.empty((3, 3)), np.empty((4, 3))
+    values_only = len(blocks) == 0
+    for t in range(first, last):
+        determinant = _gradient_of(points, tets, shape_gradients, t, f)
+        if values_only:
+            weights[t] = determinant
+        if determinant <= FLAT:
+            out[t] = np.inf
+            if not values_only:
+                _no_derivatives(forces[t], blocks[t])
+            continue
+        _stretches(f, v, s)
+        for k in range(3):
+            for i in range(3):
+                u[i, k] = f[i, k] / s[k]
+        out[t] = symmetrised(code, s, g, h, w, g2, h2)
+        if values_only:
+            continue
+        _forces(weights[t], shape_gradients[t], u, v, g, turned, forces[t])
+        _parts(s, g, h, p, q, clamp, f, h2)
+        e = 0
+        for a in range(3):
+            for b in range(a + 1, 4):
+                _block(weights[t], h, p, q, u, turned[a], turned[b], f, h2, blocks[t, e])
+                e += 1
+
+
+@inner_kernel
+def _no_derivatives(force, block):  # type: ignore[no-untyped-def]
+    for a in range(4):
+        for i in range(3):
+            force[a, i] = 0.0
+    for e in range(6):
+        for i in range(3):
+            for j in range(3):
+                block[e, i, j] = 0.0

@@ -11,7 +11,7 @@ from typing import Any
 import numba
 
 
-def on_threads(kernel: Callable[..., Any], count: int, *arguments: Any) -> None:
+def on_threads(kernel: Callable[..., Any], count: int, *arguments: Any, fewest: int = 1) -> None:
     """Call ``kernel(first, last, *arguments)`` on shares of ``range(count)``, one a thread.
 
     Parameters
@@ -20,8 +20,10 @@ def on_threads(kernel: Callable[..., Any], count: int, *arguments: Any) -> None:
         Writes to places of its own for every item, so that the shares do not enter the result.
     count : int
         Number of items.
+    fewest : int
+        Of which a thread gets at least so many, where they cost less than waking it.
     """
-    threads = max(1, min(int(numba.get_num_threads()), count))
+    threads = max(1, min(int(numba.get_num_threads()), count // fewest))
     bounds = [count * share // threads for share in range(threads + 1)]
     others = [_pool().submit(kernel, first, last, *arguments) for first, last in pairwise(bounds[1:])]
     kernel(0, bounds[1], *arguments)
