@@ -25,7 +25,7 @@ from numpy.typing import NDArray
 from scipy import sparse
 from scipy.optimize import minimize
 
-from volmap.kernels.distortion import CHUNK, FLAT, _forces, _gradient_of, _stretches, symmetrised
+from volmap.kernels.distortion import FLAT, _forces, _gradient_of, _stretches, symmetrised
 from volmap.kernels.observations import Observations
 from volmap.mapping import Solved
 from volmap.mapping.objective import Objective
@@ -40,6 +40,9 @@ MEMORIES = (10, 20, 50)  # pairs of vectors L-BFGS-B keeps
 MEMORY = 20
 HUGE = 1e3  # times the value at the start, where a tet is not positive
 CONVERGED = 1e-9  # relative decrease of the last step of ours
+
+
+CHUNK = 256  # tets that share one set of work arrays
 
 
 @njit(parallel=True)
