@@ -46,6 +46,16 @@ def joined(parts: list[Observations]) -> Observations:
     return Observations(*(np.concatenate(columns) for columns in zip(*parts, strict=True)))
 
 
+def towards(anchors: NDArray[np.float64], strengths: NDArray[np.float64]) -> Observations:
+    """Pulls of every point of a mesh to an anchor of its own, (n, 3) mm, in all directions alike."""
+    n = len(anchors)
+    corners, weights = np.zeros((n, 4), np.int64), np.zeros((n, 4))
+    corners[:, 0], weights[:, 0] = np.arange(n), 1.0
+    normals = np.zeros((n, 3))
+    normals[:, 0] = 1.0  # of no account: the whole strength acts across as well
+    return Observations(corners, weights, np.full((n, 6), -1), anchors, normals, strengths, np.ones(n))
+
+
 @inner_kernel
 def _residual(o, k, points, r):  # type: ignore[no-untyped-def]
     """Residual vector of observation k into r; returns its part along the normal."""

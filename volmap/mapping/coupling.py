@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from volmap.kernels import closest
 from volmap.kernels.locate import build_buckets, interpolate, locate
-from volmap.kernels.observations import Observations
+from volmap.kernels.observations import towards
 from volmap.kernels.topology import face_corners, match_faces
 from volmap.mapping.climbing import step
 from volmap.mapping.matching import Residual
@@ -116,7 +116,7 @@ class _Side:
     def draw(self, middle: Floats, rung: float) -> float:
         """Newton steps towards a middle (n, 3) mm; the relative gain of the first one."""
         self.state.boundary_weight = rung * self.solver.unit
-        self.state.beside = _towards(middle, DRAW * self.solver.unit * self.shares)
+        self.state.beside = towards(middle, DRAW * self.solver.unit * self.shares)
         gains = []
         for _ in range(STEPS_A_SWEEP):
             gain, _ = step(self.solver, self.state)
@@ -146,16 +146,6 @@ class _Side:
         there = VolumeMap(solved.outcome.map.mesh, self.images)
         outcome = replace(solved.outcome, map=there, status=status, history=history)
         return replace(solved, outcome=outcome, state=self.state)
-
-
-def _towards(anchors: Floats, strengths: Floats) -> Observations:
-    """Plain distances of every point of a mesh from an anchor."""
-    n = len(anchors)
-    corners, weights = np.zeros((n, 4), np.int64), np.zeros((n, 4))
-    corners[:, 0], weights[:, 0] = np.arange(n), 1.0
-    normals = np.zeros((n, 3))
-    normals[:, 0] = 1.0  # of no account: the whole strength acts across as well
-    return Observations(corners, weights, np.full((n, 6), -1), anchors, normals, strengths, np.ones(n))
 
 
 def _parted(sides: tuple[_Side, _Side]) -> tuple[Floats, Floats]:

@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels import closest
-from volmap.kernels.observations import Observations
+from volmap.kernels.observations import towards
 from volmap.mapping.holding import holding_tets
 from volmap.mapping.objective import Objective
 from volmap.mapping.patches import areas
@@ -58,14 +58,8 @@ def valid_start(objective: Objective, safe: Floats, wanted: Floats, *, unit: flo
     """
     if objective.is_valid(wanted):
         return wanted
-    n = len(wanted)
-    corners, weights = np.zeros((n, 4), np.int64), np.zeros((n, 4))
-    corners[:, 0], weights[:, 0] = np.arange(n), 1.0
-    normals = np.zeros((n, 3))
-    normals[:, 0] = 1.0
-    share = np.bincount(objective.tets.ravel(), np.repeat(objective.weights / 4.0, 4), n)
-    strengths = np.asarray(PULL * unit * share, np.float64)
-    pulls = Observations(corners, weights, np.full((n, 6), -1), wanted, normals, strengths, np.ones(n))
+    share = np.bincount(objective.tets.ravel(), np.repeat(objective.weights / 4.0, 4), len(wanted))
+    pulls = towards(wanted, np.asarray(PULL * unit * share, np.float64))
     if objective.contact is not None:
         objective.contact.weight = unit
     images = safe
