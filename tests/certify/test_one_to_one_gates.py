@@ -5,7 +5,8 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from box_of_two_labels import box
-from valid_maps import exact_volume, random_valid_map, with_one_tet_inverted
+from exact_volumes import exact_volume
+from valid_maps import random_valid_map, with_one_tet_inverted
 
 from volmap.certify.boundary_crossings import boundary_crossings
 from volmap.certify.inverted_tets import inverted_tets

@@ -18,6 +18,7 @@ from itertools import product
 
 import numpy as np
 from box_of_two_labels import box
+from exact_volumes import exact_volume
 
 from volmap.types import TetMesh, VolumeMap
 
@@ -69,17 +70,6 @@ def _bend(rng, x, size, _cells):
     angle = x[:, 0] / size[0] * rng.uniform(0.2, 6.1)
     radius = size[1] * rng.uniform(1.1, 3.0) - x[:, 1]
     return np.stack([radius * np.sin(angle), -radius * np.cos(angle), x[:, 2]], axis=1)
-
-
-def exact_volume(corners):
-    """Six times the signed volume of a tet, as a rational number."""
-    p = [[Fraction(float(c)) for c in q] for q in corners]
-    a, b, c = ([q[k] - p[0][k] for k in range(3)] for q in p[1:])
-    return (
-        a[0] * (b[1] * c[2] - b[2] * c[1])
-        + a[1] * (b[2] * c[0] - b[0] * c[2])
-        + a[2] * (b[0] * c[1] - b[1] * c[0])
-    )
 
 
 def with_one_tet_inverted(volume_map, ratio=-1e-14):

@@ -5,6 +5,7 @@ from fractions import Fraction
 
 import numpy as np
 import pytest
+from exact_volumes import exact_volume
 from volmap_cli.main import main
 
 from volmap import pipeline
@@ -25,31 +26,20 @@ def written(folder, volume_map, place):
     return place
 
 
-def volume(corners):
-    """Six times the volume of a tet, as a rational number."""
-    p = [[Fraction(float(c)) for c in q] for q in corners]
-    a, b, c = ([q[k] - p[0][k] for k in range(3)] for q in p[1:])
-    return (
-        a[0] * (b[1] * c[2] - b[2] * c[1])
-        + a[1] * (b[2] * c[0] - b[0] * c[2])
-        + a[2] * (b[0] * c[1] - b[1] * c[0])
-    )
-
-
 def with_one_tet_inverted(volume_map):
     """Images with one tet at about -1e-14 of its volume and all others positive, by rational numbers."""
     tets, images = volume_map.mesh.tets, np.array(volume_map.images)
     for tet in range(len(tets)):
         point, face = tets[tet, 0], tets[tet, 1:]
         star = [t for t in np.flatnonzero((tets == point).any(axis=1)) if t != tet]
-        was, before = volume(images[tets[tet]]), images[point].copy()
+        was, before = exact_volume(images[tets[tet]]), images[point].copy()
         centre = images[face].mean(axis=0)
         for bits in range(-40, 40):
             images[point] = centre
             images[point, bits % 3] += bits * np.spacing(centre[bits % 3])
-            if not 2 * RATIO < volume(images[tets[tet]]) / was < RATIO / 2:
+            if not 2 * RATIO < exact_volume(images[tets[tet]]) / was < RATIO / 2:
                 continue
-            if all(volume(images[tets[t]]) > 0 for t in star):
+            if all(exact_volume(images[tets[t]]) > 0 for t in star):
                 return images, tet
         images[point] = before
     raise AssertionError("no tet of this map can be inverted alone")
@@ -81,7 +71,7 @@ def test_a_boundary_that_crosses_itself_by_a_millionth_of_a_micrometre(sound, tm
     tip = triangle.mean(axis=0) - into_mm * normal
     beside = np.stack([across, np.cross(normal, across)]) * 0.01
     extra = np.stack([tip, *(tip + 0.5 * normal + beside), tip + 0.5 * normal - beside.sum(axis=0)])
-    assert volume(extra) > 0
+    assert exact_volume(extra) > 0
     n = len(mesh.points)
     far = extra - tip + mesh.points.max(axis=0) + 10.0
     more = TetMesh(

@@ -15,7 +15,7 @@ from volmap.certify.statistics import summary
 from volmap.certify.surface_faults import SurfaceFaults, surface_faults
 from volmap.certify.table import Limit
 from volmap.kernels.closest import build_tree, closest
-from volmap.kernels.surface_map import Spoken, read_off
+from volmap.kernels.surface_map import Spoken
 from volmap.types.certificate import Gate
 from volmap.types.given_boundary import GivenBoundary
 from volmap.types.volume_map import VolumeMap
@@ -37,7 +37,7 @@ def given_boundary(evidence: Evidence, limit: Limit) -> Gate:
         return not_assessed(limit, "no boundary was given", voxel_mm=voxel_mm)
     turned = evidence.solved_on == "target"
     here = evidence.map.reversed() if turned else evidence.map
-    spoken = _spoken(here, given.reversed() if turned else given)
+    spoken = (given.reversed() if turned else given).spoken_of(here.mesh.interfaces)
     if not len(spoken.rows):
         return not_assessed(limit, "the given boundary speaks of no part of the body's", voxel_mm=voxel_mm)
     deviation = np.linalg.norm(here.images[spoken.rows] - spoken.anchors, axis=1)
@@ -64,19 +64,6 @@ def given_boundary(evidence: Evidence, limit: Limit) -> Gate:
         sentence=_sentence(value, faults, deviation, given),
         voxel_mm=voxel_mm,
         where=where,
-    )
-
-
-def _spoken(here: VolumeMap, given: GivenBoundary) -> Spoken:
-    surface = here.mesh.interfaces
-    return read_off(
-        surface.points,
-        surface.triangles,
-        surface.sides[:, 1] == 0,
-        given.points,
-        given.triangles,
-        given.images,
-        reach_mm=given.reach_mm,
     )
 
 

@@ -162,24 +162,24 @@ def step(solver: Climber, state: State) -> tuple[float, Residual]:
     pulls, residual = solver.pulls(state)
     told_mm = solver.told_residual_mm(residual, state.images)
     before = solver.objective.differentiate(state.images, pulls)
-    step = solver.objective.descend(state.images, pulls, at=before, forcing=state.forcing)
-    state.images = step.images
+    taken = solver.objective.descend(state.images, pulls, at=before, forcing=state.forcing)
+    state.images = taken.images
     state.levels.append(before.total)
-    state.gain = decrease = (before.total - step.value.total) / max(before.total, NOTHING)
+    state.gain = decrease = (before.total - taken.value.total) / max(before.total, NOTHING)
     state.history.append(
         IterationRecord(
             len(state.history) + 1,
             state.boundary_weight,
-            step.value.total,
-            step.value.distortion,
+            taken.value.total,
+            taken.value.distortion,
             told_mm,
-            step.length,
-            step.iterations,
-            step.value.smallest_ratio,
+            taken.length,
+            taken.iterations,
+            taken.value.smallest_ratio,
             len(solver.objective.tets),
         )
     )
-    state.idle = state.idle + 1 if step.length < 1e-3 else 0
+    state.idle = state.idle + 1 if taken.length < 1e-3 else 0
     return decrease, residual
 
 

@@ -14,7 +14,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.observations import Observations
-from volmap.kernels.surface_map import read_off
 from volmap.mapping.alignment import Alignment
 from volmap.mapping.fits import fit_affine, fit_rigid
 from volmap.mapping.matching import Residual
@@ -45,15 +44,7 @@ class KeptBoundary:
 
     def __init__(self, mesh: TetMesh, given: GivenBoundary) -> None:
         surface = mesh.interfaces
-        spoken = read_off(
-            surface.points,
-            surface.triangles,
-            surface.sides[:, 1] == 0,
-            given.points,
-            given.triangles,
-            given.images,
-            reach_mm=given.reach_mm,
-        )
+        spoken = given.spoken_of(surface)
         if not len(spoken.rows):
             raise InputError(
                 "speaks of no part of the body's boundary",

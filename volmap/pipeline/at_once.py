@@ -26,8 +26,8 @@ def on_both(
     Parameters
     ----------
     work : callable
-        Given a volume and a progress callback.  It must be kernels of one thread only: numba's work queue
-        serves one caller at a time.
+        Given a volume and a progress callback.  It may use kernels on `threads.on_threads`, but none with
+        parallel loops of numba's own, whose threads serve one caller at a time.
     volumes : (source, target)
     progress : Progress
         Called by one thread at a time, with the stage and the side.

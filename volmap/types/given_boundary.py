@@ -7,8 +7,10 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from volmap.kernels.surface_map import Spoken, read_off
 from volmap.types.errors import InputError
 from volmap.types.frozen import Frozen, require_finite
+from volmap.types.surface import Surface
 
 
 @dataclass(frozen=True, eq=False)
@@ -54,6 +56,18 @@ class GivenBoundary(Frozen):
                 where=self.name,
                 found=f"{self.tolerance_mm} and {self.reach_mm}",
             )
+
+    def spoken_of(self, surface: Surface) -> Spoken:
+        """What it says of the points of a body's label surfaces, SOURCE's."""
+        return read_off(
+            surface.points,
+            surface.triangles,
+            surface.sides[:, 1] == 0,
+            self.points,
+            self.triangles,
+            self.images,
+            reach_mm=self.reach_mm,
+        )
 
     def reversed(self) -> GivenBoundary:
         """The same correspondence asked for the other way round."""
