@@ -215,7 +215,8 @@ def read_map_folder(path: Path) -> MapFolder:
     certificate = read_certificate(path)
     mesh, points, cells, told = read_mesh(_file(path, MAP))
     names = {side: str(getattr(certificate, side).get("name", side)) for side in ("source", "target")}
-    volume_map = VolumeMap(mesh, _images(points, MAP), names["source"], names["target"])
+    digests = tuple(str(getattr(certificate, side).get("sha256", "")) for side in ("source", "target"))
+    volume_map = VolumeMap(mesh, _images(points, MAP), names["source"], names["target"], *digests)
     _require_cells(cells, volume_map)
     source, target = (_labels(path, side, certificate) for side in ("source", "target"))
     other, other_alone = _other(path, names)

@@ -11,7 +11,7 @@ from volmap.kernels.barycentric import barycentric_rows
 from volmap.kernels.closest import build_tree, closest
 from volmap.kernels.locate import build_buckets, interpolate, locate
 from volmap.kernels.topology import face_corners, match_faces
-from volmap.types import VolumeMap
+from volmap.types import MapChain, VolumeMap
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -26,7 +26,8 @@ class MovedPoints:
     points : (n, 3) float64, mm, RAS+
         NaN where a point was not carried.
     outside_mm : (n,) float64
-        0 inside the mesh, else the distance to its surface.
+        0 inside the mesh, else the distance to its surface.  Through a chain of maps: the largest of those a
+        point met on its way, for the bodies of two maps of one scan are nearly but not quite the same.
     """
 
     points: Floats
@@ -43,7 +44,7 @@ class MovedPoints:
         return self.carried & (self.outside_mm > 0)
 
 
-def move_points(volume_map: VolumeMap, points: Floats, *, reach_mm: float = 0.0) -> MovedPoints:
+def move_points(volume_map: VolumeMap | MapChain, points: Floats, *, reach_mm: float = 0.0) -> MovedPoints:
     """Carry points from SOURCE's world into TARGET's.
 
     Inside the mesh a point goes where its barycentric coordinates say: exact, no grid between.  Outside, and
@@ -52,14 +53,26 @@ def move_points(volume_map: VolumeMap, points: Floats, *, reach_mm: float = 0.0)
 
     Parameters
     ----------
-    volume_map : VolumeMap
+    volume_map : VolumeMap or MapChain
+        Through a chain, points go from scan to scan, through each map in turn.
         ``map.reversed()`` carries from TARGET into SOURCE.
     points : (n, 3) float64, mm, RAS+
     reach_mm : float
+        In each scan on the way.
     """
+    here = np.array(points, np.float64).reshape(-1, 3)
+    outside_mm = np.zeros(len(here))
+    for step in volume_map.maps:
+        on_way = np.flatnonzero(~np.isnan(here[:, 0]))
+        moved = _move_through_one(step, here[on_way], reach_mm)
+        here[on_way] = moved.points
+        outside_mm[on_way] = np.maximum(outside_mm[on_way], moved.outside_mm)
+    return MovedPoints(here, outside_mm)
+
+
+def _move_through_one(volume_map: VolumeMap, points: Floats, reach_mm: float) -> MovedPoints:
     mesh = volume_map.mesh
     vertices, tets = np.array(mesh.points), np.array(mesh.tets)
-    points = np.array(points, np.float64).reshape(-1, 3)
     tet, weights = locate(build_buckets(vertices, tets), vertices, tets, points)
     outside_mm = np.zeros(len(points))
     outside = np.flatnonzero(tet < 0)

@@ -11,6 +11,7 @@ from volmap.types.given_boundary import GivenBoundary, GivingWay
 from volmap.types.grid import Grid
 from volmap.types.gridfield import GridField
 from volmap.types.landmarks import LandmarkPairs, Landmarks
+from volmap.types.map_chain import MapChain
 from volmap.types.outcome import IterationRecord, Outcome, Status
 from volmap.types.progress import Progress, silent
 from volmap.types.surface import Surface
@@ -33,6 +34,7 @@ __all__ = [
     "LandmarkPairs",
     "Landmarks",
     "Level",
+    "MapChain",
     "Outcome",
     "Progress",
     "Status",

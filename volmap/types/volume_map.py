@@ -25,12 +25,17 @@ class VolumeMap(Frozen):
         Where each point of the mesh goes, in TARGET's world.
     source, target : str
         Short names of the two scans.
+    source_sha256, target_sha256 : str
+        Digests of the scans (`LabelVolume.sha256`), which tell them apart when names do not; empty when not
+        known.
     """
 
     mesh: TetMesh
     images: NDArray[np.float64]
     source: str = "source"
     target: str = "target"
+    source_sha256: str = ""
+    target_sha256: str = ""
 
     def __post_init__(self) -> None:
         images = self._own("images", np.float64, (len(self.mesh.points), 3))
@@ -68,6 +73,18 @@ class VolumeMap(Frozen):
         """(m, 3) principal stretches (singular values of F), descending."""
         return np.asarray(np.linalg.svd(self.gradients, compute_uv=False))
 
+    @property
+    def maps(self) -> tuple[VolumeMap, ...]:
+        """The maps a thing goes through, in order: this one (as in `MapChain`)."""
+        return (self,)
+
     def reversed(self) -> VolumeMap:
         """The exact inverse: the image mesh, sent back to the mesh."""
-        return VolumeMap(self.image_mesh, self.mesh.points, self.target, self.source)
+        return VolumeMap(
+            self.image_mesh,
+            self.mesh.points,
+            self.target,
+            self.source,
+            self.target_sha256,
+            self.source_sha256,
+        )
