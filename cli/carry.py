@@ -6,6 +6,7 @@ import argparse
 from pathlib import Path
 
 from .console import Console
+from .reading import reading_arguments, reading_of
 
 HELP = "carry points, labels, images or meshes through a map"
 EXAMPLE = "volmap carry beads.csv --through map_0_1 --out beads_in_visit1.csv"
@@ -24,6 +25,7 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         default="either",
         help="what a volume holds: labels (nearest voxel) or an image (trilinear); default: by its values",
     )
+    reading_arguments(parser)
     parser.add_argument("--overwrite", action="store_true", help="replace a file that stands there")
 
 
@@ -37,6 +39,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
         options.out,
         reverse=options.reverse,
         kind=options.kind,
+        reading=reading_of(options),
         progress=console.progress,
         overwrite=options.overwrite,
     )

@@ -6,6 +6,7 @@ import argparse
 from pathlib import Path
 
 from .console import Console
+from .reading import reading_arguments, reading_of
 from .usage import UsageError, positive_mm, whole_number
 
 HELP = "certified volumetric map between two label volumes"
@@ -44,6 +45,7 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         metavar="MM",
         help="declared uncertainty of the segmentations (default: a tenth of a voxel)",
     )
+    reading_arguments(parser, pair=True)
     parser.add_argument("--source-image", type=Path, metavar="NII", help="intensities to show in the report")
     parser.add_argument("--target-image", type=Path, metavar="NII", help="intensities to show in the report")
     parser.add_argument("--gates", type=Path, metavar="TOML", help="a gate table of your own")
@@ -99,6 +101,8 @@ def run(options: argparse.Namespace, console: Console) -> int:
         options.target,
         options.out,
         job,
+        source_reading=reading_of(options, "source_frame"),
+        target_reading=reading_of(options, "target_frame"),
         guides=options.guides,
         boundary=options.boundary,
         boundary_tolerance_mm=options.boundary_tolerance,

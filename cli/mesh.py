@@ -6,6 +6,7 @@ import argparse
 from pathlib import Path
 
 from .console import Console
+from .reading import reading_arguments, reading_of
 from .usage import positive_mm
 
 HELP = "multi-label tetrahedral mesh"
@@ -19,6 +20,7 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--edge", type=positive_mm, metavar="MM", help="edge length (default: about 40,000 tets)"
     )
+    reading_arguments(parser)
     parser.add_argument("--overwrite", action="store_true", help="replace a mesh that stands there")
 
 
@@ -30,6 +32,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
         options.file,
         options.out,
         pipeline.MeshSettings(edge_mm=options.edge),
+        reading=reading_of(options),
         overwrite=options.overwrite,
         progress=console.progress,
     )

@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from .console import Console
+from .reading import reading_arguments, reading_of
 from .usage import UsageError, positive_mm
 
 if TYPE_CHECKING:
@@ -19,6 +20,7 @@ EXAMPLE = "volmap screen visit0_labels.nii.gz visit1_labels.nii.gz"
 def arguments(parser: argparse.ArgumentParser) -> None:
     """Options of this verb."""
     parser.add_argument("files", nargs="+", type=Path, metavar="FILE", help="label volumes (NIfTI)")
+    reading_arguments(parser)
     parser.add_argument("--edge", type=positive_mm, metavar="MM", help="mesh edge the volumes are meant for")
     parser.add_argument(
         "--mend",
@@ -35,7 +37,9 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
     if options.mend is not None:
         return _mend(options, console)
-    screened = pipeline.screen_files(options.files, edge_mm=options.edge, progress=console.progress)
+    screened = pipeline.screen_files(
+        options.files, reading_of(options), edge_mm=options.edge, progress=console.progress
+    )
     for result in screened.results:
         _show(result, console)
     document: dict[str, Any] = {"files": [r.as_dict() for r in screened.results]}
@@ -84,7 +88,9 @@ def _mend(options: argparse.Namespace, console: Console) -> int:
 
     if len(options.files) != 1:
         raise UsageError(f"--mend takes one FILE at a time, not {len(options.files)}")
-    mended = pipeline.mend_file(options.files[0], options.mend, overwrite=options.overwrite)
+    mended = pipeline.mend_file(
+        options.files[0], options.mend, reading_of(options), overwrite=options.overwrite
+    )
     for change in mended.changes:
         console.say(change.sentence)
     many = "1 change" if len(mended.changes) == 1 else f"{len(mended.changes)} changes"

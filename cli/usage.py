@@ -28,6 +28,23 @@ def positive_mm(text: str) -> float:
     return value
 
 
+def share(text: str) -> float:
+    """A number above 0 and at most 1, for argparse.
+
+    Raises
+    ------
+    argparse.ArgumentTypeError
+        No number, or outside that range.
+    """
+    try:
+        value = float(text)
+    except ValueError:
+        value = math.nan
+    if not 0.0 < value <= 1.0:
+        raise argparse.ArgumentTypeError(f"{text!r} is not a number above 0 and at most 1")
+    return value
+
+
 def whole_number(least: int) -> Callable[[str], int]:
     """A reader of whole numbers from `least` up, for argparse."""
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -26,6 +26,7 @@ from volmap.types import (
     ImageVolume,
     InputError,
     IterationRecord,
+    LabelCodes,
     LabelVolume,
     LandmarkPairs,
     Status,
@@ -326,8 +327,10 @@ def _labels(path: Path, side: str, certificate: Certificate) -> LabelVolume:
             remedy="map the pair again",
             refused=True,
         )
-    names = {int(k): str(v.get("name", "")) for k, v in dict(told.get("labels", {})).items()}
-    return LabelVolume(stored.grid, stored.labels, names, str(told.get("name", side)))
+    labels = {int(k): v for k, v in dict(told.get("labels", {})).items()}
+    names = {k: str(v.get("name", "")) for k, v in labels.items()}
+    codes = {k: LabelCodes.of(v["codes"]) for k, v in labels.items() if "codes" in v}
+    return replace(stored, names=names, name=str(told.get("name", side)), codes=codes)
 
 
 def _other(path: Path, names: Mapping[str, str]) -> tuple[VolumeMap | None, NDArray[Any] | None]:

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from volmap.carry import carry, move_points
+from volmap.carry import CarrySettings, carry, move_points
 from volmap.types import Grid, ImageVolume, InputError, LabelVolume, Landmarks, TetMesh, VolumeMap
 
 
@@ -62,7 +62,7 @@ def test_points_outside_are_continued_or_left_out_and_named(known):
     volume_map = known.mapped(known.box(3, 0, 9), lambda x: x @ A.T + 3)
     points = np.array([[4, 4, 4], [9.5, 4, 4], [9.3, 9.4, 5], [13, 4, 4], [-2, -2, -1.0]])
     marks = Landmarks(("in", "near", "edge", "far", "corner"), points, ("guide", "check") * 2 + ("guide",))
-    carried = carry(marks, volume_map, reach_mm=0.75)
+    carried = carry(marks, volume_map, settings=CarrySettings(reach_mm=0.75))
     assert carried.thing.names == ("in", "near", "edge")
     assert carried.thing.roles == ("guide", "check", "guide")
     np.testing.assert_allclose(carried.thing.points, points[:3] @ A.T + 3, atol=1e-12)
@@ -189,10 +189,10 @@ def test_meshes_and_surfaces_go_point_by_point(known, sheared):
 
 def test_a_mesh_partly_outside_is_continued_or_refused(known, sheared):
     slightly = known.box(2, -0.75, 0.6)
-    carried = carry(slightly, sheared, reach_mm=0.2)
+    carried = carry(slightly, sheared, settings=CarrySettings(reach_mm=0.2))
     assert [f.code for f in carried.findings] == ["outside-carried"]
     with pytest.raises(InputError, match="outside the body") as caught:
-        carry(slightly, sheared, reach_mm=0.01)
+        carry(slightly, sheared, settings=CarrySettings(reach_mm=0.01))
     assert caught.value.refused
 
 

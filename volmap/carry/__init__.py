@@ -3,11 +3,13 @@
 from volmap.carry.fields import backward_field, carried_solid, forward_field, volume_ratio_image
 from volmap.carry.points import MovedPoints, move_points
 from volmap.carry.sampling import FieldError, RoundTrip, field_error, round_trip, sample_field
+from volmap.carry.settings import CarrySettings
 from volmap.carry.sidecar import field_sidecar
 from volmap.carry.things import Carried, carry
 
 __all__ = [
     "Carried",
+    "CarrySettings",
     "FieldError",
     "MovedPoints",
     "RoundTrip",

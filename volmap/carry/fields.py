@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.rasterise import tets_on_grid, values_on_grid
-from volmap.types import Grid, GridField, ImageVolume, LabelVolume, TetMesh, VolumeMap
+from volmap.types import Grid, GridField, ImageVolume, LabelCodes, LabelVolume, TetMesh, VolumeMap
 
 
 def forward_field(volume_map: VolumeMap, grid: Grid) -> GridField:
@@ -57,7 +57,11 @@ def tets_at_centres(mesh: TetMesh, grid: Grid) -> NDArray[np.int32]:
 
 
 def carried_solid(
-    volume_map: VolumeMap, grid: Grid, *, names: Mapping[int, str] | None = None
+    volume_map: VolumeMap,
+    grid: Grid,
+    *,
+    names: Mapping[int, str] | None = None,
+    codes: Mapping[int, LabelCodes] | None = None,
 ) -> LabelVolume:
     """SOURCE's labelled solid on TARGET's grid: the label of the tet at each voxel centre.
 
@@ -68,6 +72,8 @@ def carried_solid(
         Of TARGET.
     names : mapping of int to str, optional
         Names of the labels.
+    codes : mapping of int to LabelCodes, optional
+        What the labels are in codes.
 
     Returns
     -------
@@ -77,7 +83,7 @@ def carried_solid(
     owner = tets_at_centres(volume_map.image_mesh, grid)
     labels = np.append(volume_map.mesh.labels, 0).astype(np.uint16)[owner]  # owner -1 takes the last
     labels.setflags(write=False)
-    return LabelVolume(grid, labels, dict(names or {}), "carried_labels")
+    return LabelVolume(grid, labels, names or {}, "carried_labels", codes or {})
 
 
 def volume_ratio_image(volume_map: VolumeMap, grid: Grid) -> ImageVolume:

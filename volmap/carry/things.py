@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.carry.points import MovedPoints, move_points
+from volmap.carry.settings import AS_USUAL, CarrySettings
 from volmap.carry.volumes import pull_image, pull_labels
 from volmap.types import (
     Finding,
@@ -23,8 +24,6 @@ from volmap.types import (
     TetMesh,
     VolumeMap,
 )
-
-REACH_MM = 1.0
 
 
 @dataclass(frozen=True)
@@ -49,7 +48,7 @@ def carry(
     *,
     reverse: bool = False,
     onto: Grid | None = None,
-    reach_mm: float = REACH_MM,
+    settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     """Carry a thing from SOURCE to TARGET, or back.
 
@@ -66,10 +65,7 @@ def carry(
     onto : Grid
         Where a volume goes: a grid of TARGET (of SOURCE with `reverse`).  Needed by volumes, not used
         by the rest.
-    reach_mm : float
-        Points up to this far outside the body are carried with the nearest tet's affine map, and named in a
-        finding; a voxel of the scan (`Grid.voxel_mm`) is a good choice.  Points farther out: landmarks are
-        left out and named; a mesh or surface is refused.
+    settings : CarrySettings
 
     Returns
     -------
@@ -95,9 +91,9 @@ def _carry_landmarks(
     *,
     reverse: bool = False,
     onto: Grid | None = None,
-    reach_mm: float = REACH_MM,
+    settings: CarrySettings = AS_USUAL,
 ) -> Carried:
-    moved = move_points(_directed(volume_map, reverse), thing.points, reach_mm=reach_mm)
+    moved = move_points(_directed(volume_map, reverse), thing.points, reach_mm=settings.reach_mm)
     kept = np.flatnonzero(moved.carried)
     landmarks = Landmarks(
         tuple(thing.names[i] for i in kept), moved.points[kept], tuple(thing.roles[i] for i in kept)
@@ -112,7 +108,7 @@ def _carry_labels(
     *,
     reverse: bool = False,
     onto: Grid | None = None,
-    reach_mm: float = REACH_MM,
+    settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     return Carried(*pull_labels(thing, _directed(volume_map, reverse), _required(onto, thing.name)))
 
@@ -124,7 +120,7 @@ def _carry_image(
     *,
     reverse: bool = False,
     onto: Grid | None = None,
-    reach_mm: float = REACH_MM,
+    settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     return Carried(*pull_image(thing, _directed(volume_map, reverse), _required(onto, thing.name)))
 
@@ -136,9 +132,9 @@ def _carry_mesh(
     *,
     reverse: bool = False,
     onto: Grid | None = None,
-    reach_mm: float = REACH_MM,
+    settings: CarrySettings = AS_USUAL,
 ) -> Carried:
-    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "mesh", reach_mm)
+    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "mesh", settings.reach_mm)
     mesh = thing.moved(points)
     turned = int(((mesh.volumes <= 0) & (thing.volumes > 0)).sum())
     if turned:
@@ -157,9 +153,9 @@ def _carry_surface(
     *,
     reverse: bool = False,
     onto: Grid | None = None,
-    reach_mm: float = REACH_MM,
+    settings: CarrySettings = AS_USUAL,
 ) -> Carried:
-    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "surface", reach_mm)
+    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "surface", settings.reach_mm)
     return Carried(Surface(points, thing.triangles, thing.sides), findings)
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -46,7 +47,7 @@ def pull_labels(
     labels = np.zeros(onto.shape, np.uint16)
     for slab, index in _preimages(volume.grid, volume_map, onto):
         labels[slab] = nearest_labels(volume.labels, index)
-    carried = LabelVolume(onto, labels, volume.names, volume.name)
+    carried = replace(volume, grid=onto, labels=labels)
     return carried, findings + _losses(volume, carried, volume_map.mesh)
 
 

@@ -9,7 +9,7 @@ from __future__ import annotations
 import gzip
 import os
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,6 +18,7 @@ from volmap.io.atomic import whole_file
 from volmap.io.label_names import read_label_names, sibling_names
 from volmap.io.nifti_header import DISPVECT, NiftiHeader, opened, read_header, read_voxels
 from volmap.io.opening import shown_name
+from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding
 from volmap.types.grid import Grid
@@ -29,7 +30,6 @@ PathLike = str | os.PathLike[str]
 _SCANNER = 1  # NIFTI_XFORM_SCANNER_ANAT
 _PACKING = 4  # gzip level
 _MOST_LABELS = 256
-VolumeKind = Literal["labels", "image", "either"]
 
 
 def read_labels(path: PathLike, *, names: PathLike | None = None) -> LabelVolume:
@@ -46,11 +46,11 @@ def read_labels(path: PathLike, *, names: PathLike | None = None) -> LabelVolume
     InputError
         Not readable as NIfTI, or not a segmentation.
     """
-    return read_labels_with_findings(path, names=names)[0]
+    return read_labels_with_findings(path, Reading(None if names is None else Path(names)))[0]
 
 
 def read_labels_with_findings(
-    path: PathLike, *, names: PathLike | None = None
+    path: PathLike, reading: Reading = AS_IT_IS
 ) -> tuple[LabelVolume, tuple[Finding, ...]]:
     """A segmentation, and what is odd about its header (orientations that differ, no unit).
 
@@ -60,10 +60,15 @@ def read_labels_with_findings(
         As `read_labels`.
     """
     header, stored = _read(path)
-    labels = whole_labels(_scaled(_one_frame(header, stored), header), header.name)
-    table = sibling_names(path) if names is None else read_label_names(names)
-    grid = Grid(labels.shape, header.affine)
-    return LabelVolume(grid, labels, table, header.name), header.findings
+    labels = whole_labels(_scaled(_one_frame(header, stored, reading.frame), header), header.name)
+    return _label_volume(path, header, labels, reading), header.findings
+
+
+def _label_volume(
+    path: PathLike, header: NiftiHeader, labels: NDArray[np.uint16], reading: Reading
+) -> LabelVolume:
+    table = sibling_names(path) if reading.names is None else read_label_names(reading.names)
+    return LabelVolume(Grid(labels.shape, header.affine), labels, table, header.name)
 
 
 def read_image(path: PathLike, *, unit: str = "") -> ImageVolume:
@@ -77,7 +82,9 @@ def read_image(path: PathLike, *, unit: str = "") -> ImageVolume:
     return read_image_with_findings(path, unit=unit)[0]
 
 
-def read_image_with_findings(path: PathLike, *, unit: str = "") -> tuple[ImageVolume, tuple[Finding, ...]]:
+def read_image_with_findings(
+    path: PathLike, reading: Reading = AS_IT_IS, *, unit: str = ""
+) -> tuple[ImageVolume, tuple[Finding, ...]]:
     """An intensity image, and what is odd about its header.
 
     Raises
@@ -86,18 +93,19 @@ def read_image_with_findings(path: PathLike, *, unit: str = "") -> tuple[ImageVo
         As `read_image`.
     """
     header, stored = _read(path)
-    values = _as_float32(_scaled(_one_frame(header, stored), header))
+    values = _as_float32(_scaled(_one_frame(header, stored, reading.frame), header))
     return ImageVolume(Grid(values.shape, header.affine), values, unit, header.name), header.findings
 
 
 def read_volume_with_findings(
-    path: PathLike, *, kind: VolumeKind = "either"
+    path: PathLike, reading: Reading = AS_IT_IS, *, kind: VolumeKind = "either"
 ) -> tuple[LabelVolume | ImageVolume, tuple[Finding, ...]]:
     """A volume of either kind, read once.
 
     Parameters
     ----------
     path : path
+    reading : Reading
     kind : 'labels', 'image' or 'either'
         'either' takes whole numbers from 0 to 65535, at most 256 different ones, for labels.
 
@@ -107,12 +115,11 @@ def read_volume_with_findings(
         As `read_labels` and `read_image`.
     """
     header, stored = _read(path)
-    values = _scaled(_one_frame(header, stored), header)
-    grid = Grid(values.shape, header.affine)
+    values = _scaled(_one_frame(header, stored, reading.frame), header)
     if kind == "labels" or (kind == "either" and _could_be_labels(values)):
-        labels = whole_labels(values, header.name)
-        return LabelVolume(grid, labels, sibling_names(path), header.name), header.findings
-    return ImageVolume(grid, _as_float32(values), "", header.name), header.findings
+        return _label_volume(path, header, whole_labels(values, header.name), reading), header.findings
+    image = ImageVolume(Grid(values.shape, header.affine), _as_float32(values), "", header.name)
+    return image, header.findings
 
 
 def _could_be_labels(values: NDArray[Any]) -> bool:
@@ -231,17 +238,29 @@ def _read(path: PathLike) -> tuple[NiftiHeader, NDArray[Any]]:
         return header, read_voxels(header, stream, stream.tell())
 
 
-def _one_frame(header: NiftiHeader, stored: NDArray[Any]) -> NDArray[Any]:
-    if max(header.shape[3:], default=1) > 1:
+def _one_frame(header: NiftiHeader, stored: NDArray[Any], frame: int | None) -> NDArray[Any]:
+    """The one volume of a file, or the one that was asked for; frames count in the order they are stored."""
+    frames = stored.reshape((*header.shape[:3], -1), order="F")
+    n_frames = frames.shape[3]
+    if frame is None and n_frames > 1:
         raise InputError(
             "the file holds more than one volume",
             where=header.name,
             found=" x ".join(map(str, header.shape)),
             expected="three dimensions",
-            remedy="write the one frame that is wanted into a file of its own",
+            remedy="say which frame is wanted (--frame N, counted from 0)",
             refused=True,
         )
-    return stored.reshape(header.shape[:3], order="F")
+    if frame is not None and not 0 <= frame < n_frames:
+        raise InputError(
+            "has no such frame",
+            where=header.name,
+            found=f"{n_frames} frame{'s' if n_frames > 1 else ''}",
+            expected=f"frame {frame}",
+            remedy="frames count from 0",
+            refused=True,
+        )
+    return frames[..., frame or 0]
 
 
 def _scaled(stored: NDArray[Any], header: NiftiHeader) -> NDArray[Any]:

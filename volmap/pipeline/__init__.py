@@ -2,9 +2,9 @@
 
 from volmap.mapping import MapSettings
 from volmap.mesh import MeshSettings
+from volmap.pipeline.carrying import carry_file
 from volmap.pipeline.files import (
     Screened,
-    carry_file,
     map_files,
     mend_file,
     mesh_file,

@@ -4,42 +4,33 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 
-from volmap import carry as carrying
 from volmap import mesh as meshing
 from volmap import screen as screening
 from volmap.io.atomic import require_place, whole_file
 from volmap.io.given_boundary import read_given_boundary
-from volmap.io.landmarks import read_landmarks, read_pairs, write_landmarks
-from volmap.io.nifti import (
-    VolumeKind,
-    read_image,
-    read_labels_with_findings,
-    read_volume_with_findings,
-    write_image,
-    write_labels,
-)
+from volmap.io.landmarks import read_pairs
+from volmap.io.nifti import write_labels
+from volmap.io.reading import AS_IT_IS, Reading
 from volmap.io.surfaces import FORMATS, read_closed_surface
-from volmap.io.vtk_xml import read_mesh, write_mesh
+from volmap.io.volumes import read_image, read_labels_with_findings
+from volmap.io.vtk_xml import write_mesh
 from volmap.mapfolder import CERTIFICATE, REPORT, MapFolder, read_certificate, read_map_folder
 from volmap.mesh import MeshResult, MeshSettings
 from volmap.pipeline.machine import announce_compiling
 from volmap.pipeline.pair import MapJob, map_pair
+from volmap.pipeline.places import NIFTI, require_name
 from volmap.pipeline.reporting import report_of, write_map
 from volmap.screen import Mended, PairResult, ScreenResult
 from volmap.types import (
-    Finding,
     GivenBoundary,
     ImageVolume,
     InputError,
     LabelVolume,
-    Landmarks,
     Level,
     Progress,
-    TetMesh,
     silent,
 )
 
@@ -72,7 +63,13 @@ class Screened:
         return tuple(f.line.removeprefix("refuse: ") for f in found if f.level is Level.REFUSE)
 
 
-def screen_files(paths: list[Path], *, edge_mm: float | None = None, progress: Progress = silent) -> Screened:
+def screen_files(
+    paths: list[Path],
+    reading: Reading = AS_IT_IS,
+    *,
+    edge_mm: float | None = None,
+    progress: Progress = silent,
+) -> Screened:
     """Look at label volumes; two are compared as a pair as well.
 
     Raises
@@ -83,7 +80,7 @@ def screen_files(paths: list[Path], *, edge_mm: float | None = None, progress: P
     loaded = []
     for step, path in enumerate(paths):
         progress("read", step, len(paths), path.name)
-        loaded.append(read_labels_with_findings(path))
+        loaded.append(read_labels_with_findings(path, reading))
     volumes = [labels for labels, _ in loaded]
     if len(volumes) == 2:
         volumes = list(_told_apart(*volumes))
@@ -96,7 +93,7 @@ def screen_files(paths: list[Path], *, edge_mm: float | None = None, progress: P
     return Screened(tuple(results), pair)
 
 
-def mend_file(path: Path, out: Path, *, overwrite: bool = False) -> Mended:
+def mend_file(path: Path, out: Path, reading: Reading = AS_IT_IS, *, overwrite: bool = False) -> Mended:
     """Fill cavities, drop specks, pad; write a new file beside the old one and list every change.
 
     Raises
@@ -104,16 +101,22 @@ def mend_file(path: Path, out: Path, *, overwrite: bool = False) -> Mended:
     InputError
         A file that cannot be read, or a place that is taken.
     """
-    _require_name(out, _NIFTI)
+    require_name(out, NIFTI)
     require_place(out, overwrite=overwrite, folder=False)
-    labels, _ = read_labels_with_findings(path)
+    labels, _ = read_labels_with_findings(path, reading)
     mended = screening.mend(labels)
     write_labels(out, mended.labels, overwrite=overwrite)
     return mended
 
 
 def mesh_file(
-    path: Path, out: Path, settings: MeshSettings, *, overwrite: bool = False, progress: Progress = silent
+    path: Path,
+    out: Path,
+    settings: MeshSettings,
+    *,
+    reading: Reading = AS_IT_IS,
+    overwrite: bool = False,
+    progress: Progress = silent,
 ) -> MeshResult:
     """Mesh a label volume, or a closed surface (STL, PLY and the like).
 
@@ -122,14 +125,14 @@ def mesh_file(
     InputError
         A file that cannot be read, a volume the screen refuses, a surface that is not closed.
     """
-    _require_name(out, (".vtu",))
+    require_name(out, (".vtu",))
     require_place(out, overwrite=overwrite, folder=False)
     announce_compiling(progress)
     if path.suffix.lower() in FORMATS:
         points, triangles = read_closed_surface(path)
         result = meshing.mesh_surface(points, triangles, settings, name=path.name)
     else:
-        labels, _ = read_labels_with_findings(path)
+        labels, _ = read_labels_with_findings(path, reading)
         screening.screen(labels, edge_mm=settings.edge_mm).require_mappable()
         result = meshing.mesh(labels, settings, progress=progress)
     write_mesh(out, result.mesh, field_data={"source": path.name}, overwrite=overwrite)
@@ -142,6 +145,8 @@ def map_files(
     out: Path,
     job: MapJob,
     *,
+    source_reading: Reading = AS_IT_IS,
+    target_reading: Reading = AS_IT_IS,
     guides: Path | None = None,
     boundary: Path | None = None,
     boundary_tolerance_mm: float | None = None,
@@ -162,8 +167,8 @@ def map_files(
     """
     require_place(out, overwrite=overwrite, folder=True, holding=CERTIFICATE)
     progress("read", 0, 0, f"{source.name} and {target.name}")
-    a, findings_a = read_labels_with_findings(source)
-    b, findings_b = read_labels_with_findings(target)
+    a, findings_a = read_labels_with_findings(source, source_reading)
+    b, findings_b = read_labels_with_findings(target, target_reading)
     a, b = _told_apart(a, b)
     pairs = read_pairs(guides) if guides is not None else None
     given = _given_boundary(boundary, boundary_tolerance_mm, a, b)
@@ -224,27 +229,13 @@ def _picture(path: Path | None, labels: LabelVolume) -> ImageVolume | None:
     return image
 
 
-_NIFTI = (".nii", ".nii.gz")
-
-
-def _require_name(out: Path, endings: tuple[str, ...]) -> None:
-    """Refuse a name for another kind of file before the work, not after it."""
-    if not out.name.lower().endswith(endings):
-        raise InputError(
-            "is no name for what comes out",
-            where=out.name,
-            expected=f"a name that ends in {' or '.join(endings)}",
-            remedy="change the ending of the name",
-        )
-
-
 def _told_apart(source: LabelVolume, target: LabelVolume) -> tuple[LabelVolume, LabelVolume]:
     """Two files of one name in different folders get different names."""
     if source.name != target.name:
         return source, target
     return (
-        LabelVolume(source.grid, source.labels, source.names, f"{source.name} (source)"),
-        LabelVolume(target.grid, target.labels, target.names, f"{target.name} (target)"),
+        replace(source, name=f"{source.name} (source)"),
+        replace(target, name=f"{target.name} (target)"),
     )
 
 
@@ -271,110 +262,3 @@ def report_folder(
     with whole_file(path / REPORT, overwrite=True) as place:
         place.write_text(html, encoding="utf-8")
     return path / REPORT
-
-
-def carry_file(
-    thing: Path,
-    through: Path,
-    out: Path,
-    *,
-    reverse: bool = False,
-    kind: VolumeKind = "either",
-    overwrite: bool = False,
-    progress: Progress = silent,
-) -> tuple[Finding, ...]:
-    """Carry landmarks (csv), a label volume, an image (nii) or a mesh (vtu) through a map folder.
-
-    Parameters
-    ----------
-    thing, through, out : Path
-    reverse : bool
-        From TARGET to SOURCE.
-    kind : 'labels', 'image' or 'either'
-        What a volume holds; 'either' decides by its values.
-    overwrite : bool
-    progress : Progress
-
-    Raises
-    ------
-    InputError
-        A file that cannot be read or does not lie on the body, or a place that is taken.
-    """
-    _require_name(out, _endings(thing))
-    require_place(out, overwrite=overwrite, folder=False)
-    progress("read", 0, 2, thing.name)
-    loaded, findings = _loaded(thing, kind)
-    progress("read", 1, 2, through.absolute().name)
-    folder = read_map_folder(through)
-    progress("carry", 0, 0, thing.name)
-    start, end = (folder.target, folder.source) if reverse else (folder.source, folder.target)
-    carried = carrying.carry(loaded, folder.map, reverse=reverse, onto=end.grid, reach_mm=start.grid.voxel_mm)
-    _write_thing(out, carried.thing, overwrite)
-    return (*findings, *turned_round(loaded, start, end), *carried.findings)
-
-
-def turned_round(thing: Any, start: LabelVolume, end: LabelVolume) -> tuple[Finding, ...]:
-    """A volume on the very grid it is to be carried onto most likely goes the other way.
-
-    Parameters
-    ----------
-    thing : noun
-        What is carried; only volumes have a grid to tell by.
-    start, end : LabelVolume
-        The scan it is carried from, and the one it is carried onto.
-    """
-    if not isinstance(thing, LabelVolume | ImageVolume) or start.grid.same_place(end.grid):
-        return ()
-    if not thing.grid.same_place(end.grid):
-        return ()
-    sentence = f"has the voxels of {end.name}, but was carried as if it belonged to {start.name}"
-    remedy = "check the direction: --reverse carries from TARGET to SOURCE"
-    return (Finding(Level.WARN, "turned-round", thing.name, sentence, remedy),)
-
-
-def _endings(thing: Path) -> tuple[str, ...]:
-    """Endings of files of the same kind as `thing`."""
-    for endings in ((".csv",), (".vtu",), _NIFTI):
-        if thing.name.lower().endswith(endings):
-            return endings
-    raise InputError(
-        "this kind of file cannot be carried",
-        where=thing.name,
-        expected=".csv, .nii, .nii.gz or .vtu",
-        remedy="points go into a csv with name,x_mm,y_mm,z_mm; volumes into NIfTI",
-    )
-
-
-def _loaded(path: Path, kind: VolumeKind) -> tuple[Any, tuple[Finding, ...]]:
-    ending = _endings(path)[0]
-    if ending == ".csv":
-        return read_landmarks(path), ()
-    if ending == ".vtu":
-        return read_mesh(path)[0], ()
-    volume, findings = read_volume_with_findings(path, kind=kind)
-    if kind != "either":
-        return volume, findings
-    return volume, (*findings, _how_taken(volume))
-
-
-def _how_taken(volume: LabelVolume | ImageVolume) -> Finding:
-    """What a volume was taken for, which decides how it is sampled."""
-    if isinstance(volume, LabelVolume):
-        sentence = f"its {len(volume.present)} whole numbers were taken for labels (nearest voxel)"
-        return Finding(
-            Level.NOTE, "carried-as-labels", volume.name, sentence, "say --as image if they are not"
-        )
-    sentence = "its values are no labels (whole, 0 to 65535, at most 256 of them): an image (trilinear)"
-    return Finding(Level.NOTE, "carried-as-image", volume.name, sentence)
-
-
-def _write_thing(out: Path, thing: Any, overwrite: bool) -> None:
-    match thing:
-        case Landmarks():
-            write_landmarks(out, thing, overwrite=overwrite)
-        case LabelVolume():
-            write_labels(out, thing, overwrite=overwrite)
-        case ImageVolume():
-            write_image(out, thing, overwrite=overwrite)
-        case TetMesh():
-            write_mesh(out, thing, overwrite=overwrite)

@@ -307,7 +307,7 @@ def _sampled(
         progress("fields", 1, 3)
         sidecars = sidecars_of(named, source, target, forward, backward)
         progress("fields", 2, 3)
-        carried = carrying.carried_solid(named, target.grid, names=source.names)
+        carried = carrying.carried_solid(named, target.grid, names=source.names, codes=source.codes)
         ratio = carrying.volume_ratio_image(named, source.grid)
     other = alone = None
     if solutions.other is not None:

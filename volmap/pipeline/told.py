@@ -67,6 +67,7 @@ def scan_document(volume: LabelVolume) -> dict[str, Any]:
                 "voxels": int(counts[label]),
                 "volume_mm3": float(counts[label] * volume.grid.voxel_mm3),
             }
+            | ({"codes": volume.codes[label].as_dict()} if label in volume.codes else {})
             for label in volume.present
         },
     }

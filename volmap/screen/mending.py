@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -114,7 +114,7 @@ def mend(
         voxels, grid = _pad(labels, voxels, margin_voxels, changes)
     if not changes:
         return Mended(labels, ())
-    return Mended(LabelVolume(grid, voxels, labels.names, labels.name), tuple(changes))
+    return Mended(replace(labels, grid=grid, labels=voxels), tuple(changes))
 
 
 @dataclass(frozen=True)

@@ -5,6 +5,7 @@ repairs nothing silently; its arrays are owned copies and read-only.
 """
 
 from volmap.types.certificate import Certificate, Gate, Verdict
+from volmap.types.codes import Code, LabelCodes
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding, Level
 from volmap.types.given_boundary import GivenBoundary, GivingWay
@@ -21,6 +22,7 @@ from volmap.types.volumes import ImageVolume, LabelVolume
 
 __all__ = [
     "Certificate",
+    "Code",
     "Finding",
     "Gate",
     "GivenBoundary",
@@ -30,6 +32,7 @@ __all__ = [
     "ImageVolume",
     "InputError",
     "IterationRecord",
+    "LabelCodes",
     "LabelVolume",
     "LandmarkPairs",
     "Landmarks",

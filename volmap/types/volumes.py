@@ -11,6 +11,7 @@ from types import MappingProxyType
 import numpy as np
 from numpy.typing import NDArray
 
+from volmap.types.codes import LabelCodes
 from volmap.types.errors import InputError
 from volmap.types.frozen import Frozen
 from volmap.types.grid import Grid
@@ -28,12 +29,15 @@ class LabelVolume(Frozen):
         Name of each label; labels without one are called "label N".
     name : str
         File name (never a path) or any short name for messages.
+    codes : mapping of int to LabelCodes
+        What labels are in codes of a terminology, where the file said so.
     """
 
     grid: Grid
     labels: NDArray[np.uint16]
     names: Mapping[int, str] = field(default_factory=dict)
     name: str = "labels"
+    codes: Mapping[int, LabelCodes] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
         raw = np.asarray(self.labels)
@@ -44,9 +48,10 @@ class LabelVolume(Frozen):
         self._own("labels", np.uint16, self.grid.shape)
         names = {int(k): str(v) for k, v in dict(self.names).items()}
         object.__setattr__(self, "names", MappingProxyType(names))
+        object.__setattr__(self, "codes", MappingProxyType(dict(self.codes)))
 
     def __reduce__(self):  # type: ignore[no-untyped-def]
-        return LabelVolume, (self.grid, self.labels, dict(self.names), self.name)
+        return LabelVolume, (self.grid, self.labels, dict(self.names), self.name, dict(self.codes))
 
     @cached_property
     def present(self) -> tuple[int, ...]:

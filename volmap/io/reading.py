@@ -1,0 +1,31 @@
+"""What a user says about a file where the file leaves it open."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Literal
+
+VolumeKind = Literal["labels", "image", "either"]
+
+
+@dataclass(frozen=True)
+class Reading:
+    """How a volume is to be read.
+
+    Parameters
+    ----------
+    names : path, optional
+        Table of label names (TSV or CSV with `index` and `name`); by default a table beside the volume.
+    frame : int, optional
+        Which volume of a file that holds several, counted from 0.
+    threshold : float, optional
+        A probability or a share at and above which a voxel belongs to the label.
+    """
+
+    names: Path | None = None
+    frame: int | None = None
+    threshold: float | None = None
+
+
+AS_IT_IS = Reading()

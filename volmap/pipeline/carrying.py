@@ -1,0 +1,141 @@
+"""Carrying on files: a thing and a map folder in, the thing in its new place out."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+from volmap import carry as carrying
+from volmap.io.atomic import require_place
+from volmap.io.landmarks import read_landmarks, write_landmarks
+from volmap.io.nifti import write_image, write_labels
+from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
+from volmap.io.volumes import read_volume_with_findings
+from volmap.io.vtk_xml import read_mesh, write_mesh
+from volmap.mapfolder import read_map_folder
+from volmap.pipeline.places import NIFTI, require_name
+from volmap.types import (
+    Finding,
+    ImageVolume,
+    InputError,
+    LabelVolume,
+    Landmarks,
+    Level,
+    Progress,
+    TetMesh,
+    silent,
+)
+
+
+def carry_file(
+    thing: Path,
+    through: Path,
+    out: Path,
+    settings: carrying.CarrySettings | None = None,
+    *,
+    reverse: bool = False,
+    kind: VolumeKind = "either",
+    reading: Reading = AS_IT_IS,
+    overwrite: bool = False,
+    progress: Progress = silent,
+) -> tuple[Finding, ...]:
+    """Carry landmarks (csv), a label volume, an image (nii) or a mesh (vtu) through a map folder.
+
+    Parameters
+    ----------
+    thing, through, out : Path
+    settings : CarrySettings, optional
+        By default as usual, with a reach of one voxel.
+    reverse : bool
+        From TARGET to SOURCE.
+    kind : 'labels', 'image' or 'either'
+        What a volume holds; 'either' decides by its values.
+    reading : Reading
+        What the thing's file leaves open.
+    overwrite : bool
+    progress : Progress
+
+    Raises
+    ------
+    InputError
+        A file that cannot be read or does not lie on the body, or a place that is taken.
+    """
+    require_name(out, _endings(thing))
+    require_place(out, overwrite=overwrite, folder=False)
+    progress("read", 0, 2, thing.name)
+    loaded, findings = _loaded(thing, kind, reading)
+    progress("read", 1, 2, through.absolute().name)
+    folder = read_map_folder(through)
+    progress("carry", 0, 0, thing.name)
+    start, end = (folder.target, folder.source) if reverse else (folder.source, folder.target)
+    settings = settings or carrying.CarrySettings(reach_mm=start.grid.voxel_mm)
+    carried = carrying.carry(loaded, folder.map, reverse=reverse, onto=end.grid, settings=settings)
+    _write_thing(out, carried.thing, overwrite)
+    return (*findings, *turned_round(loaded, start, end), *carried.findings)
+
+
+def turned_round(thing: Any, start: LabelVolume, end: LabelVolume) -> tuple[Finding, ...]:
+    """A volume on the very grid it is to be carried onto most likely goes the other way.
+
+    Parameters
+    ----------
+    thing : noun
+        What is carried; only volumes have a grid to tell by.
+    start, end : LabelVolume
+        The scan it is carried from, and the one it is carried onto.
+    """
+    if not isinstance(thing, LabelVolume | ImageVolume) or start.grid.same_place(end.grid):
+        return ()
+    if not thing.grid.same_place(end.grid):
+        return ()
+    sentence = f"has the voxels of {end.name}, but was carried as if it belonged to {start.name}"
+    remedy = "check the direction: --reverse carries from TARGET to SOURCE"
+    return (Finding(Level.WARN, "turned-round", thing.name, sentence, remedy),)
+
+
+def _endings(thing: Path) -> tuple[str, ...]:
+    """Endings of files of the same kind as `thing`."""
+    for endings in ((".csv",), (".vtu",), NIFTI):
+        if thing.name.lower().endswith(endings):
+            return endings
+    raise InputError(
+        "this kind of file cannot be carried",
+        where=thing.name,
+        expected=".csv, .nii, .nii.gz or .vtu",
+        remedy="points go into a csv with name,x_mm,y_mm,z_mm; volumes into NIfTI",
+    )
+
+
+def _loaded(path: Path, kind: VolumeKind, reading: Reading) -> tuple[Any, tuple[Finding, ...]]:
+    ending = _endings(path)[0]
+    if ending == ".csv":
+        return read_landmarks(path), ()
+    if ending == ".vtu":
+        return read_mesh(path)[0], ()
+    volume, findings = read_volume_with_findings(path, reading, kind=kind)
+    if kind != "either":
+        return volume, findings
+    return volume, (*findings, _how_taken(volume))
+
+
+def _how_taken(volume: LabelVolume | ImageVolume) -> Finding:
+    """What a volume was taken for, which decides how it is sampled."""
+    if isinstance(volume, LabelVolume):
+        sentence = f"its {len(volume.present)} whole numbers were taken for labels (nearest voxel)"
+        return Finding(
+            Level.NOTE, "carried-as-labels", volume.name, sentence, "say --as image if they are not"
+        )
+    sentence = "its values are no labels (whole, 0 to 65535, at most 256 of them): an image (trilinear)"
+    return Finding(Level.NOTE, "carried-as-image", volume.name, sentence)
+
+
+def _write_thing(out: Path, thing: Any, overwrite: bool) -> None:
+    match thing:
+        case Landmarks():
+            write_landmarks(out, thing, overwrite=overwrite)
+        case LabelVolume():
+            write_labels(out, thing, overwrite=overwrite)
+        case ImageVolume():
+            write_image(out, thing, overwrite=overwrite)
+        case TetMesh():
+            write_mesh(out, thing, overwrite=overwrite)

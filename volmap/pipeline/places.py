@@ -1,0 +1,20 @@
+"""Names of what is to be written."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from volmap.types import InputError
+
+NIFTI = (".nii", ".nii.gz")
+
+
+def require_name(out: Path, endings: tuple[str, ...]) -> None:
+    """Refuse a name for another kind of file before the work, not after it."""
+    if not out.name.lower().endswith(endings):
+        raise InputError(
+            "is no name for what comes out",
+            where=out.name,
+            expected=f"a name that ends in {' or '.join(endings)}",
+            remedy="change the ending of the name",
+        )

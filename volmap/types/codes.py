@@ -1,0 +1,64 @@
+"""Coded meanings of labels, from a terminology."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass
+from typing import Any
+
+from volmap.types.errors import InputError
+
+
+@dataclass(frozen=True)
+class Code:
+    """A concept of a terminology (DICOM PS3.3, 8.8: coded entry).
+
+    Parameters
+    ----------
+    value : str
+        The code, such as "10200004".
+    scheme : str
+        Short name of the terminology, such as "SCT".
+    meaning : str
+        The concept in words.
+    """
+
+    value: str
+    scheme: str
+    meaning: str
+
+
+@dataclass(frozen=True)
+class LabelCodes:
+    """What a label is, in codes.
+
+    Parameters
+    ----------
+    category : Code
+        Of what sort it is, such as "Anatomical Structure".
+    kind : Code
+        What it is, such as "Liver".
+    """
+
+    category: Code
+    kind: Code
+
+    def as_dict(self) -> dict[str, Any]:
+        """Plain values, for JSON."""
+        return asdict(self)
+
+    @classmethod
+    def of(cls, told: Mapping[str, Any]) -> LabelCodes:
+        """From the plain values of `as_dict`.
+
+        Raises
+        ------
+        InputError
+            Not as `as_dict` gives them.
+        """
+        try:
+            return cls(*(Code(**{k: str(v) for k, v in told[key].items()}) for key in ("category", "kind")))
+        except (TypeError, KeyError, AttributeError) as fault:
+            raise InputError(
+                "codes of a label are not as written", found=str(told)[:60], expected="category and kind"
+            ) from fault
