@@ -2,6 +2,7 @@
 
 from volmap.carry.fields import backward_field, carried_solid, forward_field, volume_ratio_image
 from volmap.carry.points import MovedPoints, move_points
+from volmap.carry.rules import Factors, apply_rule, rule_factors
 from volmap.carry.sampling import FieldError, RoundTrip, field_error, round_trip, sample_field
 from volmap.carry.settings import CarrySettings
 from volmap.carry.sidecar import field_sidecar
@@ -10,9 +11,11 @@ from volmap.carry.things import Carried, carry
 __all__ = [
     "Carried",
     "CarrySettings",
+    "Factors",
     "FieldError",
     "MovedPoints",
     "RoundTrip",
+    "apply_rule",
     "backward_field",
     "carried_solid",
     "carry",
@@ -21,6 +24,7 @@ __all__ = [
     "forward_field",
     "move_points",
     "round_trip",
+    "rule_factors",
     "sample_field",
     "volume_ratio_image",
 ]

@@ -15,6 +15,7 @@ from volmap.types.landmarks import LandmarkPairs, Landmarks
 from volmap.types.map_chain import MapChain
 from volmap.types.outcome import IterationRecord, Outcome, Status
 from volmap.types.progress import Progress, silent
+from volmap.types.quantities import Quantity, Rule
 from volmap.types.surface import Surface
 from volmap.types.tetmesh import TetMesh
 from volmap.types.volume_map import VolumeMap
@@ -40,6 +41,8 @@ __all__ = [
     "MapChain",
     "Outcome",
     "Progress",
+    "Quantity",
+    "Rule",
     "Status",
     "Surface",
     "TetMesh",
