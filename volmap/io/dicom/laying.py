@@ -1,0 +1,130 @@
+"""A grid as the standard can hold it: orthogonal axes, the third the cross product of the first two.
+
+PS3.3 gives the third axis no attribute of its own (C.7.6.16.2.4, Plane Orientation; C.20.3.1.3, the
+deformation grid): it is the cross product of the two direction cosines.  A left-handed grid is laid anew by
+counting its last index from the other end, which moves no voxel.  Turning RAS+ into LPS keeps handedness.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from volmap.types.errors import InputError
+from volmap.types.grid import Grid
+
+_LPS = np.diag([-1.0, -1.0, 1.0])
+_BENT_SHARE = (
+    0.01  # of the smallest voxel edge: how far a voxel may stand from its place by squaring the axes
+)
+
+
+@dataclass(frozen=True, eq=False)
+class Laid:
+    """A grid in LPS.
+
+    Parameters
+    ----------
+    shape : tuple of 3 int
+    origin : (3,) float64, mm, LPS
+        Centre of the first voxel.
+    axes : (3, 3) float64
+        Columns: unit directions of i, j, k in LPS; right-handed and orthonormal.
+    spacing : (3,) float64
+        mm.
+    turned : bool
+        True when k is counted from the other end.
+    """
+
+    shape: tuple[int, int, int]
+    origin: NDArray[np.float64]
+    axes: NDArray[np.float64]
+    spacing: NDArray[np.float64]
+    turned: bool
+
+    def in_order(self, voxels: NDArray[Any]) -> NDArray[Any]:
+        """Voxels (I, J, K, ...) in the order of this grid."""
+        return voxels[:, :, ::-1] if self.turned else voxels
+
+    @property
+    def orientation(self) -> list[str]:
+        """Image Orientation (Patient): directions of growing i and growing j."""
+        return decimals(self.axes[:, :2].T.ravel())
+
+    def position(self, k: int = 0) -> list[str]:
+        """Image Position (Patient) of the first voxel of slice `k`."""
+        return decimals(self.origin + self.axes[:, 2] * self.spacing[2] * k)
+
+
+def laid(grid: Grid, *, where: str) -> Laid:
+    """The same voxels at the same places, laid as the standard can hold them.
+
+    Parameters
+    ----------
+    grid : Grid
+    where : str
+        Name for the error.
+
+    Raises
+    ------
+    InputError
+        Axes so far from orthogonal that squaring them would move a voxel by more than a hundredth of the
+        smallest voxel edge.
+    """
+    turned = grid.handedness == "left"
+    first = np.array([0.0, 0.0, grid.shape[2] - 1.0 if turned else 0.0])
+    origin = _LPS @ grid.to_world(first[None])[0]
+    spacing = grid.spacing
+    steps = _LPS @ (grid.affine[:3, :3] / spacing) @ np.diag([1.0, 1.0, -1.0 if turned else 1.0])
+    left, _, right = np.linalg.svd(
+        steps
+    )  # nearest rotation, Higham, "Computing the polar decomposition", 1986
+    axes = left @ right
+    reach = (np.array(grid.shape) - 1.0) * spacing
+    moved_mm = np.linalg.norm((axes - steps) * reach, axis=0).sum()
+    if moved_mm > _BENT_SHARE * spacing.min():
+        raise InputError(
+            "the axes of its grid are not orthogonal, which DICOM cannot hold",
+            where=where,
+            found=f"a cosine of {grid.shear:.3g} between two axes",
+            expected="right angles",
+            remedy="resample it onto a grid with right angles first (labels by nearest neighbour)",
+            refused=True,
+        )
+    return Laid(grid.shape, origin, axes, spacing, turned)
+
+
+def squared(grid: Grid) -> Grid:
+    """A grid with right angles that covers every voxel of `grid`, with voxels as small.
+
+    Parameters
+    ----------
+    grid : Grid
+        Of any axes.
+
+    Returns
+    -------
+    Grid
+        Axes of the nearest rotation; one voxel more where it is needed at an end.
+    """
+    steps = grid.affine[:3, :3] / grid.spacing
+    left, _, right = np.linalg.svd(steps)
+    axes, spacing = left @ right, grid.spacing
+    corners = np.array([[i, j, k] for i in (0, 1) for j in (0, 1) for k in (0, 1)], float)
+    along = grid.to_world(corners * (np.array(grid.shape) - 1)) @ axes
+    low, high = along.min(axis=0), along.max(axis=0)
+    counts = np.ceil((high - low) / spacing - 1e-6).astype(int) + 1
+    affine = np.eye(4)
+    affine[:3, :3] = axes * spacing
+    affine[:3, 3] = axes @ low
+    return Grid((int(counts[0]), int(counts[1]), int(counts[2])), affine)
+
+
+def decimals(values: NDArray[np.float64]) -> list[str]:
+    """Numbers as Decimal Strings: at most 16 characters (PS3.5, 6.2), as exact as that allows."""
+    from pydicom.valuerep import format_number_as_ds
+
+    return [format_number_as_ds(float(v) + 0.0) for v in values]
