@@ -12,7 +12,7 @@ from vtkmodules.util.numpy_support import vtk_to_numpy
 from vtkmodules.vtkIOXML import vtkXMLUnstructuredGridReader
 
 from volmap import pipeline
-from volmap.pipeline.files import turned_round
+from volmap.pipeline.carrying import turned_round
 from volmap.types import Grid, ImageVolume, InputError, LabelVolume
 
 HEADER = ["name", "x_mm", "y_mm", "z_mm"]
