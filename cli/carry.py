@@ -15,9 +15,20 @@ EXAMPLE = "volmap carry beads.csv --through map_0_1 --out beads_in_visit1.csv"
 def arguments(parser: argparse.ArgumentParser) -> None:
     """Options of this verb."""
     parser.add_argument("thing", type=Path, metavar="THING", help="file to carry")
-    parser.add_argument("--through", type=Path, required=True, metavar="DIR", help="map folder")
+    parser.add_argument(
+        "--through",
+        type=Path,
+        required=True,
+        nargs="+",
+        metavar="DIR",
+        help="map folder; several: one after the other, in the order of the visits",
+    )
     parser.add_argument("--out", type=Path, required=True, metavar="FILE", help="where to write it")
-    parser.add_argument("--reverse", action="store_true", help="from TARGET to SOURCE")
+    parser.add_argument(
+        "--reverse",
+        action="store_true",
+        help="from TARGET to SOURCE; of several maps, from the last end to the first start",
+    )
     parser.add_argument(
         "--as",
         dest="kind",

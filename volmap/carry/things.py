@@ -20,6 +20,7 @@ from volmap.types import (
     LabelVolume,
     Landmarks,
     Level,
+    MapChain,
     Surface,
     TetMesh,
     VolumeMap,
@@ -44,7 +45,7 @@ class Carried:
 @singledispatch
 def carry(
     thing: Any,
-    volume_map: VolumeMap,
+    volume_map: VolumeMap | MapChain,
     *,
     reverse: bool = False,
     onto: Grid | None = None,
@@ -59,7 +60,7 @@ def carry(
         Points of landmarks, meshes and surfaces move exactly (see `points.move_points`).  Volumes are
         pulled: each voxel centre of `onto` inside the body is sent back by the exact inverse, and takes the
         label of the voxel it falls in, or the trilinear intensity there.
-    volume_map : VolumeMap
+    volume_map : VolumeMap or MapChain
     reverse : bool
         From TARGET to SOURCE, by the exact inverse.
     onto : Grid

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
@@ -12,8 +13,8 @@ from volmap.io.nifti import write_image, write_labels
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.io.volumes import read_volume_with_findings
 from volmap.io.vtk_xml import read_mesh, write_mesh
-from volmap.mapfolder import read_map_folder
 from volmap.pipeline.places import NIFTI, require_name
+from volmap.pipeline.ways import read_way
 from volmap.types import (
     Finding,
     ImageVolume,
@@ -29,7 +30,7 @@ from volmap.types import (
 
 def carry_file(
     thing: Path,
-    through: Path,
+    through: Path | Sequence[Path],
     out: Path,
     settings: carrying.CarrySettings | None = None,
     *,
@@ -39,15 +40,18 @@ def carry_file(
     overwrite: bool = False,
     progress: Progress = silent,
 ) -> tuple[Finding, ...]:
-    """Carry landmarks (csv), a label volume, an image (nii) or a mesh (vtu) through a map folder.
+    """Carry landmarks (csv), a label volume, an image (nii) or a mesh (vtu) through one map or several.
 
     Parameters
     ----------
-    thing, through, out : Path
+    thing : Path
+    through : Path or sequence of Path
+        A map folder, or several in the order in which the thing goes through them (see `ways.read_way`).
+    out : Path
     settings : CarrySettings, optional
         By default as usual, with a reach of one voxel.
     reverse : bool
-        From TARGET to SOURCE.
+        From TARGET to SOURCE; through several maps, from the end of the last to the start of the first.
     kind : 'labels', 'image' or 'either'
         What a volume holds; 'either' decides by its values.
     reading : Reading
@@ -62,16 +66,19 @@ def carry_file(
     """
     require_name(out, _endings(thing))
     require_place(out, overwrite=overwrite, folder=False)
-    progress("read", 0, 2, thing.name)
+    progress("read", 0, 0, thing.name)
     loaded, findings = _loaded(thing, kind, reading)
-    progress("read", 1, 2, through.absolute().name)
-    folder = read_map_folder(through)
+    folders = [through] if isinstance(through, Path) else through
+    way = read_way(folders, reverse=reverse, progress=progress)
     progress("carry", 0, 0, thing.name)
-    start, end = (folder.target, folder.source) if reverse else (folder.source, folder.target)
-    settings = settings or carrying.CarrySettings(reach_mm=start.grid.voxel_mm)
-    carried = carrying.carry(loaded, folder.map, reverse=reverse, onto=end.grid, settings=settings)
+    if len(way.legs) > 1 and isinstance(loaded, LabelVolume | ImageVolume):
+        raise InputError(
+            "volumes are carried through one map at a time", where=thing.name, remedy="carry it leg by leg"
+        )
+    settings = settings or carrying.CarrySettings(reach_mm=way.start.grid.voxel_mm)
+    carried = carrying.carry(loaded, way.map, onto=way.end.grid, settings=settings)
     _write_thing(out, carried.thing, overwrite)
-    return (*findings, *turned_round(loaded, start, end), *carried.findings)
+    return (*findings, *way.findings, *turned_round(loaded, way.start, way.end), *carried.findings)
 
 
 def turned_round(thing: Any, start: LabelVolume, end: LabelVolume) -> tuple[Finding, ...]:
