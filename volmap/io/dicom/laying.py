@@ -2,7 +2,8 @@
 
 PS3.3 gives the third axis no attribute of its own (C.7.6.16.2.4, Plane Orientation; C.20.3.1.3, the
 deformation grid): it is the cross product of the two direction cosines.  A left-handed grid is laid anew by
-counting its last index from the other end, which moves no voxel.  Turning RAS+ into LPS keeps handedness.
+counting its last index from the other end, which moves no voxel; planes of an image may be listed in any
+order, since each says its own place.  Turning RAS+ into LPS keeps handedness.
 """
 
 from __future__ import annotations
@@ -17,9 +18,8 @@ from volmap.types.errors import InputError
 from volmap.types.grid import Grid
 
 _LPS = np.diag([-1.0, -1.0, 1.0])
-_BENT_SHARE = (
-    0.01  # of the smallest voxel edge: how far a voxel may stand from its place by squaring the axes
-)
+_NOISE = 1e-6  # of direction cosines that a file stored as float32: kept as they are
+_BENT_SHARE = 0.01  # of the smallest voxel edge: how far squaring the axes may move a voxel
 
 
 @dataclass(frozen=True, eq=False)
@@ -32,7 +32,7 @@ class Laid:
     origin : (3,) float64, mm, LPS
         Centre of the first voxel.
     axes : (3, 3) float64
-        Columns: unit directions of i, j, k in LPS; right-handed and orthonormal.
+        Columns: unit directions of i, j, k in LPS; right-handed and orthonormal but for float32 noise.
     spacing : (3,) float64
         mm.
     turned : bool
@@ -54,8 +54,12 @@ class Laid:
         """Image Orientation (Patient): directions of growing i and growing j."""
         return decimals(self.axes[:, :2].T.ravel())
 
+    def place(self, k: int) -> int:
+        """Which plane of this grid, from 0, plane `k` of the grid as it was is."""
+        return self.shape[2] - 1 - k if self.turned else k
+
     def position(self, k: int = 0) -> list[str]:
-        """Image Position (Patient) of the first voxel of slice `k`."""
+        """Image Position (Patient) of the first voxel of plane `k` of this grid."""
         return decimals(self.origin + self.axes[:, 2] * self.spacing[2] * k)
 
 
@@ -79,10 +83,9 @@ def laid(grid: Grid, *, where: str) -> Laid:
     origin = _LPS @ grid.to_world(first[None])[0]
     spacing = grid.spacing
     steps = _LPS @ (grid.affine[:3, :3] / spacing) @ np.diag([1.0, 1.0, -1.0 if turned else 1.0])
-    left, _, right = np.linalg.svd(
-        steps
-    )  # nearest rotation, Higham, "Computing the polar decomposition", 1986
-    axes = left @ right
+    axes = _rotation(steps)
+    if np.abs(axes - steps).max() < _NOISE:
+        axes = steps
     reach = (np.array(grid.shape) - 1.0) * spacing
     moved_mm = np.linalg.norm((axes - steps) * reach, axis=0).sum()
     if moved_mm > _BENT_SHARE * spacing.min():
@@ -111,8 +114,7 @@ def squared(grid: Grid) -> Grid:
         Axes of the nearest rotation; one voxel more where it is needed at an end.
     """
     steps = grid.affine[:3, :3] / grid.spacing
-    left, _, right = np.linalg.svd(steps)
-    axes, spacing = left @ right, grid.spacing
+    axes, spacing = _rotation(steps), grid.spacing
     corners = np.array([[i, j, k] for i in (0, 1) for j in (0, 1) for k in (0, 1)], float)
     along = grid.to_world(corners * (np.array(grid.shape) - 1)) @ axes
     low, high = along.min(axis=0), along.max(axis=0)
@@ -121,6 +123,12 @@ def squared(grid: Grid) -> Grid:
     affine[:3, :3] = axes * spacing
     affine[:3, 3] = axes @ low
     return Grid((int(counts[0]), int(counts[1]), int(counts[2])), affine)
+
+
+def _rotation(steps: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Nearest orthonormal axes (Fan & Hoffman, Proc. AMS 6, 1955): the polar factor."""
+    left, _, right = np.linalg.svd(steps)
+    return np.asarray(left @ right)
 
 
 def decimals(values: NDArray[np.float64]) -> list[str]:

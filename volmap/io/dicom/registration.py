@@ -159,7 +159,7 @@ def _checked(field: GridField, grid: Laid, voxel: tuple[int, int, int]) -> Check
     i, j, k = voxel
     x = field.grid.to_world(np.array([voxel], np.float64))[0] * _LPS
     y = x + field.displacement[voxel].astype(np.float64) * _LPS
-    here = (i, j, grid.shape[2] - 1 - k if grid.turned else k)
+    here = (i, j, grid.place(k))
     return CheckedPoint(
         here, (float(x[0]), float(x[1]), float(x[2])), (float(y[0]), float(y[1]), float(y[2]))
     )
