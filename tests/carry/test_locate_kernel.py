@@ -52,6 +52,25 @@ def test_corners_edges_and_faces_are_found_and_reproduced(known):
     np.testing.assert_allclose(interpolate(mesh.tets, mesh.points, tet, weights), places, atol=1e-13)
 
 
+def test_many_queries_at_once_are_the_same_as_few(known):
+    """Many are looked up box after box; the answers, and where there is none, are those of few at a time."""
+    mesh = known.jittered(known.box(6, -1, 1), 0.2)
+    points, tets = np.array(mesh.points), np.array(mesh.tets)
+    queries = np.random.default_rng(5).uniform(-1.1, 1.1, (40_000, 3))
+    queries[[7, 8, 9], [0, 1, 2]] = np.nan, np.inf, -1e300
+    buckets = build_buckets(points, tets)
+    tet, weights = locate(buckets, points, tets, queries)
+    for start in range(0, len(queries), 10_000):
+        few_tet, few_weights = locate(buckets, points, tets, queries[start : start + 10_000])
+        np.testing.assert_array_equal(tet[start : start + 10_000], few_tet)
+        np.testing.assert_array_equal(weights[start : start + 10_000], few_weights)
+    assert (tet[7:10] == -1).all()
+    assert 0.1 < (tet < 0).mean() < 0.5
+    height = interpolate(tets, points[:, 2], tet, weights)  # one number a point
+    np.testing.assert_allclose(height[tet >= 0], queries[tet >= 0, 2], atol=1e-13)
+    assert np.isnan(height[tet < 0]).all()
+
+
 def test_a_tie_goes_to_the_first_tet_and_threads_change_nothing(known):
     mesh = known.box(4, 0, 4)  # whole-number geometry: coordinates are exact, ties are true ties
     places = np.stack(np.meshgrid(*[np.arange(0, 4.5, 0.5)] * 3, indexing="ij"), -1).reshape(-1, 3)

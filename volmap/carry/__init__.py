@@ -1,7 +1,7 @@
 """Fields, and things carried through a map."""
 
 from volmap.carry.fields import backward_field, carried_solid, forward_field, volume_ratio_image
-from volmap.carry.points import MovedPoints, move_points
+from volmap.carry.points import MovedPoints, carried_values, gradients_at, move_points
 from volmap.carry.rules import Factors, apply_rule, rule_factors
 from volmap.carry.sampling import FieldError, RoundTrip, field_error, round_trip, sample_field
 from volmap.carry.settings import CarrySettings
@@ -18,10 +18,12 @@ __all__ = [
     "apply_rule",
     "backward_field",
     "carried_solid",
+    "carried_values",
     "carry",
     "field_error",
     "field_sidecar",
     "forward_field",
+    "gradients_at",
     "move_points",
     "round_trip",
     "rule_factors",
