@@ -19,7 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.io.opening import cannot_open, existing_file, shown_name
-from volmap.io.voxel_bytes import DEFLATE_AT_BEST, cut_short, read_exactly, require_room, skip
+from volmap.io.voxel_bytes import DEFLATE_AT_BEST, cut_short, read_exactly, require_end, require_room, skip
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding, Level
 from volmap.types.grid import Grid
@@ -188,7 +188,7 @@ def read_voxels(
     skip(stream, header.offset + wanted.start * one * header.dtype.itemsize - at, shown_name(file))
     data = read_exactly(stream, one * len(wanted) * header.dtype.itemsize, shown_name(file))
     if wanted.stop == header.n_frames:
-        stream.read(1)  # at the end of packed data this checks their checksum
+        require_end(stream, shown_name(file))
     return data.view(header.dtype).reshape((*header.shape[:3], len(wanted)), order="F")
 
 

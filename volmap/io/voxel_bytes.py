@@ -95,6 +95,21 @@ def skip(stream: BinaryIO, n: int, where: str) -> None:
         n -= got
 
 
+def require_end(stream: BinaryIO, where: str) -> None:
+    """Read to the end, which checks the checksum of packed data; voxels left over would be in wrong places.
+
+    Raises
+    ------
+    InputError
+        There is more than the header speaks of.
+    """
+    if stream.read(1):
+        raise InputError(
+            "the file holds more than its header claims", where=where,
+            expected="as many voxels as the header's dimensions give", remedy="export the file again",
+        )  # fmt: skip
+
+
 def cut_short(where: str, found: str) -> InputError:
     """The sentence for a file that ends too early."""
     return InputError(
