@@ -24,6 +24,7 @@ from numpy.typing import NDArray
 
 from volmap.io.nrrd_place import affine_of, frame_axis
 from volmap.io.opening import cannot_open, existing_file, shown_name
+from volmap.io.reading import AS_IT_IS, Reading
 from volmap.io.stacks import Stack, frames_wanted
 from volmap.io.voxel_bytes import DEFLATE_AT_BEST, cut_short, read_exactly, require_end, require_room, skip
 from volmap.types.errors import InputError
@@ -55,9 +56,7 @@ def is_nrrd(path: str | os.PathLike[str]) -> bool:
         return False
 
 
-def read_stack(
-    path: str | os.PathLike[str], *, frame: int | None = None, threshold: float | None = None
-) -> Stack:
+def read_stack(path: str | os.PathLike[str], reading: Reading = AS_IT_IS) -> Stack:
     """The numbers of a file, one frame of them or (with a threshold and no frame) all.
 
     Raises
@@ -74,7 +73,7 @@ def read_stack(
     list_axis = frame_axis(header, sizes, where)
     affine, findings = affine_of(header, sizes, list_axis, where)
     n_frames = 1 if list_axis is None else sizes[list_axis]
-    frames, said = frames_wanted(n_frames, frame=frame, threshold=threshold, where=where)
+    frames, said = frames_wanted(n_frames, reading, where)
     data_file, start = _data_file(header, file, where), 0
     if data_file is None:
         data_file, start = file, attached

@@ -6,16 +6,23 @@ meant.  Where it leaves that open the user says it; what was done is said in a f
 
 from __future__ import annotations
 
+import os
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from volmap.io.label_names import read_label_names, sibling_names
+from volmap.io.reading import Reading
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding, Level
+from volmap.types.grid import Grid
+from volmap.types.volumes import ImageVolume, LabelVolume
 
 _MOST_LABELS = 256
+_MOST_FRAMES = 65535
+_NO_SHARE = 2.0  # interpolated probabilities overshoot 1 a little, never to 2
 
 
 @dataclass(frozen=True)
@@ -45,27 +52,17 @@ class Stack:
         return i, j, k
 
 
-def frames_wanted(
-    n: int, *, frame: int | None, threshold: float | None, where: str
-) -> tuple[range, tuple[Finding, ...]]:
-    """Which of a file's frames to read, and what to say about it.
+def frames_wanted(n: int, reading: Reading, where: str) -> tuple[range, tuple[Finding, ...]]:
+    """Which of a file's n frames to read, and what to say about it.
 
-    Parameters
-    ----------
-    n : int
-        Frames in the file.
-    frame : int, optional
-        The one that is wanted, counted from 0.
-    threshold : float, optional
-        Given for probabilities; without `frame`, every frame is then one label's.
-    where : str
-        File name for the error.
+    Without `reading.frame`, a threshold makes every frame one label's.
 
     Raises
     ------
     InputError
         Several frames and none chosen, or no such frame.
     """
+    frame, threshold = reading.frame, reading.threshold
     if frame is None:
         if n > 1 and threshold is None:
             raise InputError(
@@ -91,37 +88,61 @@ def frames_wanted(
     return range(frame, frame + 1), (said,)
 
 
-def labels_of(
-    stack: Stack, *, threshold: float | None = None
-) -> tuple[NDArray[np.uint16], tuple[Finding, ...]]:
+def label_volume(
+    stack: Stack, path: str | os.PathLike[str], reading: Reading
+) -> tuple[LabelVolume, tuple[Finding, ...]]:
     """The labels a stack holds: its own whole numbers, or what a threshold makes of probabilities.
 
     Parameters
     ----------
     stack : Stack
-    threshold : float, optional
-        One frame: label 1 where the value is at least this.  Several frames: frame f is label f + 1's; a
-        voxel takes the largest of the values that are at least this, the earliest of equal ones.
-
-    Returns
-    -------
-    labels : (I, J, K) uint16
-    findings : tuple of Finding
-        How labels came about, when by a threshold.
+    path : path
+        Of its file, to look for a table of names beside it.
+    reading : Reading
+        A threshold makes of one frame: label 1 where the value is at least that.  Of several: frame f is
+        label f + 1's; a voxel takes the largest of the values that are at least that, the earliest of equal
+        ones.
 
     Raises
     ------
     InputError
-        Numbers that are no labels, or a threshold that is no number.
+        Numbers that are no labels, a threshold that is no number, or a table of names that cannot be read.
     """
-    if threshold is None:
-        return whole_labels(stack.values[..., 0], stack.name), ()
+    if reading.threshold is None:
+        labels = whole_labels(stack.values[..., 0], stack.name)
+        findings = stack.findings
+    else:
+        labels, said = _by_threshold(stack, reading.threshold)
+        findings = (*stack.findings, said)
+    names = sibling_names(path) if reading.names is None else read_label_names(reading.names)
+    volume = LabelVolume(Grid(stack.shape, stack.affine), labels, names, stack.name)
+    return volume, findings
+
+
+def image_volume(stack: Stack, *, unit: str = "") -> ImageVolume:
+    """The first frame of a stack as intensities."""
+    values = as_float32(stack.values[..., 0])
+    return ImageVolume(Grid(stack.shape, stack.affine), values, unit, stack.name)
+
+
+def _by_threshold(stack: Stack, threshold: float) -> tuple[NDArray[np.uint16], Finding]:
     if not np.isfinite(threshold):
         raise InputError("a threshold is a number", where=stack.name, found=str(threshold))
+    n = stack.values.shape[3]
+    if n > _MOST_FRAMES:
+        raise InputError(
+            "too many frames for one label each",
+            where=stack.name,
+            found=str(n),
+            expected=f"at most {_MOST_FRAMES}",
+            remedy="choose one with --frame N, counted from 0",
+            refused=True,
+        )
+    _require_same_scale(stack, threshold)
     best = np.full(stack.shape, -np.inf)
     labels = np.zeros(stack.shape, np.uint16)
     n_nan = 0
-    for frame in range(stack.values.shape[3]):
+    for frame in range(n):
         values = stack.values[..., frame]
         better = (values >= threshold) & (values > best)
         labels[better] = frame + 1
@@ -130,7 +151,25 @@ def labels_of(
     return labels, _how_labelled(stack, threshold, n_nan)
 
 
-def _how_labelled(stack: Stack, threshold: float, n_nan: int) -> tuple[Finding, ...]:
+def _require_same_scale(stack: Stack, threshold: float) -> None:
+    """A share of 1 means nothing to values of 0 to 100 or 255, or to labels."""
+    values = stack.values
+    if values.dtype.kind == "f":
+        most = float(np.max(values, initial=-np.inf, where=np.isfinite(values)))
+    else:
+        most = float(values.max())
+    if threshold <= 1.0 and most >= _NO_SHARE:
+        raise InputError(
+            "a threshold of at most 1 does not fit its values",
+            where=stack.name,
+            found=f"values up to {most:g}",
+            expected="probabilities from 0 to 1",
+            remedy="give it in the file's own numbers (half of 255 is 127.5), or none if these are labels",
+            refused=True,
+        )
+
+
+def _how_labelled(stack: Stack, threshold: float, n_nan: int) -> Finding:
     n = stack.values.shape[3]
     if n == 1:
         sentence = f"label 1 is where its value is at least {threshold:g}"
@@ -141,7 +180,7 @@ def _how_labelled(stack: Stack, threshold: float, n_nan: int) -> tuple[Finding, 
         )
     if n_nan:
         sentence += f"; {n_nan} values are not a number and were taken for below it"
-    return (Finding(Level.NOTE, "labels-by-threshold", stack.name, sentence),)
+    return Finding(Level.NOTE, "labels-by-threshold", stack.name, sentence)
 
 
 def could_be_labels(values: NDArray[Any]) -> bool:
