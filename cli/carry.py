@@ -36,6 +36,11 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         default="either",
         help="what a volume holds: labels (nearest voxel) or an image (trilinear); default: by its values",
     )
+    parser.add_argument(
+        "--belongs-to",
+        choices=("source", "target"),
+        help="whose world THING lies in, where neither its digest nor its voxel grid tells",
+    )
     reading_arguments(parser)
     parser.add_argument("--overwrite", action="store_true", help="replace a file that stands there")
 
@@ -50,6 +55,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
         options.out,
         reverse=options.reverse,
         kind=options.kind,
+        belongs_to=options.belongs_to,
         reading=reading_of(options),
         progress=console.progress,
         overwrite=options.overwrite,

@@ -9,7 +9,7 @@ from volmap_phantoms.broken import body
 from volmap_phantoms.phantom import Phantom, Visit
 
 from volmap import pipeline
-from volmap.pipeline import files, reporting
+from volmap.pipeline import carrying, files, reporting
 from volmap.types import ImageVolume, Landmarks
 
 
@@ -27,8 +27,12 @@ def no_work(monkeypatch):
     def worked(*_, **__):
         raise AssertionError("work began before the place was looked at")
 
-    for name in ("read_labels_with_findings", "read_volume_with_findings", "read_landmarks", "map_pair"):
-        monkeypatch.setattr(files, name, worked)
+    for module, names in (
+        (files, ("read_labels_with_findings", "map_pair")),
+        (carrying, ("read_volume_with_findings", "read_landmarks", "read_way")),
+    ):
+        for name in names:
+            monkeypatch.setattr(module, name, worked)
 
 
 @pytest.fixture

@@ -56,7 +56,8 @@ def test_the_demo_replaces_a_demo_and_ends_by_saying_where_to_look(tmp_path, cap
     assert "--overwrite" in capsys.readouterr().err
     assert main(["demo", "--out", str(out), "--quiet", "--overwrite"]) == 0
     assert str(out / "map_0_3" / "report.html") in capsys.readouterr().out.splitlines()[-2]
-    assert {p.name for p in out.iterdir()} == {"phantom", "map_0_3", "beads_carried_to_visit3.csv"}
+    beads = "beads_carried_to_visit3.csv"
+    assert {p.name for p in out.iterdir()} == {"phantom", "map_0_3", beads, f"{beads}.json"}
 
 
 def test_a_certificate_that_does_not_hold_is_loud(small_pair, tmp_path, capsys):

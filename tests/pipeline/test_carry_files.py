@@ -12,8 +12,7 @@ from vtkmodules.util.numpy_support import vtk_to_numpy
 from vtkmodules.vtkIOXML import vtkXMLUnstructuredGridReader
 
 from volmap import pipeline
-from volmap.pipeline.carrying import turned_round
-from volmap.types import Grid, ImageVolume, InputError, LabelVolume
+from volmap.types import InputError
 
 HEADER = ["name", "x_mm", "y_mm", "z_mm"]
 
@@ -90,25 +89,13 @@ def test_the_scans_own_labels_arrive_on_the_other_scans(tmp_path, small_pair, re
     assert codes == ["carried-as-labels"]
 
 
-def test_a_volume_on_the_grid_it_is_carried_onto_is_told():
-    # law: where the grids of two scans differ, a volume's own grid tells which of them it belongs to
-    here, there = (
-        LabelVolume(Grid((2, 2, 2), np.diag([mm, mm, mm, 1.0])), np.ones((2, 2, 2), np.uint16), {}, name)
-        for mm, name in ((1.0, "here"), (2.0, "there"))
-    )
-    image = ImageVolume(there.grid, np.zeros((2, 2, 2), np.float32), "", "image")
-    assert [f.code for f in turned_round(image, here, there)] == ["turned-round"]
-    assert turned_round(image, there, here) == ()
-    assert turned_round(image, there, there) == ()
-
-
 def test_an_image_is_sampled_where_each_voxel_comes_from(tmp_path, small_pair):
     # truth: y -> x by the stored backward field, then SciPy's linear interpolation
     scan = nibabel.load(small_pair.source)
     i, j, k = np.indices(scan.shape)
     voxels = (100 + 3.5 * i - 2.25 * j + 0.5 * k).astype(np.float32)
     image, codes = carried_volume(small_pair, tmp_path, voxels)
-    assert codes == ["carried-as-image"]
+    assert codes == ["carried-as-image", "either-scan"]  # both scans have one grid
     field = nibabel.load(small_pair.folder / "backward.nii.gz")
     u = np.asarray(field.dataobj)[:, :, :, 0, :]
     place = np.argwhere(np.isfinite(u[..., 0]))
@@ -125,7 +112,8 @@ def test_the_user_may_say_what_a_volume_holds(tmp_path, small_pair):
     voxels = (np.indices(scan.shape).sum(axis=0) % 200).astype(np.uint8)
     _, codes = carried_volume(small_pair, tmp_path, voxels)
     assert "carried-as-labels" in codes
-    (tmp_path / "out.nii.gz").unlink()
+    for left in ("out.nii.gz", "out.nii.gz.json"):
+        (tmp_path / left).unlink()
     image, codes = carried_volume(small_pair, tmp_path, voxels, kind="image")
     assert image.get_data_dtype() == np.float32
     assert "carried-as-labels" not in codes
@@ -183,7 +171,9 @@ def test_a_volume_that_lies_elsewhere_is_refused(tmp_path, small_pair):
     affine[:3, 3] += 500
     nibabel.save(nibabel.Nifti1Image(np.asarray(scan.dataobj), affine), tmp_path / "far.nii.gz")
     with pytest.raises(InputError, match=r"far\.nii\.gz: the volume holds no part of the body") as caught:
-        pipeline.carry_file(tmp_path / "far.nii.gz", small_pair.folder, tmp_path / "out.nii.gz")
+        pipeline.carry_file(
+            tmp_path / "far.nii.gz", small_pair.folder, tmp_path / "out.nii.gz", belongs_to="source"
+        )
     assert caught.value.refused
 
 

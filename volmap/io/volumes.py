@@ -1,16 +1,15 @@
 """A volume in whatever format it comes: looks at the file, and asks the reader of that format.
 
-A format of plain numbers is a module with `read_stack`; what the numbers are is decided in `stacks`.
+A format is a module with `read_labels_with_findings`, `read_image_with_findings` and
+`read_volume_with_findings`; here is the one list of them.
 """
 
 from __future__ import annotations
 
 import os
-from dataclasses import replace
 
-from volmap.io import nifti, nrrd
+from volmap.io import nifti
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
-from volmap.io.stacks import Stack, could_be_labels, image_volume, label_volume
 from volmap.types.findings import Finding
 from volmap.types.volumes import ImageVolume, LabelVolume
 
@@ -54,7 +53,7 @@ def read_labels_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tu
     InputError
         As `read_labels`.
     """
-    return label_volume(_stack(path, reading), path, reading)
+    return nifti.read_labels_with_findings(path, reading)
 
 
 def read_image_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tuple[ImageVolume, Findings]:
@@ -65,8 +64,7 @@ def read_image_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tup
     InputError
         As `read_image`.
     """
-    stack = _stack(path, replace(reading, threshold=None))
-    return image_volume(stack), stack.findings
+    return nifti.read_image_with_findings(path, reading)
 
 
 def read_volume_with_findings(
@@ -86,13 +84,4 @@ def read_volume_with_findings(
     InputError
         As `read_labels` and `read_image`.
     """
-    if kind == "image":
-        return read_image_with_findings(path, reading)
-    stack = _stack(path, reading)
-    if kind == "labels" or reading.threshold is not None or could_be_labels(stack.values[..., 0]):
-        return label_volume(stack, path, reading)
-    return image_volume(stack), stack.findings
-
-
-def _stack(path: PathLike, reading: Reading) -> Stack:
-    return nrrd.read_stack(path, reading) if nrrd.is_nrrd(path) else nifti.read_stack(path, reading)
+    return nifti.read_volume_with_findings(path, reading, kind=kind)

@@ -7,12 +7,15 @@ from pathlib import Path
 from typing import Any
 
 from volmap import carry as carrying
-from volmap.io.atomic import require_place
+from volmap.io.atomic import require_place, whole_file
+from volmap.io.json_documents import json_text
 from volmap.io.landmarks import read_landmarks, write_landmarks
 from volmap.io.nifti import write_image, write_labels
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.io.volumes import read_volume_with_findings
 from volmap.io.vtk_xml import read_mesh, write_mesh
+from volmap.pipeline.belonging import Side, require_belonging
+from volmap.pipeline.carried_sidecar import carried_sidecar, sidecar_place
 from volmap.pipeline.places import NIFTI, require_name
 from volmap.pipeline.ways import read_way
 from volmap.types import (
@@ -36,6 +39,7 @@ def carry_file(
     *,
     reverse: bool = False,
     kind: VolumeKind = "either",
+    belongs_to: Side | None = None,
     reading: Reading = AS_IT_IS,
     overwrite: bool = False,
     progress: Progress = silent,
@@ -54,6 +58,8 @@ def carry_file(
         From TARGET to SOURCE; through several maps, from the end of the last to the start of the first.
     kind : 'labels', 'image' or 'either'
         What a volume holds; 'either' decides by its values.
+    belongs_to : 'source' or 'target', optional
+        Whose world the user says the thing lies in, where neither its digest nor its voxel grid tells.
     reading : Reading
         What the thing's file leaves open.
     overwrite : bool
@@ -62,10 +68,12 @@ def carry_file(
     Raises
     ------
     InputError
-        A file that cannot be read or does not lie on the body, or a place that is taken.
+        A file that cannot be read, belongs to another scan or does not lie on the body, or a place that is
+        taken.
     """
     require_name(out, _endings(thing))
-    require_place(out, overwrite=overwrite, folder=False)
+    for place in (out, sidecar_place(out)):
+        require_place(place, overwrite=overwrite, folder=False)
     progress("read", 0, 0, thing.name)
     loaded, findings = _loaded(thing, kind, reading)
     folders = [through] if isinstance(through, Path) else through
@@ -75,29 +83,15 @@ def carry_file(
         raise InputError(
             "volumes are carried through one map at a time", where=thing.name, remedy="carry it leg by leg"
         )
+    belonging = require_belonging(loaded, *way.ends, name=thing.name, belongs_to=belongs_to)
     settings = settings or carrying.CarrySettings(reach_mm=way.start.grid.voxel_mm)
     carried = carrying.carry(loaded, way.map, onto=way.end.grid, settings=settings)
-    _write_thing(out, carried.thing, overwrite)
-    return (*findings, *way.findings, *turned_round(loaded, way.start, way.end), *carried.findings)
-
-
-def turned_round(thing: Any, start: LabelVolume, end: LabelVolume) -> tuple[Finding, ...]:
-    """A volume on the very grid it is to be carried onto most likely goes the other way.
-
-    Parameters
-    ----------
-    thing : noun
-        What is carried; only volumes have a grid to tell by.
-    start, end : LabelVolume
-        The scan it is carried from, and the one it is carried onto.
-    """
-    if not isinstance(thing, LabelVolume | ImageVolume) or start.grid.same_place(end.grid):
-        return ()
-    if not thing.grid.same_place(end.grid):
-        return ()
-    sentence = f"has the voxels of {end.name}, but was carried as if it belonged to {start.name}"
-    remedy = "check the direction: --reverse carries from TARGET to SOURCE"
-    return (Finding(Level.WARN, "turned-round", thing.name, sentence, remedy),)
+    findings = (*findings, *way.findings, *belonging, *carried.findings)
+    told = carried_sidecar(thing, out, way, settings, findings, belongs_to=belongs_to)
+    with whole_file(sidecar_place(out), overwrite=overwrite) as place:  # both stand, or neither
+        place.write_text(json_text(told), encoding="utf-8")
+        _write_thing(out, carried.thing, overwrite)
+    return findings
 
 
 def _endings(thing: Path) -> tuple[str, ...]:

@@ -184,10 +184,24 @@ def map_files(
         notes=notes,
         progress=progress,
     )
+    folder = _with_images(folder, *images)
     write_map(
         out, folder, source_image=images[0], target_image=images[1], overwrite=overwrite, progress=progress
     )
     return folder
+
+
+def _with_images(folder: MapFolder, source: ImageVolume | None, target: ImageVolume | None) -> MapFolder:
+    """The same folder, its certificate with the digests of the scans' images: so they are known later."""
+    told = {
+        side: {"name": image.name, "sha256": image.sha256}
+        for side, image in (("source", source), ("target", target))
+        if image is not None
+    }
+    if not told:
+        return folder
+    settings = dict(folder.certificate.settings) | {"images": told}
+    return replace(folder, certificate=replace(folder.certificate, settings=settings))
 
 
 TOLERANCE_VOXELS = 0.25  # a staircase of voxels lies that far from any smooth surface through it

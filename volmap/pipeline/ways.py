@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 from pathlib import Path
 
 from volmap.mapfolder import MapFolder, read_map_folder
+from volmap.pipeline.belonging import KnownScan
 from volmap.types import (
     Finding,
     InputError,
@@ -57,6 +58,15 @@ class Leg:
         """The same folder the other way."""
         return Leg(self.name, self.folder, not self.turned)
 
+    def known(self, *, at_end: bool) -> KnownScan:
+        """What is known of the scan at its start or its end, to tell what belongs to it."""
+        labels = self.end if at_end else self.start
+        role = "target" if at_end != self.turned else "source"
+        images = dict(self.folder.certificate.settings.get("images", {}))
+        image = str(dict(images.get(role, {})).get("sha256", ""))
+        body = self.map.image_mesh if at_end else self.map.mesh
+        return KnownScan(labels.name, labels.grid, frozenset({labels.sha256, image} - {""}), body)
+
     @property
     def scans(self) -> str:
         """Both scans of the folder, in words."""
@@ -72,10 +82,21 @@ class Way:
     legs : tuple of Leg
     findings : tuple of Finding
         Which folders were turned round to make them join.
+    reverse : bool
+        True when the user asked for the way from its end to its start.
     """
 
     legs: tuple[Leg, ...]
     findings: tuple[Finding, ...] = ()
+    reverse: bool = False
+
+    @property
+    def ends(self) -> tuple[KnownScan, KnownScan]:
+        """What is known of the scans at its start and at its end."""
+        start, end = self.legs[0].known(at_end=False), self.legs[-1].known(at_end=True)
+        if self.reverse:
+            return replace(start, side="target"), replace(end, side="source")
+        return replace(start, side="source"), replace(end, side="target")
 
     @property
     def start(self) -> LabelVolume:
@@ -95,7 +116,7 @@ class Way:
 
     def reversed(self) -> Way:
         """From the end to the start."""
-        return Way(tuple(leg.reversed() for leg in reversed(self.legs)), self.findings)
+        return Way(tuple(leg.reversed() for leg in reversed(self.legs)), self.findings, not self.reverse)
 
 
 def read_way(through: Sequence[Path], *, reverse: bool = False, progress: Progress = silent) -> Way:
