@@ -54,3 +54,20 @@ def whole_number(least: int) -> Callable[[str], int]:
         return int(text)
 
     return read
+
+
+def uid(text: str) -> str:
+    """A unique identifier of DICOM, for argparse.
+
+    Raises
+    ------
+    argparse.ArgumentTypeError
+        Not numbers between dots.
+    """
+    from volmap.io.dicom.uids import required_uid
+    from volmap.types import InputError
+
+    try:
+        return required_uid(text)
+    except InputError as fault:
+        raise argparse.ArgumentTypeError(fault.sentence) from fault

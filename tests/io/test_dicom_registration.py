@@ -7,9 +7,9 @@ trilinear interpolation of what was written must give it at any point, to float3
 import numpy as np
 import pydicom
 import pytest
+from dicom_pull import pulled
 from dicom_standard import REGISTRATION, faults, faults_by_hand
 from pydicom import config
-from scipy.interpolate import RegularGridInterpolator
 
 from volmap.io.dicom.laying import squared
 from volmap.io.dicom.registration import SOP_CLASS, write_registration
@@ -57,28 +57,6 @@ def backward(matrix, shape=(12, 11, 9)):
     u = (inverse(y) - y).reshape(*shape, 3).astype(np.float32)
     u[0, 0, 0] = np.nan
     return GridField(grid, u, "target", "source")
-
-
-def pulled(path, points_lps):
-    """Where registered points come from, by PS3.3 C.20.3 alone: plain pydicom, numpy and SciPy; LPS."""
-    item = pydicom.dcmread(path).DeformableRegistrationSequence[0]
-    matrices = [
-        np.array(part[0].FrameOfReferenceTransformationMatrix, float).reshape(4, 4)
-        for part in (
-            item.PreDeformationMatrixRegistrationSequence,
-            item.PostDeformationMatrixRegistrationSequence,
-        )
-    ]
-    grid = item.DeformableRegistrationGridSequence[0]
-    x, y = np.array(grid.ImageOrientationPatient, float).reshape(2, 3)
-    steps = np.stack([x, y, np.cross(x, y)], axis=1) * np.array(grid.GridResolution)
-    nx, ny, nz = grid.GridDimensions
-    vectors = np.frombuffer(grid.VectorGridData, "<f4").reshape(nz, ny, nx, 3)
-    before = points_lps @ matrices[0][:3, :3].T + matrices[0][:3, 3]
-    index = np.linalg.solve(steps, (before - np.array(grid.ImagePositionPatient, float)).T).T
-    axes = [np.arange(n) for n in (nz, ny, nx)]
-    moved = before + RegularGridInterpolator(axes, vectors.astype(float))(index[:, ::-1])
-    return moved @ matrices[1][:3, :3].T + matrices[1][:3, 3]
 
 
 @pytest.fixture(autouse=True)

@@ -5,7 +5,7 @@ from volmap.carry.points import MovedPoints, carried_values, gradients_at, move_
 from volmap.carry.rules import Factors, apply_rule, rule_factors
 from volmap.carry.sampling import FieldError, RoundTrip, field_error, round_trip, sample_field
 from volmap.carry.settings import CarrySettings
-from volmap.carry.sidecar import field_sidecar
+from volmap.carry.sidecar import check_point, field_sidecar
 from volmap.carry.things import Carried, carry
 
 __all__ = [
@@ -20,6 +20,7 @@ __all__ = [
     "carried_solid",
     "carried_values",
     "carry",
+    "check_point",
     "field_error",
     "field_sidecar",
     "forward_field",

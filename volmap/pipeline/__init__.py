@@ -3,6 +3,7 @@
 from volmap.mapping import MapSettings
 from volmap.mesh import MeshSettings
 from volmap.pipeline.carrying import carry_file
+from volmap.pipeline.exporting import Exported, export_registration, export_segmentation
 from volmap.pipeline.files import (
     Screened,
     map_files,
@@ -17,6 +18,7 @@ from volmap.pipeline.pair import MapJob, map_pair
 from volmap.pipeline.reporting import affine_baseline, report_of, write_map
 
 __all__ = [
+    "Exported",
     "MapJob",
     "MapSettings",
     "MeshSettings",
@@ -26,6 +28,8 @@ __all__ = [
     "carry_file",
     "certify_folder",
     "evidence_of",
+    "export_registration",
+    "export_segmentation",
     "map_files",
     "map_pair",
     "mend_file",

@@ -75,20 +75,9 @@ def laid(grid: Grid, *, where: str) -> Laid:
     Raises
     ------
     InputError
-        Axes so far from orthogonal that squaring them would move a voxel by more than a hundredth of the
-        smallest voxel edge.
+        Axes that are not at right angles (`at_right_angles`).
     """
-    turned = grid.handedness == "left"
-    first = np.array([0.0, 0.0, grid.shape[2] - 1.0 if turned else 0.0])
-    origin = _LPS @ grid.to_world(first[None])[0]
-    spacing = grid.spacing
-    steps = _LPS @ (grid.affine[:3, :3] / spacing) @ np.diag([1.0, 1.0, -1.0 if turned else 1.0])
-    axes = _rotation(steps)
-    if np.abs(axes - steps).max() < _NOISE:
-        axes = steps
-    reach = (np.array(grid.shape) - 1.0) * spacing
-    moved_mm = np.linalg.norm((axes - steps) * reach, axis=0).sum()
-    if moved_mm > _BENT_SHARE * spacing.min():
+    if not at_right_angles(grid):
         raise InputError(
             "the axes of its grid are not orthogonal, which DICOM cannot hold",
             where=where,
@@ -97,7 +86,21 @@ def laid(grid: Grid, *, where: str) -> Laid:
             remedy="resample it onto a grid with right angles first (labels by nearest neighbour)",
             refused=True,
         )
-    return Laid(grid.shape, origin, axes, spacing, turned)
+    turned = grid.handedness == "left"
+    first = np.array([0.0, 0.0, grid.shape[2] - 1.0 if turned else 0.0])
+    steps = _LPS @ (grid.affine[:3, :3] / grid.spacing) @ np.diag([1.0, 1.0, -1.0 if turned else 1.0])
+    axes = _rotation(steps)
+    if np.abs(axes - steps).max() < _NOISE:
+        axes = steps
+    return Laid(grid.shape, _LPS @ grid.to_world(first[None])[0], axes, grid.spacing, turned)
+
+
+def at_right_angles(grid: Grid) -> bool:
+    """True when squaring the axes moves no voxel by more than a hundredth of the smallest voxel edge."""
+    steps = grid.affine[:3, :3] / grid.spacing
+    reach_mm = (np.array(grid.shape) - 1.0) * grid.spacing
+    moved_mm = np.linalg.norm((_rotation(steps) - steps) * reach_mm, axis=0).sum()
+    return bool(moved_mm <= _BENT_SHARE * grid.spacing.min())
 
 
 def squared(grid: Grid) -> Grid:
