@@ -7,14 +7,23 @@ A format is a module with `read_labels_with_findings`, `read_image_with_findings
 from __future__ import annotations
 
 import os
+from types import ModuleType
 
 from volmap.io import nifti
+from volmap.io.dicom import volumes as dicom
+from volmap.io.dicom.opening import is_dicom
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.types.findings import Finding
 from volmap.types.volumes import ImageVolume, LabelVolume
 
 PathLike = str | os.PathLike[str]
 Findings = tuple[Finding, ...]
+_FORMATS = ((is_dicom, dicom),)  # who knows a file by its name or first bytes, and who reads it
+
+
+def _reader(path: PathLike) -> ModuleType:
+    """The module that reads what stands there; NIfTI's says what is wrong with anything else."""
+    return next((reader for known, reader in _FORMATS if known(path)), nifti)
 
 
 def read_labels(path: PathLike, reading: Reading = AS_IT_IS) -> LabelVolume:
@@ -53,7 +62,7 @@ def read_labels_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tu
     InputError
         As `read_labels`.
     """
-    return nifti.read_labels_with_findings(path, reading)
+    return _reader(path).read_labels_with_findings(path, reading)  # type: ignore[no-any-return]
 
 
 def read_image_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tuple[ImageVolume, Findings]:
@@ -64,7 +73,7 @@ def read_image_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tup
     InputError
         As `read_image`.
     """
-    return nifti.read_image_with_findings(path, reading)
+    return _reader(path).read_image_with_findings(path, reading)  # type: ignore[no-any-return]
 
 
 def read_volume_with_findings(
@@ -84,4 +93,4 @@ def read_volume_with_findings(
     InputError
         As `read_labels` and `read_image`.
     """
-    return nifti.read_volume_with_findings(path, reading, kind=kind)
+    return _reader(path).read_volume_with_findings(path, reading, kind=kind)  # type: ignore[no-any-return]

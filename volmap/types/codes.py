@@ -38,14 +38,17 @@ class LabelCodes:
         Of what sort it is, such as "Anatomical Structure".
     kind : Code
         What it is, such as "Liver".
+    region : Code, optional
+        Where it is, such as "Abdomen", if that is said.
     """
 
     category: Code
     kind: Code
+    region: Code | None = None
 
     def as_dict(self) -> dict[str, Any]:
         """Plain values, for JSON."""
-        return asdict(self)
+        return {key: code for key, code in asdict(self).items() if code is not None}
 
     @classmethod
     def of(cls, told: Mapping[str, Any]) -> LabelCodes:
@@ -57,7 +60,8 @@ class LabelCodes:
             Not as `as_dict` gives them.
         """
         try:
-            return cls(*(Code(**{k: str(v) for k, v in told[key].items()}) for key in ("category", "kind")))
+            keys = ("category", "kind", *(("region",) if told.get("region") else ()))
+            return cls(*(Code(**{k: str(v) for k, v in told[key].items()}) for key in keys))
         except (TypeError, KeyError, AttributeError) as fault:
             raise InputError(
                 "codes of a label are not as written", found=str(told)[:60], expected="category and kind"
