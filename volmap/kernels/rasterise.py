@@ -52,10 +52,10 @@ class _Drawing(NamedTuple):
 def _ready(
     index_points: NDArray[np.float64], tets: NDArray[np.int64], shape: tuple[int, int, int]
 ) -> _Drawing:
-    low = np.maximum(np.ceil(_corner_range(index_points, tets, np.minimum) - 1e-6), 0).astype(np.int32)
-    high = np.floor(_corner_range(index_points, tets, np.maximum) + 1e-6)
+    low = np.maximum(np.ceil(corner_range(index_points, tets, np.minimum) - 1e-6), 0).astype(np.int32)
+    high = np.floor(corner_range(index_points, tets, np.maximum) + 1e-6)
     high = np.minimum(high, np.array(shape) - 1).astype(np.int32)
-    return _Drawing(barycentric_rows(index_points, tets), low, high, *_planes(low, high, np.int64(shape[0])))
+    return _Drawing(barycentric_rows(index_points, tets), low, high, *tets_by_plane(low, high, np.int64(shape[0])))
 
 
 def tets_on_grid(
@@ -136,7 +136,7 @@ def values_by_slab(
         yield slab, found
 
 
-def _corner_range(
+def corner_range(
     points: NDArray[np.float64], tets: NDArray[np.int64], extreme: np.ufunc
 ) -> NDArray[np.float64]:
     """(m, 3) smallest or largest corner of each tet, without an (m, 4, 3) array."""
@@ -147,7 +147,7 @@ def _corner_range(
 
 
 @kernel
-def _planes(low, high, n_planes):  # type: ignore[no-untyped-def]
+def tets_by_plane(low, high, n_planes):  # type: ignore[no-untyped-def]
     """Counting sort of tets into the planes that they meet, ascending in each."""
     start = np.zeros(n_planes + 1, np.int64)
     members = np.empty(0, np.int32)
