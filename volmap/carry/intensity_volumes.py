@@ -1,0 +1,121 @@
+"""Images, vectors and tensors on voxel grids, through the exact inverse."""
+
+from __future__ import annotations
+
+from typing import Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from volmap.carry.preimages import covering, preimages
+from volmap.carry.rules import apply_rule
+from volmap.carry.splines import Interpolator, interpolator
+from volmap.types import Finding, Grid, ImageVolume, Rule, TensorVolume, VectorVolume, VolumeMap
+from volmap.types.quantities import require_rule
+
+Floats = NDArray[np.float64]
+ImageMode = Literal["linear", "cubic"]
+
+
+def pull_image(
+    volume: ImageVolume,
+    volume_map: VolumeMap,
+    onto: Grid,
+    *,
+    mode: ImageMode = "linear",
+    rule: Rule = Rule.VALUE,
+) -> tuple[ImageVolume, tuple[Finding, ...]]:
+    """Intensities on another grid: each voxel takes the interpolated value at its exact preimage.
+
+    Parameters
+    ----------
+    volume : ImageVolume
+        In the map's SOURCE.
+    volume_map : VolumeMap
+    onto : Grid
+        In the map's TARGET.
+    mode : 'linear' or 'cubic'
+        See `splines.interpolator`.
+    rule : Rule
+        'value': numbers are kept.  'density': divided by the volume ratio J of the tet that holds the
+        preimage, so that the integral over a piece of tissue is kept; over voxels, as far as sampling allows.
+
+    Returns
+    -------
+    ImageVolume
+        NaN outside the image of the body, and where the preimage is beyond the volume or beside a hole in it.
+    findings : tuple of Finding
+    """
+    require_rule(rule, 0, volume.name)
+    values, findings = _pull(volume.values[..., None], volume.grid, volume_map, onto, mode, rule, volume.name)
+    return ImageVolume(onto, values[..., 0], volume.unit, volume.name), findings
+
+
+def pull_vectors(
+    volume: VectorVolume, volume_map: VolumeMap, onto: Grid, *, rule: Rule, mode: ImageMode = "linear"
+) -> tuple[VectorVolume, tuple[Finding, ...]]:
+    """Vectors on another grid: components are interpolated at the exact preimage, then follow a rule.
+
+    Parameters
+    ----------
+    volume : VectorVolume
+        In the map's SOURCE.
+    volume_map : VolumeMap
+    onto : Grid
+        In the map's TARGET.
+    rule : Rule
+        One for vectors; F is that of the tet that holds the preimage.
+    mode : 'linear' or 'cubic'
+
+    Returns
+    -------
+    VectorVolume
+        NaN as in `pull_image`.
+    findings : tuple of Finding
+    """
+    require_rule(rule, 1, volume.name)
+    values, findings = _pull(volume.values, volume.grid, volume_map, onto, mode, rule, volume.name)
+    return VectorVolume(onto, values, volume.unit, volume.name), findings
+
+
+def pull_tensors(
+    volume: TensorVolume, volume_map: VolumeMap, onto: Grid, *, rule: Rule, mode: ImageMode = "linear"
+) -> tuple[TensorVolume, tuple[Finding, ...]]:
+    """Symmetric tensors on another grid; as `pull_vectors`."""
+    require_rule(rule, 2, volume.name)
+    values, findings = _pull(volume.values, volume.grid, volume_map, onto, mode, rule, volume.name)
+    return TensorVolume(onto, values, volume.unit, volume.name), findings
+
+
+def _pull(
+    values: NDArray[np.float32],
+    of: Grid,
+    volume_map: VolumeMap,
+    onto: Grid,
+    mode: ImageMode,
+    rule: Rule,
+    name: str,
+) -> tuple[NDArray[np.float32], tuple[Finding, ...]]:
+    """(I, J, K, c) components on the new grid."""
+    findings = covering(of, onto, volume_map, name)
+    carried = np.full((*onto.shape, values.shape[3]), np.nan, np.float32)
+    look: Interpolator = interpolator(values, mode)
+    for part in preimages(of, volume_map, onto, gradients=rule is not Rule.VALUE):
+        found = look(part.index)
+        if rule is not Rule.VALUE:
+            found = _ruled(rule, found, part.gradients, part.of_voxel)
+        carried[part.slab][part.known] = found
+    carried.setflags(write=False)
+    return carried, findings
+
+
+def _ruled(rule: Rule, found: Floats, gradients: Floats, of_voxel: NDArray[np.int64]) -> Floats:
+    """Components after the rule: 1 a scalar, 3 a vector, 6 a symmetric tensor."""
+    if found.shape[1] == 1:
+        return apply_rule(rule, found[:, 0], gradients, of_voxel)[:, None]
+    if found.shape[1] == 3:
+        return apply_rule(rule, found, gradients, of_voxel)
+    row, column = TensorVolume.ROWS, TensorVolume.COLUMNS
+    tensors = np.empty((len(found), 3, 3))
+    tensors[:, row, column] = tensors[:, column, row] = found
+    return apply_rule(rule, tensors, gradients, of_voxel)[:, row, column]
