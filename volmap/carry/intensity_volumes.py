@@ -2,19 +2,17 @@
 
 from __future__ import annotations
 
-from typing import Literal
-
 import numpy as np
 from numpy.typing import NDArray
 
 from volmap.carry.preimages import covering, preimages
 from volmap.carry.rules import apply_rule
+from volmap.carry.settings import ImageMode
 from volmap.carry.splines import Interpolator, interpolator
 from volmap.types import Finding, Grid, ImageVolume, Rule, TensorVolume, VectorVolume, VolumeMap
 from volmap.types.quantities import require_rule
 
 Floats = NDArray[np.float64]
-ImageMode = Literal["linear", "cubic"]
 
 
 def pull_image(
@@ -101,7 +99,7 @@ def _pull(
     carried = np.full((*onto.shape, values.shape[3]), np.nan, np.float32)
     look: Interpolator = interpolator(values, mode)
     for part in preimages(of, volume_map, onto, gradients=rule is not Rule.VALUE):
-        found = look(part.index)
+        found = look(part.at)
         if rule is not Rule.VALUE:
             found = _ruled(rule, found, part.gradients, part.of_voxel)
         carried[part.slab][part.known] = found

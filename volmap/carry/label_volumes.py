@@ -2,23 +2,22 @@
 
 from __future__ import annotations
 
-from typing import Literal
-
 import numpy as np
 from numpy.typing import NDArray
 
 from volmap.carry.fields import tets_at_centres
 from volmap.carry.preimages import covering, preimages
+from volmap.carry.settings import LabelMode
 from volmap.kernels.nearest import likeliest_labels, nearest_labels
 from volmap.kernels.partial_volumes import partial_volumes
 from volmap.types import Finding, Grid, LabelShares, LabelVolume, Level, TetMesh, VolumeMap
 
-LabelMode = Literal["nearest", "one-hot", "shares"]
 LABEL_SENTENCES: dict[str, str] = {
     "nearest": "each voxel has the label of the source voxel that its centre's exact preimage falls in",
     "one-hot": (
-        "each voxel has the label whose indicator (1 where it is, 0 elsewhere), interpolated trilinearly at its "
-        "centre's exact preimage, is largest; a tie goes to the nearest voxel's label, else the smallest number"
+        "each voxel has the label whose indicator (1 where it is, 0 elsewhere), interpolated trilinearly at "
+        "its centre's exact preimage, is largest; a tie goes to the nearest voxel's label, else the smallest "
+        "number"
     ),
     "shares": (
         "each voxel has for each label the part of its volume that the label fills: source voxels taken as "
@@ -57,7 +56,7 @@ def pull_labels(
     labels = np.zeros(onto.shape, np.uint16)
     look = likeliest_labels if mode == "one-hot" else nearest_labels
     for part in preimages(volume.grid, volume_map, onto):
-        labels[part.slab][part.known] = look(volume.labels, part.index)
+        labels[part.slab][part.known] = look(volume.labels, part.at)
     labels.setflags(write=False)
     carried = LabelVolume(onto, labels, volume.names, volume.name, volume.codes)
     return carried, findings + _losses(volume, carried.present, volume_map.mesh)

@@ -24,7 +24,7 @@ class Preimages(NamedTuple):
         Along i.
     known : (slab, J, K) bool
         The voxels whose centre lies in the image of the body.
-    index : (n, 3) float64
+    at : (n, 3) float64
         Their preimages, as continuous voxel indices of the old grid.
     gradients : (m, 3, 3) float64
         F, ``dy = F dx``, of the tets they lie in.
@@ -34,7 +34,7 @@ class Preimages(NamedTuple):
 
     slab: slice
     known: NDArray[np.bool_]
-    index: Floats
+    at: Floats
     gradients: Floats
     of_voxel: NDArray[np.int64]
 

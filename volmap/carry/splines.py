@@ -29,8 +29,8 @@ def interpolator(values: NDArray[np.float32], mode: str) -> Interpolator:
         NaN where not defined.
     mode : 'linear' or 'cubic'
         'cubic' is the tensor product of cubic B-splines whose coefficients are found by prefiltering (Unser,
-        IEEE Signal Process. Mag. 16(6), 1999), so that they pass through the values; the volume is continued by
-        mirroring at the outermost centres.  Coefficients depend on all values around, so for them NaN
+        IEEE Signal Process. Mag. 16(6), 1999), so that they pass through the values; the volume is continued
+        by mirroring at the outermost centres.  Coefficients depend on all values around, so for them NaN
         takes the value of the nearest voxel that has one.  Cubic values may overshoot at edges.
     """
     if mode == "linear":

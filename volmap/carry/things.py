@@ -9,9 +9,10 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from volmap.carry.intensity_volumes import pull_image, pull_tensors, pull_vectors
+from volmap.carry.label_volumes import label_shares, pull_labels
 from volmap.carry.points import MovedPoints, move_points
 from volmap.carry.settings import AS_USUAL, CarrySettings
-from volmap.carry.volumes import pull_image, pull_labels
 from volmap.types import (
     Finding,
     Grid,
@@ -21,10 +22,14 @@ from volmap.types import (
     Landmarks,
     Level,
     MapChain,
+    Rule,
     Surface,
+    TensorVolume,
     TetMesh,
+    VectorVolume,
     VolumeMap,
 )
+from volmap.types.quantities import rules_of_rank
 
 
 @dataclass(frozen=True)
@@ -111,7 +116,10 @@ def _carry_labels(
     onto: Grid | None = None,
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
-    return Carried(*pull_labels(thing, _directed(volume_map, reverse), _required(onto, thing.name)))
+    directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
+    if settings.labels == "shares":
+        return Carried(*label_shares(thing, directed, onto))
+    return Carried(*pull_labels(thing, directed, onto, mode=settings.labels))
 
 
 @carry.register
@@ -123,7 +131,37 @@ def _carry_image(
     onto: Grid | None = None,
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
-    return Carried(*pull_image(thing, _directed(volume_map, reverse), _required(onto, thing.name)))
+    directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
+    rule = settings.rule or Rule.VALUE
+    return Carried(*pull_image(thing, directed, onto, mode=settings.image, rule=rule))
+
+
+@carry.register
+def _carry_vectors(
+    thing: VectorVolume,
+    volume_map: VolumeMap,
+    *,
+    reverse: bool = False,
+    onto: Grid | None = None,
+    settings: CarrySettings = AS_USUAL,
+) -> Carried:
+    directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
+    rule = _stated(settings.rule, thing.name)
+    return Carried(*pull_vectors(thing, directed, onto, mode=settings.image, rule=rule))
+
+
+@carry.register
+def _carry_tensors(
+    thing: TensorVolume,
+    volume_map: VolumeMap,
+    *,
+    reverse: bool = False,
+    onto: Grid | None = None,
+    settings: CarrySettings = AS_USUAL,
+) -> Carried:
+    directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
+    rule = _stated(settings.rule, thing.name)
+    return Carried(*pull_tensors(thing, directed, onto, mode=settings.image, rule=rule))
 
 
 @carry.register
@@ -172,6 +210,18 @@ def _required(onto: Grid | None, where: str) -> Grid:
             remedy="name a scan of the space the volume goes to",
         )
     return onto
+
+
+def _stated(rule: Rule | None, where: str) -> Rule:
+    """Vectors and tensors change when they are carried: how is for the user to say."""
+    if rule is None:
+        raise InputError(
+            "needs a rule to be carried by",
+            where=where,
+            expected=" or ".join(r.value for r in rules_of_rank(1)),
+            remedy="turn keeps lengths and eigenvalues; line, gradient and flux are told by the guide",
+        )
+    return rule
 
 
 def _landmark_findings(thing: Landmarks, moved: MovedPoints) -> tuple[Finding, ...]:

@@ -36,7 +36,7 @@ def nearest_labels(labels: NDArray[np.uint16], index: NDArray[np.float64]) -> ND
 
 
 def likeliest_labels(labels: NDArray[np.uint16], index: NDArray[np.float64]) -> NDArray[np.uint16]:
-    """The label whose indicator (1 where it is, 0 elsewhere), interpolated trilinearly, is largest at a place.
+    """The label whose indicator (1 where it is, 0 elsewhere), interpolated trilinearly, is largest.
 
     No volume of indicators is made: the weights of the eight voxels around a place are added label by label.
     0 takes part like any label.  A tie goes to the label `nearest_labels` would give, if it is among the
@@ -79,7 +79,7 @@ def _look_up(first, last, labels, index, found):  # type: ignore[no-untyped-def]
 
 @kernel
 def _vote(first, last, labels, index, found):  # type: ignore[no-untyped-def]
-    """The voxel that holds the place votes first; another label needs more, or as much and a smaller number."""
+    """The voxel that holds the place votes first; another label needs more votes, or a smaller number."""
     low, high, share = np.empty(3, np.int64), np.empty(3, np.int64), np.empty(3)
     seen, votes = np.empty(8, np.uint16), np.empty(8)
     for n in range(first, last):

@@ -161,119 +161,155 @@ def _visit(  # type: ignore[no-untyped-def]
     Plane 0 of `state` and `place` is `begin`.
     """
     cutting = shares.shape[0] > 0
-    gradient, half, at = np.empty((4, 3)), np.empty(4), np.empty(4)
-    back, reach, centre, away = np.empty((3, 3)), np.empty(3), np.empty(3), np.empty(3)
-    least, most, bottom, top = np.empty(3), np.empty(3), np.empty(3, np.int64), np.empty(3, np.int64)
-    stack, spare = np.empty((_ROOM, 4, 3)), np.empty((_ROOM, 4, 3))
-    piece, corners = np.empty((4, 3)), np.empty((6, 3))
-    height, order = np.empty(4), np.empty(4, np.int64)
+    gradient, half, at, away = np.empty((4, 3)), np.empty(4), np.empty(4), np.empty(3)
+    back, box, centre = np.empty((3, 3)), np.empty((3, 3)), np.empty(3)
+    ends, order = np.empty((2, 3), np.int64), np.empty(4, np.int64)
+    stack, spare, corners = np.empty((_ROOM, 4, 3)), np.empty((_ROOM, 4, 3)), np.empty((6, 3))
     for p in range(first, last):
         for m in range(start[begin + p], start[begin + p + 1]):
             t = members[m]
             if np.isnan(rows[t, 0, 0]):
                 continue  # no volume
-            for r in range(4):
-                half[r] = 0.0
-                for d in range(3):
-                    gradient[r, d] = rows[t, r - 1, d] if r else -rows[t, 0, d] - rows[t, 1, d] - rows[t, 2, d]
-                    half[r] += 0.5 * abs(gradient[r, d])
-            for d in range(3):
-                least[d] = most[d] = origins[tets[t, 0], d]
-                reach[d] = 0.0
-                for e in range(3):
-                    least[d] = min(least[d], origins[tets[t, e + 1], d])
-                    most[d] = max(most[d], origins[tets[t, e + 1], d])
-                    back[d, e] = 0.0
-                    for r in range(1, 4):
-                        rise = origins[tets[t, r], d] - origins[tets[t, 0], d]
-                        back[d, e] += rise * gradient[r, e]
-                    reach[d] += 0.5 * abs(back[d, e])
-            determinant = 0.0
-            for d in range(3):
-                e, f = (d + 1) % 3, (d + 2) % 3
-                determinant += back[0, d] * (back[1, e] * back[2, f] - back[1, f] * back[2, e])
-            per_volume = 1.0 / (6.0 * abs(determinant))
+            per_volume = _open_up(rows, tets, origins, t, gradient, half, back, box)
             away[0] = begin + p - rows[t, 3, 0]
             for j in range(low[t, 1], high[t, 1] + 1):
                 away[1] = j - rows[t, 3, 1]
                 for k in range(low[t, 2], high[t, 2] + 1):
                     away[2] = k - rows[t, 3, 2]
                     now = state[p, j, k]
-                    if (cutting and now < 0) or now == _MIXED:
+                    if (now < 0 and cutting) or now == _MIXED:
                         continue
-                    apart, at_edge, inside = False, False, True
-                    for r in range(4):
-                        at[r] = 0.0 if r else 1.0
-                        for d in range(3):
-                            at[r] += gradient[r, d] * away[d]
-                        apart |= at[r] + half[r] < _NOTHING
-                        at_edge |= at_hull[t, r] and at[r] - half[r] < -INSIDE
-                        inside &= at[r] >= INSIDE
-                    if apart:
+                    where = _where(gradient, half, away, at_hull, t, at)
+                    if where < 0:
                         continue
                     for d in range(3):
                         centre[d] = origins[tets[t, 0], d]
                         for e in range(3):
                             centre[d] += back[d, e] * away[e]
-                    if not cutting:
-                        place[p, j, k] |= (_AT_HULL if at_edge else 0) | (_CENTRE_INSIDE if inside else 0)
-                        for d in range(3):
-                            below = max(centre[d] - reach[d], least[d])
-                            above = min(centre[d] + reach[d], most[d])
-                            bottom[d], top[d] = np.floor(below + 0.5), np.ceil(above - 0.5)
-                        found = _only(codes, bottom, top)
-                        state[p, j, k] = found if now == _UNSEEN or now == found else _MIXED
+                    if cutting:
+                        n = _in_tet(gradient, half, at, order, corners, stack, spare)
+                        for q in range(n):
+                            _to_origin(stack[q], centre, back, spare[0])
+                            _share_out(codes, order, corners, ends, spare, per_volume, shares[now])
                         continue
-                    n = 5
-                    for q in range(5):
-                        for v in range(4):
-                            for d in range(3):
-                                stack[q, v, d] = _CUBE[q, v, d]
-                    for r in range(4):
-                        if at[r] - half[r] >= 0.0:
-                            continue
-                        left, n = n, 0
-                        for q in range(left):
-                            for v in range(4):
-                                height[v] = at[r]
-                                for d in range(3):
-                                    height[v] += gradient[r, d] * stack[q, v, d]
-                            n = _keep(stack[q], height, 1.0, order, corners, spare, n)
-                        stack, spare = spare, stack
-                    for q in range(n):
-                        for v in range(4):
-                            for d in range(3):
-                                spare[0, v, d] = centre[d]
-                                for e in range(3):
-                                    spare[0, v, d] += back[d, e] * stack[q, v, e]
-                        waiting = 1
-                        while waiting > 0:
-                            waiting -= 1
-                            for v in range(4):
-                                for d in range(3):
-                                    piece[v, d] = spare[waiting, v, d]
-                            axis = _range(piece, bottom, top)
-                            found = _only(codes, bottom, top)
-                            if found >= 0:
-                                shares[now, found] += _six_volumes(piece) * per_volume
-                                continue
-                            middle = (bottom[axis] + top[axis]) // 2 + 0.5
-                            for v in range(4):
-                                height[v] = piece[v, axis] - middle
-                            waiting = _keep(piece, height, 1.0, order, corners, spare, waiting)
-                            waiting = _keep(piece, height, -1.0, order, corners, spare, waiting)
+                    place[p, j, k] |= where
+                    for d in range(3):
+                        ends[0, d] = np.floor(max(centre[d] - box[0, d], box[1, d]) + 0.5)
+                        ends[1, d] = np.ceil(min(centre[d] + box[0, d], box[2, d]) - 0.5)
+                    found = _only(codes, ends)
+                    state[p, j, k] = found if now == _UNSEEN or found == now else _MIXED
 
 
 @inner_kernel
-def _only(codes, bottom, top):  # type: ignore[no-untyped-def]
+def _open_up(rows, tets, origins, t, gradient, half, back, box):  # type: ignore[no-untyped-def]
+    """What is the same for all voxels of a tet; returns the volume in target voxels of a sixth source voxel.
+
+    Fills the gradients of the four barycentric coordinates; ``half``, by how much each differs at most in a
+    voxel from its value at the centre; ``back``, which leads from target to source indices; and ``box``: how
+    far a voxel reaches from its centre's preimage, and the least and largest index in the tet.
+    """
+    for r in range(4):
+        half[r] = 0.0
+        for d in range(3):
+            gradient[r, d] = rows[t, r - 1, d] if r else -rows[t, 0, d] - rows[t, 1, d] - rows[t, 2, d]
+            half[r] += 0.5 * abs(gradient[r, d])
+    for d in range(3):
+        box[0, d], box[1, d], box[2, d] = 0.0, origins[tets[t, 0], d], origins[tets[t, 0], d]
+        for r in range(1, 4):
+            box[1, d] = min(box[1, d], origins[tets[t, r], d])
+            box[2, d] = max(box[2, d], origins[tets[t, r], d])
+        for e in range(3):
+            back[d, e] = 0.0
+            for r in range(1, 4):
+                back[d, e] += (origins[tets[t, r], d] - origins[tets[t, 0], d]) * gradient[r, e]
+            box[0, d] += 0.5 * abs(back[d, e])
+    determinant = 0.0
+    for d in range(3):
+        e, f = (d + 1) % 3, (d + 2) % 3
+        determinant += back[0, d] * (back[1, e] * back[2, f] - back[1, f] * back[2, e])
+    return 1.0 / (6.0 * abs(determinant))
+
+
+@inner_kernel
+def _where(gradient, half, away, at_hull, t, at):  # type: ignore[no-untyped-def]
+    """Fill in the barycentric coordinates of a voxel's centre; bits of its place, -1 when it is apart."""
+    where = _CENTRE_INSIDE
+    for r in range(4):
+        at[r] = 0.0 if r else 1.0
+        for d in range(3):
+            at[r] += gradient[r, d] * away[d]
+        if at[r] + half[r] < _NOTHING:
+            return -1
+        if at[r] < INSIDE:
+            where &= _AT_HULL
+        if at_hull[t, r] and at[r] - half[r] < -INSIDE:
+            where |= _AT_HULL
+    return where
+
+
+@inner_kernel
+def _in_tet(gradient, half, at, order, corners, stack, spare):  # type: ignore[no-untyped-def]
+    """Cut a voxel with a tet: pieces on `stack`, from the voxel's centre; returns their number."""
+    n = 5
+    for q in range(n):
+        for v in range(4):
+            for d in range(3):
+                stack[q, v, d] = _CUBE[q, v, d]
+    for r in range(4):
+        if at[r] - half[r] >= 0.0:
+            continue
+        left = 0
+        for q in range(n):
+            left = _keep(stack[q], gradient[r], at[r], 1.0, order, corners, spare, left)
+        n = left
+        for q in range(n):
+            for v in range(4):
+                for d in range(3):
+                    stack[q, v, d] = spare[q, v, d]
+    return n
+
+
+@inner_kernel
+def _to_origin(piece, centre, back, moved):  # type: ignore[no-untyped-def]
+    """A piece of a target voxel in source indices."""
+    for v in range(4):
+        for d in range(3):
+            moved[v, d] = centre[d]
+            for e in range(3):
+                moved[v, d] += back[d, e] * piece[v, e]
+
+
+@inner_kernel
+def _share_out(codes, order, corners, ends, stack, per_volume, shares):  # type: ignore[no-untyped-def]
+    """Cut the piece on `stack` between source voxels until each part lies in voxels of one label; add up."""
+    normal, piece, waiting = np.zeros(3), np.empty((4, 3)), 1
+    while waiting > 0:
+        waiting -= 1
+        for v in range(4):
+            for d in range(3):
+                piece[v, d] = stack[waiting, v, d]
+        axis = _range(piece, ends)
+        found = _only(codes, ends)
+        if found >= 0:
+            shares[found] += _six_volumes(piece) * per_volume
+            continue
+        height = -0.5 - (ends[0, axis] + ends[1, axis]) // 2
+        normal[axis] = 1.0
+        waiting = _keep(piece, normal, height, 1.0, order, corners, stack, waiting)
+        waiting = _keep(piece, normal, height, -1.0, order, corners, stack, waiting)
+        normal[axis] = 0.0
+
+
+@inner_kernel
+def _only(codes, ends):  # type: ignore[no-untyped-def]
     """The one code of all voxels in a range, 0 beyond the volume; `_MIXED` where there are two."""
     found = np.int64(_UNSEEN)
     for d in range(3):
-        if bottom[d] < 0 or top[d] >= codes.shape[d]:
-            found = 0
-    for i in range(max(bottom[0], 0), min(top[0] + 1, codes.shape[0])):
-        for j in range(max(bottom[1], 0), min(top[1] + 1, codes.shape[1])):
-            for k in range(max(bottom[2], 0), min(top[2] + 1, codes.shape[2])):
+        if ends[0, d] < 0 or ends[1, d] >= codes.shape[d]:
+            found = np.int64(0)
+    for i in range(max(ends[0, 0], 0), min(ends[1, 0] + 1, codes.shape[0])):
+        for j in range(max(ends[0, 1], 0), min(ends[1, 1] + 1, codes.shape[1])):
+            for k in range(max(ends[0, 2], 0), min(ends[1, 2] + 1, codes.shape[2])):
                 code = np.int64(codes[i, j, k])
                 if found == _UNSEEN:
                     found = code
@@ -283,16 +319,16 @@ def _only(codes, bottom, top):  # type: ignore[no-untyped-def]
 
 
 @inner_kernel
-def _range(piece, bottom, top):  # type: ignore[no-untyped-def]
+def _range(piece, ends):  # type: ignore[no-untyped-def]
     """First and last voxel that a piece meets along each axis; returns the axis with the most of them."""
     axis = 0
     for d in range(3):
         least = most = piece[0, d]
         for v in range(1, 4):
             least, most = min(least, piece[v, d]), max(most, piece[v, d])
-        bottom[d] = np.floor(least + 0.5 + _TOUCHING)
-        top[d] = max(bottom[d], np.int64(np.ceil(most - 0.5 - _TOUCHING)))
-        if top[d] - bottom[d] > top[axis] - bottom[axis]:
+        ends[0, d] = np.floor(least + 0.5 + _TOUCHING)
+        ends[1, d] = max(ends[0, d], np.int64(np.ceil(most - 0.5 - _TOUCHING)))
+        if ends[1, d] - ends[0, d] > ends[1, axis] - ends[0, axis]:
             axis = d
     return axis
 
@@ -310,11 +346,14 @@ def _six_volumes(piece):  # type: ignore[no-untyped-def]
 
 
 @inner_kernel
-def _keep(piece, height, sign, order, corners, stack, n):  # type: ignore[no-untyped-def]
-    """Put on a stack of n tets what of a tet lies where ``sign * height > 0``; returns how many it holds."""
+def _keep(piece, normal, offset, sign, order, corners, stack, n):  # type: ignore[no-untyped-def]
+    """Put on a stack of n tets what of a tet lies on one side of a plane; returns how many it holds.
+
+    The side is where ``sign * (normal . x + offset) > 0``.
+    """
     kept, others = 0, 3
     for v in range(4):
-        if sign * height[v] > 0.0:
+        if sign * _height(piece[v], normal, offset) > 0.0:
             order[kept] = v
             kept += 1
         else:
@@ -329,7 +368,8 @@ def _keep(piece, height, sign, order, corners, stack, n):  # type: ignore[no-unt
         return n + 1
     for c in range(6):
         u, v = order[_ENDS[kept - 1, c, 0]], order[_ENDS[kept - 1, c, 1]]
-        share = 0.0 if u == v else height[u] / (height[u] - height[v])
+        here, there = _height(piece[u], normal, offset), _height(piece[v], normal, offset)
+        share = 0.0 if u == v else here / (here - there)
         for d in range(3):
             corners[c, d] = piece[u, d] + share * (piece[v, d] - piece[u, d])
     for q in range(1 if kept == 1 else 3):
@@ -339,3 +379,12 @@ def _keep(piece, height, sign, order, corners, stack, n):  # type: ignore[no-unt
                 stack[n, v, d] = corners[c, d]
         n += 1
     return n
+
+
+@inner_kernel
+def _height(point, normal, offset):  # type: ignore[no-untyped-def]
+    """How far a point lies beyond a plane, in lengths of the normal."""
+    total = offset
+    for d in range(3):
+        total += normal[d] * point[d]
+    return total

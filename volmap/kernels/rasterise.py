@@ -55,7 +55,9 @@ def _ready(
     low = np.maximum(np.ceil(corner_range(index_points, tets, np.minimum) - 1e-6), 0).astype(np.int32)
     high = np.floor(corner_range(index_points, tets, np.maximum) + 1e-6)
     high = np.minimum(high, np.array(shape) - 1).astype(np.int32)
-    return _Drawing(barycentric_rows(index_points, tets), low, high, *tets_by_plane(low, high, np.int64(shape[0])))
+    return _Drawing(
+        barycentric_rows(index_points, tets), low, high, *tets_by_plane(low, high, np.int64(shape[0]))
+    )
 
 
 def tets_on_grid(

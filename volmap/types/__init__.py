@@ -6,11 +6,13 @@ repairs nothing silently; its arrays are owned copies and read-only.
 
 from volmap.types.certificate import Certificate, Gate, Verdict
 from volmap.types.codes import Code, LabelCodes
+from volmap.types.component_volumes import TensorVolume, VectorVolume
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding, Level
 from volmap.types.given_boundary import GivenBoundary, GivingWay
 from volmap.types.grid import Grid
 from volmap.types.gridfield import GridField
+from volmap.types.label_shares import LabelShares
 from volmap.types.landmarks import LandmarkPairs, Landmarks
 from volmap.types.map_chain import MapChain
 from volmap.types.outcome import IterationRecord, Outcome, Status
@@ -34,6 +36,7 @@ __all__ = [
     "InputError",
     "IterationRecord",
     "LabelCodes",
+    "LabelShares",
     "LabelVolume",
     "LandmarkPairs",
     "Landmarks",
@@ -45,7 +48,9 @@ __all__ = [
     "Rule",
     "Status",
     "Surface",
+    "TensorVolume",
     "TetMesh",
+    "VectorVolume",
     "Verdict",
     "VolumeMap",
     "silent",
