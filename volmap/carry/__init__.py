@@ -1,6 +1,7 @@
 """Fields, and things carried through a map."""
 
 from volmap.carry.fields import backward_field, carried_solid, forward_field, volume_ratio_image
+from volmap.carry.loop_error import LoopError, loop_error
 from volmap.carry.points import MovedPoints, carried_values, gradients_at, move_points
 from volmap.carry.rules import Factors, apply_rule, rule_factors
 from volmap.carry.sampling import FieldError, RoundTrip, field_error, round_trip, sample_field
@@ -13,6 +14,7 @@ __all__ = [
     "CarrySettings",
     "Factors",
     "FieldError",
+    "LoopError",
     "MovedPoints",
     "RoundTrip",
     "apply_rule",
@@ -25,6 +27,7 @@ __all__ = [
     "field_sidecar",
     "forward_field",
     "gradients_at",
+    "loop_error",
     "move_points",
     "round_trip",
     "rule_factors",

@@ -135,7 +135,7 @@ def field_error(field: GridField, exact: VolumeMap, *, n_random: int = N_RANDOM,
     seed : int
         Same seed, same places.
     """
-    places, images = _test_places(exact, n_random, seed)
+    places, images = places_throughout(exact, n_random=n_random, seed=seed)
     found, inside = sample_field(field, places)
     if not inside.any():
         return FieldError(float("nan"), float("nan"), float("nan"), 0)
@@ -145,10 +145,22 @@ def field_error(field: GridField, exact: VolumeMap, *, n_random: int = N_RANDOM,
     )
 
 
-def _test_places(
-    exact: VolumeMap, n_random: int, seed: int
+def places_throughout(
+    exact: VolumeMap, *, n_random: int, seed: int
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Places in the mesh and, without any search, their exact images."""
+    """Places in the mesh and, without any search, their exact images.
+
+    Parameters
+    ----------
+    exact : VolumeMap
+    n_random : int
+    seed : int
+
+    Returns
+    -------
+    places, images : (n, 3) float64, mm
+        All points of the mesh, then a centroid a tet, then `n_random` places spread evenly by volume.
+    """
     tets, volumes = exact.mesh.tets, np.abs(exact.mesh.volumes)
     random = np.random.default_rng(seed)
     tet = np.searchsorted(np.cumsum(volumes), random.random(n_random) * volumes.sum())
