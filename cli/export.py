@@ -14,6 +14,7 @@ if TYPE_CHECKING:
 
 HELP = "a map folder as DICOM registration or segmentation, GIFTI surfaces, VTK solid"
 EXAMPLE = "volmap export map_0_1 --as registration --bring source --out visit0_into_visit1.dcm"
+IN_FRAMES = ("registration", "segmentation")
 OWN_OPTIONS = {"bring": "registration", "labels": "segmentation", "coding": "segmentation"}
 
 
@@ -24,8 +25,9 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         "--as",
         dest="kind",
         required=True,
-        choices=("registration", "segmentation"),
-        help="registration: the field (DICOM .dcm); segmentation: labels (DICOM .dcm)",
+        choices=("registration", "segmentation", "surfaces", "solid"),
+        help="registration: the field (DICOM, .dcm); segmentation: labels (DICOM, .dcm); surfaces: of each "
+        "label (a folder of GIFTI); solid: tets in both worlds with stretches and turns (a folder of VTU)",
     )
     parser.add_argument("--out", type=Path, required=True, metavar="PLACE", help="file or folder to write")
     parser.add_argument(
@@ -55,6 +57,8 @@ def arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(options: argparse.Namespace, console: Console) -> int:
     """Export one thing."""
+    if options.frames and options.kind not in IN_FRAMES:
+        raise UsageError("--frames belongs to what DICOM has, not to surfaces or a solid")
     for name, kind in OWN_OPTIONS.items():
         if getattr(options, name) is not None and options.kind != kind:
             raise UsageError(f"--{name} belongs to --as {kind}")
@@ -84,6 +88,9 @@ def _exported(options: argparse.Namespace, console: Console) -> Exported:
             overwrite=options.overwrite,
             progress=console.progress,
         )
+    if options.kind in ("surfaces", "solid"):
+        shapes = pipeline.export_surfaces if options.kind == "surfaces" else pipeline.export_solid
+        return shapes(options.folder, options.out, overwrite=options.overwrite, progress=console.progress)
     return pipeline.export_segmentation(
         options.folder,
         options.out,

@@ -7,6 +7,7 @@ from volmap.carry.rules import Factors, apply_rule, rule_factors
 from volmap.carry.sampling import FieldError, RoundTrip, field_error, round_trip, sample_field
 from volmap.carry.settings import CarrySettings
 from volmap.carry.sidecar import check_point, field_sidecar
+from volmap.carry.strain import Strain, strain_of
 from volmap.carry.things import Carried, carry
 
 __all__ = [
@@ -17,6 +18,7 @@ __all__ = [
     "LoopError",
     "MovedPoints",
     "RoundTrip",
+    "Strain",
     "apply_rule",
     "backward_field",
     "carried_solid",
@@ -32,5 +34,6 @@ __all__ = [
     "round_trip",
     "rule_factors",
     "sample_field",
+    "strain_of",
     "volume_ratio_image",
 ]

@@ -16,6 +16,7 @@ from volmap.pipeline.machine import use_threads
 from volmap.pipeline.opinion import SecondOpinion, certify_folder, evidence_of
 from volmap.pipeline.pair import MapJob, map_pair
 from volmap.pipeline.reporting import affine_baseline, report_of, write_map
+from volmap.pipeline.shapes import export_solid, export_surfaces
 
 __all__ = [
     "Exported",
@@ -30,6 +31,8 @@ __all__ = [
     "evidence_of",
     "export_registration",
     "export_segmentation",
+    "export_solid",
+    "export_surfaces",
     "map_files",
     "map_pair",
     "mend_file",

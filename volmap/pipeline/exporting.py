@@ -171,10 +171,10 @@ def _read(
         "source": uids_of_scan(folder.source.sha256, frame_uid=stated[0]),
         "target": uids_of_scan(folder.target.sha256, frame_uid=stated[1]),
     }
-    return folder, scans, _verdict_findings(folder, through)
+    return folder, scans, verdict_findings(folder, through)
 
 
-def _verdict_findings(folder: MapFolder, through: Path) -> tuple[Finding, ...]:
+def verdict_findings(folder: MapFolder, through: Path) -> tuple[Finding, ...]:
     """What leaves in another format leaves its certificate behind."""
     verdict = folder.certificate.verdict
     if verdict is not Verdict.FAIL:
