@@ -6,7 +6,7 @@ import argparse
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from .usage import share, whole_number
+from .usage import positive_number, whole_number
 
 if TYPE_CHECKING:
     from volmap.io.reading import Reading
@@ -17,9 +17,9 @@ def reading_arguments(parser: argparse.ArgumentParser, *, pair: bool = False) ->
     parser.add_argument("--names", type=Path, metavar="TABLE", help="names of labels (TSV, CSV: index, name)")
     parser.add_argument(
         "--threshold",
-        type=share,
+        type=positive_number,
         metavar="P",
-        help="probability from which on a voxel belongs to the label (0 to 1)",
+        help="value from which on a voxel belongs to the label, in the file's own numbers (0.5 of 1)",
     )
     for option in ("--source-frame", "--target-frame") if pair else ("--frame",):
         parser.add_argument(

@@ -28,20 +28,20 @@ def positive_mm(text: str) -> float:
     return value
 
 
-def share(text: str) -> float:
-    """A number above 0 and at most 1, for argparse.
+def positive_number(text: str) -> float:
+    """A number above 0, for argparse.
 
     Raises
     ------
     argparse.ArgumentTypeError
-        No number, or outside that range.
+        No number, not finite, or not above 0.
     """
     try:
         value = float(text)
     except ValueError:
         value = math.nan
-    if not 0.0 < value <= 1.0:
-        raise argparse.ArgumentTypeError(f"{text!r} is not a number above 0 and at most 1")
+    if not 0.0 < value < math.inf:
+        raise argparse.ArgumentTypeError(f"{text!r} is not a number above 0")
     return value
 
 

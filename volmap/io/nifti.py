@@ -15,10 +15,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.io.atomic import whole_file
-from volmap.io.label_names import read_label_names, sibling_names
-from volmap.io.nifti_header import DISPVECT, NiftiHeader, opened, read_header, read_voxels
+from volmap.io.nifti_header import DISPVECT, NiftiHeader, files_of, opened, read_header, read_voxels
 from volmap.io.opening import shown_name
-from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
+from volmap.io.reading import AS_IT_IS, Reading
+from volmap.io.stacks import Stack, as_float32, frames_wanted, image_volume, label_volume, scaled
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding
 from volmap.types.grid import Grid
@@ -29,7 +29,16 @@ from volmap.types.volumes import ImageVolume, LabelVolume
 PathLike = str | os.PathLike[str]
 _SCANNER = 1  # NIFTI_XFORM_SCANNER_ANAT
 _PACKING = 4  # gzip level
-_MOST_LABELS = 256
+_OF_SEVERAL_PARTS = {  # intent codes of nifti1.h whose values are parts of one thing
+    1004: "matrices",
+    1005: "symmetric matrices",
+    DISPVECT: "displacement vectors",
+    1007: "vectors",
+    1008: "points",
+    1010: "quaternions",
+    2003: "RGB colours",
+    2004: "RGBA colours",
+}
 
 
 def read_labels(path: PathLike, *, names: PathLike | None = None) -> LabelVolume:
@@ -59,16 +68,7 @@ def read_labels_with_findings(
     InputError
         As `read_labels`.
     """
-    header, stored = _read(path)
-    labels = whole_labels(_scaled(_one_frame(header, stored, reading.frame), header), header.name)
-    return _label_volume(path, header, labels, reading), header.findings
-
-
-def _label_volume(
-    path: PathLike, header: NiftiHeader, labels: NDArray[np.uint16], reading: Reading
-) -> LabelVolume:
-    table = sibling_names(path) if reading.names is None else read_label_names(reading.names)
-    return LabelVolume(Grid(labels.shape, header.affine), labels, table, header.name)
+    return label_volume(read_stack(path, reading), path, reading)
 
 
 def read_image(path: PathLike, *, unit: str = "") -> ImageVolume:
@@ -79,55 +79,7 @@ def read_image(path: PathLike, *, unit: str = "") -> ImageVolume:
     InputError
         Not readable as NIfTI, or not one number a voxel.
     """
-    return read_image_with_findings(path, unit=unit)[0]
-
-
-def read_image_with_findings(
-    path: PathLike, reading: Reading = AS_IT_IS, *, unit: str = ""
-) -> tuple[ImageVolume, tuple[Finding, ...]]:
-    """An intensity image, and what is odd about its header.
-
-    Raises
-    ------
-    InputError
-        As `read_image`.
-    """
-    header, stored = _read(path)
-    values = _as_float32(_scaled(_one_frame(header, stored, reading.frame), header))
-    return ImageVolume(Grid(values.shape, header.affine), values, unit, header.name), header.findings
-
-
-def read_volume_with_findings(
-    path: PathLike, reading: Reading = AS_IT_IS, *, kind: VolumeKind = "either"
-) -> tuple[LabelVolume | ImageVolume, tuple[Finding, ...]]:
-    """A volume of either kind, read once.
-
-    Parameters
-    ----------
-    path : path
-    reading : Reading
-    kind : 'labels', 'image' or 'either'
-        'either' takes whole numbers from 0 to 65535, at most 256 different ones, for labels.
-
-    Raises
-    ------
-    InputError
-        As `read_labels` and `read_image`.
-    """
-    header, stored = _read(path)
-    values = _scaled(_one_frame(header, stored, reading.frame), header)
-    if kind == "labels" or (kind == "either" and _could_be_labels(values)):
-        return _label_volume(path, header, whole_labels(values, header.name), reading), header.findings
-    image = ImageVolume(Grid(values.shape, header.affine), _as_float32(values), "", header.name)
-    return image, header.findings
-
-
-def _could_be_labels(values: NDArray[Any]) -> bool:
-    if values.dtype.kind == "f" and not (np.isfinite(values).all() and (values == np.rint(values)).all()):
-        return False
-    if not values.size or values.min() < 0 or values.max() > 65535:
-        return False
-    return bool(np.count_nonzero(np.bincount(values.astype(np.uint16).ravel())) <= _MOST_LABELS)
+    return image_volume(read_stack(path), unit=unit)
 
 
 def read_field(path: PathLike, *, grid_space: str = "source", points_into: str = "target") -> GridField:
@@ -139,7 +91,9 @@ def read_field(path: PathLike, *, grid_space: str = "source", points_into: str =
         Not readable as NIfTI, not a DISPVECT field of three components, or infinite or half-defined
         vectors in it.
     """
-    header, stored = _read(path)
+    with opened(path) as (stream, file):
+        header = read_header(stream, file)
+        stored = read_voxels(header, stream, file, at=stream.tell())
     shape = header.shape + (1,) * (7 - len(header.shape))
     if header.intent != DISPVECT or shape[3:] != (1, 3, 1, 1):
         raise InputError(
@@ -148,7 +102,7 @@ def read_field(path: PathLike, *, grid_space: str = "source", points_into: str =
             found=f"intent {header.intent}, dimensions {' x '.join(map(str, header.shape))}",
             expected="intent 1006 (DISPVECT), dimensions I x J x K x 1 x 3",
         )
-    u = _as_float32(_scaled(stored.reshape((*shape[:3], 3), order="F"), header))
+    u = as_float32(scaled(stored, header.slope, header.inter))
     if np.isinf(u).any():
         raise InputError("the field holds infinite displacements", where=header.name, refused=True)
     try:
@@ -192,87 +146,50 @@ def write_field(path: PathLike, field: GridField, *, overwrite: bool = False) ->
     _write(path, voxels, field.grid, intent=DISPVECT, overwrite=overwrite)
 
 
-def whole_labels(values: NDArray[Any], name: str) -> NDArray[np.uint16]:
-    """Values as labels, or the reason why they are none.
-
-    Parameters
-    ----------
-    values : array of whole or real numbers
-    name : str
-        File name for the error.
+def read_stack(path: PathLike, reading: Reading = AS_IT_IS) -> Stack:
+    """The numbers of a file, one frame of them or (with a threshold and no frame) all.
 
     Raises
     ------
     InputError
-        NaN or infinity, fractions, below 0, above 65535.
+        Not readable as NIfTI, vectors, several frames and none chosen, or no such frame.
     """
-    if values.dtype.kind == "f":
-        _refuse(not np.isfinite(values).all(), "label values that are not finite (NaN or infinity)", name)
-        fractions = values != np.rint(values)
-        if fractions.any():
-            share = f"fractions in {100 * fractions.mean():.2g} % of the voxels"
-            worst = values.flat[np.abs(values - np.rint(values)).argmax()]
-            found = f"{share}, {worst:.6g} for one"
-            _refuse(True, "label values that are not whole numbers", name, found=found)
-    least, most = (int(values.min()), int(values.max())) if values.size else (0, 0)
-    _refuse(least < 0, "label values below 0", name, found=str(least))
-    _refuse(most > 65535, "label values above 65535", name, found=str(most))
-    return values.astype(np.uint16)
+    first, second = files_of(path)
+    findings: tuple[Finding, ...] = ()
+    frames: range | None = None
+    with opened(first) as (stream, file):
+        header = read_header(stream, file)
+        frames, findings = _frames(header, reading)
+        if not header.apart:
+            stored = read_voxels(header, stream, file, at=stream.tell(), frames=frames)
+    if header.apart:
+        with opened(second or first) as (stream, file):
+            stored = read_voxels(header, stream, file, at=0, frames=frames)
+    values = scaled(stored, header.slope, header.inter)
+    return Stack(header.name, values, header.affine, header.findings + findings)
 
 
-def _refuse(fault: bool, what: str, name: str, *, found: str = "") -> None:
-    if fault:
+def _frames(header: NiftiHeader, reading: Reading) -> tuple[range, tuple[Finding, ...]]:
+    kind = _OF_SEVERAL_PARTS.get(header.intent, "")
+    if kind and header.n_frames > 1:
         raise InputError(
-            f"holds {what}",
-            where=name,
-            found=found,
-            expected="whole numbers from 0 to 65535",
-            remedy="give the segmentation itself, not an image; resample labels only by nearest neighbour",
+            "is not one number a voxel",
+            where=header.name,
+            found=kind,
+            expected="labels, intensities or probabilities",
+            remedy="read vectors and tensors as such, not one component of them",
             refused=True,
         )
-
-
-def _read(path: PathLike) -> tuple[NiftiHeader, NDArray[Any]]:
-    with opened(path) as (stream, file):
-        header = read_header(stream, file)
-        return header, read_voxels(header, stream, stream.tell())
-
-
-def _one_frame(header: NiftiHeader, stored: NDArray[Any], frame: int | None) -> NDArray[Any]:
-    """The one volume of a file, or the one that was asked for; frames count in the order they are stored."""
-    frames = stored.reshape((*header.shape[:3], -1), order="F")
-    n_frames = frames.shape[3]
-    if frame is None and n_frames > 1:
+    if sum(n > 1 for n in header.shape[3:]) > 1:
         raise InputError(
-            "the file holds more than one volume",
+            "its frames have several axes",
             where=header.name,
             found=" x ".join(map(str, header.shape)),
-            expected="three dimensions",
-            remedy="say which frame is wanted (--frame N, counted from 0)",
+            expected="at most four dimensions",
+            remedy="write the frames that are wanted into a file of their own",
             refused=True,
         )
-    if frame is not None and not 0 <= frame < n_frames:
-        raise InputError(
-            "has no such frame",
-            where=header.name,
-            found=f"{n_frames} frame{'s' if n_frames > 1 else ''}",
-            expected=f"frame {frame}",
-            remedy="frames count from 0",
-            refused=True,
-        )
-    return frames[..., frame or 0]
-
-
-def _scaled(stored: NDArray[Any], header: NiftiHeader) -> NDArray[Any]:
-    if (header.slope, header.inter) == (1.0, 0.0):
-        return stored
-    with np.errstate(all="ignore"):
-        return np.asarray(stored.astype(np.float64) * header.slope + header.inter)
-
-
-def _as_float32(values: NDArray[Any]) -> NDArray[np.float32]:
-    with np.errstate(all="ignore"):
-        return values.astype(np.float32)
+    return frames_wanted(header.n_frames, reading, header.name)
 
 
 def _write(path: PathLike, voxels: NDArray[Any], grid: Grid, *, intent: int, overwrite: bool) -> None:

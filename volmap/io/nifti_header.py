@@ -6,6 +6,7 @@ Layout from the official headers nifti1.h (2003-2019) and nifti2.h (2014).
 from __future__ import annotations
 
 import gzip
+import math
 import os
 import zlib
 from collections.abc import Iterator
@@ -18,13 +19,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.io.opening import cannot_open, existing_file, shown_name
+from volmap.io.voxel_bytes import DEFLATE_AT_BEST, cut_short, read_exactly, require_end, require_room, skip
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding, Level
 from volmap.types.grid import Grid
 
 DISPVECT = 1006
-LARGEST_VOXELS = 2**31
-_DEFLATE_AT_BEST = 1032  # zlib cannot pack tighter than about 1032 to 1 (zlib.net, technical details)
+_FARTHEST = 2**30  # no header with all its extensions is longer than this
 _VOXEL_TYPES = {
     2: "u1", 4: "i2", 8: "i4", 16: "f4", 64: "f8", 256: "i1", 512: "u2", 768: "u4", 1024: "i8", 1280: "u8",
 }  # fmt: skip
@@ -49,6 +50,8 @@ class NiftiHeader:
         As stored, byte order included.
     offset : int
         First byte of the voxels.
+    apart : bool
+        True when the voxels are in a second file (.img).
     slope, inter : float
         ``value = slope * stored + inter``; 1 and 0 when the header gives none.
     affine : (4, 4) float64
@@ -61,18 +64,16 @@ class NiftiHeader:
     intent: int
     dtype: np.dtype[Any]
     offset: int
+    apart: bool
     slope: float
     inter: float
     affine: NDArray[np.float64]
     findings: tuple[Finding, ...]
 
     @property
-    def n_bytes(self) -> int:
-        """Bytes the voxels take."""
-        n = self.dtype.itemsize
-        for length in self.shape:
-            n *= length
-        return n
+    def n_frames(self) -> int:
+        """Volumes in the file, whatever axis after the third they are along."""
+        return math.prod(self.shape[3:])
 
 
 @contextmanager
@@ -96,7 +97,7 @@ def opened(path: str | os.PathLike[str]) -> Iterator[tuple[BinaryIO, Path]]:
             else:
                 yield raw, file
     except EOFError as fault:
-        raise _cut_short(where, "packed data that end early") from fault
+        raise cut_short(where, "packed data that end early") from fault
     except (gzip.BadGzipFile, zlib.error) as fault:
         raise InputError(
             "the packed data are damaged", where=where, remedy="copy or export the file again"
@@ -105,13 +106,40 @@ def opened(path: str | os.PathLike[str]) -> Iterator[tuple[BinaryIO, Path]]:
         raise cannot_open(path, fault) from fault
 
 
+def files_of(path: str | os.PathLike[str]) -> tuple[Path, Path | None]:
+    """The file with the header and, when the name is one of a pair (.hdr and .img), that with the voxels.
+
+    Raises
+    ------
+    InputError
+        Half of the pair is missing.
+    """
+    file = Path(path)
+    stem, packed = (file.name[:-3], True) if file.name.lower().endswith(".gz") else (file.name, False)
+    ending = Path(stem).suffix.lower()
+    if ending not in (".hdr", ".img"):
+        return file, None
+    existing_file(file)
+    partner = {".hdr": ".img", ".img": ".hdr"}[ending]
+    partner = partner.upper() if Path(stem).suffix.isupper() else partner
+    bare = Path(stem).stem + partner
+    names = [bare + ".gz", bare] if packed else [bare, bare + ".gz"]
+    beside = next((file.with_name(n) for n in names if file.with_name(n).is_file()), None)
+    if beside is None:
+        raise InputError(
+            "the other file of the pair is missing", where=shown_name(path), expected=bare,
+            remedy="keep both in one folder, or join them into one .nii",
+        )  # fmt: skip
+    return (file, beside) if ending == ".hdr" else (beside, file)
+
+
 def read_header(stream: BinaryIO, file: Path) -> NiftiHeader:
     """Read and check the header.
 
     Raises
     ------
     InputError
-        Not NIfTI, a part of it nonsense, no orientation, or more voxels than the file can hold.
+        Not NIfTI, a part of it nonsense, or no orientation.
     """
     where = shown_name(file)
     raw = _parsed(stream, where)
@@ -119,51 +147,54 @@ def read_header(stream: BinaryIO, file: Path) -> NiftiHeader:
     dtype = _dtype(raw, where)
     slope, inter = _scaling(raw, where)
     affine, findings = _orientation(raw, shape[:3], where)
-    header = NiftiHeader(
-        where, shape, int(raw["intent_code"]), dtype, _offset(raw, where), slope, inter, affine, findings
-    )
-    _require_room(header, stream, file)
-    return header
+    return NiftiHeader(
+        where, shape, int(raw["intent_code"]), dtype, _offset(raw, where), bool(raw["apart"]), slope, inter,
+        affine, findings,
+    )  # fmt: skip
 
 
-def read_voxels(header: NiftiHeader, stream: BinaryIO, at: int) -> NDArray[Any]:
-    """The stored numbers in the header's shape, not scaled.
+def read_voxels(
+    header: NiftiHeader, stream: BinaryIO, file: Path, *, at: int, frames: range | None = None
+) -> NDArray[Any]:
+    """The stored numbers, not scaled.
 
     Parameters
     ----------
+    header : NiftiHeader
+    stream, file
+        As `opened` gives them; of the second file when the voxels are apart.
     at : int
         Bytes of the stream read so far.
+    frames : range, optional
+        Neighbouring frames to read; all by default.
+
+    Returns
+    -------
+    (I, J, K, F) array
 
     Raises
     ------
     InputError
-        The file ends before the voxels do.
+        The file cannot hold the voxels, or ends before they do.
     """
-    _skip(stream, header.offset - at, header.name)
-    data = stream.read(header.n_bytes)
-    stream.read(1)  # at the end of packed data this checks their checksum
-    if len(data) < header.n_bytes:
-        raise _cut_short(header.name, f"{len(data)} of {header.n_bytes} bytes of voxels")
-    return np.frombuffer(data, header.dtype).reshape(header.shape, order="F")
-
-
-def _skip(stream: BinaryIO, n: int, where: str) -> None:
-    while n > 0:
-        got = len(stream.read(min(n, 2**20)))
-        if not got:
-            raise _cut_short(where, "no voxels at all")
-        n -= got
-
-
-def _cut_short(where: str, found: str) -> InputError:
-    return InputError(
-        "the file is cut short", where=where, found=found, remedy="copy or export the file again"
-    )
+    one = math.prod(header.shape[:3])
+    wanted = range(header.n_frames) if frames is None else frames
+    size, packed = file.stat().st_size, isinstance(stream, gzip.GzipFile)
+    require_room(
+        one * header.n_frames, header.dtype,
+        bytes_there=size if packed else max(size - header.offset, 0),
+        best_packing=DEFLATE_AT_BEST if packed else 1, where=shown_name(file), most=one * len(wanted),
+    )  # fmt: skip
+    skip(stream, header.offset + wanted.start * one * header.dtype.itemsize - at, shown_name(file))
+    data = read_exactly(stream, one * len(wanted) * header.dtype.itemsize, shown_name(file))
+    if wanted.stop == header.n_frames:
+        require_end(stream, shown_name(file))
+    return data.view(header.dtype).reshape((*header.shape[:3], len(wanted)), order="F")
 
 
 def _not_nifti(where: str, found: str) -> InputError:
     return InputError(
-        "is not a NIfTI file", where=where, found=found, expected="NIfTI-1 or NIfTI-2 (.nii or .nii.gz)",
+        "is not a NIfTI file", where=where, found=found, expected="NIfTI-1 or NIfTI-2",
         remedy="export the segmentation as NIfTI",
     )  # fmt: skip
 
@@ -179,18 +210,20 @@ def _parsed(stream: BinaryIO, where: str) -> dict[str, Any]:
     length = max(sizes & {348, 540})
     block = first + stream.read(length - 4)
     if len(block) < length:
-        raise _cut_short(where, f"{len(block)} of {length} bytes of header")
+        raise cut_short(where, f"{len(block)} of {length} bytes of header")
     magic = block[344:348] if length == 348 else block[4:12]
-    if magic[:3] in (b"ni1", b"ni2"):
+    apart = magic in (b"ni1\0", b"ni2\0\r\n\x1a\n")
+    if apart and Path(where.lower().removesuffix(".gz")).suffix != ".hdr":
         raise InputError(
-            "the voxels are in a second file (.hdr and .img)", where=where, remedy="join them into one .nii"
-        )
-    if magic not in (b"n+1\0", b"n+2\0\r\n\x1a\n"):
+            "the voxels are in a second file (.hdr and .img)", where=where,
+            remedy="name the .hdr of the pair, or join them into one .nii",
+        )  # fmt: skip
+    if not apart and magic not in (b"n+1\0", b"n+2\0\r\n\x1a\n"):
         raise _not_nifti(where, f"magic {magic!r}")
     order = "<" if int.from_bytes(first, "little") == length else ">"
     structure = kind(block, endianness=order, check=False).structarr
     raw: dict[str, Any] = {key: structure[key].tolist() for key in structure.dtype.names}
-    return raw | {"order": order, "length": length}
+    return raw | {"order": order, "length": length, "apart": apart}
 
 
 def _shape(raw: dict[str, Any], where: str) -> tuple[int, ...]:
@@ -230,8 +263,8 @@ def _dtype(raw: dict[str, Any], where: str) -> np.dtype[Any]:
 
 
 def _offset(raw: dict[str, Any], where: str) -> int:
-    offset, least = float(raw["vox_offset"]), int(raw["length"]) + 4
-    if not (least <= offset < 2**40 and offset == int(offset)):
+    offset, least = float(raw["vox_offset"]), 0 if raw["apart"] else int(raw["length"]) + 4
+    if not (least <= offset < _FARTHEST and offset == int(offset)):
         raise InputError(
             "the header does not say where the voxels begin", where=where, found=f"byte {offset:g}",
             expected=f"{least} or more",
@@ -348,21 +381,3 @@ def _disagreement(grid: Grid, raw: dict[str, Any], where: str) -> tuple[Finding,
 
 
 _ONE_ORIENTATION = "make sure which is right, then write a header that holds only that one"
-
-
-def _require_room(header: NiftiHeader, stream: BinaryIO, file: Path) -> None:
-    """Refuse, before any memory is taken, voxels that the file cannot hold."""
-    n_voxels = header.n_bytes // header.dtype.itemsize
-    size = file.stat().st_size
-    packed = isinstance(stream, gzip.GzipFile)
-    holds = size * _DEFLATE_AT_BEST if packed else size - header.offset
-    if holds < header.n_bytes:
-        raise _cut_short(
-            header.name, f"{size} bytes, which cannot hold the {n_voxels} voxels the header claims"
-        )
-    if n_voxels > LARGEST_VOXELS:
-        raise InputError(
-            "the volume is too large", where=header.name, found=f"{n_voxels} voxels",
-            expected=f"at most {LARGEST_VOXELS}", remedy="crop it to the organ, or use larger voxels",
-            refused=True,
-        )  # fmt: skip

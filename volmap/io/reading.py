@@ -20,7 +20,8 @@ class Reading:
     frame : int, optional
         Which volume of a file that holds several, counted from 0.
     threshold : float, optional
-        A probability or a share at and above which a voxel belongs to the label.
+        A probability or a share at and above which a voxel belongs to the label, in the file's own numbers:
+        of 1 in most files, of 100 or 255 in some.
     """
 
     names: Path | None = None

@@ -47,7 +47,7 @@ def read_closed_surface(
     file, where = existing_file(path), shown_name(path)
     mesh = parsed(file, where)
     points, triangles = _triangles(mesh, where)
-    points, triangles = _welded(points, triangles)
+    points, triangles, _ = welded(points, triangles)
     _require_closed(triangles, where)
     volume = _enclosed_mm3(points, triangles)
     if not abs(volume) > 1e-9 * float(np.ptp(points, axis=0).max()) ** 3:
@@ -119,16 +119,24 @@ def _triangles(mesh: Any, where: str) -> tuple[NDArray[np.float64], NDArray[np.i
     return points, triangles
 
 
-def _welded(
+def welded(
     points: NDArray[np.float64], triangles: NDArray[np.int64]
-) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
-    """One point a place, and no triangle that has lost a corner thereby."""
+) -> tuple[NDArray[np.float64], NDArray[np.int64], NDArray[np.int64]]:
+    """One point a place, and no triangle that has lost a corner thereby.
+
+    Returns
+    -------
+    points : (n, 3) float64
+    triangles : (m, 3) int64
+    kept : (m,) int64
+        Rows of the triangles that are left.
+    """
     _, first, index = np.unique(points + 0.0, axis=0, return_index=True, return_inverse=True)
     triangles = first[index.reshape(-1)[triangles]]
     a, b, c = triangles.T
-    triangles = triangles[(a != b) & (b != c) & (c != a)]
-    used, renumbered = np.unique(triangles, return_inverse=True)
-    return np.ascontiguousarray(points[used]), renumbered.reshape(-1, 3).astype(np.int64)
+    kept = np.flatnonzero((a != b) & (b != c) & (c != a))
+    used, renumbered = np.unique(triangles[kept], return_inverse=True)
+    return np.ascontiguousarray(points[used]), renumbered.reshape(-1, 3).astype(np.int64), kept
 
 
 def _require_closed(triangles: NDArray[np.int64], where: str) -> None:

@@ -1,29 +1,29 @@
 """A volume in whatever format it comes: looks at the file, and asks the reader of that format.
 
-A format is a module with `read_labels_with_findings`, `read_image_with_findings` and
-`read_volume_with_findings`; here is the one list of them.
+A format of plain numbers is a module with `read_stack`; what its numbers are is decided in `stacks`.  DICOM
+says itself what its numbers are, so its module has the readers of this one.
 """
 
 from __future__ import annotations
 
 import os
-from types import ModuleType
+from dataclasses import replace
 
-from volmap.io import nifti
+from volmap.io import nifti, nrrd
 from volmap.io.dicom import volumes as dicom
 from volmap.io.dicom.opening import is_dicom
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
+from volmap.io.stacks import Stack, could_be_labels, image_volume, label_volume
 from volmap.types.findings import Finding
 from volmap.types.volumes import ImageVolume, LabelVolume
 
 PathLike = str | os.PathLike[str]
 Findings = tuple[Finding, ...]
-_FORMATS = ((is_dicom, dicom),)  # who knows a file by its name or first bytes, and who reads it
 
 
-def _reader(path: PathLike) -> ModuleType:
-    """The module that reads what stands there; NIfTI's says what is wrong with anything else."""
-    return next((reader for known, reader in _FORMATS if known(path)), nifti)
+def _stack(path: PathLike, reading: Reading) -> Stack:
+    """NIfTI's reader says what is wrong with anything that is no format at all."""
+    return nrrd.read_stack(path, reading) if nrrd.is_nrrd(path) else nifti.read_stack(path, reading)
 
 
 def read_labels(path: PathLike, reading: Reading = AS_IT_IS) -> LabelVolume:
@@ -62,7 +62,9 @@ def read_labels_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tu
     InputError
         As `read_labels`.
     """
-    return _reader(path).read_labels_with_findings(path, reading)  # type: ignore[no-any-return]
+    if is_dicom(path):
+        return dicom.read_labels_with_findings(path, reading)
+    return label_volume(_stack(path, reading), path, reading)
 
 
 def read_image_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tuple[ImageVolume, Findings]:
@@ -73,7 +75,10 @@ def read_image_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tup
     InputError
         As `read_image`.
     """
-    return _reader(path).read_image_with_findings(path, reading)  # type: ignore[no-any-return]
+    if is_dicom(path):
+        return dicom.read_image_with_findings(path, reading)
+    stack = _stack(path, replace(reading, threshold=None))
+    return image_volume(stack), stack.findings
 
 
 def read_volume_with_findings(
@@ -93,4 +98,11 @@ def read_volume_with_findings(
     InputError
         As `read_labels` and `read_image`.
     """
-    return _reader(path).read_volume_with_findings(path, reading, kind=kind)  # type: ignore[no-any-return]
+    if is_dicom(path):
+        return dicom.read_volume_with_findings(path, reading, kind=kind)
+    if kind == "image":
+        return read_image_with_findings(path, reading)
+    stack = _stack(path, reading)
+    if kind == "labels" or reading.threshold is not None or could_be_labels(stack.values[..., 0]):
+        return label_volume(stack, path, reading)
+    return image_volume(stack), stack.findings
