@@ -76,10 +76,13 @@ def _run(options: argparse.Namespace) -> int:
 
 def _settled(options: argparse.Namespace, console: Console) -> int:
     """The exit status of a verb, with one line on stderr for whatever a user can mend."""
-    from volmap.types import InputError
+    from volmap.types import InputError, UnsaidError
 
     try:
         return int(options.run(options, console))
+    except UnsaidError as error:
+        console.fault(f"{error.sentence}; see volmap {options.verb} --help")
+        return USAGE
     except UsageError as error:
         console.fault(f"{error}; see volmap {options.verb} --help")
         return USAGE

@@ -2,6 +2,7 @@
 
 from volmap.carry.fields import backward_field, carried_solid, forward_field, volume_ratio_image
 from volmap.carry.loop_error import LoopError, loop_error
+from volmap.carry.measured import carried_quantity
 from volmap.carry.points import MovedPoints, carried_values, gradients_at, move_points
 from volmap.carry.rules import Factors, apply_rule, rule_factors
 from volmap.carry.sampling import FieldError, RoundTrip, field_error, round_trip, sample_field
@@ -21,6 +22,7 @@ __all__ = [
     "Strain",
     "apply_rule",
     "backward_field",
+    "carried_quantity",
     "carried_solid",
     "carried_values",
     "carry",

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from functools import singledispatch
 from typing import Any
 
@@ -11,6 +12,7 @@ from numpy.typing import NDArray
 
 from volmap.carry.intensity_volumes import pull_image, pull_tensors, pull_vectors
 from volmap.carry.label_volumes import label_shares, pull_labels
+from volmap.carry.outside import outside_findings
 from volmap.carry.points import MovedPoints, move_points
 from volmap.carry.settings import AS_USUAL, CarrySettings
 from volmap.types import (
@@ -38,13 +40,16 @@ class Carried:
 
     Parameters
     ----------
-    thing : Landmarks, LabelVolume, ImageVolume, TetMesh or Surface
+    thing : noun
         Of the same kind as what was carried.
     findings : tuple of Finding
+    facts : mapping of str to plain values
+        What was done to numbers and lengths, for the document beside the output.
     """
 
     thing: Any
     findings: tuple[Finding, ...] = ()
+    facts: Mapping[str, Any] = field(default_factory=dict)
 
 
 @singledispatch
@@ -60,9 +65,10 @@ def carry(
 
     Parameters
     ----------
-    thing : Landmarks, LabelVolume, ImageVolume, TetMesh or Surface
+    thing : Landmarks, Measurements, LabelVolume, ImageVolume, TetMesh or Surface
         In SOURCE's world (in TARGET's with `reverse`).
-        Points of landmarks, meshes and surfaces move exactly (see `points.move_points`).  Volumes are
+        Points of landmarks, measurements, meshes and surfaces move exactly (see `points.move_points`), the
+        numbers of quantities by their own rules (`types.Rule`).  Volumes are
         pulled: each voxel centre of `onto` inside the body is sent back by the exact inverse, and takes the
         label of the voxel it falls in, or the trilinear intensity there.
     volume_map : VolumeMap or MapChain
@@ -225,30 +231,14 @@ def _stated(rule: Rule | None, where: str) -> Rule:
 
 
 def _landmark_findings(thing: Landmarks, moved: MovedPoints) -> tuple[Finding, ...]:
-    """Who was outside, how far, and what was done about it."""
-    findings = []
-    for chosen, code, fate in (
-        (
-            moved.extrapolated,
-            "outside-carried",
-            "carried with the affine map of the nearest tet, not measured",
-        ),
-        (~moved.carried, "outside-left-out", "not carried"),
-    ):
-        which = np.flatnonzero(chosen)
-        if len(which):
-            named = ", ".join(f"{thing.names[i]} ({moved.outside_mm[i]:.2f} mm)" for i in which)
-            sentence = (
-                f"{len(which)} of {len(thing.names)} points lie outside the body and were {fate}: {named}"
-            )
-            remedy = "check that the points belong to this scan and lie in the segmented body"
-            findings.append(Finding(Level.WARN, code, "landmarks", sentence, remedy))
+    """Who was outside, how far, and what stayed behind."""
+    findings = outside_findings(moved, thing.names, "landmarks")
     if thing.sd_mm is not None:
         sentence = (
             "sd_mm tells how well the points were placed in their own scan; it was not carried with them"
         )
-        findings.append(Finding(Level.NOTE, "sd-left-out", "landmarks", sentence))
-    return tuple(findings)
+        findings += (Finding(Level.NOTE, "sd-left-out", "landmarks", sentence),)
+    return findings
 
 
 def _all_points(

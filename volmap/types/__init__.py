@@ -7,7 +7,7 @@ repairs nothing silently; its arrays are owned copies and read-only.
 from volmap.types.certificate import Certificate, Gate, Verdict
 from volmap.types.codes import Code, LabelCodes
 from volmap.types.component_volumes import TensorVolume, VectorVolume
-from volmap.types.errors import InputError
+from volmap.types.errors import InputError, UnsaidError
 from volmap.types.findings import Finding, Level
 from volmap.types.given_boundary import GivenBoundary, GivingWay
 from volmap.types.grid import Grid
@@ -15,9 +15,10 @@ from volmap.types.gridfield import GridField
 from volmap.types.label_shares import LabelShares
 from volmap.types.landmarks import LandmarkPairs, Landmarks
 from volmap.types.map_chain import MapChain
+from volmap.types.measurements import Measurements
 from volmap.types.outcome import IterationRecord, Outcome, Status
 from volmap.types.progress import Progress, silent
-from volmap.types.quantities import Quantity, Rule
+from volmap.types.quantities import Quantity, Rule, Rules
 from volmap.types.surface import Surface
 from volmap.types.tetmesh import TetMesh
 from volmap.types.volume_map import VolumeMap
@@ -42,14 +43,17 @@ __all__ = [
     "Landmarks",
     "Level",
     "MapChain",
+    "Measurements",
     "Outcome",
     "Progress",
     "Quantity",
     "Rule",
+    "Rules",
     "Status",
     "Surface",
     "TensorVolume",
     "TetMesh",
+    "UnsaidError",
     "VectorVolume",
     "Verdict",
     "VolumeMap",

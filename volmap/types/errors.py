@@ -56,3 +56,7 @@ class InputError(ValueError):
             remedy=self.remedy,
             refused=self.refused,
         )
+
+
+class UnsaidError(InputError):
+    """Something only the caller can say was not said, or does not fit what the input holds (status 2)."""

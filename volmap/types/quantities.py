@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
 from enum import StrEnum
 
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.types.errors import InputError
+from volmap.types.errors import InputError, UnsaidError
 from volmap.types.frozen import Frozen
 
 
@@ -160,3 +161,65 @@ def _symmetric(tensors: NDArray[np.float64]) -> bool:
     known = np.nan_to_num(tensors)
     largest = np.abs(known).max(axis=(1, 2), keepdims=True, initial=0.0)
     return bool((np.abs(known - known.swapaxes(1, 2)) <= 1e-6 * largest).all())
+
+
+@dataclass(frozen=True)
+class Rules:
+    """What the user said about the quantities of a table or a mesh.
+
+    Parameters
+    ----------
+    of_all : Rule, optional
+        For every quantity it is a rule for and that `of_each` does not name.
+    of_each : mapping of str to Rule
+        By name of the quantity.
+    """
+
+    of_all: Rule | None = None
+    of_each: Mapping[str, Rule] = field(default_factory=dict)
+
+    def of(self, name: str, rank: int) -> Rule | None:
+        """The rule for a quantity, or None where nothing was said.
+
+        Raises
+        ------
+        InputError
+            The rule said for this very quantity is none for its rank.
+        """
+        if name in self.of_each:
+            return require_rule(self.of_each[name], rank, name)
+        return self.of_all if self.of_all in _OF_RANK[rank] else None
+
+    def required(self, name: str, rank: int, where: str = "") -> Rule:
+        """The rule for a quantity.
+
+        Raises
+        ------
+        UnsaidError
+            Where nothing was said.
+        """
+        rule = self.of(name, rank)
+        if rule is None:
+            raise UnsaidError(
+                f"nothing says how the {KINDS[rank]} {name} changes when it is carried",
+                where=where,
+                expected=f"a rule for it: {' or '.join(r.value for r in _OF_RANK[rank])}",
+                remedy=f"say for instance --rule {name}={_OF_RANK[rank][0].value}",
+            )
+        return rule
+
+    def require_known(self, names: Iterable[str], where: str = "") -> None:
+        """Refuse rules for quantities that are not there.
+
+        Raises
+        ------
+        UnsaidError
+        """
+        known = list(names)
+        unknown = [name for name in self.of_each if name not in known]
+        if unknown:
+            raise UnsaidError(
+                f"holds no quantity {unknown[0]!r} for the rule that was said",
+                where=where,
+                found=", ".join(known[:12]) or "no quantities",
+            )

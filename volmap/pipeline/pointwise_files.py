@@ -1,0 +1,85 @@
+"""Files of things that are carried point by point: which noun is in which, read and written."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+from volmap.io.csv_columns import read_header
+from volmap.io.json_documents import read_json
+from volmap.io.landmarks import OPTIONAL_COLUMNS, POINT_COLUMNS, read_landmarks, write_landmarks
+from volmap.io.measurements import quantity_columns, read_measurements, write_measurements
+from volmap.io.opening import shown_name
+from volmap.io.vtk_xml import read_mesh, write_mesh
+from volmap.types import Finding, Landmarks, Level, Measurements, Rule, Rules, TetMesh
+
+ENDINGS = ((".csv",), (".vtu",))
+
+
+def read_pointwise(path: Path, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
+    """Landmarks, measurements or a mesh.
+
+    Parameters
+    ----------
+    path : Path
+    rules : Rules
+        What the user said of quantities.  Where nothing was said, rules in the document beside a carried
+        table hold on.
+
+    Raises
+    ------
+    InputError
+        A file that cannot be read, or quantities nobody says a rule for.
+    """
+    if path.name.lower().endswith(".vtu"):
+        return read_mesh(path)[0], ()
+    header = read_header(path)
+    if header[:4] == POINT_COLUMNS and not set(header[4:]) <= set(OPTIONAL_COLUMNS):
+        rules, findings = _with_earlier(rules, path)
+        return read_measurements(path, rules), findings
+    rules.require_known((), shown_name(path))
+    return read_landmarks(path), ()
+
+
+def write_pointwise(out: Path, thing: Any, *, overwrite: bool = False) -> bool:
+    """Write such a thing; False when it is of another kind.
+
+    Raises
+    ------
+    InputError
+        The place is taken or cannot be written.
+    """
+    match thing:
+        case Landmarks():
+            write_landmarks(out, thing, overwrite=overwrite)
+        case Measurements():
+            write_measurements(out, thing, overwrite=overwrite)
+        case TetMesh():
+            write_mesh(out, thing, overwrite=overwrite)
+        case _:
+            return False
+    return True
+
+
+def _with_earlier(rules: Rules, path: Path) -> tuple[Rules, tuple[Finding, ...]]:
+    """The user's rules, and below them those by which a carried table was made."""
+    earlier = _rules_beside(path)
+    groups, _ = quantity_columns(read_header(path), shown_name(path))
+    taken = {g.name: earlier[g.name] for g in groups if g.name in earlier and not rules.of(g.name, g.rank)}
+    if not taken:
+        return rules, ()
+    said = ", ".join(f"{name}: {rule.value}" for name, rule in taken.items())
+    sentence = f"rules were taken from the document beside it, which says how it was carried before ({said})"
+    finding = Finding(Level.NOTE, "rules-as-before", shown_name(path), sentence)
+    return Rules(rules.of_all, {**taken, **rules.of_each}), (finding,)
+
+
+def _rules_beside(path: Path) -> Mapping[str, Rule]:
+    beside = path.with_name(f"{path.name}.json")
+    if not beside.is_file():
+        return {}
+    told = read_json(beside).get("quantities", [])
+    known = {rule.value for rule in Rule}
+    rows = [q for q in told if isinstance(q, dict)] if isinstance(told, list) else []
+    return {str(q.get("name")): Rule(q["rule"]) for q in rows if q.get("rule") in known}
