@@ -1,4 +1,8 @@
-"""Carry landmarks (.csv), a label volume or an image (.nii, .nii.gz) or a mesh (.vtu) through a map."""
+"""Carry points or measurements (.csv), labels or an image (.nii, .nii.gz) or a mesh (.vtu) through a map.
+
+Measurements stand beside name,x_mm,y_mm,z_mm in columns <quantity>_<unit>; vectors as <quantity>_x_<unit>,
+_y_ and _z_, symmetric tensors as _xx_ to _zz_.  What becomes of their numbers is for you to say (--rule).
+"""
 
 from __future__ import annotations
 
@@ -7,6 +11,7 @@ from pathlib import Path
 
 from .console import Console
 from .reading import reading_arguments, reading_of
+from .rules import rule_arguments, rules_of
 
 HELP = "carry points, labels, images or meshes through a map"
 EXAMPLE = "volmap carry beads.csv --through map_0_1 --out beads_in_visit1.csv"
@@ -41,6 +46,7 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         choices=("source", "target"),
         help="whose world THING lies in, where neither its digest nor its voxel grid tells",
     )
+    rule_arguments(parser)
     reading_arguments(parser)
     parser.add_argument("--overwrite", action="store_true", help="replace a file that stands there")
 
@@ -48,11 +54,13 @@ def arguments(parser: argparse.ArgumentParser) -> None:
 def run(options: argparse.Namespace, console: Console) -> int:
     """Carry one thing."""
     from volmap import pipeline
+    from volmap.carry import CarrySettings
 
     findings = pipeline.carry_file(
         options.thing,
         options.through,
         options.out,
+        CarrySettings(rules=rules_of(options)),
         reverse=options.reverse,
         kind=options.kind,
         belongs_to=options.belongs_to,

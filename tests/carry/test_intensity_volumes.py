@@ -6,7 +6,7 @@ import pytest
 from volmap.carry import CarrySettings, apply_rule, carry
 from volmap.carry.intensity_volumes import pull_image, pull_tensors, pull_vectors
 from volmap.carry.splines import interpolator
-from volmap.types import Grid, ImageVolume, InputError, Rule, TensorVolume, VectorVolume
+from volmap.types import Grid, ImageVolume, InputError, Rule, Rules, TensorVolume, VectorVolume
 
 
 def grid_of(shape, spacing, origin) -> Grid:
@@ -228,10 +228,10 @@ def test_vectors_without_a_rule_and_rules_of_others_are_refused(known):
         with pytest.raises(InputError, match="needs a rule"):
             carry(thing, volume_map, onto=grid)
         with pytest.raises(InputError, match="is no rule for a"):
-            carry(thing, volume_map, onto=grid, settings=CarrySettings(rule=Rule.DENSITY))
+            carry(thing, volume_map, onto=grid, settings=CarrySettings(rules=Rules(Rule.DENSITY)))
     with pytest.raises(InputError, match="is no rule for a scalar"):
-        carry(image, volume_map, onto=grid, settings=CarrySettings(rule=Rule.TURN))
-    settings = CarrySettings(rule=Rule.GRADIENT, image="cubic")
+        carry(image, volume_map, onto=grid, settings=CarrySettings(rules=Rules(Rule.TURN)))
+    settings = CarrySettings(rules=Rules(Rule.GRADIENT), image="cubic")
     for thing in (vectors, tensors):
         carried = carry(thing, volume_map, onto=grid, settings=settings).thing
         assert type(carried) is type(thing)

@@ -6,12 +6,13 @@ from volmap.carry.measured import carried_quantity
 from volmap.carry.points import MovedPoints, carried_values, gradients_at, move_points
 from volmap.carry.rules import Factors, apply_rule, rule_factors
 from volmap.carry.sampling import FieldError, RoundTrip, field_error, round_trip, sample_field
-from volmap.carry.settings import CarrySettings
+from volmap.carry.settings import AS_USUAL, CarrySettings
 from volmap.carry.sidecar import check_point, field_sidecar
 from volmap.carry.strain import Strain, strain_of
 from volmap.carry.things import Carried, carry
 
 __all__ = [
+    "AS_USUAL",
     "Carried",
     "CarrySettings",
     "Factors",

@@ -24,7 +24,7 @@ def _carry_measurements(
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     directed = volume_map.reversed() if reverse else volume_map
-    moved = move_points(directed, thing.points, reach_mm=settings.reach_mm)
+    moved = move_points(directed, thing.points, reach_mm=settings.reach)
     quantities = tuple(carried_quantity(q, directed, moved) for q in thing.quantities)
     kept = np.flatnonzero(moved.carried)
     there = thing if moved.carried.all() else thing.rows(kept)

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from typing import Literal
 
-from volmap.types import Rule
+from volmap.types import Rules
 
 LabelMode = Literal["nearest", "one-hot", "shares"]
 ImageMode = Literal["linear", "cubic"]
+REACH_MM = 1.0
 
 
 @dataclass(frozen=True)
@@ -17,22 +18,32 @@ class CarrySettings:
 
     Parameters
     ----------
-    reach_mm : float
+    reach_mm : float, optional
         Points up to this far outside the body are carried with the nearest tet's affine map, and named in a
-        finding; a voxel of the scan (`Grid.voxel_mm`) is a good choice.  Points farther out: landmarks are
-        left out and named; a mesh or surface is refused.
+        finding.  Points farther out: landmarks and measurements are left out and named; a mesh or surface is
+        refused.  None: a voxel of the scan a file is carried from (`Grid.voxel_mm`), else `REACH_MM`.
     labels : 'nearest', 'one-hot' or 'shares'
         How label volumes are carried (see `label_volumes.LABEL_SENTENCES`).
     image : 'linear' or 'cubic'
         How values between voxel centres are found (see `splines.interpolator`).
-    rule : Rule, optional
-        How numbers change; None keeps intensities as they are, and refuses vectors and tensors.
+    rules : Rules
+        How numbers change, where the thing does not say so itself (see `types.Rule`).  Of a volume `of_all`
+        counts; None keeps intensities as they are, and refuses vectors and tensors.
     """
 
-    reach_mm: float = 1.0
+    reach_mm: float | None = None
     labels: LabelMode = "nearest"
     image: ImageMode = "linear"
-    rule: Rule | None = None
+    rules: Rules = field(default_factory=Rules)
+
+    @property
+    def reach(self) -> float:
+        """`reach_mm`, or what it is where nobody said, mm."""
+        return REACH_MM if self.reach_mm is None else self.reach_mm
+
+    def of_scan(self, voxel_mm: float) -> CarrySettings:
+        """The same settings, with a reach of one voxel where none was said."""
+        return self if self.reach_mm is not None else replace(self, reach_mm=voxel_mm)
 
 
 AS_USUAL = CarrySettings()

@@ -28,6 +28,7 @@ from volmap.types import (
     Surface,
     TensorVolume,
     TetMesh,
+    UnsaidError,
     VectorVolume,
     VolumeMap,
 )
@@ -105,7 +106,7 @@ def _carry_landmarks(
     onto: Grid | None = None,
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
-    moved = move_points(_directed(volume_map, reverse), thing.points, reach_mm=settings.reach_mm)
+    moved = move_points(_directed(volume_map, reverse), thing.points, reach_mm=settings.reach)
     kept = np.flatnonzero(moved.carried)
     landmarks = Landmarks(
         tuple(thing.names[i] for i in kept), moved.points[kept], tuple(thing.roles[i] for i in kept)
@@ -138,7 +139,7 @@ def _carry_image(
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
-    rule = settings.rule or Rule.VALUE
+    rule = settings.rules.of_all or Rule.VALUE
     return Carried(*pull_image(thing, directed, onto, mode=settings.image, rule=rule))
 
 
@@ -152,7 +153,7 @@ def _carry_vectors(
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
-    rule = _stated(settings.rule, thing.name)
+    rule = _stated(settings.rules.of_all, thing.name)
     return Carried(*pull_vectors(thing, directed, onto, mode=settings.image, rule=rule))
 
 
@@ -166,7 +167,7 @@ def _carry_tensors(
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
-    rule = _stated(settings.rule, thing.name)
+    rule = _stated(settings.rules.of_all, thing.name)
     return Carried(*pull_tensors(thing, directed, onto, mode=settings.image, rule=rule))
 
 
@@ -179,7 +180,7 @@ def _carry_mesh(
     onto: Grid | None = None,
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
-    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "mesh", settings.reach_mm)
+    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "mesh", settings.reach)
     mesh = thing.moved(points)
     turned = int(((mesh.volumes <= 0) & (thing.volumes > 0)).sum())
     if turned:
@@ -200,7 +201,7 @@ def _carry_surface(
     onto: Grid | None = None,
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
-    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "surface", settings.reach_mm)
+    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "surface", settings.reach)
     return Carried(Surface(points, thing.triangles, thing.sides), findings)
 
 
@@ -221,11 +222,11 @@ def _required(onto: Grid | None, where: str) -> Grid:
 def _stated(rule: Rule | None, where: str) -> Rule:
     """Vectors and tensors change when they are carried: how is for the user to say."""
     if rule is None:
-        raise InputError(
+        raise UnsaidError(
             "needs a rule to be carried by",
             where=where,
             expected=" or ".join(r.value for r in rules_of_rank(1)),
-            remedy="turn keeps lengths and eigenvalues; line, gradient and flux are told by the guide",
+            remedy="say for instance --rule turn, which keeps lengths and eigenvalues",
         )
     return rule
 

@@ -21,7 +21,7 @@ _LIMIT = 2**31
 _LONGEST_LINE = 2**20
 _ROW, _COLUMN = re.compile(r"Row #(\d+)"), re.compile(r"In CSV column #(\d+)")
 _WRONG_COUNT = re.compile(r"Expected (\d+) columns, got (\d+)")
-_VALUE = re.compile(r"invalid value '(.{0,20}?)(?:'$|$|.)")
+_VALUE = re.compile(r"invalid value '(.*)'")
 
 
 @dataclass(frozen=True)
@@ -109,7 +109,7 @@ def _damage(said: str, heading: tuple[str, ...], where: str) -> InputError:
     value = _VALUE.search(said)
     if value and name:
         return InputError(
-            f"{name} is not a number", where=place, found=repr(value.group(1)),
+            f"{name} is not a number", where=place, found=repr(value.group(1)[:20]),
             expected="a number, with a point for decimals, or nothing", remedy="correct it or drop the row",
         )  # fmt: skip
     return InputError("the file is not CSV in UTF-8", where=place, remedy="export it again")

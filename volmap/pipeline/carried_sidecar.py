@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict
 from pathlib import Path
 from typing import Any
@@ -26,9 +26,10 @@ def carried_sidecar(
     settings: CarrySettings,
     findings: Sequence[Finding],
     *,
+    facts: Mapping[str, Any],
     belongs_to: Side | None,
 ) -> dict[str, Any]:
-    """The document; names of files and folders only, no paths."""
+    """The document; names of files and folders only, no paths.  `facts` as in `Carried`."""
     start, end = way.start, way.end
     return {
         "schema": "volmap-carried/1",
@@ -50,6 +51,7 @@ def carried_sidecar(
         "how": "by the exact piecewise affine map of each folder in turn; no sampled field between",
         "belongs_to": f"{start.name}, on the word of the user" if belongs_to else start.name,
         "settings": asdict(settings),
+        **facts,
         "frame": "NIfTI world, RAS+: x grows to the right, y to the front, z to the head",
         "units": "mm",
         "findings": [finding.as_dict() for finding in findings],

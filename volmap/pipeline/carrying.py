@@ -9,24 +9,22 @@ from typing import Any
 from volmap import carry as carrying
 from volmap.io.atomic import require_place, whole_file
 from volmap.io.json_documents import json_text
-from volmap.io.landmarks import read_landmarks, write_landmarks
 from volmap.io.nifti import write_image, write_labels
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.io.volumes import read_volume_with_findings
-from volmap.io.vtk_xml import read_mesh, write_mesh
 from volmap.pipeline.belonging import Side, require_belonging
 from volmap.pipeline.carried_sidecar import carried_sidecar, sidecar_place
 from volmap.pipeline.places import NIFTI, require_name
+from volmap.pipeline.pointwise_files import ENDINGS, read_pointwise, write_pointwise
 from volmap.pipeline.ways import read_way
 from volmap.types import (
     Finding,
     ImageVolume,
     InputError,
     LabelVolume,
-    Landmarks,
     Level,
     Progress,
-    TetMesh,
+    Rules,
     silent,
 )
 
@@ -35,7 +33,7 @@ def carry_file(
     thing: Path,
     through: Path | Sequence[Path],
     out: Path,
-    settings: carrying.CarrySettings | None = None,
+    settings: carrying.CarrySettings = carrying.AS_USUAL,
     *,
     reverse: bool = False,
     kind: VolumeKind = "either",
@@ -44,7 +42,7 @@ def carry_file(
     overwrite: bool = False,
     progress: Progress = silent,
 ) -> tuple[Finding, ...]:
-    """Carry landmarks (csv), a label volume, an image (nii) or a mesh (vtu) through one map or several.
+    """Carry points, measurements, a label volume, an image or a mesh through one map or several.
 
     Parameters
     ----------
@@ -52,8 +50,8 @@ def carry_file(
     through : Path or sequence of Path
         A map folder, or several in the order in which the thing goes through them (see `ways.read_way`).
     out : Path
-    settings : CarrySettings, optional
-        By default as usual, with a reach of one voxel.
+    settings : CarrySettings
+        By default with a reach of one voxel.
     reverse : bool
         From TARGET to SOURCE; through several maps, from the end of the last to the start of the first.
     kind : 'labels', 'image' or 'either'
@@ -75,7 +73,7 @@ def carry_file(
     for place in (out, sidecar_place(out)):
         require_place(place, overwrite=overwrite, folder=False)
     progress("read", 0, 0, thing.name)
-    loaded, findings = _loaded(thing, kind, reading)
+    loaded, findings = _loaded(thing, kind, reading, settings.rules)
     folders = [through] if isinstance(through, Path) else through
     way = read_way(folders, reverse=reverse, progress=progress)
     progress("carry", 0, 0, thing.name)
@@ -84,10 +82,10 @@ def carry_file(
             "volumes are carried through one map at a time", where=thing.name, remedy="carry it leg by leg"
         )
     belonging = require_belonging(loaded, *way.ends, name=thing.name, belongs_to=belongs_to)
-    settings = settings or carrying.CarrySettings(reach_mm=way.start.grid.voxel_mm)
+    settings = settings.of_scan(way.start.grid.voxel_mm)
     carried = carrying.carry(loaded, way.map, onto=way.end.grid, settings=settings)
     findings = (*findings, *way.findings, *belonging, *carried.findings)
-    told = carried_sidecar(thing, out, way, settings, findings, belongs_to=belongs_to)
+    told = carried_sidecar(thing, out, way, settings, findings, facts=carried.facts, belongs_to=belongs_to)
     with whole_file(sidecar_place(out), overwrite=overwrite) as place:  # both stand, or neither
         place.write_text(json_text(told), encoding="utf-8")
         _write_thing(out, carried.thing, overwrite)
@@ -96,7 +94,7 @@ def carry_file(
 
 def _endings(thing: Path) -> tuple[str, ...]:
     """Endings of files of the same kind as `thing`."""
-    for endings in ((".csv",), (".vtu",), NIFTI):
+    for endings in (*ENDINGS, NIFTI):
         if thing.name.lower().endswith(endings):
             return endings
     raise InputError(
@@ -107,12 +105,9 @@ def _endings(thing: Path) -> tuple[str, ...]:
     )
 
 
-def _loaded(path: Path, kind: VolumeKind, reading: Reading) -> tuple[Any, tuple[Finding, ...]]:
-    ending = _endings(path)[0]
-    if ending == ".csv":
-        return read_landmarks(path), ()
-    if ending == ".vtu":
-        return read_mesh(path)[0], ()
+def _loaded(path: Path, kind: VolumeKind, reading: Reading, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
+    if any(path.name.lower().endswith(endings) for endings in ENDINGS):
+        return read_pointwise(path, rules)
     volume, findings = read_volume_with_findings(path, reading, kind=kind)
     if kind != "either":
         return volume, findings
@@ -131,12 +126,10 @@ def _how_taken(volume: LabelVolume | ImageVolume) -> Finding:
 
 
 def _write_thing(out: Path, thing: Any, overwrite: bool) -> None:
+    if write_pointwise(out, thing, overwrite=overwrite):
+        return
     match thing:
-        case Landmarks():
-            write_landmarks(out, thing, overwrite=overwrite)
         case LabelVolume():
             write_labels(out, thing, overwrite=overwrite)
         case ImageVolume():
             write_image(out, thing, overwrite=overwrite)
-        case TetMesh():
-            write_mesh(out, thing, overwrite=overwrite)

@@ -1,0 +1,95 @@
+"""Measurement tables through a map folder: rules asked for, applied and remembered."""
+
+import csv
+import json
+
+import numpy as np
+import pytest
+from volmap_cli.main import main
+
+from volmap.mapfolder import read_map_folder
+
+HEADER = "name,x_mm,y_mm,z_mm,t1_ms,dose_Gy,flow_x_mm_per_s,flow_y_mm_per_s,flow_z_mm_per_s,site\n"
+RULES = ["--rule", "flux", "--rule", "t1=value", "--rule", "dose=density"]
+
+
+@pytest.fixture
+def table(tmp_path):
+    rows = np.random.default_rng(3).uniform(-8, 8, (20, 8))
+    lines = [",".join([f"p{i}", *map(repr, row), "left"]) for i, row in enumerate(rows.tolist())]
+    (tmp_path / "here.csv").write_text(HEADER + "\n".join(lines) + "\n", encoding="utf-8")
+    return tmp_path / "here.csv", rows
+
+
+def carry(thing, out, folder, *options):
+    return main(["carry", str(thing), "--through", str(folder), "--out", str(out), "--quiet", *options])
+
+
+def numbers(path):
+    with path.open(encoding="utf-8", newline="") as stream:
+        rows = list(csv.DictReader(stream))
+    return np.array([[float(row[c]) for c in HEADER.strip().split(",")[1:-1]] for row in rows])
+
+
+def test_numbers_follow_the_rules_that_were_said(table, small_pair, capsys):
+    """Truth: J and F of the tet that holds each place, found by linear algebra over all tets."""
+    here, rows = table
+    there = here.with_name("there.csv")
+    assert carry(here, there, small_pair.folder, *RULES) == 0
+    found = numbers(there)
+    volume_map = read_map_folder(small_pair.folder).map
+    points, tets = volume_map.mesh.points, volume_map.mesh.tets
+    system = np.concatenate([points[tets].swapaxes(1, 2), np.ones((len(tets), 1, 4))], axis=1)
+    for row, carried in zip(rows, found, strict=True):
+        weights = np.linalg.solve(system, np.append(row[:3], 1.0)[None, :, None])[..., 0]
+        tet = weights.min(axis=1).argmax()
+        here_edges, there_edges = (v[tets[tet, 1:]] - v[tets[tet, 0]] for v in (points, volume_map.images))
+        F = np.linalg.solve(here_edges, there_edges).T
+        J = np.linalg.det(F)
+        expected = [*weights[tet] @ volume_map.images[tets[tet]], row[3], row[4] / J, *F @ row[5:] / J]
+        np.testing.assert_allclose(carried, expected, atol=1e-9)
+    assert there.read_text(encoding="utf-8").startswith(HEADER)
+    assert there.read_text(encoding="utf-8").count(",left\n") == 20
+    capsys.readouterr()
+
+
+def test_back_by_the_rules_in_the_document_beside_it(table, small_pair, capsys):
+    here, rows = table
+    there, home = here.with_name("there.csv"), here.with_name("home.csv")
+    assert carry(here, there, small_pair.folder, *RULES) == 0
+    told = json.loads(there.with_name("there.csv.json").read_text(encoding="utf-8"))
+    assert {q["name"]: q["rule"] for q in told["quantities"]} == {
+        "t1": "value",
+        "dose": "density",
+        "flow": "flux",
+    }
+    assert carry(there, home, small_pair.folder, "--reverse") == 0
+    assert "rules were taken from the document beside it" in capsys.readouterr().err
+    np.testing.assert_allclose(numbers(home), rows, atol=1e-9)
+
+
+@pytest.mark.parametrize(
+    ("options", "said"),
+    [
+        ([], "here.csv: nothing says how the scalar t1 changes"),
+        (["--rule", "value"], "nothing says how the vector flow changes"),
+        (["--rule", "flow=fast"], "'fast' is none of value, density, turn"),
+        (["--rule", "value", "--rule", "density"], "another rule was given for all quantities"),
+        ([*RULES, "--rule", "age=value"], "here.csv: holds no quantity 'age'"),
+    ],
+)
+def test_what_was_not_said_is_a_matter_of_usage(table, small_pair, capsys, options, said):
+    here, _ = table
+    before = sorted(here.parent.iterdir())
+    assert carry(here, here.with_name("there.csv"), small_pair.folder, *options) == 2
+    err = capsys.readouterr().err
+    assert said in err
+    assert err.rstrip().endswith("see volmap carry --help")
+    assert sorted(here.parent.iterdir()) == before
+
+
+def test_a_rule_for_landmarks_is_told_to_have_nothing_to_act_on(tmp_path, small_pair, capsys):
+    (tmp_path / "marks.csv").write_text("name,x_mm,y_mm,z_mm\na,1,2,3\n", encoding="utf-8")
+    status = carry(tmp_path / "marks.csv", tmp_path / "out.csv", small_pair.folder, "--rule", "flow=flux")
+    assert status == 2
+    assert "holds no quantity 'flow'" in capsys.readouterr().err
