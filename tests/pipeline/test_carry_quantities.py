@@ -64,7 +64,7 @@ def test_back_by_the_rules_in_the_document_beside_it(table, small_pair, capsys):
         "flow": "flux",
     }
     assert carry(there, home, small_pair.folder, "--reverse") == 0
-    assert "rules were taken from the document beside it" in capsys.readouterr().err
+    assert "rules were taken from the document beside it" in capsys.readouterr().out
     np.testing.assert_allclose(numbers(home), rows, atol=1e-9)
 
 
