@@ -14,6 +14,7 @@ from importlib.metadata import version
 from typing import TYPE_CHECKING
 
 from volmap.io.atomic import whole_file
+from volmap.io.dicom.own_labels import MAKER
 from volmap.io.dicom.uids import ScanUids, new_uid
 from volmap.io.opening import shown_name
 from volmap.types.errors import InputError
@@ -58,7 +59,7 @@ def begun(scan: ScanUids, *, sop_class: str, modality: str, description: str, to
     made.Modality, made.SeriesNumber = modality, 1  # C.7.3.1
     made.SeriesDescription = text(description, "LO")
     made.FrameOfReferenceUID, made.PositionReferenceIndicator = scan.frame, ""  # C.7.4.1
-    made.Manufacturer = made.ManufacturerModelName = "volmap"  # C.7.5.1, C.7.5.2
+    made.Manufacturer = made.ManufacturerModelName = MAKER  # C.7.5.1, C.7.5.2
     made.DeviceSerialNumber, made.SoftwareVersions = "none", version("volmap")
     made.SOPClassUID, made.InstanceNumber = sop_class, 1  # C.12.1
     made.ContentQualification = "RESEARCH"

@@ -1,4 +1,7 @@
-"""Segmentation objects (PS3.3 A.51, C.8.20) as label volumes: a label is its Segment Number."""
+"""Segmentation objects (PS3.3 A.51, C.8.20) as label volumes: a label is its Segment Number.
+
+Our own BINARY objects say which label each number stands for (`own_labels`).
+"""
 
 from __future__ import annotations
 
@@ -13,6 +16,7 @@ from numpy.typing import NDArray
 from volmap.io.dicom.fields import required, text, whole
 from volmap.io.dicom.geometry import FunctionalGroups, Planes, Stack, planes_of_frames, stacked, together
 from volmap.io.dicom.opening import PathLike, odd_values, parsed
+from volmap.io.dicom.own_labels import as_they_were
 from volmap.io.dicom.pixels import PixelLayout, pixel_layout, stored_frames
 from volmap.io.dicom.segments import Segment, segments_of
 from volmap.io.label_names import read_label_names
@@ -97,7 +101,7 @@ def _labels(ds: Any, reading: Reading, where: str) -> tuple[LabelVolume, tuple[F
     called = read_label_names(reading.names) if reading.names else {n: s.label for n, s in segments.items()}
     codes = {n: s.codes for n, s in segments.items() if s.codes is not None}
     volume = LabelVolume(stack.grid, labels.T, called, where, codes)
-    return volume, (
+    return as_they_were(volume, ds, names_given=reading.names is not None), (
         *groups.findings,
         *stack.findings,
         *shares.findings,

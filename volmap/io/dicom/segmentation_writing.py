@@ -4,12 +4,11 @@ A frame is one plane of constant k: i runs along its rows, j down its columns; f
 of k, each with its place, so that a left-handed grid stays what it was.  BINARY has one frame a label
 and plane where the label occurs, and every plane of the first label, so that a reader finds the whole grid.
 Its segments must be numbered 1, 2, 3, ... (C.8.20.2.4), so the label itself stands in Segment Description,
-in the words of `described`.  LABELMAP has one frame a plane, and its pixels are the labels.
+in the words of `own_labels`.  LABELMAP has one frame a plane, and its pixels are the labels.
 """
 
 from __future__ import annotations
 
-import re
 from collections.abc import Iterator
 from typing import TYPE_CHECKING, Literal
 
@@ -18,6 +17,7 @@ from numpy.typing import NDArray
 
 from volmap.io.dicom.laying import Laid, decimals, laid
 from volmap.io.dicom.object_head import PathLike, begun, coded, put, text
+from volmap.io.dicom.own_labels import described
 from volmap.io.dicom.uids import ScanUids, new_uid
 from volmap.types.codes import Code, LabelCodes
 from volmap.types.errors import InputError
@@ -93,17 +93,6 @@ def write_segmentation(
     if len(made.PixelData) % 2:
         made.PixelData += b"\0"
     put(path, made, overwrite=overwrite)
-
-
-def described(label: int, *, with_codes: bool) -> str:
-    """Segment Description: the label, and whether its codes were given."""
-    return f"label {label}" + ("" if with_codes else "; no code was given, tissue stands for anything")
-
-
-def label_in(description: str) -> int | None:
-    """The label a Segment Description of ours speaks of; None for others'."""
-    found = re.match(r"label ([0-9]{1,5})(;|$)", description)
-    return int(found[1]) if found else None
 
 
 def _require_room(planes: NDArray[np.uint16], n_frames: int, coding: Coding, where: str) -> None:
