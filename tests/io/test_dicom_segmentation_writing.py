@@ -56,7 +56,14 @@ PLACES = {
     "oblique": (OBLIQUE, (1.0, 2.0, 3.0)),
     "oblique, coronal, left-handed": (OBLIQUE[:, [0, 2, 1]], (0.9, 1.1, 2.5)),
 }
-LIVER = LabelCodes(Code("91723000", "SCT", "Anatomical Structure"), Code("10200004", "SCT", "Liver"))
+LEFT = Code("7771000", "SCT", "Left")
+LIVER = LabelCodes(
+    Code("91723000", "SCT", "Anatomical Structure"),
+    Code("10200004", "SCT", "Liver"),
+    Code("113345001", "SCT", "Abdomen"),
+    LEFT,
+    LEFT,
+)
 
 
 def volume(place="axial", values=(3, 7, 12), shape=(11, 7, 6)):
@@ -189,6 +196,9 @@ def test_names_and_codes_go_along_and_what_is_missing_is_said(made):
     kind = segments[7].SegmentedPropertyTypeCodeSequence[0]
     assert (kind.CodeValue, kind.CodingSchemeDesignator, kind.CodeMeaning) == ("10200004", "SCT", "Liver")
     assert segments[7].SegmentedPropertyCategoryCodeSequence[0].CodeMeaning == "Anatomical Structure"
+    assert kind.SegmentedPropertyTypeModifierCodeSequence[0].CodeMeaning == "Left"
+    assert segments[7].AnatomicRegionSequence[0].AnatomicRegionModifierSequence[0].CodeValue == "7771000"
+    assert "AnatomicRegionSequence" not in segments[3]
     assert segments[7].SegmentDescription == "label 7"
     assert segments[3].SegmentedPropertyTypeCodeSequence[0].CodeMeaning == "Tissue"
     assert "no code was given" in segments[3].SegmentDescription
@@ -278,6 +288,21 @@ def test_what_was_written_is_read_again_voxel_for_voxel(made):
     assert found.grid.same_place(labels.grid, 1e-9)
     assert {n: found.name_of(n) for n in found.present} == {n: labels.name_of(n) for n in labels.present}
     assert dict(found.codes) == {7: LIVER}
+
+
+@pytest.mark.parametrize(
+    ("value", "keyword"),
+    [("1234567890123456", "CodeValue"), ("1" * 18, "LongCodeValue"), ("urn:oid:1.2.3", "URNCodeValue")],
+)
+def test_codes_of_any_length_stand_where_they_may(tmp_path, value, keyword):
+    labels, path = volume(), tmp_path / "labels.dcm"
+    code = LabelCodes(Code(value, "SCT", "a"), Code(value, "SCT", "b"))
+    codes = {7: code}
+    write_segmentation(path, LabelVolume(labels.grid, labels.labels, {}, "made.nii", codes), scan=SCAN)
+    ds = pydicom.dcmread(path)
+    kind = next(s for s in ds.SegmentSequence if s.SegmentDescription == "label 7")
+    assert kind.SegmentedPropertyTypeCodeSequence[0][keyword].value == value
+    assert read_segmentation(path)[0].codes[7] == code
 
 
 def test_others_descriptions_do_not_renumber(tmp_path):

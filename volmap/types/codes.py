@@ -40,11 +40,15 @@ class LabelCodes:
         What it is, such as "Liver".
     region : Code, optional
         Where it is, such as "Abdomen", if that is said.
+    side, region_side : Code, optional
+        What the kind, or the region, is narrowed to, such as "Left" (type modifier, region modifier).
     """
 
     category: Code
     kind: Code
     region: Code | None = None
+    side: Code | None = None
+    region_side: Code | None = None
 
     def as_dict(self) -> dict[str, Any]:
         """Plain values, for JSON."""
@@ -60,8 +64,9 @@ class LabelCodes:
             Not as `as_dict` gives them.
         """
         try:
-            keys = ("category", "kind", *(("region",) if told.get("region") else ()))
-            return cls(*(Code(**{k: str(v) for k, v in told[key].items()}) for key in keys))
+            needed, others = ("category", "kind"), ("region", "side", "region_side")
+            keys = (*needed, *(key for key in others if told.get(key)))
+            return cls(**{key: Code(**{k: str(v) for k, v in told[key].items()}) for key in keys})
         except (TypeError, KeyError, AttributeError) as fault:
             raise InputError(
                 "codes of a label are not as written", found=str(told)[:60], expected="category and kind"

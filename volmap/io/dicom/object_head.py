@@ -28,6 +28,7 @@ PathLike = str | os.PathLike[str]
 NO_PATIENT_NAME, NO_PATIENT_ID = "Not^Stated", "not stated"
 NO_DATE, NO_TIME = "19000101", "000000"
 _LONGEST = {"LO": 64, "ST": 1024}
+_NO_SCHEME = "99NOTSTATED"  # 99: of no registered scheme (8.2)
 _MODIFYING = ("109103", "DCM", "Modifying Equipment")  # CID 7005
 
 
@@ -82,15 +83,18 @@ def _equipment(told: str) -> Dataset:
 
 
 def coded(value: str, scheme: str, meaning: str) -> Dataset:
-    """One coded entry (8.8): short codes in Code Value, longer ones in Long Code Value."""
+    """One coded entry (8.8): by length and form in Code Value, Long Code Value or URN Code Value."""
     from pydicom.dataset import Dataset
 
     made = Dataset()
-    if len(value) <= 16:
+    if value.lower().startswith(("urn:", "http:", "https:")):
+        made.URNCodeValue = value  # names its scheme itself
+    elif len(value) <= 16:
         made.CodeValue = value
     else:
         made.LongCodeValue = value
-    made.CodingSchemeDesignator = scheme[:16]
+    if scheme or "URNCodeValue" not in made:
+        made.CodingSchemeDesignator = scheme[:16] or _NO_SCHEME
     made.CodeMeaning = text(meaning, "LO")
     return made
 

@@ -150,12 +150,21 @@ def _segment(number: int, name: str, codes: LabelCodes, description: str) -> Dat
     made.SegmentLabel = text(name, "LO") or f"segment {number}"
     made.SegmentDescription = text(description, "ST")
     made.SegmentAlgorithmType, made.SegmentAlgorithmName = "SEMIAUTOMATIC", "volmap"
-    for keyword, code in (("Category", codes.category), ("Type", codes.kind)):
-        setattr(
-            made,
-            f"SegmentedProperty{keyword}CodeSequence",
-            [coded(code.value, code.scheme, code.meaning)],
-        )
+    made.SegmentedPropertyCategoryCodeSequence = [_entry(codes.category)]
+    modifier = "SegmentedPropertyTypeModifierCodeSequence"
+    made.SegmentedPropertyTypeCodeSequence = [_entry(codes.kind, modifier, codes.side)]
+    if codes.region:
+        made.AnatomicRegionSequence = [
+            _entry(codes.region, "AnatomicRegionModifierSequence", codes.region_side)
+        ]
+    return made
+
+
+def _entry(code: Code, modifier: str = "", narrowed: Code | None = None) -> Dataset:
+    """A coded entry, with the one that narrows it inside."""
+    made = coded(code.value, code.scheme, code.meaning)
+    if narrowed:
+        setattr(made, modifier, [_entry(narrowed)])
     return made
 
 

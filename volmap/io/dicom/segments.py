@@ -48,10 +48,23 @@ def segments_of(ds: Any, where: str) -> dict[int, Segment]:
 
 def _segment(told: Any, number: int, where: str) -> Segment:
     category = code_of(item(told, "SegmentedPropertyCategoryCodeSequence", where), where)
-    kind = code_of(item(told, "SegmentedPropertyTypeCodeSequence", where), where)
-    region = code_of(item(told, "AnatomicRegionSequence", where), where)
+    kind, side = _narrowed(told, "SegmentedPropertyTypeCodeSequence", _KIND_MODIFIER, where)
+    region, region_side = _narrowed(told, "AnatomicRegionSequence", _REGION_MODIFIER, where)
     label = text(told, "SegmentLabel", where)[:64] or (kind.meaning if kind else "") or f"label {number}"
-    return Segment(label, LabelCodes(category, kind, region) if category and kind else None)
+    codes = LabelCodes(category, kind, region, side, region_side) if category and kind else None
+    return Segment(label, codes)
+
+
+_KIND_MODIFIER, _REGION_MODIFIER = (
+    "SegmentedPropertyTypeModifierCodeSequence",
+    "AnatomicRegionModifierSequence",
+)
+
+
+def _narrowed(told: Any, keyword: str, modifier: str, where: str) -> tuple[Code | None, Code | None]:
+    """A code and the first one that narrows it (left, right), which stands inside it."""
+    entry = item(told, keyword, where)
+    return code_of(entry, where), code_of(item(entry, modifier, where) if entry is not None else None, where)
 
 
 def code_of(told: Any, where: str) -> Code | None:
