@@ -27,7 +27,10 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
     opinion = pipeline.certify_folder(options.folder, gates=options.gates, progress=console.progress)
     second = {"disagreements": list(opinion.disagreements), "not_repeated": list(opinion.not_repeated)}
+    second |= {"direction_proofs": list(opinion.proofs)}
     failed = show(opinion.certificate, console, more={"second_opinion": second})
+    for sentence in opinion.proofs:
+        console.say(f"  direction    {sentence}")
     for name in opinion.not_repeated:
         console.say(f"  not repeated: {name}")
     for sentence in opinion.disagreements:

@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from volmap.carry import grid_mistake
 from volmap.certify import as_document, from_document
 from volmap.io.atomic import whole_folder
 from volmap.io.given_boundary import read_given_boundary, write_given_boundary
@@ -360,16 +361,23 @@ def _steps(path: Path) -> tuple[Status, tuple[IterationRecord, ...], tuple[Givin
 
 def _require_same_grids(folder: MapFolder) -> None:
     pairs = (
-        ("forward.nii.gz", folder.forward.grid, folder.source),
-        (RATIO, folder.volume_ratio.grid, folder.source),
-        ("backward.nii.gz", folder.backward.grid, folder.target),
-        (CARRIED, folder.carried.grid, folder.target),
+        ("forward.nii.gz", folder.forward.grid, folder.source, folder.target),
+        (RATIO, folder.volume_ratio.grid, folder.source, folder.target),
+        ("backward.nii.gz", folder.backward.grid, folder.target, folder.source),
+        (CARRIED, folder.carried.grid, folder.target, folder.source),
     )
-    for name, grid, owner in pairs:
-        if not grid.same_place(owner.grid):
-            raise InputError(
-                f"does not lie on the grid of {owner.name}", where=name, remedy="map the pair again"
-            )
+    for name, grid, owner, other in pairs:
+        if grid.same_place(owner.grid):
+            continue
+        swapped = grid.same_place(other.grid)
+        raise InputError(
+            f"does not lie on the grid of {owner.name}",
+            where=name,
+            found=f"that of {other.name}, as the file of the other direction has it"
+            if swapped
+            else grid_mistake(grid, owner.grid),
+            remedy="map the pair again; a map folder must stay as it was written",
+        )
 
 
 def _require_supports(path: Path, folder: MapFolder) -> None:
@@ -378,6 +386,13 @@ def _require_supports(path: Path, folder: MapFolder) -> None:
         support = read_labels(_file(path, file))
         grid_field: GridField = getattr(folder, name)
         if support.labels.shape != grid_field.grid.shape or (support.labels != grid_field.support).any():
+            other: GridField = folder.backward if name == "forward" else folder.forward
+            swapped = np.array_equal(support.labels, other.support)
             raise InputError(
-                f"is not where {name}.nii.gz is defined", where=file, remedy="map the pair again"
+                f"is not where {name}.nii.gz is defined",
+                where=file,
+                found="where the field of the other direction is defined: two files were swapped"
+                if swapped
+                else "",
+                remedy="map the pair again",
             )

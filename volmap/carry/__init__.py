@@ -1,5 +1,6 @@
 """Fields, and things carried through a map."""
 
+from volmap.carry.direction_proof import DirectionProof, direction_proof, field_mistake, grid_mistake
 from volmap.carry.fields import backward_field, carried_solid, forward_field, volume_ratio_image
 from volmap.carry.loop_error import LoopError, loop_error
 from volmap.carry.measured import carried_quantity
@@ -15,6 +16,7 @@ __all__ = [
     "AS_USUAL",
     "Carried",
     "CarrySettings",
+    "DirectionProof",
     "Factors",
     "FieldError",
     "LoopError",
@@ -28,10 +30,13 @@ __all__ = [
     "carried_values",
     "carry",
     "check_point",
+    "direction_proof",
     "field_error",
+    "field_mistake",
     "field_sidecar",
     "forward_field",
     "gradients_at",
+    "grid_mistake",
     "loop_error",
     "move_points",
     "round_trip",

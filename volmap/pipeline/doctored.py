@@ -28,6 +28,7 @@ def doctored(folder: MapFolder, measures: Mapping[str, Any], *, progress: Progre
     progress : Progress
     """
     looks = {
+        "directions": _directions,
         "fields": _fields,
         "volumes": _volumes,
         "surfaces": _surfaces,
@@ -45,19 +46,56 @@ def doctored(folder: MapFolder, measures: Mapping[str, Any], *, progress: Progre
     ]
 
 
+def proofs_of(folder: MapFolder) -> tuple[carrying.DirectionProof, ...]:
+    """The check points of both fields, read back from their files and sent through the map."""
+    maps = {"forward": folder.map, "backward": folder.map.reversed()}
+    return tuple(
+        carrying.direction_proof(
+            getattr(folder, name), folder.sidecars[name], name=f"{name}.nii.gz", exact=exact
+        )
+        for name, exact in maps.items()
+    )
+
+
+def _directions(folder: MapFolder) -> Iterator[str]:
+    """Check points, and what each sidecar says of its direction and of the scans at both ends."""
+    for proof in proofs_of(folder):
+        yield from proof.faults
+    sides = {"SOURCE": folder.source, "TARGET": folder.target}
+    for name, roles in (("forward", ("SOURCE", "TARGET")), ("backward", ("TARGET", "SOURCE"))):
+        told = folder.sidecars[name]
+        if told.get("direction") != name:
+            yield f"{name}.json: says that the field of {name}.nii.gz runs {told.get('direction')!r}"
+        for key, role in zip(("grid_space", "points_into"), roles, strict=True):
+            said, labels = told.get(key), sides[role]
+            said = said if isinstance(said, dict) else {}
+            if said.get("role") != role:
+                yield f"{name}.json: {key} is said to be {said.get('role')!r}, and is {role} ({labels.name})"
+            if said.get("sha256") != labels.sha256:
+                yield (
+                    f"{name}.json: {key} has the digest {str(said.get('sha256'))[:12]}, and the stored "
+                    f"labels of {role} ({labels.name}) have {labels.sha256[:12]}"
+                )
+
+
 def _fields(folder: MapFolder) -> Iterator[str]:
+    forward = carrying.forward_field(folder.map, folder.source.grid)
+    backward = carrying.backward_field(folder.map, folder.target.grid)
     made = {
-        "forward.nii.gz": (folder.forward, carrying.forward_field(folder.map, folder.source.grid)),
-        "backward.nii.gz": (folder.backward, carrying.backward_field(folder.map, folder.target.grid)),
+        "forward.nii.gz": (folder.forward, forward, backward),
+        "backward.nii.gz": (folder.backward, backward, forward),
     }
-    for name, (stored, fresh) in made.items():
+    for name, (stored, fresh, other) in made.items():
         missing = int((stored.support != fresh.support).sum())
         if missing:
             yield f"{name}: {missing} voxels are defined in only one of the stored field and the map in {MAP}"
         apart = np.abs(stored.displacement - fresh.displacement)
         most = float(np.nanmax(apart, initial=0.0))
         if most > TOLERANCE_MM:
-            yield f"{name}: the stored field is not the map in {MAP} (up to {most:.3g} mm)"
+            mistake = carrying.field_mistake(stored, fresh, other)
+            yield f"{name}: the stored field is not the map in {MAP} (up to {most:.3g} mm)" + (
+                f": {mistake}" if mistake else ""
+            )
 
 
 def _volumes(folder: MapFolder) -> Iterator[str]:

@@ -8,7 +8,7 @@ from pathlib import Path
 from volmap import carry as carrying
 from volmap import certify as certifying
 from volmap.mapfolder import MapFolder, read_map_folder
-from volmap.pipeline.doctored import doctored
+from volmap.pipeline.doctored import doctored, proofs_of
 from volmap.types import Certificate, LabelVolume, Progress, TetMesh, VolumeMap, silent
 
 
@@ -53,11 +53,14 @@ class SecondOpinion:
         A sentence for each number or word that is not what the files give.
     not_repeated : tuple of str
         Gates that the files alone cannot repeat.
+    proofs : tuple of str
+        What each field's check point proved, a sentence a field that stood.
     """
 
     certificate: Certificate
     disagreements: tuple[str, ...]
     not_repeated: tuple[str, ...]
+    proofs: tuple[str, ...] = ()
 
 
 def certify_folder(path: Path, *, gates: Path | None = None, progress: Progress = silent) -> SecondOpinion:
@@ -73,10 +76,11 @@ def certify_folder(path: Path, *, gates: Path | None = None, progress: Progress 
     folder = read_map_folder(path)
     fresh, measures = certifying.certify(evidence_of(folder), table, progress=progress)
     stored = folder.certificate
-    against = [d.sentence for d in certifying.compare(stored, fresh)]
-    against += doctored(folder, measures, progress=progress)
+    against = doctored(folder, measures, progress=progress)  # causes first, then the gates they change
+    against += [d.sentence for d in certifying.compare(stored, fresh)]
     return SecondOpinion(
         replace(stored, gates=fresh, measures=measures),
         tuple(against),
         certifying.not_repeated(stored, fresh),
+        tuple(proof.told for proof in proofs_of(folder) if proof.told),
     )
