@@ -1,4 +1,4 @@
-"""Carry points or measurements (.csv), labels or an image (.nii, .nii.gz) or a mesh (.vtu) through a map.
+"""Carry points or measurements (.csv), labels or an image (NIfTI, NRRD, DICOM) or a mesh (.vtu) by a map.
 
 Measurements stand beside name,x_mm,y_mm,z_mm in columns <quantity>_<unit>; vectors as <quantity>_x_<unit>,
 _y_ and _z_, symmetric tensors as _xx_ to _zz_.  What becomes of their numbers is for you to say (--rule).
@@ -12,6 +12,7 @@ from pathlib import Path
 from .console import Console
 from .reading import reading_arguments, reading_of
 from .rules import rule_arguments, rules_of
+from .usage import UsageError, uid
 
 HELP = "carry points, labels, images or meshes through a map"
 EXAMPLE = "volmap carry beads.csv --through map_0_1 --out beads_in_visit1.csv"
@@ -46,6 +47,12 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         choices=("source", "target"),
         help="whose world THING lies in, where neither its digest nor its voxel grid tells",
     )
+    parser.add_argument(
+        "--frame-uid",
+        type=uid,
+        metavar="UID",
+        help="of labels written as DICOM: frame of reference of your images of the scan they arrive in",
+    )
     rule_arguments(parser)
     reading_arguments(parser)
     parser.add_argument("--overwrite", action="store_true", help="replace a file that stands there")
@@ -56,6 +63,9 @@ def run(options: argparse.Namespace, console: Console) -> int:
     from volmap import pipeline
     from volmap.carry import CarrySettings
 
+    if options.frame_uid and options.out.suffix.lower() != ".dcm":
+        raise UsageError("--frame-uid belongs to labels written as DICOM (.dcm)")
+
     findings = pipeline.carry_file(
         options.thing,
         options.through,
@@ -64,6 +74,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
         reverse=options.reverse,
         kind=options.kind,
         belongs_to=options.belongs_to,
+        frame_uid=options.frame_uid,
         reading=reading_of(options),
         progress=console.progress,
         overwrite=options.overwrite,

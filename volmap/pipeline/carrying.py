@@ -9,13 +9,13 @@ from typing import Any
 from volmap import carry as carrying
 from volmap.io.atomic import require_place, whole_file
 from volmap.io.json_documents import json_text
-from volmap.io.nifti import write_image, write_labels
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.io.volumes import read_volume_with_findings
 from volmap.pipeline.belonging import Side, require_belonging
 from volmap.pipeline.carried_sidecar import carried_sidecar, sidecar_place
 from volmap.pipeline.places import NIFTI, require_name
 from volmap.pipeline.pointwise_files import ENDINGS, read_pointwise, write_pointwise
+from volmap.pipeline.volume_files import DICOM, holds_volume, require_out, write_volume
 from volmap.pipeline.ways import read_way
 from volmap.types import (
     Finding,
@@ -38,6 +38,7 @@ def carry_file(
     reverse: bool = False,
     kind: VolumeKind = "either",
     belongs_to: Side | None = None,
+    frame_uid: str | None = None,
     reading: Reading = AS_IT_IS,
     overwrite: bool = False,
     progress: Progress = silent,
@@ -58,6 +59,9 @@ def carry_file(
         What a volume holds; 'either' decides by its values.
     belongs_to : 'source' or 'target', optional
         Whose world the user says the thing lies in, where neither its digest nor its voxel grid tells.
+    frame_uid : str, optional
+        Frame of Reference UID of the user's images of the scan the thing arrives in, for labels that are
+        written as DICOM (.dcm); a new one otherwise.
     reading : Reading
         What the thing's file leaves open.
     overwrite : bool
@@ -76,6 +80,8 @@ def carry_file(
     loaded, findings = _loaded(thing, kind, reading, settings.rules)
     folders = [through] if isinstance(through, Path) else through
     way = read_way(folders, reverse=reverse, progress=progress)
+    if isinstance(loaded, LabelVolume | ImageVolume):
+        require_out(out, loaded)
     progress("carry", 0, 0, thing.name)
     if len(way.legs) > 1 and isinstance(loaded, LabelVolume | ImageVolume):
         raise InputError(
@@ -88,19 +94,24 @@ def carry_file(
     told = carried_sidecar(thing, out, way, settings, findings, facts=carried.facts, belongs_to=belongs_to)
     with whole_file(sidecar_place(out), overwrite=overwrite) as place:  # both stand, or neither
         place.write_text(json_text(told), encoding="utf-8")
-        _write_thing(out, carried.thing, overwrite)
+        if not write_pointwise(out, carried.thing, overwrite=overwrite):
+            write_volume(
+                out, carried.thing, scan_sha256=way.end.sha256, frame_uid=frame_uid, overwrite=overwrite
+            )
     return findings
 
 
 def _endings(thing: Path) -> tuple[str, ...]:
     """Endings of files of the same kind as `thing`."""
-    for endings in (*ENDINGS, NIFTI):
+    for endings in ENDINGS:
         if thing.name.lower().endswith(endings):
             return endings
+    if holds_volume(thing):
+        return (*NIFTI, *DICOM)
     raise InputError(
         "this kind of file cannot be carried",
         where=thing.name,
-        expected=".csv, .nii, .nii.gz or .vtu",
+        expected=".csv, .vtu, .nii, .nii.gz, .nrrd, or DICOM",
         remedy="points go into a csv with name,x_mm,y_mm,z_mm; volumes into NIfTI",
     )
 
@@ -123,13 +134,3 @@ def _how_taken(volume: LabelVolume | ImageVolume) -> Finding:
         )
     sentence = "its values are no labels (whole, 0 to 65535, at most 256 of them): an image (trilinear)"
     return Finding(Level.NOTE, "carried-as-image", volume.name, sentence)
-
-
-def _write_thing(out: Path, thing: Any, overwrite: bool) -> None:
-    if write_pointwise(out, thing, overwrite=overwrite):
-        return
-    match thing:
-        case LabelVolume():
-            write_labels(out, thing, overwrite=overwrite)
-        case ImageVolume():
-            write_image(out, thing, overwrite=overwrite)
