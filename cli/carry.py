@@ -54,6 +54,11 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         help="of labels written as DICOM: frame of reference of your images of the scan they arrive in",
     )
     rule_arguments(parser)
+    parser.add_argument(
+        "--vertices-only",
+        action="store_true",
+        help="of lines, carry the given points alone, without those at which their image bends",
+    )
     reading_arguments(parser)
     parser.add_argument("--overwrite", action="store_true", help="replace a file that stands there")
 
@@ -70,7 +75,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
         options.thing,
         options.through,
         options.out,
-        CarrySettings(rules=rules_of(options)),
+        CarrySettings(bends=not options.vertices_only, rules=rules_of(options)),
         reverse=options.reverse,
         kind=options.kind,
         belongs_to=options.belongs_to,

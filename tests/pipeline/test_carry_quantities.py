@@ -1,4 +1,4 @@
-"""Measurement tables through a map folder: rules asked for, applied and remembered."""
+"""Measurement tables and lines through a map folder: rules asked for, applied and remembered."""
 
 import csv
 import json
@@ -7,7 +7,9 @@ import numpy as np
 import pytest
 from volmap_cli.main import main
 
+from volmap.io.polylines import read_polylines, write_polylines
 from volmap.mapfolder import read_map_folder
+from volmap.types import Polylines
 
 HEADER = "name,x_mm,y_mm,z_mm,t1_ms,dose_Gy,flow_x_mm_per_s,flow_y_mm_per_s,flow_z_mm_per_s,site\n"
 RULES = ["--rule", "flux", "--rule", "t1=value", "--rule", "dose=density"]
@@ -93,3 +95,24 @@ def test_a_rule_for_landmarks_is_told_to_have_nothing_to_act_on(tmp_path, small_
     status = carry(tmp_path / "marks.csv", tmp_path / "out.csv", small_pair.folder, "--rule", "flow=flux")
     assert status == 2
     assert "holds no quantity 'flow'" in capsys.readouterr().err
+
+
+@pytest.mark.parametrize("ending", ["csv", "vtp"])
+def test_lines_go_there_and_back_through_files(tmp_path, small_pair, capsys, ending):
+    """Law: the exact image has exact lengths both ways, and they are told for each line in both worlds."""
+    points = np.random.default_rng(4).uniform(-8, 8, (9, 3))
+    lines = Polylines(("1", "2", "3"), points, np.array([0, 2, 6, 9]))
+    here, there, home = (tmp_path / f"{name}.{ending}" for name in ("here", "there", "home"))
+    write_polylines(here, lines)
+    assert carry(here, there, small_pair.folder) == 0
+    assert carry(there, home, small_pair.folder, "--reverse") == 0
+    back = read_polylines(home)[0]
+    assert len(back.points) > 2 * len(points)
+    np.testing.assert_allclose(back.lengths_mm, lines.lengths_mm, atol=1e-9)
+    told = json.loads((tmp_path / f"there.{ending}.json").read_text(encoding="utf-8"))["lines"]
+    assert [row["name"] for row in told] == ["1", "2", "3"]
+    np.testing.assert_allclose([row["length_before_mm"] for row in told], lines.lengths_mm)
+    np.testing.assert_allclose([row["length_after_mm"] for row in told], read_polylines(there)[0].lengths_mm)
+    assert carry(here, tmp_path / f"few.{ending}", small_pair.folder, "--vertices-only") == 0
+    assert len(read_polylines(tmp_path / f"few.{ending}")[0].points) == 9
+    capsys.readouterr()

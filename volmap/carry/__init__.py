@@ -2,6 +2,7 @@
 
 from volmap.carry.direction_proof import DirectionProof, direction_proof, field_mistake, grid_mistake
 from volmap.carry.fields import backward_field, carried_solid, forward_field, volume_ratio_image
+from volmap.carry.lines import with_bends
 from volmap.carry.loop_error import LoopError, loop_error
 from volmap.carry.measured import carried_quantity
 from volmap.carry.points import MovedPoints, carried_values, gradients_at, move_points
@@ -44,4 +45,5 @@ __all__ = [
     "sample_field",
     "strain_of",
     "volume_ratio_image",
+    "with_bends",
 ]

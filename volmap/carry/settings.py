@@ -26,6 +26,8 @@ class CarrySettings:
         How label volumes are carried (see `label_volumes.LABEL_SENTENCES`).
     image : 'linear' or 'cubic'
         How values between voxel centres are found (see `splines.interpolator`).
+    bends : bool
+        Give polylines a point more wherever their image bends, so that it is exact between their points too.
     rules : Rules
         How numbers change, where the thing does not say so itself (see `types.Rule`).  Of a volume `of_all`
         counts; None keeps intensities as they are, and refuses vectors and tensors.
@@ -34,6 +36,7 @@ class CarrySettings:
     reach_mm: float | None = None
     labels: LabelMode = "nearest"
     image: ImageMode = "linear"
+    bends: bool = True
     rules: Rules = field(default_factory=Rules)
 
     @property

@@ -20,6 +20,7 @@ from volmap.io.opening import shown_name
 from volmap.io.vtk_xml_reading import VtkPiece, read_piece
 from volmap.types.errors import InputError
 from volmap.types.notice import caution
+from volmap.types.polylines import Polylines
 from volmap.types.surface import Surface
 from volmap.types.tetmesh import TetMesh
 
@@ -96,6 +97,30 @@ def write_surface(
     _add_arrays(data.GetPointData(), point_data or {}, len(surface.points))
     _add_arrays(data.GetCellData(), sides | dict(cell_data or {}), len(surface.triangles))
     _add_field_data(data.GetFieldData(), field_data or {})
+    _write(path, data, vtkXMLPolyDataWriter(), overwrite=overwrite)
+
+
+def write_lines(
+    path: PathLike, lines: Polylines, *, cell_data: Arrays | None = None, overwrite: bool = False
+) -> None:
+    """Write polylines as .vtp; names are not kept, the order is.
+
+    Raises
+    ------
+    InputError
+        As `write_mesh`.
+    """
+    from vtkmodules.vtkCommonDataModel import vtkCellArray, vtkPolyData
+    from vtkmodules.vtkIOXML import vtkXMLPolyDataWriter
+
+    cells = vtkCellArray()
+    rows = np.arange(len(lines.points), dtype=np.int64)
+    cells.SetData(*(_bridge().numpy_to_vtkIdTypeArray(np.array(a), deep=True) for a in (lines.starts, rows)))
+    data = vtkPolyData()
+    data.SetPoints(_points(lines.points))
+    data.SetLines(cells)
+    _add_arrays(data.GetCellData(), cell_data or {}, len(lines.names))
+    _add_field_data(data.GetFieldData(), {})
     _write(path, data, vtkXMLPolyDataWriter(), overwrite=overwrite)
 
 

@@ -11,14 +11,15 @@ from volmap.io.json_documents import read_json
 from volmap.io.landmarks import OPTIONAL_COLUMNS, POINT_COLUMNS, read_landmarks, write_landmarks
 from volmap.io.measurements import quantity_columns, read_measurements, write_measurements
 from volmap.io.opening import shown_name
+from volmap.io.polylines import LINE_COLUMNS, read_polylines, write_polylines
 from volmap.io.vtk_xml import read_mesh, write_mesh
-from volmap.types import Finding, Landmarks, Level, Measurements, Rule, Rules, TetMesh
+from volmap.types import Finding, Landmarks, Level, Measurements, Polylines, Rule, Rules, TetMesh
 
-ENDINGS = ((".csv",), (".vtu",))
+ENDINGS = ((".csv",), (".vtu",), (".vtp",))
 
 
 def read_pointwise(path: Path, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
-    """Landmarks, measurements or a mesh.
+    """Landmarks, measurements, lines or a mesh.
 
     Parameters
     ----------
@@ -34,7 +35,13 @@ def read_pointwise(path: Path, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
     """
     if path.name.lower().endswith(".vtu"):
         return read_mesh(path)[0], ()
+    if path.name.lower().endswith(".vtp"):
+        rules.require_known((), shown_name(path))
+        return read_polylines(path)
     header = read_header(path)
+    if header[0] == LINE_COLUMNS[0]:
+        rules.require_known((), shown_name(path))
+        return read_polylines(path)
     if header[:4] == POINT_COLUMNS and not set(header[4:]) <= set(OPTIONAL_COLUMNS):
         rules, findings = _with_earlier(rules, path)
         return read_measurements(path, rules), findings
@@ -53,6 +60,8 @@ def write_pointwise(out: Path, thing: Any, *, overwrite: bool = False) -> bool:
     match thing:
         case Landmarks():
             write_landmarks(out, thing, overwrite=overwrite)
+        case Polylines():
+            write_polylines(out, thing, overwrite=overwrite)
         case Measurements():
             write_measurements(out, thing, overwrite=overwrite)
         case TetMesh():

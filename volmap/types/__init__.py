@@ -17,6 +17,7 @@ from volmap.types.landmarks import LandmarkPairs, Landmarks
 from volmap.types.map_chain import MapChain
 from volmap.types.measurements import Measurements
 from volmap.types.outcome import IterationRecord, Outcome, Status
+from volmap.types.polylines import Polylines
 from volmap.types.progress import Progress, silent
 from volmap.types.quantities import Quantity, Rule, Rules
 from volmap.types.surface import Surface
@@ -45,6 +46,7 @@ __all__ = [
     "MapChain",
     "Measurements",
     "Outcome",
+    "Polylines",
     "Progress",
     "Quantity",
     "Rule",
