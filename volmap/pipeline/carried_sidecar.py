@@ -9,6 +9,7 @@ from typing import Any
 
 from volmap.carry import CarrySettings
 from volmap.pipeline.belonging import Side
+from volmap.pipeline.places import told_name
 from volmap.pipeline.ways import Way
 from volmap.types import Finding
 from volmap.types.notice import caution
@@ -34,7 +35,7 @@ def carried_sidecar(
     return {
         "schema": "volmap-carried/1",
         "file": out.name,
-        "carried": thing.name,
+        "carried": told_name(thing),
         "from": {"name": start.name, "sha256": start.sha256},
         "to": {"name": end.name, "sha256": end.sha256},
         "through": [

@@ -13,7 +13,7 @@ from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.io.volumes import read_volume_with_findings
 from volmap.pipeline.belonging import Side, require_belonging
 from volmap.pipeline.carried_sidecar import carried_sidecar, sidecar_place
-from volmap.pipeline.places import NIFTI, require_name
+from volmap.pipeline.places import NIFTI, require_name, told_name
 from volmap.pipeline.pointwise_files import ENDINGS, read_pointwise, write_pointwise
 from volmap.pipeline.volume_files import DICOM, holds_volume, require_out, write_volume
 from volmap.pipeline.ways import read_way
@@ -87,7 +87,7 @@ def carry_file(
         raise InputError(
             "volumes are carried through one map at a time", where=thing.name, remedy="carry it leg by leg"
         )
-    belonging = require_belonging(loaded, *way.ends, name=thing.name, belongs_to=belongs_to)
+    belonging = require_belonging(loaded, *way.ends, name=told_name(thing), belongs_to=belongs_to)
     settings = settings.of_scan(way.start.grid.voxel_mm)
     carried = carrying.carry(loaded, way.map, onto=way.end.grid, settings=settings)
     findings = (*findings, *way.findings, *belonging, *carried.findings)

@@ -9,6 +9,11 @@ from volmap.types import InputError
 NIFTI = (".nii", ".nii.gz")
 
 
+def told_name(thing: Path) -> str:
+    """What a thing is called in what is written: a file by its name, a folder (part of a path) not at all."""
+    return "DICOM images" if thing.is_dir() else thing.name
+
+
 def require_name(out: Path, endings: tuple[str, ...]) -> None:
     """Refuse a name for another kind of file before the work, not after it."""
     if not out.name.lower().endswith(endings):

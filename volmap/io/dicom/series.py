@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -27,6 +27,7 @@ from volmap.types.errors import InputError
 from volmap.types.findings import Finding, Level
 from volmap.types.volumes import ImageVolume
 
+_IMAGES = "DICOM images"
 _DIRECTORY = "1.2.840.10008.1.3.10"  # Media Storage Directory (DICOMDIR)
 
 
@@ -46,11 +47,17 @@ def read_series(path: PathLike) -> tuple[ImageVolume, tuple[Finding, ...]]:
     where = shown_name(Path(path).absolute()) if Path(path).is_dir() else shown_name(path)
     with odd_values(where) as odd:
         if Path(path).is_dir():
-            volume, findings = _from_folder(Path(path), where)
+            volume, findings = _unnamed(*_from_folder(Path(path), where))
         else:
             ds = parsed(path)
             volume, findings = _from_frames(ds, where) if _many(ds) else _from_slices([Path(path)], where)
     return volume, (*findings, *odd)
+
+
+def _unnamed(volume: ImageVolume, findings: tuple[Finding, ...]) -> tuple[ImageVolume, tuple[Finding, ...]]:
+    """Without the folder's name: it is part of a path, names a person often enough, and goes no farther."""
+    told = tuple(replace(f, where=f.where.replace(volume.name, _IMAGES)) for f in findings)
+    return replace(volume, name=_IMAGES), told
 
 
 def _many(ds: Any) -> bool:
