@@ -301,7 +301,7 @@ def align(
         raise InputError("this start does not exist for these scans", where="start", found=start)
     tried = _raced(runs, bodies, growth)
     best = min(a.residual_mm for a in tried)
-    rough_mm = ROUGH * float(np.median(np.linalg.norm(_sides(target), axis=1)))
+    rough_mm = ROUGH * median_side_mm(target)
     equal = [a for a in tried if a.residual_mm <= NEARLY_EQUAL * best + rough_mm]
     if guides is not None and len(guides.names):
         nearest_mm = min(_guides_mm(a, guides) for a in equal)
@@ -309,9 +309,10 @@ def align(
     return min(equal, key=lambda a: round(a.rotation_deg, 1)), tried
 
 
-def _sides(surface: Surface) -> Floats:
-    """(m, 3) first side of every triangle, mm."""
-    return surface.points[surface.triangles[:, 1]] - surface.points[surface.triangles[:, 0]]
+def median_side_mm(surface: Surface) -> float:
+    """Median of the first side of every triangle, mm: how long an edge is."""
+    sides = surface.points[surface.triangles[:, 1]] - surface.points[surface.triangles[:, 0]]
+    return float(np.median(np.linalg.norm(sides, axis=1)))
 
 
 def _guides_mm(alignment: Alignment, guides: LandmarkPairs) -> float:

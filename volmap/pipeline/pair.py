@@ -13,10 +13,11 @@ from volmap import certify as certifying
 from volmap import mesh as meshing
 from volmap import screen as screening
 from volmap.mapfolder import MapFolder
-from volmap.mapping import Bodies, Coupling, MapSettings, Solved, couple, map_mesh
+from volmap.mapping import Bodies, Coupling, MapSettings, MirrorTrial, Solved, couple, map_mesh
 from volmap.mesh import MeshLevels, MeshResult, MeshSettings
 from volmap.pipeline.at_once import on_both
 from volmap.pipeline.machine import Stopwatch, announce_compiling, peak_mb, use_threads, versions
+from volmap.pipeline.mirroring import mirror_compared, mirror_document, mirror_findings
 from volmap.pipeline.opinion import evidence_of
 from volmap.pipeline.told import distortion_of, mesh_document, scan_document, sidecars_of
 from volmap.types import (
@@ -82,6 +83,7 @@ class _Solutions:
     other: Solved | None = None
     alone: tuple[VolumeMap, VolumeMap] | None = None
     notes: tuple[str, ...] = ()
+    mirror: MirrorTrial | None = None
 
 
 def map_pair(
@@ -152,7 +154,14 @@ def map_pair(
     folder = replace(folder, given=given, giving_way=solutions.main.outcome.giving_way)
     with watch.measuring("certify"):
         gates, measures = certifying.certify(evidence_of(folder), table, progress=progress)
-    findings = [*screened.findings, *placed, *spoken, *meshes[0].findings, *meshes[1].findings]
+    findings = [
+        *mirror_findings(solutions.mirror, source, target),
+        *screened.findings,
+        *placed,
+        *spoken,
+        *meshes[0].findings,
+        *meshes[1].findings,
+    ]
     certificate = replace(
         folder.certificate,
         gates=gates,
@@ -266,8 +275,9 @@ def _solve(
             coarser=coarser_bodies(first, second),
             progress=progress,
         )
+        mirror = mirror_compared(first.fine.mesh, second.fine.mesh.interfaces, main, job.map)
     if not job.both_orders:
-        return _Solutions(main)
+        return _Solutions(main, mirror=mirror)
     with watch.measuring("map the other way"):
         other = map_mesh(
             second.fine.mesh,
@@ -283,8 +293,8 @@ def _solve(
     with watch.measuring("couple"):
         coupled = couple(main, other, voxel_mm=voxel_mm, progress=progress)
     if coupled.how is not Coupling.DRAWN:
-        return _Solutions(main, other, notes=(coupled.how.value,))
-    return _Solutions(coupled.main, coupled.other, (main.outcome.map, other.outcome.map))
+        return _Solutions(main, other, notes=(coupled.how.value,), mirror=mirror)
+    return _Solutions(coupled.main, coupled.other, (main.outcome.map, other.outcome.map), mirror=mirror)
 
 
 def _sampled(
@@ -371,6 +381,7 @@ def _settings_document(
             "start": solutions.main.outcome.start,
             "affine": matrix.tolist(),
             "residual_mm": alignment.residual_mm,
+            **mirror_document(solutions.mirror),
         },
     }
 
