@@ -23,6 +23,7 @@ from volmap.types.errors import InputError
 FORMATS = {".stl": "stl", ".ply": "ply", ".off": "off", ".obj": "obj", ".vtk": "vtk",
            ".msh": "gmsh", ".mesh": "medit", ".wkt": "wkt"}  # fmt: skip
 LARGEST_MM = 1e7
+_PATIENCE = 3
 
 
 def read_closed_surface(
@@ -77,7 +78,6 @@ def parsed(file: Path, where: str, *, formats: Mapping[str, str] = FORMATS) -> A
             "is no surface file that can be read", where=where, found=file.suffix or "no suffix",
             expected=" ".join(formats), remedy="export the surface as STL or PLY",
         )  # fmt: skip
-    reader = importlib.import_module(f"meshio.{kind}").read
     silence = io.StringIO()
     try:
         with (
@@ -87,12 +87,56 @@ def parsed(file: Path, where: str, *, formats: Mapping[str, str] = FORMATS) -> A
             np.errstate(all="ignore"),
         ):
             warnings.simplefilter("ignore")
-            return reader(os.fspath(file))
+            return _by_meshio(file, kind)
     except (Exception, SystemExit) as fault:  # a foreign parser meets a broken file in any way at all
         raise InputError(
             "the surface file is damaged or not what its name says", where=where,
             expected=file.suffix.lower().lstrip(".").upper(), remedy="export it again",
         ) from fault  # fmt: skip
+
+
+_IN_TEXT, _IN_BYTES = ("off", "obj", "medit"), ("ply",)  # parsers that take an open file
+_INNER = {"vtk": "meshio.vtk._main", "gmsh": "meshio.gmsh.main"}  # whose `read` opens the file itself
+
+
+def _by_meshio(file: Path, kind: str) -> Any:
+    """Parse a file, which must not be asked for lines for ever after its end."""
+    if kind in _IN_TEXT:
+        with _LinesToTheEnd(io.FileIO(file)) as stream:
+            return importlib.import_module(f"meshio.{kind}").read(_TextToTheEnd(stream, encoding="utf-8"))
+    if kind in _IN_BYTES:
+        with _LinesToTheEnd(io.FileIO(file)) as stream:
+            return importlib.import_module(f"meshio.{kind}").read(stream)
+    if kind in _INNER:
+        with _LinesToTheEnd(io.FileIO(file)) as stream:
+            return importlib.import_module(_INNER[kind]).read_buffer(stream)
+    return importlib.import_module(f"meshio.{kind}").read(os.fspath(file))
+
+
+class _LinesToTheEnd(io.BufferedReader):
+    """A file that says so when it is asked for a line again and again after its end."""
+
+    asked_in_vain = 0
+
+    def readline(self, size: int | None = -1, /) -> bytes:
+        line = super().readline(size)
+        self.asked_in_vain += not line
+        if self.asked_in_vain > _PATIENCE:
+            raise EOFError
+        return line
+
+
+class _TextToTheEnd(io.TextIOWrapper):
+    """The same for text."""
+
+    asked_in_vain = 0
+
+    def readline(self, size: int = -1, /) -> str:  # type: ignore[override]
+        line = super().readline(size)
+        self.asked_in_vain += not line
+        if self.asked_in_vain > _PATIENCE:
+            raise EOFError
+        return line
 
 
 def _triangles(mesh: Any, where: str) -> tuple[NDArray[np.float64], NDArray[np.int64]]:

@@ -282,11 +282,16 @@ def coordinates(piece: VtkPiece, where: str) -> NDArray[np.float64]:
 def cells_of_kind(piece: VtkPiece, section: str, corners: int, where: str) -> NDArray[np.int64]:
     """(m, corners) corners of the cells of a section; InputError where one has more or fewer."""
     arrays = piece.sections.get(section, {})
+    claimed = piece.counts.get(f"NumberOf{section}")
     flat, offsets = (arrays.get(name, np.empty(0)) for name in ("connectivity", "offsets"))
     ends = np.arange(corners, corners * len(offsets) + 1, corners)
     whole = flat.dtype.kind in "iu" and len(flat) == corners * len(offsets)
     if not whole or not len(flat) or not np.array_equal(offsets, ends):
         raise InputError(f"holds cells that do not have {corners} corners", where=where)
+    if claimed is not None and claimed != len(offsets):
+        raise InputError(
+            "the number of cells contradicts itself", where=where, found=f"{claimed}, {len(offsets)}"
+        )
     return flat.astype(np.int64).reshape(-1, corners)
 
 

@@ -19,6 +19,7 @@ _MOST_VOXELS = 2**31
 _UNCOMPRESSED = (
     "1.2.840.10008.1.2", "1.2.840.10008.1.2.1", "1.2.840.10008.1.2.1.99", "1.2.840.10008.1.2.2",
 )  # fmt: skip
+_WITHOUT_IMAGES = ("SR", "PR", "KO", "REG", "FID", "RTSTRUCT", "RTPLAN", "RTRECORD", "DOC", "ECG", "PLAN")
 
 
 @dataclass(frozen=True)
@@ -57,10 +58,11 @@ def pixel_layout(ds: Any, where: str) -> PixelLayout:
     """
     keyword = next((name for name in _KEYWORDS if name in ds), "PixelData")
     if keyword not in ds and "Rows" not in ds:
+        modality = text(ds, "Modality", where)
         raise InputError(
-            "holds no image", where=where, found=f"modality {text(ds, 'Modality', where)[:16] or 'unknown'}",
+            "holds no image", where=where, found=f"modality {modality[:16] or 'unknown'}",
             expected="a segmentation object or images", remedy="give the file or folder of the images",
-            refused=True,
+            refused=modality in _WITHOUT_IMAGES,
         )  # fmt: skip
     rows, columns = (
         required(whole(ds, name, where, least=1, most=65535), name, where) for name in ("Rows", "Columns")

@@ -61,10 +61,11 @@ def read_segmentation(path: PathLike, reading: Reading = AS_IT_IS) -> tuple[Labe
     with odd_values(where) as odd:
         ds = parsed(path)
         if not holds_segmentation(ds, where):
+            modality = text(ds, "Modality", where)
             raise InputError(
-                "is no segmentation", where=where, found=f"modality {text(ds, 'Modality', where)[:16]}",
+                "is no segmentation", where=where, found=f"modality {modality[:16] or 'unknown'}",
                 expected="a DICOM Segmentation object", remedy="give the segmentation drawn on it",
-                refused=True,
+                refused=bool(modality),
             )  # fmt: skip
         if reading.frame is not None:
             raise InputError(

@@ -1,0 +1,112 @@
+"""Damaged meshes, surfaces and given boundaries."""
+
+from __future__ import annotations
+
+import re
+
+import numpy as np
+from damaged_case import HERE, Case, cut, put
+from sound_files import CUBE, TETS, mesh_bytes
+
+
+def text_changes(data, changes):
+    made = {}
+    for name, (old, new) in changes.items():
+        assert old in data, name
+        made[name] = data.replace(old, new, 1)
+    return made
+
+
+def vtu_damages(data):
+    made = {f"cut at {share}": cut(data, share) for share in (0, 0.01, 0.3, 0.7, 0.99)}
+    n_points = re.search(rb'NumberOfPoints="(\d+)"', data)
+    n_cells = re.search(rb'NumberOfCells="(\d+)"', data)
+    for name, found in (("points", n_points), ("cells", n_cells)):
+        for value in (b"0", b"7", b"99999999999", b"-1", b"many"):
+            made[f"{name} {value.decode()}"] = data.replace(
+                found.group(0), found.group(0).replace(found.group(1), value)
+            )
+    made |= text_changes(data, {
+        "another kind": (b'type="UnstructuredGrid"', b'type="ImageData"'),
+        "type of number": (b'type="Float64"', b'type="Float65"'),
+        "smaller numbers": (b'type="Float64"', b'type="Float32"'),
+        "a tag unclosed": (b"</Points>", b""),
+        "no points": (b"Points>", b"Pints>"),
+        "entities": (b"<VTKFile", b'<!DOCTYPE a [<!ENTITY b "c">]><VTKFile'),
+        "no label": (b'Name="label"', b'Name="Label "'),
+        "packing": (b"vtkZLibDataCompressor", b"vtkLZMADataCompressor"),
+        "components": (b'NumberOfComponents="3"', b'NumberOfComponents="0"'),
+        "offsets": (b'offset="0"', b'offset="999999999"'),
+    } if b"appended" in data else {})  # fmt: skip
+    return made
+
+
+def mesh_cases(folder, through):
+
+    from volmap.io.vtk_xml import write_mesh
+    from volmap.types import TetMesh
+
+    write_mesh(folder / "own.vtu", TetMesh(20 * CUBE, TETS, np.ones(len(TETS), int)))
+    own = (folder / "own.vtu").read_bytes()
+
+    def carried(name):
+        return ["carry", f"{HERE}/{name}", "--through", through, "--out", f"{HERE}/out.vtu", "--quiet"]
+
+    return [Case(f"vtu/{name}", {"x.vtu": data}, carried("x.vtu")) for name, data in vtu_damages(own).items()]
+
+
+def surface_cases(folder):
+    made = {}
+    for ending, how in ((".stl", {"binary": True}), (".ply", {"binary": True}), (".off", {}), (".obj", {}),
+                        (".vtk", {"binary": True})):  # fmt: skip
+        data = mesh_bytes(folder, ending, **how)
+        for share in (0, 0.02, 0.3, 0.6, 0.97)[: 4 if ending == ".obj" else 5]:
+            made[f"{ending[1:]}/cut at {share}"] = (ending, cut(data, share))
+        if ending == ".stl":
+            made["stl/huge"] = (ending, put(data, 80, "<I", 2**32 - 1))
+            made["stl/one more"] = (ending, put(data, 80, "<I", 13))
+            made["stl/NaN"] = (ending, put(data, 96, "<f", np.nan))
+            made["stl/infinite"] = (ending, put(data, 96, "<f", np.inf))
+        if ending == ".ply":
+            for name, (old, new) in {
+                "huge": (b"element vertex 8", b"element vertex 99999999999"),
+                "negative": (b"element vertex 8", b"element vertex -8"),
+                "fewer points": (b"element vertex 8", b"element vertex 7"),
+                "type": (b"property double x", b"property quad x"),
+                "order": (b"binary_little_endian", b"binary_middle_endian"),
+            }.items():
+                assert old in data, name
+                made[f"ply/{name}"] = (ending, data.replace(old, new, 1))
+        if ending == ".vtk":
+            for name, (old, new) in {
+                "huge": (b"POINTS 8", b"POINTS 99999999999"),
+                "negative": (b"POINTS 8", b"POINTS -8"),
+                "fewer points": (b"POINTS 8", b"POINTS 5"),
+                "kind": (b"UNSTRUCTURED_GRID", b"STRUCTURED_NONE"),
+            }.items():
+                assert old in data, name
+                made[f"vtk/{name}"] = (ending, data.replace(old, new, 1))
+    return [
+        Case(name, {f"x{ending}": data}, ["mesh", f"{HERE}/x{ending}", "--out", f"{HERE}/out.vtu", "--quiet"])
+        for name, (ending, data) in made.items()
+    ]
+
+
+def boundary_cases(folder, source, target):
+    data = mesh_bytes(folder, ".ply", images=False, binary=False)
+    vtu = mesh_bytes(folder, ".vtu", images=True)
+    made = {
+        "no image": (".ply", data),
+        "cut": (".vtu", cut(vtu, 0.6)),
+        "empty": (".vtu", b""),
+        "NaN": (".vtu", None),
+    }
+    del made["NaN"]
+    return [
+        Case(
+            f"boundary/{name}",
+            {f"x{ending}": data},
+            ["map", source, target, "--boundary", f"{HERE}/x{ending}", "--out", f"{HERE}/out", "--quiet"],
+        )
+        for name, (ending, data) in made.items()
+    ]

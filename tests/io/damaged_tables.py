@@ -1,0 +1,105 @@
+"""Damaged landmark files, guides, tables of names and map folders."""
+
+from __future__ import annotations
+
+from damaged_case import HERE, Case, cut
+from sound_files import map_folder_bytes, pack
+
+POINTS = "name,x_mm,y_mm,z_mm\n"
+TABLES = {
+    "empty": b"",
+    "header alone": POINTS.encode(),
+    "no header": b"a,1,2,3\n",
+    "a column missing": b"name,x_mm,y_mm\na,1,2\n",
+    "a word": f"{POINTS}a,1,zwei,3\n".encode(),
+    "NaN": f"{POINTS}a,1,nan,3\n".encode(),
+    "infinite": f"{POINTS}a,1,2,inf\n".encode(),
+    "short row": f"{POINTS}a,1,2\n".encode(),
+    "twice": f"{POINTS}a,1,2,3\na,4,5,6\n".encode(),
+    "role": f"{POINTS[:-1]},role\na,1,2,3,boss\n".encode(),
+    "sd": f"{POINTS[:-1]},sd_mm\na,1,2,3,-1\n".encode(),
+    "latin": f"{POINTS}\xe9,1,2,3\n".encode("latin-1"),
+    "zero bytes": f"{POINTS}a,1,2,3\n".encode() + bytes(64),
+    "utf-16": f"{POINTS}a,1,2,3\n".encode("utf-16"),
+    "packed": pack(f"{POINTS}a,1,2,3\n".encode()),
+    "a quote unclosed": f'{POINTS}"a,1,2,3\nb,1,2,3\n'.encode(),
+    "no name": f"{POINTS},1,2,3\n".encode(),
+    "a number of pages": f"{POINTS}a,1{'0' * 5000},2,3\n".encode(),
+}
+NAMES = {
+    "empty": b"",
+    "no columns": b"1\tliver\n",
+    "no index": b"number\tname\n1\tliver\n",
+    "a word": b"index\tname\none\tliver\n",
+    "negative": b"index\tname\n-1\tliver\n",
+    "too large": b"index\tname\n70000\tliver\n",
+    "fraction": b"index\tname\n1.5\tliver\n",
+    "twice": b"index\tname\n1\tliver\n1\tspleen\n",
+    "short row": b"index\tname\n1\n",
+    "no name": b"index\tname\n1\t\n",
+    "latin": "index\tname\n1\tl\xe9ver\n".encode("latin-1"),
+    "utf-16": "index\tname\n1\tliver\n".encode("utf-16"),
+    "packed": pack(b"index\tname\n1\tliver\n"),
+    "zero bytes": b"index\tname\n1\tliver\n" + bytes(64),
+}
+
+
+def table_cases(source, target, through):
+    pairs = POINTS[:-1] + ",to_x_mm,to_y_mm,to_z_mm\n"
+    guides = {name: data.replace(POINTS.encode(), pairs.encode()) for name, data in TABLES.items()}
+    cases = [
+        Case(
+            f"landmarks/{name}",
+            {"x.csv": data},
+            ["carry", f"{HERE}/x.csv", "--through", through, "--out", f"{HERE}/out.csv", "--quiet"],
+        )
+        for name, data in TABLES.items()
+    ]
+    cases += [
+        Case(
+            f"guides/{name}",
+            {"x.csv": guides[name]},
+            ["map", source, target, "--guides", f"{HERE}/x.csv", "--out", f"{HERE}/out", "--quiet"],
+        )
+        for name in ("empty", "header alone", "short row", "a column missing", "zero bytes", "latin")
+    ]
+    cases += [
+        Case(f"names/{name}", {"x.tsv": data}, ["screen", source, "--names", f"{HERE}/x.tsv", "--quiet"])
+        for name, data in NAMES.items()
+    ]
+    return cases
+
+
+NEEDED = (
+    "map.vtu",
+    "certificate.json",
+    "steps.json",
+    "forward.nii.gz",
+    "forward.json",
+    "backward_support.nii.gz",
+    "source_labels.nii.gz",
+    "target_surface.vtp",
+    "carried_labels.nii.gz",
+    "volume_ratio.nii.gz",
+)
+CUT = (*NEEDED, "backward.json", "other_order.vtu", "landmarks.csv")
+
+
+def map_folder_cases(folder):
+    files = map_folder_bytes(folder)
+    made = {f"no {name}": {k: v for k, v in files.items() if k != name} for name in NEEDED}
+    for name in CUT:
+        made[f"{name} cut"] = files | {name: cut(files[name], 0.7)}
+        made[f"{name} empty"] = files | {name: b""}
+    for name in ("certificate.json", "forward.json", "steps.json"):
+        made[f"{name} of another kind"] = files | {name: b"[1, 2, 3]"}
+        made[f"{name} in latin-1"] = files | {name: b'{"a": "\xe9"}'}
+        made[f"{name} deep"] = files | {name: b"[" * 100_000}
+    return [
+        Case(
+            f"map folder/{name}",
+            {f"map/{file}": data for file, data in held.items()},
+            ["certify", f"{HERE}/map", "--quiet"],
+        )
+        for name, held in made.items()
+    ]

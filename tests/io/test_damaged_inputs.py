@@ -1,0 +1,83 @@
+"""Three hundred damaged inputs over all readers: exit 3, one sentence, 5 s, 1 GB, nothing written.
+
+Truth: the damages themselves (`damages`), planted by the layouts of the formats.  The commands run as users
+run them, in children with limited memory and time (`damage_runner`).
+"""
+
+import json
+import subprocess
+import sys
+from collections import Counter
+from pathlib import Path
+
+import pytest
+from damages import HERE, all_cases
+
+LEAST = 300
+
+
+def laid_out(cases, root):
+    """The files of all cases on disk, one folder a case, and what to run."""
+    jobs = []
+    for number, case in enumerate(cases):
+        folder = root / f"{number:03d}"
+        for place in (folder, *(folder / name for name in case.folders)):
+            place.mkdir()
+        for name, data in case.files.items():
+            (folder / name).parent.mkdir(exist_ok=True)
+            (folder / name).write_bytes(data)
+        arguments = [argument.replace(HERE, str(folder)) for argument in case.arguments]
+        jobs.append({"name": case.name, "arguments": arguments, "folder": str(folder)})
+    return jobs
+
+
+@pytest.fixture(scope="module")
+def outcomes(tmp_path_factory, small_pair):
+    root = tmp_path_factory.mktemp("damaged")
+    places = {"source": small_pair.source, "target": small_pair.target, "through": small_pair.folder}
+    cases = all_cases(root / "sound", **{name: str(place) for name, place in places.items()})
+    jobs, done = root / "jobs.json", root / "done.json"
+    jobs.write_text(json.dumps(laid_out(cases, root)))
+    runner = Path(__file__).with_name("damage_runner.py")
+    subprocess.run([sys.executable, str(runner), str(jobs), str(done)], check=True)
+    return root, list(zip(cases, json.loads(done.read_text()), strict=True))
+
+
+def wrong(case, result, root):
+    """What is wrong with how a command ended, in words; empty when nothing is."""
+    said, faults = result["said"], []
+    statuses = (3,) if case.certain else (0, 1, 3)
+    if result["status"] not in statuses:
+        faults.append(f"exit {result['status']}")
+    lines = said.splitlines()
+    if result["status"] and (len(lines) != 1 or not lines[0].startswith("volmap: ")):
+        faults.append(f"{len(lines)} lines on stderr")
+    if "Traceback" in said or str(root) in said:
+        faults.append("a traceback or a path")
+    if result["cpu_s"] > 5 or result["most_kb"] > 2**20:
+        faults.append(f"{result['cpu_s']:.1f} s, {result['most_kb'] / 2**20:.2f} GB")
+    if result["left"]:
+        faults.append(f"left {result['left'][:3]}")
+    return f"{case.name}: {'; '.join(faults)}: {said[-300:]}" if faults else ""
+
+
+def test_every_damaged_input_ends_in_one_sentence(outcomes):
+    root, pairs = outcomes
+    faults = [fault for fault in (wrong(case, result, root) for case, result in pairs) if fault]
+    assert not faults, "\n" + "\n".join(faults)
+
+
+def test_three_hundred_of_them_over_all_readers_are_unreadable(outcomes):
+    counted = Counter(case.name.split("/")[0] for case, result in outcomes[1] if result["status"] == 3)
+    assert sum(counted.values()) >= LEAST
+    readers = (
+        "nifti1 nifti2 pair nrrd nhdr segmentation series vtu vtk stl ply off obj boundary landmarks guides"
+    )
+    readers = {*readers.split(), "names", "nifti1 packed", "map folder"}
+    assert readers <= set(counted)
+
+
+def test_the_sentences_differ(outcomes):
+    # a reader that said the same of everything would say nothing
+    told = {result["said"].split(": ", 2)[-1].split(",")[0] for case, result in outcomes[1] if case.certain}
+    assert len(told) > 60
