@@ -14,7 +14,13 @@ from volmap.io.volumes import read_volume_with_findings
 from volmap.pipeline.belonging import Side, require_belonging
 from volmap.pipeline.carried_sidecar import carried_sidecar, sidecar_place
 from volmap.pipeline.places import NIFTI, require_name, told_name
-from volmap.pipeline.pointwise_files import ENDINGS, read_pointwise, write_pointwise
+from volmap.pipeline.pointwise_files import (
+    ENDINGS,
+    endings_out,
+    read_pointwise,
+    require_holding,
+    write_pointwise,
+)
 from volmap.pipeline.volume_files import DICOM, holds_volume, require_out, write_volume
 from volmap.pipeline.ways import read_way
 from volmap.types import (
@@ -80,6 +86,7 @@ def carry_file(
     loaded, findings = _loaded(thing, kind, reading, settings.rules)
     folders = [through] if isinstance(through, Path) else through
     way = read_way(folders, reverse=reverse, progress=progress)
+    require_holding(out, loaded)
     if isinstance(loaded, LabelVolume | ImageVolume):
         require_out(out, loaded)
     progress("carry", 0, 0, thing.name)
@@ -103,21 +110,20 @@ def carry_file(
 
 def _endings(thing: Path) -> tuple[str, ...]:
     """Endings of files of the same kind as `thing`."""
-    for endings in ENDINGS:
-        if thing.name.lower().endswith(endings):
-            return endings
+    if thing.suffix.lower() in ENDINGS:
+        return endings_out(thing)
     if holds_volume(thing):
         return (*NIFTI, *DICOM)
     raise InputError(
         "this kind of file cannot be carried",
         where=thing.name,
-        expected=".csv, .vtu, .nii, .nii.gz, .nrrd, or DICOM",
+        expected=".csv, .vtu, .vtp, .stl, .ply, .nii, .nii.gz, .nrrd, or DICOM",
         remedy="points go into a csv with name,x_mm,y_mm,z_mm; volumes into NIfTI",
     )
 
 
 def _loaded(path: Path, kind: VolumeKind, reading: Reading, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
-    if any(path.name.lower().endswith(endings) for endings in ENDINGS):
+    if path.suffix.lower() in ENDINGS:
         return read_pointwise(path, rules)
     volume, findings = read_volume_with_findings(path, reading, kind=kind)
     if kind != "either":
