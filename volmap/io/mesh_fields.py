@@ -122,7 +122,8 @@ def require_fitting(path: PathLike, fields: MeshFields) -> None:
         raise InputError(
             "cannot hold what lies on the surface", where=name,
             found=", ".join([*data, *(["labels"] if labelled else [])])[:100],
-            expected="a name that ends in .vtp", remedy="change the ending, or leave the arrays out (--leave-out)",
+            expected="a name that ends in .vtp",
+            remedy="change the ending, or leave the arrays out (--leave-out)",
         )  # fmt: skip
 
 
