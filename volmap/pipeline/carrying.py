@@ -13,6 +13,7 @@ from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.io.volumes import read_volume_with_findings
 from volmap.pipeline.belonging import Side, require_belonging
 from volmap.pipeline.carried_sidecar import carried_sidecar, sidecar_place
+from volmap.pipeline.personal_columns import without_personal
 from volmap.pipeline.places import NIFTI, require_name, told_name
 from volmap.pipeline.pointwise_files import (
     ENDINGS,
@@ -84,6 +85,7 @@ def carry_file(
         require_place(place, overwrite=overwrite, folder=False)
     progress("read", 0, 0, thing.name)
     loaded, findings = _loaded(thing, kind, reading, settings.rules)
+    loaded, left_out = without_personal(loaded, told_name(thing))
     folders = [through] if isinstance(through, Path) else through
     way = read_way(folders, reverse=reverse, progress=progress)
     require_holding(out, loaded)
@@ -97,7 +99,7 @@ def carry_file(
     belonging = require_belonging(loaded, *way.ends, name=told_name(thing), belongs_to=belongs_to)
     settings = settings.of_scan(way.start.grid.voxel_mm)
     carried = carrying.carry(loaded, way.map, onto=way.end.grid, settings=settings)
-    findings = (*findings, *way.findings, *belonging, *carried.findings)
+    findings = (*findings, *left_out, *way.findings, *belonging, *carried.findings)
     told = carried_sidecar(thing, out, way, settings, findings, facts=carried.facts, belongs_to=belongs_to)
     with whole_file(sidecar_place(out), overwrite=overwrite) as place:  # both stand, or neither
         place.write_text(json_text(told), encoding="utf-8")
