@@ -16,12 +16,12 @@ from volmap.types.label_shares import LabelShares
 from volmap.types.landmarks import LandmarkPairs, Landmarks
 from volmap.types.map_chain import MapChain
 from volmap.types.measurements import Measurements
-from volmap.types.mesh_fields import MeshFields
 from volmap.types.outcome import IterationRecord, Outcome, Status
 from volmap.types.polylines import Polylines
 from volmap.types.progress import Progress, silent
 from volmap.types.quantities import Quantity, Rule, Rules
 from volmap.types.surface import Surface
+from volmap.types.table import Column, Table
 from volmap.types.tetmesh import TetMesh
 from volmap.types.volume_map import VolumeMap
 from volmap.types.volumes import ImageVolume, LabelVolume
@@ -29,6 +29,7 @@ from volmap.types.volumes import ImageVolume, LabelVolume
 __all__ = [
     "Certificate",
     "Code",
+    "Column",
     "Finding",
     "Gate",
     "GivenBoundary",
@@ -46,7 +47,6 @@ __all__ = [
     "Level",
     "MapChain",
     "Measurements",
-    "MeshFields",
     "Outcome",
     "Polylines",
     "Progress",
@@ -55,6 +55,7 @@ __all__ = [
     "Rules",
     "Status",
     "Surface",
+    "Table",
     "TensorVolume",
     "TetMesh",
     "UnsaidError",
