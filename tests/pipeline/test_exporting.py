@@ -5,6 +5,8 @@ folder, evaluated by a plain barycentric search in numpy here.
 """
 
 import json
+import shutil
+import subprocess
 
 import numpy as np
 import pydicom
@@ -173,3 +175,13 @@ def test_a_uid_that_is_none_ends_with_usage(small_pair, tmp_path, capsys):
 def test_a_folder_that_is_none_cannot_be_exported(tmp_path):
     with pytest.raises(InputError, match="not a map folder"):
         pipeline.export_registration(tmp_path, tmp_path / "x.dcm")
+
+
+@pytest.mark.skipif(shutil.which("dciodvfy") is None, reason="dciodvfy of dicom3tools is not installed")
+@pytest.mark.parametrize(
+    "options", [["registration"], ["registration", "--bring", "target"], ["segmentation"]]
+)
+def test_another_validator_finds_no_error(small_pair, tmp_path, options):
+    path = export(small_pair, tmp_path / "x.dcm", "--as", *options)
+    said = subprocess.run(["dciodvfy", str(path)], capture_output=True, text=True, check=False)
+    assert "Error" not in said.stdout + said.stderr
