@@ -23,6 +23,13 @@ def rule_arguments(parser: argparse.ArgumentParser) -> None:
         help="how numbers change: value (kept) or density (amount kept) for scalars; turn (length kept), "
         "line, gradient or flux for vectors and symmetric tensors; for one QUANTITY, or for all it fits",
     )
+    parser.add_argument(
+        "--leave-out",
+        action="append",
+        default=[],
+        metavar="QUANTITY",
+        help="of a table or a mesh with data: do not carry this quantity",
+    )
 
 
 def rules_of(options: argparse.Namespace) -> Rules:
@@ -44,4 +51,4 @@ def rules_of(options: argparse.Namespace) -> Rules:
             raise UsageError(f"--rule {text!r}: another rule was given for {name or 'all quantities'}")
         said[name] = Rule(word)
     of_all = said.pop("", None)
-    return Rules(of_all, said)
+    return Rules(of_all, said, tuple(options.leave_out))

@@ -116,3 +116,40 @@ def test_lines_go_there_and_back_through_files(tmp_path, small_pair, capsys, end
     assert carry(here, tmp_path / f"few.{ending}", small_pair.folder, "--vertices-only") == 0
     assert len(read_polylines(tmp_path / f"few.{ending}")[0].points) == 9
     capsys.readouterr()
+
+
+def test_a_mesh_with_data_through_files(tmp_path, small_pair, capsys):
+    """VTK writes and reads; mass of a density is kept, a displacement follows its two ends."""
+    pv = pytest.importorskip("pyvista")
+    volume_map = read_map_folder(small_pair.folder).map
+    made = pv.UnstructuredGrid({pv.CellType.TETRA: volume_map.mesh.tets}, np.array(volume_map.mesh.points))
+    made.cell_data["label"] = volume_map.mesh.labels
+    made.cell_data["dose"] = np.linspace(1, 2, made.n_cells)
+    corners = volume_map.mesh.tets
+    made.cell_data["edge"] = volume_map.mesh.points[corners[:, 1]] - volume_map.mesh.points[corners[:, 0]]
+    made.save(tmp_path / "here.vtu")
+    there = tmp_path / "there.vtu"
+    assert carry(tmp_path / "here.vtu", there, small_pair.folder) == 2
+    assert "--rule edge=turn" in capsys.readouterr().err
+    said = ["--rule", "density", "--rule", "edge=line"]
+    assert carry(tmp_path / "here.vtu", there, small_pair.folder, *said) == 0
+    read = pv.read(there)
+    sizes = {}
+    for name, mesh in (("here", made), ("there", read)):
+        sizes[name] = (mesh.compute_cell_sizes()["Volume"] * mesh["dose"]).sum()
+    assert sizes["there"] == pytest.approx(sizes["here"], rel=1e-9)
+    points = np.array(read.points, np.float64)
+    np.testing.assert_allclose(read["edge"], points[corners[:, 1]] - points[corners[:, 0]], atol=1e-9)
+    np.testing.assert_array_equal(read["label"], volume_map.mesh.labels)
+    assert carry(tmp_path / "here.vtu", tmp_path / "x.vtp", small_pair.folder, *said) == 3
+    assert "is no name for what comes out" in capsys.readouterr().err
+    left = ["--leave-out", "edge"]
+    assert carry(tmp_path / "here.vtu", tmp_path / "few.vtu", small_pair.folder, *left) == 0
+    assert sorted(pv.read(tmp_path / "few.vtu").array_names) == [
+        "dose",
+        "frame",
+        "label",
+        "notice",
+        "rules",
+        "units",
+    ]

@@ -32,8 +32,9 @@ from volmap_phantoms.writer import save_labels
 from volmap.io.dicom.segmentation_writing import write_segmentation
 from volmap.io.dicom.uids import uids_of_scan
 from volmap.io.nifti import read_labels
-from volmap.io.vtk_xml import write_mesh
-from volmap.types import ImageVolume, TetMesh
+from volmap.io.vtk_xml import read_mesh, write_mesh, write_surface
+from volmap.pipeline.personal_columns import without_personal
+from volmap.types import ImageVolume, Measurements, TetMesh
 
 MARK = "zzmark"  # in every planted word
 SERIES = "zzperson_in_a_name_of_a_folder"  # the user types it, so it may be on the terminal, and nowhere else
@@ -88,6 +89,14 @@ def planted_nifti(path):
         packed.write(raw)
 
 
+def planted_header(path):
+    """The same in a header of its own (nifti1.h: data_type, db_name, descrip, aux_file, intent_name)."""
+    raw = bytearray(path.read_bytes())
+    for at, room in ((4, 10), (14, 18), (148, 80), (228, 24), (328, 16)):
+        raw[at : at + room] = MARK.encode().ljust(room, b"\0")
+    path.write_bytes(bytes(raw))
+
+
 def slices_of(volume: ImageVolume, folder):
     """A folder of CT slices of a volume on an axial grid, each with marks."""
     folder.mkdir()
@@ -131,44 +140,77 @@ def outputs(tmp_path_factory):
 
 def _run_everything(inputs, out):
     """Plant, run every verb that writes or speaks, and return what was said."""
+    _plant(inputs)
+    said = [_said(call) for call in _looks(out)]
+    _write_boundary(inputs / "boundary.vtp", out / "mesh.vtu")
+    given = ["--guides", "guides.csv", "--boundary", "boundary.vtp", "--boundary-tolerance", "1.5"]
+    edge = ["--edge", "6"]
+    maps = [
+        ["map", "before.nii.gz", "after.dcm", "--out", str(out / "map"), *edge, "--target-image", SERIES],
+        ["map", "before.nii.gz", "after.hdr", "--out", str(out / "given"), *edge, *given],
+    ]
+    return "\n".join(said + [_said(call) for call in (*maps, *_uses(out))])
+
+
+def _plant(inputs):
+    """Inputs of every kind, each with marks wherever its format has room for words."""
     save_labels(body(0), inputs / "before.nii.gz")
     save_labels(body(1), inputs / "after.nii.gz")
     source, target = (read_labels(inputs / name) for name in ("before.nii.gz", "after.nii.gz"))
+    nib.save(nib.Nifti1Pair(target.labels, target.grid.affine), inputs / "after.hdr")
     planted_nifti(inputs / "before.nii.gz")
+    planted_header(inputs / "after.hdr")
     write_segmentation(inputs / "after.dcm", target, scan=uids_of_scan("e" * 64))
     pydicom.dcmwrite(inputs / "after.dcm", planted_dicom(pydicom.dcmread(inputs / "after.dcm")))
     image = ImageVolume(target.grid, (100 * target.labels).astype(np.float32))
     slices_of(image, inputs / SERIES)
     _write_nrrd(inputs / "before.nrrd", source)
-    (inputs / "points.csv").write_text("name,x_mm,y_mm,z_mm\none,0,-6,-8\ntwo,2,8,6\n", encoding="utf-8")
-    patch_mesh(inputs / "mesh.vtu")
-    job = ["--edge", "6", "--target-image", SERIES]
-    calls = [
+    _write_mesh(inputs / "mesh.vtu")
+    _write_closed_surfaces(inputs)
+    tables = {
+        "points.csv": "name,x_mm,y_mm,z_mm\none,0,-6,-8\ntwo,2,8,6\n",
+        "guides.csv": "name,x_mm,y_mm,z_mm,to_x_mm,to_y_mm,to_z_mm\none,0,-6,-8,1.5,-6.36,-9.48\n",
+        "measured.csv": "name,x_mm,y_mm,z_mm,t1_ms,Patient name,birthdate,Date,site\n"
+        f"one,0,-6,-8,900,{MARK},{BIRTH},{SCANNED},shell\n",
+        "measured.csv.json": f'{{"patient": "{MARK}"}}',
+        "labels.tsv": f"index\tname\tpatient\n1\tshell\t{MARK}\n2\tcore\t{BIRTH}\n",
+    }
+    for name, text in tables.items():
+        (inputs / name).write_text(text, encoding="utf-8")
+
+
+def _looks(out):
+    """Calls that need no map."""
+    return [
         ["screen", "before.nii.gz", "after.dcm"],
         ["screen", "before.nrrd"],
+        ["screen", "before.nii.gz", "--mend", str(out / "mended.nii.gz")],
         ["mesh", "before.nii.gz", "--out", str(out / "mesh.vtu"), "--edge", "6"],
-        ["map", "before.nii.gz", "after.dcm", "--out", str(out / "map"), *job],
-        ["certify", str(out / "map")],
-        ["report", str(out / "map"), "--target-image", SERIES],
+        ["mesh", "closed.stl", "--out", str(out / "from_stl.vtu"), "--edge", "6"],
+        ["mesh", "closed.ply", "--out", str(out / "from_ply.vtu"), "--edge", "6"],
     ]
+
+
+def _uses(out):
+    """Calls that take the map."""
+    calls = [["certify", str(out / "map")], ["report", str(out / "map"), "--target-image", SERIES]]
     things = {
         "points.csv": ("points.csv", []),
+        "measured.csv": ("measured.csv", ["--rule", "value"]),
         "mesh.vtu": ("carried.vtu", []),
         "before.nii.gz": ("carried.nii.gz", ["--as", "labels"]),
         "before.nrrd": ("carried_from_nrrd.dcm", ["--as", "labels"]),
         "after.dcm": ("carried_back.nii.gz", ["--reverse"]),
+        "after.hdr": ("carried_back_from_pair.nii", ["--reverse", "--as", "labels"]),
         SERIES: ("image_back.nii.gz", ["--reverse", "--belongs-to", "target"]),
     }
     for thing, (name, options) in things.items():
         calls.append(["carry", thing, "--through", str(out / "map"), "--out", str(out / name), *options])
-    for kind, name in (
-        ("registration", "field.dcm"),
-        ("segmentation", "labels.dcm"),
-        ("surfaces", "surfaces"),
-        ("solid", "solid"),
-    ):
+    for kind, name in {"registration": "field.dcm", "segmentation": "labels.dcm"}.items():
         calls.append(["export", str(out / "map"), "--as", kind, "--out", str(out / name)])
-    return "\n".join(_said(call) for call in calls)
+    for kind in ("surfaces", "solid"):
+        calls.append(["export", str(out / "map"), "--as", kind, "--out", str(out / kind)])
+    return calls
 
 
 def _said(call):
@@ -194,10 +236,30 @@ def _write_nrrd(path, volume):
     path.write_bytes(raw.replace(b"\n", f"\n# {MARK} comment\n".encode(), 1))
 
 
-def patch_mesh(path):
+def _write_mesh(path):
     points = np.array([[0.0, 0, 0], [4, 0, 0], [0, 4, 0], [0, 0, 4]])
     mesh = TetMesh(points, np.array([[0, 1, 2, 3]]), np.array([1]))
     write_mesh(path, mesh, field_data={"patient": f"{MARK}^Name", "scanned": SCANNED})
+
+
+def _write_closed_surfaces(folder):
+    """A ball as binary STL, whose header has 80 letters, and as PLY with comments."""
+    ball = pyvista.Icosphere(radius=12.0, nsub=3)
+    ball.save(folder / "closed.stl", binary=True)
+    raw = (folder / "closed.stl").read_bytes()
+    (folder / "closed.stl").write_bytes(f"{MARK} {BIRTH}".encode().ljust(80) + raw[80:])
+    ball.save(folder / "closed.ply", binary=False)
+    text = (folder / "closed.ply").read_bytes()
+    (folder / "closed.ply").write_bytes(text.replace(b"\nformat", f"\ncomment {MARK}\nformat".encode(), 1))
+    assert f"comment {MARK}".encode() not in text
+
+
+def _write_boundary(path, mesh_file):
+    """SOURCE's boundary with where it goes, and words beside it."""
+    surface = read_mesh(mesh_file)[0].interfaces
+    images = 1.06 * surface.points + [1.5, 0.0, -1.0]
+    told = {"name": MARK, "patient": f"{MARK}^Name", "scanned": SCANNED}
+    write_surface(path, surface, point_data={"image_mm": images}, field_data=told)
 
 
 def unpacked(path):
@@ -255,7 +317,7 @@ def test_the_search_finds_what_is_there(tmp_path):
 
     points = np.eye(3)
     write_gifti_surface(tmp_path / "a.surf.gii", points, np.array([[0, 1, 2]]), name=MARK, description="x")
-    patch_mesh(tmp_path / "b.vtu")
+    _write_mesh(tmp_path / "b.vtu")
     (tmp_path / "c.gz").write_bytes(gzip.compress(MARK.encode(), mtime=0))
     (tmp_path / "d.html").write_bytes(
         base64.b64encode(f"{MARK} and more than forty letters in base64".encode())
@@ -265,3 +327,12 @@ def test_the_search_finds_what_is_there(tmp_path):
     )
     for path in tmp_path.iterdir():
         assert any(MARK.encode() in part for part in unpacked(path)), path.name
+
+
+@pytest.mark.parametrize("heading", ["Patient", "patient name", "MRN", "Date of birth", "birthdate", "Uid"])
+def test_columns_that_name_someone_are_left_out_and_named(heading):
+    table = Measurements(("a",), np.zeros((1, 3)), (), {heading: ("x",), "pathology": ("y",), "site": ("z",)})
+    kept, (finding,) = without_personal(table, "table.csv")
+    assert dict(kept.texts) == {"pathology": ("y",), "site": ("z",)}
+    assert heading in finding.sentence
+    assert without_personal(kept, "table.csv") == (kept, ())

@@ -1,5 +1,6 @@
 """Fields, and things carried through a map."""
 
+from volmap.carry.bodies import moved_body
 from volmap.carry.direction_proof import DirectionProof, direction_proof, field_mistake, grid_mistake
 from volmap.carry.fields import backward_field, carried_solid, forward_field, volume_ratio_image
 from volmap.carry.lines import with_bends
@@ -40,6 +41,7 @@ __all__ = [
     "grid_mistake",
     "loop_error",
     "move_points",
+    "moved_body",
     "round_trip",
     "rule_factors",
     "sample_field",

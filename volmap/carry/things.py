@@ -8,7 +8,6 @@ from functools import singledispatch
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 
 from volmap.carry.intensity_volumes import pull_image, pull_tensors, pull_vectors
 from volmap.carry.label_volumes import label_shares, pull_labels
@@ -25,9 +24,7 @@ from volmap.types import (
     Level,
     MapChain,
     Rule,
-    Surface,
     TensorVolume,
-    TetMesh,
     UnsaidError,
     VectorVolume,
     VolumeMap,
@@ -66,10 +63,10 @@ def carry(
 
     Parameters
     ----------
-    thing : Landmarks, Measurements, LabelVolume, ImageVolume, TetMesh or Surface
+    thing : Landmarks, Measurements, Polylines, LabelVolume, ImageVolume, TetMesh, Surface or MeshFields
         In SOURCE's world (in TARGET's with `reverse`).
-        Points of landmarks, measurements, meshes and surfaces move exactly (see `points.move_points`), the
-        numbers of quantities by their own rules (`types.Rule`).  Volumes are
+        Points of landmarks, measurements, lines, meshes and surfaces move exactly (see
+        `points.move_points`), the numbers of quantities by their own rules (`types.Rule`).  Volumes are
         pulled: each voxel centre of `onto` inside the body is sent back by the exact inverse, and takes the
         label of the voxel it falls in, or the trilinear intensity there.
     volume_map : VolumeMap or MapChain
@@ -171,40 +168,6 @@ def _carry_tensors(
     return Carried(*pull_tensors(thing, directed, onto, mode=settings.image, rule=rule))
 
 
-@carry.register
-def _carry_mesh(
-    thing: TetMesh,
-    volume_map: VolumeMap,
-    *,
-    reverse: bool = False,
-    onto: Grid | None = None,
-    settings: CarrySettings = AS_USUAL,
-) -> Carried:
-    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "mesh", settings.reach)
-    mesh = thing.moved(points)
-    turned = int(((mesh.volumes <= 0) & (thing.volumes > 0)).sum())
-    if turned:
-        sentence = (
-            f"{turned} of {len(mesh.tets)} tets turned inside out: they are larger than the map's bends"
-        )
-        remedy = "refine the mesh before carrying it"
-        findings += (Finding(Level.WARN, "turned-tets", "mesh", sentence, remedy),)
-    return Carried(mesh, findings)
-
-
-@carry.register
-def _carry_surface(
-    thing: Surface,
-    volume_map: VolumeMap,
-    *,
-    reverse: bool = False,
-    onto: Grid | None = None,
-    settings: CarrySettings = AS_USUAL,
-) -> Carried:
-    points, findings = _all_points(thing.points, _directed(volume_map, reverse), "surface", settings.reach)
-    return Carried(Surface(points, thing.triangles, thing.sides), findings)
-
-
 def _directed(volume_map: VolumeMap, reverse: bool) -> VolumeMap:
     return volume_map.reversed() if reverse else volume_map
 
@@ -240,28 +203,3 @@ def _landmark_findings(thing: Landmarks, moved: MovedPoints) -> tuple[Finding, .
         )
         findings += (Finding(Level.NOTE, "sd-left-out", "landmarks", sentence),)
     return findings
-
-
-def _all_points(
-    points: NDArray[np.float64], volume_map: VolumeMap, where: str, reach_mm: float
-) -> tuple[NDArray[np.float64], tuple[Finding, ...]]:
-    """Every point carried, or the whole thing refused."""
-    moved = move_points(volume_map, points, reach_mm=reach_mm)
-    lost = ~moved.carried
-    if lost.any():
-        raise InputError(
-            "points lie outside the body",
-            where=where,
-            found=f"{lost.sum()} of {len(points)} points, up to {moved.outside_mm.max():.2f} mm outside",
-            expected=f"at most {reach_mm:g} mm",
-            remedy="check that it belongs to this scan, cut it to the body, or allow a larger reach",
-            refused=True,
-        )
-    n_outside = int(moved.extrapolated.sum())
-    if not n_outside:
-        return moved.points, ()
-    sentence = (
-        f"{n_outside} of {len(points)} points lie up to {moved.outside_mm.max():.2f} mm outside the body "
-        "and were carried with the affine map of the nearest tet, not measured"
-    )
-    return moved.points, (Finding(Level.WARN, "outside-carried", where, sentence),)

@@ -58,7 +58,7 @@ def read_measurements(path: str | os.PathLike[str], rules: Rules) -> Measurement
     ----------
     path : path
     rules : Rules
-        How each quantity changes when it is carried; no quantity may be left without.
+        How each quantity changes when it is carried, or that it stays behind.
 
     Raises
     ------
@@ -71,6 +71,7 @@ def read_measurements(path: str | os.PathLike[str], rules: Rules) -> Measurement
     where = shown_name(path)
     groups, texts = quantity_columns(read_header(path), where)
     rules.require_known((g.name for g in groups), where)
+    groups = tuple(g for g in groups if g.name not in rules.left_out)
     said = [rules.required(g.name, g.rank, where) for g in groups]
     columns = read_columns(path, ("name", *texts))
     points = np.stack([columns.numbers[c] for c in PLACE[1:]], axis=1)

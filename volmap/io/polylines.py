@@ -45,6 +45,18 @@ def write_polylines(path: PathLike, lines: Polylines, *, overwrite: bool = False
     write_columns(path, {"line": names, **columns}, overwrite=overwrite)
 
 
+def holds_lines(path: PathLike) -> bool:
+    """Whether a .vtp holds lines and no triangles.
+
+    Raises
+    ------
+    InputError
+        Damaged.
+    """
+    counts = read_piece(path, "PolyData").counts
+    return bool(counts.get("NumberOfLines", 0)) and not counts.get("NumberOfPolys", 0)
+
+
 def _from_csv(path: PathLike) -> Polylines:
     where, header = shown_name(path), read_header(path)
     if header != LINE_COLUMNS:

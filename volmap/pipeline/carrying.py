@@ -13,8 +13,15 @@ from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.io.volumes import read_volume_with_findings
 from volmap.pipeline.belonging import Side, require_belonging
 from volmap.pipeline.carried_sidecar import carried_sidecar, sidecar_place
+from volmap.pipeline.personal_columns import without_personal
 from volmap.pipeline.places import NIFTI, require_name, told_name
-from volmap.pipeline.pointwise_files import ENDINGS, read_pointwise, write_pointwise
+from volmap.pipeline.pointwise_files import (
+    ENDINGS,
+    endings_out,
+    read_pointwise,
+    require_holding,
+    write_pointwise,
+)
 from volmap.pipeline.volume_files import DICOM, holds_volume, require_out, write_volume
 from volmap.pipeline.ways import read_way
 from volmap.types import (
@@ -78,8 +85,10 @@ def carry_file(
         require_place(place, overwrite=overwrite, folder=False)
     progress("read", 0, 0, thing.name)
     loaded, findings = _loaded(thing, kind, reading, settings.rules)
+    loaded, left_out = without_personal(loaded, told_name(thing))
     folders = [through] if isinstance(through, Path) else through
     way = read_way(folders, reverse=reverse, progress=progress)
+    require_holding(out, loaded)
     if isinstance(loaded, LabelVolume | ImageVolume):
         require_out(out, loaded)
     progress("carry", 0, 0, thing.name)
@@ -90,7 +99,7 @@ def carry_file(
     belonging = require_belonging(loaded, *way.ends, name=told_name(thing), belongs_to=belongs_to)
     settings = settings.of_scan(way.start.grid.voxel_mm)
     carried = carrying.carry(loaded, way.map, onto=way.end.grid, settings=settings)
-    findings = (*findings, *way.findings, *belonging, *carried.findings)
+    findings = (*findings, *left_out, *way.findings, *belonging, *carried.findings)
     told = carried_sidecar(thing, out, way, settings, findings, facts=carried.facts, belongs_to=belongs_to)
     with whole_file(sidecar_place(out), overwrite=overwrite) as place:  # both stand, or neither
         place.write_text(json_text(told), encoding="utf-8")
@@ -103,21 +112,20 @@ def carry_file(
 
 def _endings(thing: Path) -> tuple[str, ...]:
     """Endings of files of the same kind as `thing`."""
-    for endings in ENDINGS:
-        if thing.name.lower().endswith(endings):
-            return endings
+    if thing.suffix.lower() in ENDINGS:
+        return endings_out(thing)
     if holds_volume(thing):
         return (*NIFTI, *DICOM)
     raise InputError(
         "this kind of file cannot be carried",
         where=thing.name,
-        expected=".csv, .vtu, .nii, .nii.gz, .nrrd, or DICOM",
+        expected=".csv, .vtu, .vtp, .stl, .ply, .nii, .nii.gz, .nrrd, or DICOM",
         remedy="points go into a csv with name,x_mm,y_mm,z_mm; volumes into NIfTI",
     )
 
 
 def _loaded(path: Path, kind: VolumeKind, reading: Reading, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
-    if any(path.name.lower().endswith(endings) for endings in ENDINGS):
+    if path.suffix.lower() in ENDINGS:
         return read_pointwise(path, rules)
     volume, findings = read_volume_with_findings(path, reading, kind=kind)
     if kind != "either":

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -10,12 +11,20 @@ from volmap.io.csv_columns import read_header
 from volmap.io.json_documents import read_json
 from volmap.io.landmarks import OPTIONAL_COLUMNS, POINT_COLUMNS, read_landmarks, write_landmarks
 from volmap.io.measurements import quantity_columns, read_measurements, write_measurements
+from volmap.io.mesh_fields import SURFACE_OUT, read_mesh_fields, require_fitting, write_mesh_fields
+from volmap.io.meshes import MESH_ENDINGS
 from volmap.io.opening import shown_name
-from volmap.io.polylines import LINE_COLUMNS, read_polylines, write_polylines
-from volmap.io.vtk_xml import read_mesh, write_mesh
-from volmap.types import Finding, Landmarks, Level, Measurements, Polylines, Rule, Rules, TetMesh
+from volmap.io.polylines import LINE_COLUMNS, holds_lines, read_polylines, write_polylines
+from volmap.pipeline.places import require_name
+from volmap.types import Finding, Landmarks, Level, Measurements, MeshFields, Polylines, Rule, Rules
 
-ENDINGS = ((".csv",), (".vtu",), (".vtp",))
+_OUT = {".csv": (".csv", ".vtp"), ".vtu": (".vtu",), ".vtp": (".csv", *SURFACE_OUT)}
+ENDINGS = tuple(dict.fromkeys((".csv", *MESH_ENDINGS)))
+
+
+def endings_out(path: Path) -> tuple[str, ...]:
+    """How what comes out of such a file may be called."""
+    return _OUT.get(path.suffix.lower(), (".vtu", *SURFACE_OUT))
 
 
 def read_pointwise(path: Path, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
@@ -33,11 +42,11 @@ def read_pointwise(path: Path, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
     InputError
         A file that cannot be read, or quantities nobody says a rule for.
     """
-    if path.name.lower().endswith(".vtu"):
-        return read_mesh(path)[0], ()
-    if path.name.lower().endswith(".vtp"):
-        rules.require_known((), shown_name(path))
-        return read_polylines(path)
+    if path.suffix.lower() != ".csv":
+        if path.suffix.lower() == ".vtp" and holds_lines(path):
+            rules.require_known((), shown_name(path))
+            return read_polylines(path)
+        return read_mesh_fields(path, rules)
     header = read_header(path)
     if header[0] == LINE_COLUMNS[0]:
         rules.require_known((), shown_name(path))
@@ -47,6 +56,21 @@ def read_pointwise(path: Path, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
         return read_measurements(path, rules), findings
     rules.require_known((), shown_name(path))
     return read_landmarks(path), ()
+
+
+def require_holding(out: Path, thing: Any) -> None:
+    """Refuse a name of a format that cannot hold what comes out, before the work.
+
+    Raises
+    ------
+    InputError
+    """
+    if isinstance(thing, MeshFields):
+        require_fitting(out, thing)
+    elif isinstance(thing, Polylines):
+        require_name(out, (".csv", ".vtp"))
+    elif isinstance(thing, Landmarks | Measurements):
+        require_name(out, (".csv",))
 
 
 def write_pointwise(out: Path, thing: Any, *, overwrite: bool = False) -> bool:
@@ -64,8 +88,8 @@ def write_pointwise(out: Path, thing: Any, *, overwrite: bool = False) -> bool:
             write_polylines(out, thing, overwrite=overwrite)
         case Measurements():
             write_measurements(out, thing, overwrite=overwrite)
-        case TetMesh():
-            write_mesh(out, thing, overwrite=overwrite)
+        case MeshFields():
+            write_mesh_fields(out, thing, overwrite=overwrite)
         case _:
             return False
     return True
@@ -81,7 +105,7 @@ def _with_earlier(rules: Rules, path: Path) -> tuple[Rules, tuple[Finding, ...]]
     said = ", ".join(f"{name}: {rule.value}" for name, rule in taken.items())
     sentence = f"rules were taken from the document beside it, which says how it was carried before ({said})"
     finding = Finding(Level.NOTE, "rules-as-before", shown_name(path), sentence)
-    return Rules(rules.of_all, {**taken, **rules.of_each}), (finding,)
+    return replace(rules, of_each={**taken, **rules.of_each}), (finding,)
 
 
 def _rules_beside(path: Path) -> Mapping[str, Rule]:

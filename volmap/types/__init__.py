@@ -16,6 +16,7 @@ from volmap.types.label_shares import LabelShares
 from volmap.types.landmarks import LandmarkPairs, Landmarks
 from volmap.types.map_chain import MapChain
 from volmap.types.measurements import Measurements
+from volmap.types.mesh_fields import MeshFields
 from volmap.types.outcome import IterationRecord, Outcome, Status
 from volmap.types.polylines import Polylines
 from volmap.types.progress import Progress, silent
@@ -47,6 +48,7 @@ __all__ = [
     "Level",
     "MapChain",
     "Measurements",
+    "MeshFields",
     "Outcome",
     "Polylines",
     "Progress",

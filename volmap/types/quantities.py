@@ -176,10 +176,13 @@ class Rules:
         For every quantity it is a rule for and that `of_each` does not name.
     of_each : mapping of str to Rule
         By name of the quantity.
+    left_out : tuple of str
+        Quantities that shall stay behind.
     """
 
     of_all: Rule | None = None
     of_each: Mapping[str, Rule] = field(default_factory=dict)
+    left_out: tuple[str, ...] = ()
 
     def of(self, name: str, rank: int) -> Rule | None:
         """The rule for a quantity, or None where nothing was said.
@@ -212,17 +215,17 @@ class Rules:
         return rule
 
     def require_known(self, names: Iterable[str], where: str = "") -> None:
-        """Refuse rules for quantities that are not there.
+        """Refuse rules for quantities that are not there, also to leave them out.
 
         Raises
         ------
         UnsaidError
         """
         known = list(names)
-        unknown = [name for name in self.of_each if name not in known]
+        unknown = [name for name in (*self.of_each, *self.left_out) if name not in known]
         if unknown:
             raise UnsaidError(
-                f"holds no quantity {unknown[0]!r} for the rule that was said",
+                f"holds no quantity {unknown[0]!r}, of which something was said",
                 where=where,
                 found=", ".join(known[:12]) or "no quantities",
             )

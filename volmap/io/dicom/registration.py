@@ -113,6 +113,7 @@ def write_registration(
         registered, sop_class=SOP_CLASS, modality="REG", description=f"{a} into the frame of {b}", told=told
     )
     made.ContentLabel = "REGISTRATION"
+    made.Laterality = ""  # C.7.3.1, Type 2C: nobody knows whether the body is one of a pair
     made.DeformableRegistrationSequence = [_item(field, grid, source, check)]
     put(path, made, overwrite=overwrite)
     return check
@@ -151,7 +152,7 @@ def _grid(field: GridField, grid: Laid) -> Dataset:
     made.GridResolution = grid.spacing.tolist()
     triples: Any = grid.in_order(field.displacement) * _LPS.astype(np.float32)
     triples[np.isnan(triples)] = np.nan  # one bit pattern
-    made.VectorGridData = triples.transpose(2, 1, 0, 3).astype("<f4").tobytes()
+    made.VectorGridData = triples.transpose(2, 1, 0, 3).astype("<f4", copy=False).tobytes()
     return made
 
 

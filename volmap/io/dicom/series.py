@@ -28,7 +28,6 @@ from volmap.types.findings import Finding, Level
 from volmap.types.volumes import ImageVolume
 
 _IMAGES = "DICOM images"
-_DIRECTORY = "1.2.840.10008.1.3.10"  # Media Storage Directory (DICOMDIR)
 
 
 def read_series(path: PathLike) -> tuple[ImageVolume, tuple[Finding, ...]]:
