@@ -16,7 +16,7 @@ ENERGIES = ("soft-tissue", "neo-hookean", "symmetric-dirichlet", "arap", "log-st
 
 def arguments(parser: argparse.ArgumentParser) -> None:
     """Options of this verb."""
-    parser.add_argument("source", type=Path, metavar="SOURCE", help="label volume (NIfTI)")
+    parser.add_argument("source", type=Path, metavar="SOURCE", help="label volume (NIfTI, NRRD, DICOM)")
     parser.add_argument("target", type=Path, metavar="TARGET", help="label volume with the same labels")
     parser.add_argument("--out", type=Path, required=True, metavar="DIR", help="map folder to write")
     parser.add_argument("--overwrite", action="store_true", help="replace a map folder that stands there")

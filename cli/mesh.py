@@ -1,4 +1,4 @@
-"""Mesh a label volume, all labels conforming, or a closed surface (STL, PLY)."""
+"""Mesh a label volume, all labels conforming, or a closed surface (STL, PLY, VTK and the like)."""
 
 from __future__ import annotations
 
@@ -15,7 +15,7 @@ EXAMPLE = "volmap mesh visit0_labels.nii.gz --out visit0.vtu --edge 2.5"
 
 def arguments(parser: argparse.ArgumentParser) -> None:
     """Options of this verb."""
-    parser.add_argument("file", type=Path, metavar="FILE", help="label volume (NIfTI) or closed surface")
+    parser.add_argument("file", type=Path, metavar="FILE", help="label volume or closed surface")
     parser.add_argument("--out", type=Path, required=True, metavar="MESH.vtu", help="where to write the mesh")
     parser.add_argument(
         "--edge", type=positive_mm, metavar="MM", help="edge length (default: about 40,000 tets)"

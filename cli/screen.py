@@ -19,7 +19,9 @@ EXAMPLE = "volmap screen visit0_labels.nii.gz visit1_labels.nii.gz"
 
 def arguments(parser: argparse.ArgumentParser) -> None:
     """Options of this verb."""
-    parser.add_argument("files", nargs="+", type=Path, metavar="FILE", help="label volumes (NIfTI)")
+    parser.add_argument(
+        "files", nargs="+", type=Path, metavar="FILE", help="label volumes (NIfTI, NRRD, DICOM)"
+    )
     reading_arguments(parser)
     parser.add_argument("--edge", type=positive_mm, metavar="MM", help="mesh edge the volumes are meant for")
     parser.add_argument(

@@ -33,7 +33,6 @@ def vtu_damages(data):
         "a tag unclosed": (b"</Points>", b""),
         "no points": (b"Points>", b"Pints>"),
         "entities": (b"<VTKFile", b'<!DOCTYPE a [<!ENTITY b "c">]><VTKFile'),
-        "no label": (b'Name="label"', b'Name="Label "'),
         "packing": (b"vtkZLibDataCompressor", b"vtkLZMADataCompressor"),
         "components": (b'NumberOfComponents="3"', b'NumberOfComponents="0"'),
         "offsets": (b'offset="0"', b'offset="999999999"'),
@@ -89,6 +88,56 @@ def surface_cases(folder):
     return [
         Case(name, {f"x{ending}": data}, ["mesh", f"{HERE}/x{ending}", "--out", f"{HERE}/out.vtu", "--quiet"])
         for name, (ending, data) in made.items()
+    ]
+
+
+LEGACY = b"""# vtk DataFile Version 3.0
+a cube
+ASCII
+DATASET POLYDATA
+POINTS 4 float
+0 0 0 9 0 0
+0 9 0 0 0 9
+POLYGONS 4 16
+3 0 2 1 3 0 1 3
+3 0 3 2 3 1 2 3
+POINT_DATA 4
+SCALARS heat float 1
+LOOKUP_TABLE default
+1 2 3 4
+"""
+LEGACY_CHANGES = {
+    "version": (b"# vtk", b"# vtx"),
+    "coding": (b"ASCII", b"UTF-8"),
+    "kind": (b"POLYDATA", b"STRUCTURED_POINTS"),
+    "no kind": (b"DATASET POLYDATA\n", b""),
+    "huge": (b"POINTS 4", b"POINTS 999999999999"),
+    "one point more": (b"POINTS 4", b"POINTS 5"),
+    "one point fewer": (b"POINTS 4", b"POINTS 3"),
+    "negative": (b"POINTS 4", b"POINTS -4"),
+    "type": (b"4 float", b"4 half"),
+    "a word": (b"9 0 0", b"9 o 0"),
+    "NaN": (b"9 0 0", b"9 nan 0"),
+    "cells more": (b"POLYGONS 4", b"POLYGONS 5"),
+    "cells huge": (b"POLYGONS 4 16", b"POLYGONS 4 99999999999"),
+    "corner beyond": (b"3 1 2 3", b"3 1 2 4"),
+    "corner negative": (b"3 1 2 3", b"3 1 2 -3"),
+    "a cell of nine": (b"3 1 2 3", b"9 1 2 3"),
+    "rows more": (b"POINT_DATA 4", b"POINT_DATA 5"),
+    "no table": (b"LOOKUP_TABLE default\n", b""),
+    "section": (b"POINT_DATA", b"PINT_DATA"),
+    "points twice as one": (b"POLYGONS 4 16\n", b"\n"),
+}
+
+
+def legacy_cases():
+    return [
+        Case(
+            f"vtk text/{name}",
+            {"x.vtk": data},
+            ["mesh", f"{HERE}/x.vtk", "--out", f"{HERE}/out.vtu", "--quiet"],
+        )
+        for name, data in text_changes(LEGACY, LEGACY_CHANGES).items()
     ]
 
 

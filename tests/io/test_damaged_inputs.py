@@ -10,6 +10,7 @@ import sys
 from collections import Counter
 from pathlib import Path
 
+import numpy as np
 import pytest
 from damages import HERE, all_cases
 
@@ -81,3 +82,40 @@ def test_the_sentences_differ(outcomes):
     # a reader that said the same of everything would say nothing
     told = {result["said"].split(": ", 2)[-1].split(",")[0] for case, result in outcomes[1] if case.certain}
     assert len(told) > 60
+
+
+def test_the_files_are_sound_before_they_are_damaged(tmp_path):
+    # without this a reader that refuses everything would pass
+    import nibabel as nib
+    import sound_files as sound
+
+    from volmap.io.given_boundary import read_given_boundary
+    from volmap.io.surfaces import read_closed_surface
+    from volmap.io.volumes import read_image, read_labels
+
+    header, voxels = sound.pair_bytes()
+    one = sound.nifti_bytes(nib.Nifti1Image)
+    made = {
+        "one.nii": one,
+        "packed.nii.gz": sound.pack(one),
+        "two.nii": sound.nifti_bytes(nib.Nifti2Image),
+        "pair.hdr": header,
+        "pair.img": voxels,
+        "x.nhdr": sound.nrrd_bytes(tmp_path, encoding="raw", detached=True),
+        **{f"{e}.nrrd": sound.nrrd_bytes(tmp_path, encoding=e) for e in ("raw", "gzip", "ascii")},
+        **{f"{kind}.dcm": sound.dicom_segmentation_bytes(tmp_path, kind) for kind in ("BINARY", "LABELMAP")},
+        "x.vtu": sound.mesh_bytes(tmp_path, ".vtu", images=True),
+    }
+    for name, data in made.items():
+        (tmp_path / name).write_bytes(data)
+    for name in made:
+        if not name.endswith((".vtu", ".dcm")):
+            assert np.array_equal(read_labels(tmp_path / name).labels, sound.labels()), name
+        elif name.endswith(".dcm"):
+            assert read_labels(tmp_path / name).present == (1, 2)
+    sound.dicom_series_bytes(tmp_path)
+    assert read_image(tmp_path / "series").grid.shape == (9, 8, 5)
+    for ending in (".stl", ".ply", ".off", ".obj", ".vtk"):
+        sound.mesh_bytes(tmp_path, ending)
+        assert len(read_closed_surface(tmp_path / f"x{ending}")[1]) == 12
+    assert len(read_given_boundary(tmp_path / "x.vtu", tolerance_mm=1, reach_mm=1).triangles) == 12

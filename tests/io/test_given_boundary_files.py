@@ -53,6 +53,7 @@ def vtu_of_tets(path):
     [
         ("a.vtp", in_pyvista),
         ("a.vtk", in_meshio),
+        ("d.vtk", in_pyvista),
         ("a.ply", ply),
         ("a.vtu", vtu_of_triangles),
         ("b.vtu", vtu_of_tets),
@@ -97,12 +98,11 @@ def with_a_nan(path):
         ("a.ply", lambda p: in_meshio(p, arrays={"other": IMAGES[:, 0].copy()}), "`image_mm`, found other"),
         ("a.stl", lambda p: in_meshio(p, arrays={}), "holds no point array `image_mm`"),
         ("a.vtp", lambda p: in_pyvista(p, IMAGES[:, :2].copy()), "does not fit the points, found float64 of"),
-        ("d.vtk", in_pyvista, "legacy VTK PolyData cannot be read; save it as .vtp"),
         ("b.vtp", with_a_nan, "values of `image_mm` are not finite, found 1 of 4, the first at point 2"),
         ("b.vtk", lambda p: in_meshio(p, cells=[("line", TRIANGLES[:, :2])]), "holds no triangles"),
         ("c.vtk", lambda p: in_meshio(p, cells=[("quad", TRIANGLES[:, [0, 1, 2, 2]])]), "found quad"),
         ("c.vtp", lambda p: p.write_bytes(b"no file") and p, "is not a VTK XML file"),
-        ("a.xyz", lambda p: p.write_text("1 2 3") and p, "expected .vtp .vtu .stl"),
+        ("a.xyz", lambda p: p.write_text("1 2 3") and p, "expected .vtp .vtu .vtk .stl"),
         ("no.vtp", lambda p: p, "there is no such file"),
     ],
 )

@@ -1,31 +1,27 @@
 """A given boundary correspondence: a surface with `image_mm` on its points.
 
-Read: VTP of triangles, VTU of triangles or of tets (then its boundary counts, and what lies between its
-labels), and what meshio reads of the formats in `surfaces.FORMATS` that can hold point data (VTK, PLY, gmsh).
+Read: what `mesh_parts` reads of the formats that can hold point data (VTP, VTU, VTK, PLY, gmsh), of triangles
+or of tets (then its boundary counts, and what lies between its labels).
 PLY has no vectors: three properties `image_mm_x`, `image_mm_y`, `image_mm_z` (or with 0, 1, 2) stand for one.
 """
 
 from __future__ import annotations
 
 from collections.abc import Mapping
-from pathlib import Path
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.io.opening import all_bytes, existing_file, shown_name
-from volmap.io.surfaces import FORMATS, LARGEST_MM, parsed
-from volmap.io.vtk_xml import PathLike, cells_of_kind, coordinates, write_surface
-from volmap.io.vtk_xml_reading import read_piece
+from volmap.io.mesh_parts import LARGEST_MM, MeshParts, read_parts
+from volmap.io.opening import shown_name
+from volmap.io.vtk_xml import PathLike, write_surface
 from volmap.kernels.topology import interfaces
 from volmap.types.errors import InputError
 from volmap.types.given_boundary import GivenBoundary
 from volmap.types.surface import Surface
 
 IMAGE = "image_mm"
-_TRIANGLE, _TET = 5, 10
-_Part = tuple[NDArray[np.float64], NDArray[np.int64], Mapping[str, NDArray[Any]], Mapping[str, Any]]
 
 
 def read_given_boundary(
@@ -45,14 +41,10 @@ def read_given_boundary(
         Not readable, no triangles, no point array `image_mm` of three components, values not finite, or no
         tolerance from anywhere.
     """
-    file, where = existing_file(path), shown_name(path)
-    suffix = Path(path).suffix.lower()
-    if suffix == ".vtp":
-        points, triangles, arrays, told = _from_vtp(path, where)
-    elif suffix == ".vtu":
-        points, triangles, arrays, told = _from_vtu(path, where)
-    else:
-        points, triangles, arrays, told = _from_meshio(file, where)
+    where = shown_name(path)
+    parts = read_parts(path)
+    points, arrays, told = parts.points, parts.point_data, parts.told
+    triangles = _triangles(parts, where)
     if not len(triangles):
         raise InputError(
             "holds no triangles",
@@ -60,8 +52,6 @@ def read_given_boundary(
             expected="a surface of triangles with `image_mm` on its points",
             remedy="triangulate it and write it again",
         )
-    if triangles.min() < 0 or triangles.max() >= len(points):
-        raise InputError("a triangle names a point that does not exist", where=where)
     images = _images(arrays, len(points), where)
     used = np.unique(triangles)
     for values, what in ((points, "points"), (images, f"values of `{IMAGE}`")):
@@ -114,61 +104,22 @@ def write_given_boundary(path: PathLike, given: GivenBoundary, *, overwrite: boo
     )
 
 
-def _from_vtp(path: PathLike, where: str) -> _Part:
-    piece = read_piece(path, "PolyData")
-    others = [k for k in ("Verts", "Lines", "Strips") if piece.counts.get(f"NumberOf{k}", 0)]
-    if others:
+def _triangles(parts: MeshParts, where: str) -> NDArray[np.int64]:
+    """The triangles of a surface, or those around and between the labels of a tet mesh."""
+    try:
+        triangles, tets = parts.of_kind("triangle"), parts.of_kind("tetra")
+    except InputError as fault:
+        raise fault.at(where) from fault
+    if len(tets) and len(triangles):
         raise InputError(
-            "holds other cells than triangles",
-            where=where,
-            found=", ".join(others).lower(),
-            remedy="keep its polygons only, triangulated",
-        )
-    if not piece.counts.get("NumberOfPolys", 0):
-        return np.empty((0, 3)), np.empty((0, 3), np.int64), {}, {}
-    triangles = cells_of_kind(piece, "Polys", 3, where)
-    return coordinates(piece, where), triangles, piece.sections.get("PointData", {}), piece.field_data
-
-
-def _from_vtu(path: PathLike, where: str) -> _Part:
-    piece = read_piece(path, "UnstructuredGrid")
-    kinds = np.unique(piece.sections.get("Cells", {}).get("types", ())).astype(int).tolist()
-    arrays = piece.sections.get("PointData", {})
-    if kinds == [_TRIANGLE]:
-        return coordinates(piece, where), cells_of_kind(piece, "Cells", 3, where), arrays, piece.field_data
-    if kinds != [_TET]:
-        raise InputError(
-            "holds neither triangles nor tets alone",
-            where=where,
-            found=f"VTK cell types {kinds}",
-            expected=f"{_TRIANGLE} or {_TET}",
-        )
-    points, tets = coordinates(piece, where), cells_of_kind(piece, "Cells", 4, where)
-    labels = piece.sections.get("CellData", {}).get("label", np.ones(len(tets), np.int64))
-    if len(labels) != len(tets) or tets.min() < 0 or tets.max() >= len(points):
-        raise InputError("its tets contradict its points or labels", where=where)
-    triangles, _ = interfaces(tets, labels.astype(np.int64))
-    return points, triangles, arrays, piece.field_data
-
-
-def _from_meshio(file: Path, where: str) -> _Part:
-    if file.suffix.lower() == ".vtk" and b"DATASET POLYDATA" in all_bytes(file)[:512].upper():
-        raise InputError("legacy VTK PolyData cannot be read", where=where, remedy="save it as .vtp")
-    mesh = parsed(file, where, formats={".vtp": "", ".vtu": ""} | FORMATS)
-    kinds = sorted({block.type for block in mesh.cells if len(block.data)} - {"vertex", "line", "triangle"})
-    if kinds:
-        raise InputError(
-            "holds other cells than triangles",
-            where=where,
-            found=", ".join(kinds),
-            remedy="triangulate it first",
-        )
-    blocks = [np.asarray(b.data, np.int64) for b in mesh.cells if b.type == "triangle" and len(b.data)]
-    triangles = np.concatenate(blocks) if blocks else np.empty((0, 3), np.int64)
-    points = np.asarray(mesh.points, np.float64)
-    if points.ndim != 2 or points.shape[1] != 3:
-        raise InputError("its points are not triples", where=where, found=str(points.shape))
-    return points, triangles, mesh.point_data, {}
+            "holds neither triangles nor tets alone", where=where,
+            found=f"{len(triangles)} triangles and {len(tets)} tets", remedy="keep one of them",
+        )  # fmt: skip
+    if not len(tets):
+        return triangles
+    n_cells = sum(map(len, parts.rows.values()))
+    labels = parts.cell_data.get("label", np.ones(n_cells, np.int64))
+    return interfaces(tets, labels[parts.rows["tetra"]].astype(np.int64))[0]
 
 
 def _images(arrays: Mapping[str, NDArray[Any]], n: int, where: str) -> NDArray[np.float64]:

@@ -1,13 +1,11 @@
 """Meshes and surfaces of any program, with the data on them: VTU, VTP, and what meshio reads.
 
-World millimetres, RAS+, are taken for granted where a format states neither.  Tets count before triangles; a
-file of triangles alone is a surface.
+Tets count before triangles; a file of triangles alone is a surface.
 """
 
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -15,22 +13,17 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.io.opening import existing_file, shown_name
-from volmap.io.surfaces import FORMATS, LARGEST_MM, parsed, welded
-from volmap.io.vtk_xml import coordinates
-from volmap.io.vtk_xml_reading import VtkPiece, read_piece
+from volmap.io.mesh_parts import LARGEST_MM, MESH_ENDINGS, NONE, Arrays, MeshParts, read_parts
+from volmap.io.opening import shown_name
+from volmap.io.surfaces import welded
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding, Level
 from volmap.types.surface import Surface
 from volmap.types.tetmesh import TetMesh
 
-MESH_ENDINGS = (".vtu", ".vtp", *FORMATS)
+__all__ = ["MESH_ENDINGS", "MeshFile", "read_mesh_file"]
 _LABELS = ("label", "labels", "gmsh:physical", "medit:ref")  # meshio's names for the regions of two formats
 _SIDES = ("label_inside", "label_outside")
-_KINDS = {1: "vertex", 2: "vertex", 3: "line", 4: "line", 5: "triangle", 10: "tetra"}  # VTK's cell types
-_PASSED_OVER = ("vertex", "line")
-_NONE = np.empty(0, np.int64)
-Arrays = dict[str, NDArray[Any]]
 
 
 @dataclass(frozen=True)
@@ -55,17 +48,6 @@ class MeshFile:
     findings: tuple[Finding, ...] = ()
 
 
-@dataclass(frozen=True)
-class _Raw:
-    """Cells of all kinds as stored; `rows` are their places among the file's cells."""
-
-    points: NDArray[np.float64]
-    corners: Mapping[str, NDArray[np.int64]]
-    rows: Mapping[str, NDArray[np.int64]]
-    point_data: Arrays
-    cell_data: Arrays
-
-
 def read_mesh_file(path: str | os.PathLike[str]) -> MeshFile:
     """Read tets or triangles with their data.
 
@@ -79,19 +61,20 @@ def read_mesh_file(path: str | os.PathLike[str]) -> MeshFile:
         Format unknown, file damaged, cells of other kinds, several arrays that could be the labels, a label
         below 1, values not finite.
     """
-    file, where = existing_file(path), shown_name(path)
-    raw = _stored(file, where)
-    kind = "tetra" if len(raw.corners.get("tetra", ())) else "triangle"
-    corners, rows = raw.corners.get(kind, _NONE), raw.rows.get(kind, _NONE)
+    where = shown_name(path)
+    try:
+        raw = read_parts(path)
+        kind = "tetra" if len(raw.of_kind("tetra")) else "triangle"
+        corners, rows = raw.of_kind(kind), raw.rows.get(kind, NONE)
+    except InputError as fault:
+        raise (fault if fault.where else fault.at(where)) from fault
     if not len(corners):
         raise InputError(
             "holds neither tets nor triangles; it is empty, damaged or cut short", where=where,
             remedy="export it again",
         )  # fmt: skip
-    if corners.min() < 0 or corners.max() >= len(raw.points):
-        raise InputError("a cell names a point that does not exist", where=where, remedy="export it again")
     points, point_data = raw.points, raw.point_data
-    if file.suffix.lower() == ".stl":  # has no points of its own, three a triangle
+    if Path(path).suffix.lower() == ".stl":  # has no points of its own, three a triangle
         points, corners, kept = welded(points, corners)
         rows, point_data = rows[kept], {}
     used, corners = np.unique(corners, return_inverse=True)
@@ -128,7 +111,7 @@ def _note(code: str, where: str, sentence: str) -> Finding:
     return Finding(Level.NOTE, code, where, sentence)
 
 
-def _left_out(raw: _Raw, kind: str, n_points: int, where: str) -> list[Finding]:
+def _left_out(raw: MeshParts, kind: str, n_points: int, where: str) -> list[Finding]:
     others = [f"{len(cells)} of {name}" for name, cells in raw.corners.items() if name != kind and len(cells)]
     found = []
     if others:
@@ -186,111 +169,3 @@ def _sides(cell_data: Arrays, n: int, where: str) -> tuple[NDArray[np.int64], tu
         return np.stack([cell_data.pop(name).astype(np.int64) for name in _SIDES], axis=1), ()
     said = _note("one-label", where, "a surface without sides: label 1 inside, nothing outside")
     return np.tile(np.array([1, 0], np.int64), (n, 1)), (said,)
-
-
-def _stored(file: Path, where: str) -> _Raw:
-    ending = file.suffix.lower()
-    if ending == ".vtu":
-        return _from_vtu(read_piece(file, "UnstructuredGrid"), where)
-    if ending == ".vtp":
-        return _from_vtp(read_piece(file, "PolyData"), where)
-    return _from_meshio(parsed(file, where, formats={".vtu": "", ".vtp": ""} | FORMATS), where)
-
-
-def _from_vtu(piece: VtkPiece, where: str) -> _Raw:
-    arrays = piece.sections.get("Cells", {})
-    flat, ends, types = (
-        arrays.get(name, np.empty(0, np.int64)) for name in ("connectivity", "offsets", "types")
-    )
-    whole = all(values.ndim == 1 and _are_whole(values) for values in (flat, ends, types))
-    if not whole or len(ends) != len(types) or len(types) != piece.counts.get("NumberOfCells", len(types)):
-        raise InputError("its cells contradict themselves", where=where, remedy="write the file again")
-    ends = ends.astype(np.int64)
-    lengths = np.diff(ends, prepend=0)
-    if len(ends) and (lengths.min() < 1 or ends[-1] != len(flat)):
-        raise InputError("its cells contradict themselves", where=where, remedy="write the file again")
-    unknown = sorted({int(t) for t in np.unique(types)} - set(_KINDS))
-    if unknown:
-        _refuse_kinds([f"VTK cell type {t}" for t in unknown], where)
-    corners: dict[str, NDArray[np.int64]] = {}
-    rows: dict[str, NDArray[np.int64]] = {}
-    for kind, n in (("tetra", 4), ("triangle", 3), ("line", 2), ("vertex", 1)):
-        codes = [code for code, name in _KINDS.items() if name == kind]
-        rows[kind] = np.flatnonzero(np.isin(types, codes))
-        if kind in _PASSED_OVER:
-            corners[kind] = rows[kind][:, np.newaxis]
-        elif (lengths[rows[kind]] != n).any():
-            raise InputError(f"holds a {kind} that does not have {n} corners", where=where)
-        else:
-            corners[kind] = flat[ends[rows[kind]][:, np.newaxis] - n + np.arange(n)].astype(np.int64)
-    return _raw(coordinates(piece, where), corners, rows, piece.sections, len(types), where)
-
-
-def _from_vtp(piece: VtkPiece, where: str) -> _Raw:
-    others = [kind for kind in ("Verts", "Lines", "Strips") if piece.counts.get(f"NumberOf{kind}", 0)]
-    if others:
-        _refuse_kinds([kind.lower() for kind in others], where)
-    arrays = piece.sections.get("Polys", {})
-    flat, ends = (arrays.get(name, _NONE) for name in ("connectivity", "offsets"))
-    n = len(ends)
-    if not (_are_whole(flat) and len(flat) == 3 * n and np.array_equal(ends, np.arange(3, 3 * n + 1, 3))):
-        raise InputError("holds polygons that are no triangles", where=where, remedy="triangulate it first")
-    corners = {"triangle": flat.astype(np.int64).reshape(-1, 3)}
-    return _raw(coordinates(piece, where), corners, {"triangle": np.arange(n)}, piece.sections, n, where)
-
-
-def _raw(
-    points: NDArray[np.float64],
-    corners: Mapping[str, NDArray[np.int64]],
-    rows: Mapping[str, NDArray[np.int64]],
-    sections: Mapping[str, Mapping[str, NDArray[Any]]],
-    n_cells: int,
-    where: str,
-) -> _Raw:
-    data = []
-    for section, n in (("PointData", len(points)), ("CellData", n_cells)):
-        arrays = dict(sections.get(section, {}))
-        for name, values in arrays.items():
-            if len(values) != n:
-                raise InputError(
-                    f"the array {name!r} does not fit the mesh", where=where, found=f"{len(values)} rows",
-                    expected=str(n),
-                )  # fmt: skip
-        data.append(arrays)
-    return _Raw(points, corners, rows, *data)
-
-
-def _from_meshio(mesh: Any, where: str) -> _Raw:
-    points = np.asarray(mesh.points, np.float64)
-    if points.ndim != 2 or points.shape[1] != 3:
-        raise InputError("its points are not triples", where=where, found=str(points.shape))
-    unknown = sorted({block.type for block in mesh.cells if len(block.data)} - set(_KINDS.values()))
-    if unknown:
-        _refuse_kinds(unknown, where)
-    starts = np.cumsum([0, *(len(block.data) for block in mesh.cells)])
-    corners: dict[str, NDArray[np.int64]] = {}
-    rows: dict[str, NDArray[np.int64]] = {}
-    for kind in ("tetra", "triangle", "line", "vertex"):
-        chosen = [i for i, block in enumerate(mesh.cells) if block.type == kind and len(block.data)]
-        if chosen:
-            corners[kind] = np.concatenate([np.asarray(mesh.cells[i].data, np.int64) for i in chosen])
-            rows[kind] = np.concatenate([np.arange(starts[i], starts[i + 1]) for i in chosen])
-    cell_data = {}
-    for name, blocks in mesh.cell_data.items():
-        parts = [np.asarray(part) for part in blocks]
-        if parts and all(
-            part.dtype.kind in "fiub" and part.shape[1:] == parts[0].shape[1:] for part in parts
-        ):
-            cell_data[str(name)] = np.concatenate(parts)
-    arrays = {str(name): np.asarray(values) for name, values in mesh.point_data.items()}
-    point_data = {name: values for name, values in arrays.items() if values.dtype.kind in "fiub"}
-    sections = {"PointData": point_data, "CellData": cell_data}
-    return _raw(points, corners, rows, sections, int(starts[-1]), where)
-
-
-def _refuse_kinds(kinds: list[str], where: str) -> None:
-    raise InputError(
-        "holds cells of kinds that cannot be used", where=where, found=", ".join(kinds)[:100],
-        expected="tets of four points, or triangles",
-        remedy="cut its cells into tets, or its faces into triangles",
-    )  # fmt: skip

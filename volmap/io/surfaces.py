@@ -1,35 +1,25 @@
-"""Closed triangle surfaces from other programs: STL, PLY, OFF, OBJ and more, read with meshio.
+"""Closed triangle surfaces from other programs: STL, PLY, OFF, OBJ, VTK and more.
 
 These formats state neither frame nor unit: world millimetres, RAS+, are assumed.
 """
 
 from __future__ import annotations
 
-import contextlib
-import importlib
-import io
 import os
-import warnings
-from collections.abc import Mapping
-from pathlib import Path
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.io.opening import existing_file, shown_name
+from volmap.io.mesh_parts import LARGEST_MM, NONE, MeshParts, read_parts
+from volmap.io.opening import shown_name
+from volmap.kernels.topology import interfaces
 from volmap.types.errors import InputError
-
-FORMATS = {".stl": "stl", ".ply": "ply", ".off": "off", ".obj": "obj", ".vtk": "vtk",
-           ".msh": "gmsh", ".mesh": "medit", ".wkt": "wkt"}  # fmt: skip
-LARGEST_MM = 1e7
-_PATIENCE = 3
 
 
 def read_closed_surface(
     path: str | os.PathLike[str],
 ) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
-    """Read a closed, consistently turned triangle surface.
+    """Read a closed, consistently turned triangle surface; of a solid of tets of one label its boundary.
 
     Points at exactly the same place become one, and points no triangle uses are left out.
 
@@ -45,9 +35,8 @@ def read_closed_surface(
         Format unknown, file damaged, no triangles or other faces beside them, values not finite, open
         edges, edges shared by more than two triangles or turned both ways, no volume enclosed.
     """
-    file, where = existing_file(path), shown_name(path)
-    mesh = parsed(file, where)
-    points, triangles = _triangles(mesh, where)
+    where = shown_name(path)
+    points, triangles = _triangles(path, where)
     points, triangles, _ = welded(points, triangles)
     _require_closed(triangles, where)
     volume = _enclosed_mm3(points, triangles)
@@ -56,111 +45,41 @@ def read_closed_surface(
     return points, triangles if volume > 0 else np.ascontiguousarray(triangles[:, ::-1])
 
 
-def parsed(file: Path, where: str, *, formats: Mapping[str, str] = FORMATS) -> Any:
-    """The meshio mesh of a surface file.
-
-    Parameters
-    ----------
-    file : path
-    where : str
-        Its name in messages.
-    formats : mapping of str to str
-        Suffixes to name when the file's own is none of `FORMATS`.
-
-    Raises
-    ------
-    InputError
-        Format unknown, or file damaged.
-    """
-    kind = FORMATS.get(file.suffix.lower())
-    if kind is None:
-        raise InputError(
-            "is no surface file that can be read", where=where, found=file.suffix or "no suffix",
-            expected=" ".join(formats), remedy="export the surface as STL or PLY",
-        )  # fmt: skip
-    silence = io.StringIO()
+def _triangles(path: str | os.PathLike[str], where: str) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+    parts = read_parts(path)
     try:
-        with (
-            contextlib.redirect_stdout(silence),
-            contextlib.redirect_stderr(silence),
-            warnings.catch_warnings(),
-            np.errstate(all="ignore"),
-        ):
-            warnings.simplefilter("ignore")
-            return _by_meshio(file, kind)
-    except (Exception, SystemExit) as fault:  # a foreign parser meets a broken file in any way at all
+        triangles, tets = parts.of_kind("triangle"), parts.of_kind("tetra")
+    except InputError as fault:
+        raise fault.at(where) from fault
+    if len(tets) and not len(triangles):
+        triangles = _around(tets, parts, where)
+    elif len(tets):
         raise InputError(
-            "the surface file is damaged or not what its name says", where=where,
-            expected=file.suffix.lower().lstrip(".").upper(), remedy="export it again",
-        ) from fault  # fmt: skip
-
-
-_IN_TEXT, _IN_BYTES = ("off", "obj", "medit"), ("ply",)  # parsers that take an open file
-_INNER = {"vtk": "meshio.vtk._main", "gmsh": "meshio.gmsh.main"}  # whose `read` opens the file itself
-
-
-def _by_meshio(file: Path, kind: str) -> Any:
-    """Parse a file, which must not be asked for lines for ever after its end."""
-    if kind in _IN_TEXT:
-        with _LinesToTheEnd(io.FileIO(file)) as stream:
-            return importlib.import_module(f"meshio.{kind}").read(_TextToTheEnd(stream, encoding="utf-8"))
-    if kind in _IN_BYTES:
-        with _LinesToTheEnd(io.FileIO(file)) as stream:
-            return importlib.import_module(f"meshio.{kind}").read(stream)
-    if kind in _INNER:
-        with _LinesToTheEnd(io.FileIO(file)) as stream:
-            return importlib.import_module(_INNER[kind]).read_buffer(stream)
-    return importlib.import_module(f"meshio.{kind}").read(os.fspath(file))
-
-
-class _LinesToTheEnd(io.BufferedReader):
-    """A file that says so when it is asked for a line again and again after its end."""
-
-    asked_in_vain = 0
-
-    def readline(self, size: int | None = -1, /) -> bytes:
-        line = super().readline(size)
-        self.asked_in_vain += not line
-        if self.asked_in_vain > _PATIENCE:
-            raise EOFError
-        return line
-
-
-class _TextToTheEnd(io.TextIOWrapper):
-    """The same for text."""
-
-    asked_in_vain = 0
-
-    def readline(self, size: int = -1, /) -> str:  # type: ignore[override]
-        line = super().readline(size)
-        self.asked_in_vain += not line
-        if self.asked_in_vain > _PATIENCE:
-            raise EOFError
-        return line
-
-
-def _triangles(mesh: Any, where: str) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
-    kinds = sorted({block.type for block in mesh.cells if len(block.data)} - {"vertex", "line"})
-    if not kinds:
+            "holds triangles and tets", where=where, found=f"{len(triangles)} and {len(tets)}",
+            expected="a surface, or tets of one label", remedy="keep one of them",
+        )  # fmt: skip
+    if not len(triangles):
         raise InputError(
             "the surface file holds no triangle; it is empty, damaged or cut short", where=where,
             remedy="export it again",
         )  # fmt: skip
-    if kinds != ["triangle"]:
-        raise InputError(
-            "the surface is not of triangles alone", where=where, found=", ".join(kinds),
-            remedy="triangulate it first",
-        )  # fmt: skip
-    points = np.asarray(mesh.points, np.float64)
-    blocks = [np.asarray(b.data, np.int64) for b in mesh.cells if b.type == "triangle" and len(b.data)]
-    triangles = np.concatenate(blocks)
-    if points.ndim != 2 or points.shape[1] != 3 or not (np.abs(points) < LARGEST_MM).all():
+    if not (np.abs(parts.points) < LARGEST_MM).all():
         raise InputError(
             "the points are not finite triples", where=where, expected=f"coordinates below {LARGEST_MM:g} mm"
         )
-    if triangles.min() < 0 or triangles.max() >= len(points):
-        raise InputError("a triangle names a point that does not exist", where=where)
-    return points, triangles
+    return parts.points, triangles
+
+
+def _around(tets: NDArray[np.int64], parts: MeshParts, where: str) -> NDArray[np.int64]:
+    """The boundary of a solid of tets."""
+    labels = parts.cell_data.get("label", NONE)[parts.rows["tetra"] if "label" in parts.cell_data else NONE]
+    if len(np.unique(labels)) > 1:
+        raise InputError(
+            "holds tets of several labels, which cannot be meshed anew", where=where,
+            found=f"{len(np.unique(labels))} labels", expected="a closed surface, or a solid of one label",
+            remedy="mesh the label volume, or carry this mesh as it is", refused=True,
+        )  # fmt: skip
+    return interfaces(tets, np.ones(len(tets), np.int64))[0]
 
 
 def welded(

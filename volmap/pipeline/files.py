@@ -12,9 +12,10 @@ from volmap import screen as screening
 from volmap.io.atomic import require_place, whole_file
 from volmap.io.given_boundary import read_given_boundary
 from volmap.io.landmarks import read_pairs
+from volmap.io.mesh_parts import MESH_ENDINGS
 from volmap.io.nifti import write_labels
 from volmap.io.reading import AS_IT_IS, Reading
-from volmap.io.surfaces import FORMATS, read_closed_surface
+from volmap.io.surfaces import read_closed_surface
 from volmap.io.volumes import read_image, read_labels_with_findings
 from volmap.io.vtk_xml import write_mesh
 from volmap.mapfolder import CERTIFICATE, REPORT, MapFolder, read_certificate, read_map_folder
@@ -118,7 +119,7 @@ def mesh_file(
     overwrite: bool = False,
     progress: Progress = silent,
 ) -> MeshResult:
-    """Mesh a label volume, or a closed surface (STL, PLY and the like).
+    """Mesh a label volume, a closed surface (STL, PLY, VTK and the like), or a solid of tets anew.
 
     Raises
     ------
@@ -128,7 +129,7 @@ def mesh_file(
     require_name(out, (".vtu",))
     require_place(out, overwrite=overwrite, folder=False)
     announce_compiling(progress)
-    if path.suffix.lower() in FORMATS:
+    if path.suffix.lower() in MESH_ENDINGS:
         points, triangles = read_closed_surface(path)
         result = meshing.mesh_surface(points, triangles, settings, name=path.name)
     else:

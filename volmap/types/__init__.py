@@ -22,7 +22,6 @@ from volmap.types.polylines import Polylines
 from volmap.types.progress import Progress, silent
 from volmap.types.quantities import Quantity, Rule, Rules
 from volmap.types.surface import Surface
-from volmap.types.table import Column, Table
 from volmap.types.tetmesh import TetMesh
 from volmap.types.volume_map import VolumeMap
 from volmap.types.volumes import ImageVolume, LabelVolume
@@ -30,7 +29,6 @@ from volmap.types.volumes import ImageVolume, LabelVolume
 __all__ = [
     "Certificate",
     "Code",
-    "Column",
     "Finding",
     "Gate",
     "GivenBoundary",
@@ -57,7 +55,6 @@ __all__ = [
     "Rules",
     "Status",
     "Surface",
-    "Table",
     "TensorVolume",
     "TetMesh",
     "UnsaidError",
