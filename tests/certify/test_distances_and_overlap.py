@@ -5,7 +5,7 @@ import pytest
 
 from volmap.certify.boundary_distance import surface_distances
 from volmap.certify.overlap import common_voxels, dice, equivalent_shell_mm, shell_dice
-from volmap.certify.statistics import even_summary, summary, weighted_mean, weighted_quantile
+from volmap.kernels.statistics import even_summary, summary, weighted_mean, weighted_quantile
 from volmap.types import Surface
 
 GOLDEN = (1 + 5**0.5) / 2

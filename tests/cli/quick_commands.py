@@ -20,6 +20,7 @@ def of_verb(verb, pair, out):
             "--out",
             str(out / "there.csv"),
         ],
+        "measure": ["measure", str(pair.folder), "--out", str(out / "t é.csv")],
         "report": ["report", str(pair.folder)],
         "phantom": ["phantom", "--list"],
         "demo": ["demo", "--out", str(out / "demo")],

@@ -7,6 +7,7 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
+from volmap.io import landmarks
 from volmap.io.landmarks import read_landmarks, read_pairs, write_landmarks, write_pairs
 from volmap.types import InputError, LandmarkPairs, Landmarks
 
@@ -110,3 +111,44 @@ def test_random_bytes(tmp_path, data, headed):
     (tmp_path / "a.csv").write_bytes((POINTS.encode() + b"\n" if headed else b"") + data)
     with contextlib.suppress(InputError):
         read_landmarks(tmp_path / "a.csv")
+
+
+def _large(path, spoil=None):
+    rows = np.random.default_rng(0).normal(size=(20_000, 3)).tolist()
+    lines = [f" p{i},{x!r},{y!r}, {z!r},guide,0.5" for i, (x, y, z) in enumerate(rows)]
+    if spoil is not None:
+        lines[17_000] = spoil
+    text = "name,x_mm,y_mm,z_mm,role,sd_mm\n" + "\n".join(lines) + "\n"
+    path.write_text(text, encoding="utf-8")
+    return np.array(rows)
+
+
+def test_large_files_are_read_by_columns_to_the_same(tmp_path, monkeypatch):
+    """Law: the fast reader and the one that reads line by line give the same landmarks."""
+    points = _large(tmp_path / "l.csv")
+    fast = landmarks.read_landmarks(tmp_path / "l.csv")
+    monkeypatch.setattr(landmarks, "_LARGE", 2**40)
+    slow = landmarks.read_landmarks(tmp_path / "l.csv")
+    np.testing.assert_array_equal(fast.points, points)
+    np.testing.assert_array_equal(slow.points, points)
+    assert (fast.names, fast.roles, fast.sd_mm.tolist()) == (slow.names, slow.roles, slow.sd_mm.tolist())
+
+
+@pytest.mark.parametrize(
+    ("spoil", "said"),
+    [
+        ("p5,1,2,3,guide,1", "a landmark's name stands twice"),
+        ("q,1,2,x,guide,1", "z_mm is not a finite number"),
+        ("q,1,2,nan,guide,1", "z_mm is not a finite number"),
+        ("q,1,2,3,steer,1", "role is unknown"),
+        ("q,1,2,3,guide,0", "sd_mm is not above 0"),
+        (",1,2,3,guide,1", "has no name"),
+        ("q,1,2,3,guide", "wrong number of columns"),
+    ],
+)
+def test_large_files_that_are_damaged_name_the_line(tmp_path, spoil, said):
+    _large(tmp_path / "l.csv", spoil)
+    with pytest.raises(InputError) as caught:
+        landmarks.read_landmarks(tmp_path / "l.csv")
+    assert said in caught.value.sentence
+    assert "line 17002" in caught.value.sentence

@@ -5,6 +5,9 @@ folder, evaluated by a plain barycentric search in numpy here.
 """
 
 import json
+import shutil
+import subprocess
+from dataclasses import replace
 
 import numpy as np
 import pydicom
@@ -15,7 +18,8 @@ from volmap_cli.main import main
 
 from volmap import pipeline
 from volmap.mapfolder import read_map_folder
-from volmap.types import InputError
+from volmap.pipeline import exporting
+from volmap.types import Grid, InputError, Verdict
 
 LPS = np.array([-1.0, -1.0, 1.0])
 INNER_MM = np.array([[-8.0, 2.0, 1.0], [6.0, 2.0, 3.0], [0.0, -6.0, -8.0], [2.0, 8.0, 6.0]])
@@ -170,6 +174,43 @@ def test_a_uid_that_is_none_ends_with_usage(small_pair, tmp_path, capsys):
     assert "is not a UID" in capsys.readouterr().err
 
 
+def test_on_a_sheared_grid_the_map_is_sampled_anew_and_that_is_said(folder, tmp_path, monkeypatch):
+    matrix = np.array(folder.target.grid.affine)
+    matrix[:3, 2] += 0.3 * matrix[:3, 0]
+    sheared = replace(folder.target, grid=Grid(folder.target.grid.shape, matrix))
+    monkeypatch.setattr(exporting, "read_map_folder", lambda _: replace(folder, target=sheared))
+    done = exporting.export_registration(tmp_path, tmp_path / "x.dcm")
+    assert [f.code for f in done.findings] == ["grid-squared"]
+    found = pulled(tmp_path / "x.dcm", grown(INNER_MM) * LPS) * LPS
+    exact = through_tets(folder.map.images, folder.map.mesh.points, folder.map.mesh.tets, grown(INNER_MM))
+    assert np.abs(found - exact).max() < 0.2
+    here = np.array([done.told["check_point"]["registered_lps_mm"]])
+    assert np.abs(pulled(tmp_path / "x.dcm", here) - done.told["check_point"]["source_lps_mm"]).max() < 1e-9
+    with pytest.raises(InputError, match="not orthogonal"):
+        exporting.export_segmentation(tmp_path, tmp_path / "y.dcm", which="target")
+    assert not (tmp_path / "y.dcm").exists()
+
+
+def test_a_map_whose_certificate_fails_says_so_when_it_leaves(folder, tmp_path, monkeypatch):
+    gates = [
+        replace(g, verdict=Verdict.FAIL) if g.name == "inverted_tets" else g for g in folder.certificate.gates
+    ]
+    failed = replace(folder, certificate=replace(folder.certificate, gates=tuple(gates)))
+    monkeypatch.setattr(exporting, "read_map_folder", lambda _: failed)
+    (finding,) = exporting.export_segmentation(tmp_path, tmp_path / "x.dcm").findings
+    assert "certificate fails (inverted_tets)" in finding.sentence
+
+
 def test_a_folder_that_is_none_cannot_be_exported(tmp_path):
     with pytest.raises(InputError, match="not a map folder"):
         pipeline.export_registration(tmp_path, tmp_path / "x.dcm")
+
+
+@pytest.mark.skipif(shutil.which("dciodvfy") is None, reason="dciodvfy of dicom3tools is not installed")
+@pytest.mark.parametrize(
+    "options", [["registration"], ["registration", "--bring", "target"], ["segmentation"]]
+)
+def test_another_validator_finds_no_error(small_pair, tmp_path, options):
+    path = export(small_pair, tmp_path / "x.dcm", "--as", *options)
+    said = subprocess.run(["dciodvfy", str(path)], capture_output=True, text=True, check=False)
+    assert "Error" not in said.stdout + said.stderr

@@ -8,10 +8,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.kernels.polar import rotations
+from volmap.kernels.threads import on_threads
 from volmap.types.quantities import Rule, require_rule
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
+_BLOCK = 16384  # values whose matrices stay in the cache
 
 
 class Factors(NamedTuple):
@@ -88,15 +90,26 @@ def apply_rule(rule: Rule | str, values: Floats, gradients: Floats, of_value: In
     values = np.asarray(values, np.float64)
     rule = require_rule(rule, values.ndim - 1)
     factors = rule_factors(rule, gradients)
-    carried = np.array(values)
-    chosen = slice(None) if of_value is None else np.maximum(of_value, 0)
-    if factors.matrices is not None:
-        carried = _moved(factors.matrices[chosen], carried)
-    if factors.scales is not None:
-        carried *= factors.scales[chosen].reshape(-1, *(1,) * (values.ndim - 1))
-    if of_value is not None:
-        carried[np.asarray(of_value) < 0] = np.nan
+    carried = np.empty_like(values)
+    on_threads(_apply, len(values), factors, values, of_value, carried, fewest=_BLOCK)
     return carried
+
+
+def _apply(
+    first: int, last: int, factors: Factors, values: Floats, of_value: Ints | None, carried: Floats
+) -> None:
+    """Some of the values, a block at a time."""
+    for start in range(first, last, _BLOCK):
+        part = slice(start, min(start + _BLOCK, last))
+        which = np.arange(part.start, part.stop) if of_value is None else np.maximum(of_value[part], 0)
+        here = values[part]
+        if factors.matrices is not None:
+            here = _moved(factors.matrices.take(which, axis=0), here)
+        if factors.scales is not None:
+            here = here * factors.scales.take(which).reshape(-1, *(1,) * (values.ndim - 1))
+        carried[part] = here
+        if of_value is not None:
+            carried[part][np.asarray(of_value[part]) < 0] = np.nan
 
 
 def _moved(matrices: Floats, values: Floats) -> Floats:

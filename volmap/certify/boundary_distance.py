@@ -12,9 +12,9 @@ from numpy.typing import NDArray
 from volmap.certify.evidence import Evidence
 from volmap.certify.judge import judged
 from volmap.certify.places import ranked, worst_places
-from volmap.certify.statistics import summary
 from volmap.certify.table import Limit
 from volmap.kernels.closest import build_tree, closest
+from volmap.kernels.statistics import summary
 from volmap.types.certificate import Gate
 from volmap.types.surface import Surface
 

@@ -9,9 +9,9 @@ import numpy as np
 from volmap.certify.evidence import Evidence
 from volmap.certify.judge import judged, not_assessed
 from volmap.certify.places import MOST, place
-from volmap.certify.statistics import summary
 from volmap.certify.table import Limit
 from volmap.kernels.locate import build_buckets, interpolate, locate
+from volmap.kernels.statistics import summary
 from volmap.types.certificate import Gate
 
 

@@ -11,10 +11,10 @@ from numpy.typing import NDArray
 from volmap.certify.evidence import Evidence
 from volmap.certify.judge import judged, not_assessed
 from volmap.certify.places import MOST, worst_places
-from volmap.certify.statistics import summary
 from volmap.certify.surface_faults import SurfaceFaults, surface_faults
 from volmap.certify.table import Limit
 from volmap.kernels.closest import build_tree, closest
+from volmap.kernels.statistics import summary
 from volmap.kernels.surface_map import Spoken
 from volmap.types.certificate import Gate
 from volmap.types.given_boundary import GivenBoundary

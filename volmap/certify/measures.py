@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.certify.statistics import weighted_mean, weighted_quantile
+from volmap.kernels.statistics import weighted_mean, weighted_quantile
 from volmap.kernels.tets import signed_volumes
 from volmap.types.volume_map import VolumeMap
 

@@ -10,9 +10,9 @@ from numpy.typing import NDArray
 from volmap.certify.evidence import Evidence
 from volmap.certify.judge import judged, not_assessed
 from volmap.certify.places import ranked, worst_places
-from volmap.certify.statistics import summary
 from volmap.certify.table import Limit
 from volmap.kernels.locate import build_buckets, interpolate, locate
+from volmap.kernels.statistics import summary
 from volmap.types.certificate import Gate
 from volmap.types.volume_map import VolumeMap
 

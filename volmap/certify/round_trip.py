@@ -10,8 +10,8 @@ from numpy.typing import NDArray
 from volmap.certify.evidence import Evidence
 from volmap.certify.judge import judged, not_assessed
 from volmap.certify.places import largest, ranked, worst_places
-from volmap.certify.statistics import even_summary
 from volmap.certify.table import Limit
+from volmap.kernels.statistics import even_summary
 from volmap.kernels.trilinear import homecoming
 from volmap.types.certificate import Gate
 

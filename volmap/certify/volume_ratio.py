@@ -7,8 +7,8 @@ import numpy as np
 from volmap.certify.evidence import Evidence
 from volmap.certify.judge import judged
 from volmap.certify.places import ranked, worst_places
-from volmap.certify.statistics import weighted_quantile
 from volmap.certify.table import Limit
+from volmap.kernels.statistics import weighted_quantile
 from volmap.kernels.tets import signed_volumes
 from volmap.types.certificate import Gate
 

@@ -17,13 +17,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.io.atomic import whole_file
-from volmap.io.opening import all_text, shown_name
+from volmap.io.csv_columns import read_columns, read_header
+from volmap.io.opening import all_text, existing_file, shown_name
 from volmap.types.errors import InputError
 from volmap.types.landmarks import ROLES, LandmarkPairs, Landmarks
 
 POINT_COLUMNS = ("name", "x_mm", "y_mm", "z_mm")
 PAIR_COLUMNS = (*POINT_COLUMNS, "to_x_mm", "to_y_mm", "to_z_mm")
 OPTIONAL_COLUMNS = ("role", "sd_mm")
+_LARGE = 2**18  # bytes from which on reading by columns pays
 
 
 @dataclass(frozen=True)
@@ -76,20 +78,23 @@ def _write(
     *,
     overwrite: bool,
 ) -> None:
-    columns = POINT_COLUMNS if numbers.shape[1] == 3 else PAIR_COLUMNS
+    headings = POINT_COLUMNS if numbers.shape[1] == 3 else PAIR_COLUMNS
     text = io.StringIO()
     writer = csv.writer(text, lineterminator="\n")
     sd = marks.sd_mm
-    writer.writerow((*columns, "role") if sd is None else (*columns, *OPTIONAL_COLUMNS))
-    for i, (name, row) in enumerate(zip(marks.names, numbers.tolist(), strict=True)):
-        cells = [name, *(repr(v + 0.0) for v in row), marks.roles[i]]
-        writer.writerow(cells if sd is None else [*cells, repr(float(sd[i]))])
+    writer.writerow((*headings, "role") if sd is None else (*headings, *OPTIONAL_COLUMNS))
+    columns = [marks.names, *(map(repr, column) for column in (numbers.T + 0.0).tolist()), marks.roles]
+    writer.writerows(zip(*columns if sd is None else [*columns, map(repr, sd.tolist())], strict=True))
     with whole_file(path, overwrite=overwrite) as temporary:
         temporary.write_bytes(text.getvalue().encode("utf-8"))
 
 
 def _read(path: str | os.PathLike[str], columns: tuple[str, ...]) -> _Table:
     where = shown_name(path)
+    if existing_file(path).stat().st_size > _LARGE:
+        table = _read_fast(path, columns)
+        if table is not None:
+            return table
     rows = _rows(all_text(path, limit=2**28), where)
     if not rows:
         raise InputError("the file holds no header", where=where, expected=",".join(columns))
@@ -106,6 +111,22 @@ def _read(path: str | os.PathLike[str], columns: tuple[str, ...]) -> _Table:
         tuple(p[2] for p in parsed) if "role" in header else (),
         numbers[:, k] if "sd_mm" in header else None,
     )
+
+
+def _read_fast(path: str | os.PathLike[str], columns: tuple[str, ...]) -> _Table | None:
+    """A large file by columns; None when anything is amiss, for the slow reader to say what and where."""
+    try:
+        header = _checked_header(read_header(path), columns, "")
+        found = read_columns(path, tuple(c for c in ("name", "role") if c in header))
+    except InputError:
+        return None
+    names, roles = found.texts["name"], found.texts.get("role", ())
+    numbers = np.stack([found.numbers[c] for c in columns[1:]], axis=1)
+    sd = found.numbers.get("sd_mm")
+    sound = len(names) > 0 and all(names) and len(set(names)) == len(names) and set(roles) <= set(ROLES)
+    if not sound or not np.isfinite(numbers).all() or (sd is not None and not (sd > 0).all()):
+        return None
+    return _Table(names, numbers, roles, sd) if sd is None or np.isfinite(sd).all() else None
 
 
 def _rows(text: str, where: str) -> list[tuple[int, list[str]]]:

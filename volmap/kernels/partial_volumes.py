@@ -58,6 +58,7 @@ _NOTHING = 1e-13
 _UNSEEN, _MIXED = -2, -1  # states of a voxel; from 0 on: the one label seen in it so far
 _AT_HULL, _CENTRE_INSIDE = 1, 2  # bits of a voxel's place in the mesh
 _SLAB = 16
+_TETS = 16384  # cut at a time by `tets_in_labels`
 
 
 class PartialVolumes(NamedTuple):
@@ -111,11 +112,7 @@ def partial_volumes(
     PartialVolumes
     """
     points, tets, origins = plain(points, np.float64), plain(tets, np.int64), plain(origins, np.float64)
-    present = np.flatnonzero(np.bincount(labels.ravel(), minlength=1))
-    present = np.union1d(present, [0])
-    code = np.zeros(int(present[-1]) + 1, np.uint16)
-    code[present] = np.arange(len(present))
-    codes = np.ascontiguousarray(code[labels])
+    present, codes = _coded(labels)
     low = np.maximum(np.floor(corner_range(points, tets, np.minimum) + 0.5), 0).astype(np.int32)
     high = np.ceil(corner_range(points, tets, np.maximum) - 0.5)
     high = np.minimum(high, np.array(shape) - 1).astype(np.int32)
@@ -126,6 +123,47 @@ def partial_volumes(
     for first in range(0, shape[0], _SLAB):
         slab = slice(first, min(first + _SLAB, shape[0]))
         yield _slab_of(mesh, slab, shape, present)
+
+
+def tets_in_labels(
+    points: NDArray[np.float64], tets: NDArray[np.int64], labels: NDArray[np.uint16]
+) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.float64]]:
+    """Exact volume of each tet inside the voxels of each label.
+
+    Parameters
+    ----------
+    points : (n, 3) float64
+        Mesh points as continuous indices of `labels`.
+    tets : (m, 4) int64
+    labels : (I, J, K) uint16
+        Boxes about their centres; everything beyond them is 0.
+
+    Returns
+    -------
+    tet, label : (k,) int64
+        Labels above 0 that share something with a tet; tets ascending, labels ascending in a tet.
+    volume : (k,) float64
+        In voxels.
+    """
+    points, tets = plain(points, np.float64), plain(tets, np.int64)
+    present, codes = _coded(labels)
+    found = []
+    for first in range(0, len(tets), _TETS):
+        part = np.ascontiguousarray(tets[first : first + _TETS])
+        shares = np.zeros((len(part), len(present)))
+        on_threads(_cut_tets, len(part), points, part, codes, shares)
+        row, column = np.nonzero(shares[:, 1:])
+        found.append((row + first, present[column + 1], shares[row, column + 1]))
+    tet, label, volume = (np.concatenate(parts) for parts in zip(*found, strict=True))
+    return tet, label, volume
+
+
+def _coded(labels: NDArray[np.uint16]) -> tuple[NDArray[np.int64], NDArray[np.uint16]]:
+    """The labels that occur, 0 always among them, and the volume with their places in that list."""
+    present = np.union1d(np.flatnonzero(np.bincount(labels.ravel(), minlength=1)), [0])
+    code = np.zeros(int(present[-1]) + 1, np.uint16)
+    code[present] = np.arange(len(present))
+    return present, np.ascontiguousarray(code[labels])
 
 
 def _slab_of(
@@ -198,6 +236,18 @@ def _visit(  # type: ignore[no-untyped-def]
                         ends[1, d] = np.ceil(min(centre[d] + box[0, d], box[2, d]) - 0.5)
                     found = _only(codes, ends)
                     state[p, j, k] = found if now == _UNSEEN or found == now else _MIXED
+
+
+@kernel
+def _cut_tets(first, last, points, tets, codes, shares):  # type: ignore[no-untyped-def]
+    """Volume of each tet in the voxels of each code."""
+    ends, order = np.empty((2, 3), np.int64), np.empty(4, np.int64)
+    stack, corners = np.empty((_ROOM, 4, 3)), np.empty((6, 3))
+    for t in range(first, last):
+        for v in range(4):
+            for d in range(3):
+                stack[0, v, d] = points[tets[t, v], d]
+        _share_out(codes, order, corners, ends, stack, 1.0 / 6.0, shares[t])
 
 
 @inner_kernel

@@ -13,6 +13,7 @@ from volmap.pipeline.files import (
     screen_files,
 )
 from volmap.pipeline.machine import use_threads
+from volmap.pipeline.measuring import Measured, measure_files, measure_folder
 from volmap.pipeline.opinion import SecondOpinion, certify_folder, evidence_of
 from volmap.pipeline.pair import MapJob, map_pair
 from volmap.pipeline.reporting import affine_baseline, report_of, write_map
@@ -22,6 +23,7 @@ __all__ = [
     "Exported",
     "MapJob",
     "MapSettings",
+    "Measured",
     "MeshSettings",
     "Screened",
     "SecondOpinion",
@@ -35,6 +37,8 @@ __all__ = [
     "export_surfaces",
     "map_files",
     "map_pair",
+    "measure_files",
+    "measure_folder",
     "mend_file",
     "mesh_file",
     "report_folder",

@@ -9,12 +9,12 @@ from typing import Any, Literal
 import numpy as np
 
 from volmap import carry as carrying
-from volmap.io.atomic import require_place
+from volmap.io.atomic import require_place, whole_file
 from volmap.io.dicom.laying import at_right_angles, squared
 from volmap.io.dicom.registration import CheckedPoint, write_registration
 from volmap.io.dicom.segmentation_writing import Coding, write_segmentation
 from volmap.io.dicom.uids import ScanUids, uids_of_scan
-from volmap.io.json_documents import write_json
+from volmap.io.json_documents import json_text
 from volmap.mapfolder import MapFolder, read_map_folder
 from volmap.pipeline.places import require_name
 from volmap.types import Finding, Grid, InputError, LabelVolume, Level, Progress, Verdict, silent
@@ -89,17 +89,18 @@ def export_registration(
             f"the map is defined at no voxel of {onto}", where=through.absolute().name, refused=True
         )
     i, j, k = told["voxel"]
-    check = write_registration(
-        out,
-        field,
-        registered=scans[onto],
-        source=scans[bring],
-        check_voxel=(i, j, k),
-        roles=(bring.upper(), onto.upper()),
-        overwrite=overwrite,
-    )
-    document = _registration_document(scans, bring, check, told)
-    write_json(beside, document, overwrite=overwrite)
+    with whole_file(beside, overwrite=overwrite) as place:  # both stand, or neither
+        check = write_registration(
+            out,
+            field,
+            registered=scans[onto],
+            source=scans[bring],
+            check_voxel=(i, j, k),
+            roles=(bring.upper(), onto.upper()),
+            overwrite=overwrite,
+        )
+        document = _registration_document(scans, bring, check, told)
+        place.write_text(json_text(document), encoding="utf-8")
     return Exported((out.name, beside.name), document, findings)
 
 
@@ -137,7 +138,6 @@ def export_segmentation(
         else f"Labels of {which.upper()} as they were given to the map."
     )
     progress("write", 0, 0, out.name)
-    write_segmentation(out, volume, scan=scans[side], coding=coding, made_by=made_by, overwrite=overwrite)
     document = {
         "schema": "volmap-export/1",
         "kind": f"DICOM Segmentation, {coding.upper()}",
@@ -148,7 +148,9 @@ def export_segmentation(
         "units": "mm",
         "notice": caution(),
     }
-    write_json(beside, document, overwrite=overwrite)
+    with whole_file(beside, overwrite=overwrite) as place:
+        place.write_text(json_text(document), encoding="utf-8")
+        write_segmentation(out, volume, scan=scans[side], coding=coding, made_by=made_by, overwrite=overwrite)
     return Exported((out.name, beside.name), document, findings)
 
 

@@ -22,6 +22,7 @@ from volmap.types.polylines import Polylines
 from volmap.types.progress import Progress, silent
 from volmap.types.quantities import Quantity, Rule, Rules
 from volmap.types.surface import Surface
+from volmap.types.table import Column, Table
 from volmap.types.tetmesh import TetMesh
 from volmap.types.volume_map import VolumeMap
 from volmap.types.volumes import ImageVolume, LabelVolume
@@ -29,6 +30,7 @@ from volmap.types.volumes import ImageVolume, LabelVolume
 __all__ = [
     "Certificate",
     "Code",
+    "Column",
     "Finding",
     "Gate",
     "GivenBoundary",
@@ -55,6 +57,7 @@ __all__ = [
     "Rules",
     "Status",
     "Surface",
+    "Table",
     "TensorVolume",
     "TetMesh",
     "UnsaidError",

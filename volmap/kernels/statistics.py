@@ -1,6 +1,8 @@
-"""Weighted statistics."""
+"""Weighted means and quantiles."""
 
 from __future__ import annotations
+
+from collections.abc import Sequence
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,10 +15,17 @@ def weighted_mean(values: NDArray[np.float64], weights: NDArray[np.float64]) -> 
 
 def weighted_quantile(values: NDArray[np.float64], weights: NDArray[np.float64], share: float) -> float:
     """The smallest value below or at which at least `share` of the weight lies."""
+    return weighted_quantiles(values, weights, (share,))[0]
+
+
+def weighted_quantiles(
+    values: NDArray[np.float64], weights: NDArray[np.float64], shares: Sequence[float]
+) -> list[float]:
+    """`weighted_quantile` for several shares, sorted once."""
     order = np.argsort(values, kind="stable")
     total = np.cumsum(weights[order])
-    row = int(np.searchsorted(total, share * total[-1] * (1 - 1e-12)))
-    return float(values[order[min(row, len(order) - 1)]])
+    rows = np.searchsorted(total, np.asarray(shares) * total[-1] * (1 - 1e-12))
+    return [float(values[order[min(int(row), len(order) - 1)]]) for row in rows]
 
 
 def even_summary(values: NDArray[np.float64]) -> dict[str, float]:
