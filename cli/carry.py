@@ -27,7 +27,7 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         required=True,
         nargs="+",
         metavar="DIR",
-        help="map folder; several: one after the other, in the order of the visits",
+        help="map folder; several: one after the other, in the order of the visits; or the file of one field",
     )
     parser.add_argument("--out", type=Path, required=True, metavar="FILE", help="where to write it")
     parser.add_argument(

@@ -139,6 +139,7 @@ def documents(known):
         direction="forward",
         grid_sha256="a" * 64,
         points_into_sha256="b" * 64,
+        points_into_grid=backward.grid,
         paired_file="backward.nii.gz",
         paired=round_trip(forward, backward),
     )
@@ -148,6 +149,7 @@ def documents(known):
         direction="backward",
         grid_sha256="b" * 64,
         points_into_sha256="a" * 64,
+        points_into_grid=forward.grid,
         paired_file="forward.nii.gz",
         paired=round_trip(backward, forward),
     )
@@ -158,8 +160,11 @@ def test_sidecars_say_direction_and_both_uses(documents):
     """The contract's words (shared contract, "A map folder")."""
     _, _, _, one, two = documents
     assert one["formula"].startswith("y = x + u(x): x is the centre of a voxel of this grid")
-    assert one["grid_space"] == {"role": "SOURCE", "name": "source", "sha256": "a" * 64}
-    assert one["points_into"] == {"role": "TARGET", "name": "target", "sha256": "b" * 64}
+    here, there = (
+        {"shape": [n] * 3, "affine": _grid(n, -e, e).affine.tolist()} for n, e in ((21, 12), (25, 24))
+    )
+    assert one["grid_space"] == {"role": "SOURCE", "name": "source", "sha256": "a" * 64, "grid": here}
+    assert one["points_into"] == {"role": "TARGET", "name": "target", "sha256": "b" * 64, "grid": there}
     assert one["uses"][0].startswith("resamples images of TARGET onto SOURCE's grid")
     assert one["uses"][1].startswith("moves points from SOURCE into TARGET")
     assert two["uses"][0].startswith("resamples images of SOURCE onto TARGET's grid")
@@ -194,7 +199,12 @@ def test_sidecar_numbers_are_the_measured_ones(documents):
 
 def test_sidecar_refuses_paths_and_wrong_directions(documents):
     volume_map, forward, backward, _, _ = documents
-    words = {"grid_sha256": "", "points_into_sha256": "", "paired": round_trip(forward, backward)}
+    words = {
+        "grid_sha256": "",
+        "points_into_sha256": "",
+        "points_into_grid": backward.grid,
+        "paired": round_trip(forward, backward),
+    }
     with pytest.raises(InputError, match="path"):
         field_sidecar(forward, volume_map, direction="forward", paired_file="/data/b.nii.gz", **words)
     with pytest.raises(InputError, match="direction"):
@@ -210,6 +220,7 @@ def test_an_empty_field_has_no_check_point_and_valid_json(known):
         direction="forward",
         grid_sha256="",
         points_into_sha256="",
+        points_into_grid=empty.grid,
         paired_file="backward.nii.gz",
         paired=round_trip(empty, backward_field(volume_map, _grid(3, 0, 1))),
     )

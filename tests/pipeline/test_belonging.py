@@ -42,7 +42,7 @@ def codes(thing, start=START, end=END, **options):
 
 
 def turned(scan, side):
-    return replace(scan, side=side)
+    return replace(scan, side=side, turn="leave out --reverse")
 
 
 NOTE, WARN = Level.NOTE, Level.WARN

@@ -1,6 +1,7 @@
 """Fields, and things carried through a map."""
 
 from volmap.carry.bodies import moved_body
+from volmap.carry.by_field import carry_by_field
 from volmap.carry.direction_proof import DirectionProof, direction_proof, field_mistake, grid_mistake
 from volmap.carry.fields import backward_field, carried_solid, forward_field, volume_ratio_image
 from volmap.carry.lines import with_bends
@@ -31,6 +32,7 @@ __all__ = [
     "carried_solid",
     "carried_values",
     "carry",
+    "carry_by_field",
     "check_point",
     "direction_proof",
     "field_error",

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from scipy import ndimage
 
 from volmap.carry.sampling import N_RANDOM, FieldError, RoundTrip, field_error
-from volmap.types import GridField, InputError, VolumeMap
+from volmap.types import Grid, GridField, InputError, VolumeMap
 from volmap.types.notice import caution
 
 Direction = Literal["forward", "backward"]
@@ -24,6 +24,7 @@ def field_sidecar(
     direction: Direction,
     grid_sha256: str,
     points_into_sha256: str,
+    points_into_grid: Grid,
     paired_file: str,
     paired: RoundTrip,
 ) -> dict[str, Any]:
@@ -38,6 +39,8 @@ def field_sidecar(
         Forward: on SOURCE's grid, into TARGET.  Backward: on TARGET's grid, into SOURCE.
     grid_sha256, points_into_sha256 : str
         Digests of the label volume whose grid this is, and of the one the field points into.
+    points_into_grid : Grid
+        Of that one: what has its voxels can be told to belong to it.
     paired_file : str
         File name of the field of the other direction.
     paired : RoundTrip
@@ -55,8 +58,10 @@ def field_sidecar(
         "schema": "volmap-field/1",
         "direction": direction,
         **_meaning(field, here, there),
-        "grid_space": {"role": here, "name": field.grid_space, "sha256": grid_sha256},
-        "points_into": {"role": there, "name": field.points_into, "sha256": points_into_sha256},
+        "grid_space": {"role": here, "name": field.grid_space, "sha256": grid_sha256}
+        | {"grid": _grid_words(field.grid)},
+        "points_into": {"role": there, "name": field.points_into, "sha256": points_into_sha256}
+        | {"grid": _grid_words(points_into_grid)},
         "digest": "SHA-256 of the label volume: shape (3 int64), voxels (uint16, first index fastest) and "
         "affine (16 float32, row by row), all little-endian",
         **_CONVENTIONS,
@@ -79,6 +84,11 @@ _CONVENTIONS = {
     "interpolation": "trilinear between voxel centres, and only where all voxels with a share are defined; "
     "the exact map is affine in each tet of map.vtu and was evaluated at the voxel centres",
 }
+
+
+def _grid_words(grid: Grid) -> dict[str, Any]:
+    """Voxels and affine: what any volume of that scan on that grid has."""
+    return {"shape": list(grid.shape), "affine": grid.affine.tolist()}
 
 
 def _meaning(field: GridField, here: str, there: str) -> dict[str, Any]:

@@ -36,6 +36,8 @@ class KnownScan:
         The body in this scan's world.
     side : 'source' or 'target'
         Which end of the way as the user named it, before `--reverse`.
+    turn : str
+        What to do to carry things that start here the other way.
     """
 
     name: str
@@ -43,6 +45,7 @@ class KnownScan:
     digests: frozenset[str]
     body: TetMesh | None = None
     side: Side = "source"
+    turn: str = "add --reverse"
 
 
 def require_belonging(
@@ -190,5 +193,4 @@ def _vouched(start: KnownScan, name: str, why: str) -> Finding:
 
 
 def _wrong_way(what: str, name: str, start: KnownScan) -> InputError:
-    turn = "add --reverse" if start.side == "source" else "leave out --reverse"
-    return InputError(what, where=name, remedy=f"to carry it the other way {turn}", refused=True)
+    return InputError(what, where=name, remedy=f"to carry it the other way {start.turn}", refused=True)

@@ -10,7 +10,6 @@ from typing import Any
 from volmap.carry import CarrySettings
 from volmap.pipeline.belonging import Side
 from volmap.pipeline.places import told_name
-from volmap.pipeline.ways import Way
 from volmap.types import Finding
 from volmap.types.notice import caution
 
@@ -23,34 +22,21 @@ def sidecar_place(out: Path) -> Path:
 def carried_sidecar(
     thing: Path,
     out: Path,
-    way: Way,
+    told: Mapping[str, Any],
     settings: CarrySettings,
     findings: Sequence[Finding],
     *,
     facts: Mapping[str, Any],
     belongs_to: Side | None,
 ) -> dict[str, Any]:
-    """The document; names of files and folders only, no paths.  `facts` as in `Carried`."""
-    start, end = way.start, way.end
+    """The document, names only, no paths; `told` is that of the way, `facts` those of `Carried`."""
+    start = told["from"]["name"]
     return {
         "schema": "volmap-carried/1",
         "file": out.name,
         "carried": told_name(thing),
-        "from": {"name": start.name, "sha256": start.sha256},
-        "to": {"name": end.name, "sha256": end.sha256},
-        "through": [
-            {
-                "map": leg.name,
-                "from": leg.start.name,
-                "to": leg.end.name,
-                "direction": "from TARGET to SOURCE, by the exact inverse"
-                if leg.turned
-                else "from SOURCE to TARGET",
-            }
-            for leg in way.legs
-        ],
-        "how": "by the exact piecewise affine map of each folder in turn; no sampled field between",
-        "belongs_to": f"{start.name}, on the word of the user" if belongs_to else start.name,
+        **told,
+        "belongs_to": f"{start}, on the word of the user" if belongs_to else start,
         "settings": asdict(settings),
         **facts,
         "frame": "NIfTI world, RAS+: x grows to the right, y to the front, z to the head",

@@ -13,6 +13,7 @@ from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.io.volumes import read_volume_with_findings
 from volmap.pipeline.belonging import Side, require_belonging
 from volmap.pipeline.carried_sidecar import carried_sidecar, sidecar_place
+from volmap.pipeline.field_ways import FieldWay, is_field_file, read_field_way
 from volmap.pipeline.personal_columns import without_personal
 from volmap.pipeline.places import NIFTI, require_name, told_name
 from volmap.pipeline.pointwise_files import (
@@ -23,9 +24,10 @@ from volmap.pipeline.pointwise_files import (
     write_pointwise,
 )
 from volmap.pipeline.volume_files import DICOM, holds_volume, require_out, write_volume
-from volmap.pipeline.ways import read_way
+from volmap.pipeline.ways import Way, read_way
 from volmap.types import (
     Finding,
+    Grid,
     ImageVolume,
     InputError,
     LabelVolume,
@@ -56,7 +58,8 @@ def carry_file(
     ----------
     thing : Path
     through : Path or sequence of Path
-        A map folder, or several in the order in which the thing goes through them (see `ways.read_way`).
+        A map folder, or several in the order in which the thing goes through them (see `ways.read_way`); or
+        the file of one field, with its .json beside it.
     out : Path
     settings : CarrySettings
         By default with a reach of one voxel.
@@ -86,28 +89,57 @@ def carry_file(
     progress("read", 0, 0, thing.name)
     loaded, findings = _loaded(thing, kind, reading, settings.rules)
     loaded, left_out = without_personal(loaded, told_name(thing))
-    folders = [through] if isinstance(through, Path) else through
-    way = read_way(folders, reverse=reverse, progress=progress)
+    way = _read_through(through, loaded, reverse=reverse, progress=progress)
     require_holding(out, loaded)
     if isinstance(loaded, LabelVolume | ImageVolume):
         require_out(out, loaded)
     progress("carry", 0, 0, thing.name)
-    if len(way.legs) > 1 and isinstance(loaded, LabelVolume | ImageVolume):
-        raise InputError(
-            "volumes are carried through one map at a time", where=thing.name, remedy="carry it leg by leg"
-        )
     belonging = require_belonging(loaded, *way.ends, name=told_name(thing), belongs_to=belongs_to)
-    settings = settings.of_scan(way.start.grid.voxel_mm)
-    carried = carrying.carry(loaded, way.map, onto=way.end.grid, settings=settings)
+    settings = settings.of_scan(way.voxel_mm)
+    carried = way.carry(loaded, settings)
     findings = (*findings, *left_out, *way.findings, *belonging, *carried.findings)
-    told = carried_sidecar(thing, out, way, settings, findings, facts=carried.facts, belongs_to=belongs_to)
+    told = carried_sidecar(
+        thing, out, way.told, settings, findings, facts=carried.facts, belongs_to=belongs_to
+    )
     with whole_file(sidecar_place(out), overwrite=overwrite) as place:  # both stand, or neither
         place.write_text(json_text(told), encoding="utf-8")
         if not write_pointwise(out, carried.thing, overwrite=overwrite):
             write_volume(
-                out, carried.thing, scan_sha256=way.end.sha256, frame_uid=frame_uid, overwrite=overwrite
+                out, carried.thing, scan_sha256=way.end_sha256, frame_uid=frame_uid, overwrite=overwrite
             )
     return findings
+
+
+def _read_through(
+    through: Path | Sequence[Path], loaded: Any, *, reverse: bool, progress: Progress
+) -> Way | FieldWay:
+    """Map folders, or one field's file."""
+    places = [through] if isinstance(through, Path) else list(through)
+    fields = [place for place in places if is_field_file(place)]
+    volume = isinstance(getattr(loaded, "grid", None), Grid)
+    if not fields:
+        if len(places) > 1 and volume:
+            raise InputError(
+                "volumes are carried through one map at a time",
+                where=loaded.name,
+                remedy="carry it leg by leg",
+            )
+        return read_way(places, reverse=reverse, progress=progress)
+    if len(places) > 1:
+        raise InputError(
+            "a field is not chained with others: what one sampled is sampled again",
+            where=fields[0].name,
+            remedy="name the map folders, whose maps follow one another exactly",
+        )
+    way = read_field_way(fields[0], pulls=volume)
+    if reverse:
+        start = way.ends[0]
+        raise InputError(
+            f"a field runs one way: for this kind of thing from {start.name}",
+            where=way.name,
+            remedy=f"to carry it the other way {start.turn}, without --reverse",
+        )
+    return way
 
 
 def _endings(thing: Path) -> tuple[str, ...]:

@@ -6,7 +6,9 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from itertools import pairwise
 from pathlib import Path
+from typing import Any
 
+from volmap import carry as carrying
 from volmap.mapfolder import MapFolder, read_map_folder
 from volmap.pipeline.belonging import KnownScan
 from volmap.types import (
@@ -95,7 +97,7 @@ class Way:
         """What is known of the scans at its start and at its end."""
         start, end = self.legs[0].known(at_end=False), self.legs[-1].known(at_end=True)
         if self.reverse:
-            return replace(start, side="target"), replace(end, side="source")
+            return replace(start, side="target", turn="leave out --reverse"), replace(end, side="source")
         return replace(start, side="source"), replace(end, side="target")
 
     @property
@@ -113,6 +115,35 @@ class Way:
         """From `start` to `end`."""
         maps = tuple(leg.map for leg in self.legs)
         return maps[0] if len(maps) == 1 else MapChain(maps)
+
+    @property
+    def end_sha256(self) -> str:
+        """Digest of the scan in which things arrive."""
+        return self.end.sha256
+
+    @property
+    def voxel_mm(self) -> float:
+        """One voxel of the scan in which things start."""
+        return self.start.grid.voxel_mm
+
+    def carry(self, thing: Any, settings: carrying.CarrySettings) -> carrying.Carried:
+        """A thing of `start`, carried to `end`."""
+        return carrying.carry(thing, self.map, onto=self.end.grid, settings=settings)
+
+    @property
+    def told(self) -> dict[str, Any]:
+        """What the document beside a carried file says of the way; names only, no paths."""
+        by = ("from SOURCE to TARGET", "from TARGET to SOURCE, by the exact inverse")
+        through = [
+            {"map": leg.name, "from": leg.start.name, "to": leg.end.name, "direction": by[leg.turned]}
+            for leg in self.legs
+        ]
+        return {
+            "from": {"name": self.start.name, "sha256": self.start.sha256},
+            "to": {"name": self.end.name, "sha256": self.end.sha256},
+            "through": through,
+            "how": "by the exact piecewise affine map of each folder in turn; no sampled field between",
+        }
 
     def reversed(self) -> Way:
         """From the end to the start."""
