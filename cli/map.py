@@ -46,8 +46,12 @@ def arguments(parser: argparse.ArgumentParser) -> None:
         help="declared uncertainty of the segmentations (default: a tenth of a voxel)",
     )
     reading_arguments(parser, pair=True)
-    parser.add_argument("--source-image", type=Path, metavar="NII", help="intensities to show in the report")
-    parser.add_argument("--target-image", type=Path, metavar="NII", help="intensities to show in the report")
+    parser.add_argument(
+        "--source-image", type=Path, metavar="IMAGE", help="intensities to show in the report"
+    )
+    parser.add_argument(
+        "--target-image", type=Path, metavar="IMAGE", help="intensities to show in the report"
+    )
     parser.add_argument("--gates", type=Path, metavar="TOML", help="a gate table of your own")
     parser.add_argument(
         "--one-order",

@@ -44,11 +44,18 @@ def run(options: argparse.Namespace, console: Console) -> int:
     )
     for result in screened.results:
         _show(result, console)
-    document: dict[str, Any] = {"files": [r.as_dict() for r in screened.results]}
+    document: dict[str, Any] = {
+        "files": [
+            result.as_dict()
+            | {"identifying_fields": {kind: list(names) for kind, names in told.fields.items()}}
+            for result, told in zip(screened.results, screened.identifying, strict=True)
+        ]
+    }
     if screened.pair is not None:
         document["pair"] = {
             "volume_ratios": dict(screened.pair.volume_ratios),
             "findings": [f.as_dict() for f in screened.pair.comparison],
+            "days_apart": screened.days_apart,
         }
         console.say("as a pair")
         for label, ratio in screened.pair.volume_ratios:

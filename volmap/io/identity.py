@@ -46,7 +46,8 @@ class Identifying:
     def _finding(self, kind: str, names: tuple[str, ...]) -> Finding:
         about = identifying_kinds()[kind]
         sentence = f"holds fields that could tell {about.tells}: {', '.join(names)}"
-        remedy = "none of it goes into what is written here; the file itself still holds it"
+        kept = "nothing but SegmentLabel" if "SegmentLabel" in names else "nothing"
+        remedy = f"{kept} of it goes into what is written here, but the file itself still holds it"
         return Finding(about.level, f"identifying_{kind}", self.where, sentence, remedy)
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -11,6 +12,7 @@ from volmap import mesh as meshing
 from volmap import screen as screening
 from volmap.io.atomic import require_place, whole_file
 from volmap.io.given_boundary import read_given_boundary
+from volmap.io.identity import Identifying, days_apart, identifying_fields
 from volmap.io.landmarks import read_pairs
 from volmap.io.mesh_parts import MESH_ENDINGS
 from volmap.io.nifti import write_labels
@@ -26,6 +28,7 @@ from volmap.pipeline.places import NIFTI, require_name
 from volmap.pipeline.reporting import report_of, write_map
 from volmap.screen import Mended, PairResult, ScreenResult
 from volmap.types import (
+    Finding,
     GivenBoundary,
     ImageVolume,
     InputError,
@@ -46,10 +49,16 @@ class Screened:
         One a file; what reading it found is among its findings.
     pair : PairResult, optional
         When there were two files.
+    identifying : tuple of Identifying
+        One a file: names of the fields that could tell who it is of, which are among its findings too.
+    days_apart : int, optional
+        Whole days from the first scan to the second, when there are two that tell (DICOM).
     """
 
     results: tuple[ScreenResult, ...]
     pair: PairResult | None
+    identifying: tuple[Identifying, ...]
+    days_apart: int | None = None
 
     @property
     def refused(self) -> bool:
@@ -85,13 +94,25 @@ def screen_files(
     volumes = [labels for labels, _ in loaded]
     if len(volumes) == 2:
         volumes = list(_told_apart(*volumes))
-    results = []
+    results, identifying = [], tuple(identifying_fields(path) for path in paths)
     for step, (labels, (_, findings)) in enumerate(zip(volumes, loaded, strict=True)):
         progress("screen", step, len(paths), labels.name)
         result = screening.screen(labels, edge_mm=edge_mm)
-        results.append(replace(result, findings=(*result.findings, *findings)))
-    pair = screening.compare(results[0], results[1]) if len(results) == 2 else None
-    return Screened(tuple(results), pair)
+        told = (*result.findings, *findings, *identifying[step].findings)
+        results.append(replace(result, findings=told))
+    if len(results) != 2:
+        return Screened(tuple(results), None, identifying)
+    pair = screening.compare(results[0], results[1])
+    days = days_apart(*paths)
+    if days is not None:
+        pair = replace(pair, comparison=(*pair.comparison, _days_told(days, volumes[1].name)))
+    return Screened(tuple(results), pair, identifying, days)
+
+
+def _days_told(days: int, where: str) -> Finding:
+    many = "a day" if abs(days) == 1 else f"{abs(days)} days"
+    when = "on the same day as" if days == 0 else f"{many} {'after' if days > 0 else 'before'}"
+    return Finding(Level.NOTE, "days_apart", where, f"was made {when} the other scan, by their dates")
 
 
 def mend_file(path: Path, out: Path, reading: Reading = AS_IT_IS, *, overwrite: bool = False) -> Mended:
@@ -174,6 +195,9 @@ def map_files(
     pairs = read_pairs(guides) if guides is not None else None
     given = _given_boundary(boundary, boundary_tolerance_mm, a, b)
     images = [_picture(source_image, a), _picture(target_image, b)]
+    days = days_apart(source, target)
+    if days is None and source_image is not None and target_image is not None:
+        days = days_apart(source_image, target_image)
     notes = tuple(f"{f.where}: {f.sentence}" for f in (*findings_a, *findings_b))
     folder = map_pair(
         a,
@@ -186,6 +210,8 @@ def map_files(
         progress=progress,
     )
     folder = _with_images(folder, *images)
+    if days is not None:
+        folder = _with_settings(folder, {"days_apart": days})
     write_map(
         out, folder, source_image=images[0], target_image=images[1], overwrite=overwrite, progress=progress
     )
@@ -199,9 +225,11 @@ def _with_images(folder: MapFolder, source: ImageVolume | None, target: ImageVol
         for side, image in (("source", source), ("target", target))
         if image is not None
     }
-    if not told:
-        return folder
-    settings = dict(folder.certificate.settings) | {"images": told}
+    return _with_settings(folder, {"images": told}) if told else folder
+
+
+def _with_settings(folder: MapFolder, more: dict[str, Any]) -> MapFolder:
+    settings = dict(folder.certificate.settings) | more
     return replace(folder, certificate=replace(folder.certificate, settings=settings))
 
 
