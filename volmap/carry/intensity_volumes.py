@@ -2,14 +2,16 @@
 
 from __future__ import annotations
 
+from typing import NamedTuple
+
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.carry.preimages import covering, preimages
+from volmap.carry.preimages import Joints, covering, preimages
 from volmap.carry.rules import apply_rule
 from volmap.carry.settings import ImageMode
-from volmap.carry.splines import Interpolator, interpolator
-from volmap.types import Finding, Grid, ImageVolume, Rule, TensorVolume, VectorVolume, VolumeMap
+from volmap.carry.splines import interpolator
+from volmap.types import Finding, Grid, ImageVolume, MapChain, Rule, TensorVolume, VectorVolume, VolumeMap
 from volmap.types.quantities import require_rule
 
 Floats = NDArray[np.float64]
@@ -17,11 +19,12 @@ Floats = NDArray[np.float64]
 
 def pull_image(
     volume: ImageVolume,
-    volume_map: VolumeMap,
+    volume_map: VolumeMap | MapChain,
     onto: Grid,
     *,
     mode: ImageMode = "linear",
     rule: Rule = Rule.VALUE,
+    reach_mm: float = 0.0,
 ) -> tuple[ImageVolume, tuple[Finding, ...]]:
     """Intensities on another grid: each voxel takes the interpolated value at its exact preimage.
 
@@ -37,6 +40,8 @@ def pull_image(
     rule : Rule
         'value': numbers are kept.  'density': divided by the volume ratio J of the tet that holds the
         preimage, so that the integral over a piece of tissue is kept; over voxels, as far as sampling allows.
+    reach_mm : float
+        As in `preimages.preimages`.
 
     Returns
     -------
@@ -45,12 +50,19 @@ def pull_image(
     findings : tuple of Finding
     """
     require_rule(rule, 0, volume.name)
-    values, findings = _pull(volume.values[..., None], volume.grid, volume_map, onto, mode, rule, volume.name)
+    way = _Way(volume.grid, volume_map, onto, mode, rule, reach_mm, volume.name)
+    values, findings = _pull(volume.values[..., None], way)
     return ImageVolume(onto, values[..., 0], volume.unit, volume.name), findings
 
 
 def pull_vectors(
-    volume: VectorVolume, volume_map: VolumeMap, onto: Grid, *, rule: Rule, mode: ImageMode = "linear"
+    volume: VectorVolume,
+    volume_map: VolumeMap | MapChain,
+    onto: Grid,
+    *,
+    rule: Rule,
+    mode: ImageMode = "linear",
+    reach_mm: float = 0.0,
 ) -> tuple[VectorVolume, tuple[Finding, ...]]:
     """Vectors on another grid: components are interpolated at the exact preimage, then follow a rule.
 
@@ -64,6 +76,8 @@ def pull_vectors(
     rule : Rule
         One for vectors; F is that of the tet that holds the preimage.
     mode : 'linear' or 'cubic'
+    reach_mm : float
+        As in `preimages.preimages`.
 
     Returns
     -------
@@ -72,39 +86,53 @@ def pull_vectors(
     findings : tuple of Finding
     """
     require_rule(rule, 1, volume.name)
-    values, findings = _pull(volume.values, volume.grid, volume_map, onto, mode, rule, volume.name)
+    way = _Way(volume.grid, volume_map, onto, mode, rule, reach_mm, volume.name)
+    values, findings = _pull(volume.values, way)
     return VectorVolume(onto, values, volume.unit, volume.name), findings
 
 
 def pull_tensors(
-    volume: TensorVolume, volume_map: VolumeMap, onto: Grid, *, rule: Rule, mode: ImageMode = "linear"
+    volume: TensorVolume,
+    volume_map: VolumeMap | MapChain,
+    onto: Grid,
+    *,
+    rule: Rule,
+    mode: ImageMode = "linear",
+    reach_mm: float = 0.0,
 ) -> tuple[TensorVolume, tuple[Finding, ...]]:
     """Symmetric tensors on another grid; as `pull_vectors`."""
     require_rule(rule, 2, volume.name)
-    values, findings = _pull(volume.values, volume.grid, volume_map, onto, mode, rule, volume.name)
+    way = _Way(volume.grid, volume_map, onto, mode, rule, reach_mm, volume.name)
+    values, findings = _pull(volume.values, way)
     return TensorVolume(onto, values, volume.unit, volume.name), findings
 
 
-def _pull(
-    values: NDArray[np.float32],
-    of: Grid,
-    volume_map: VolumeMap,
-    onto: Grid,
-    mode: ImageMode,
-    rule: Rule,
-    name: str,
-) -> tuple[NDArray[np.float32], tuple[Finding, ...]]:
+class _Way(NamedTuple):
+    """From where, through what, to where, and how."""
+
+    of: Grid
+    volume_map: VolumeMap | MapChain
+    onto: Grid
+    mode: ImageMode
+    rule: Rule
+    reach_mm: float
+    name: str
+
+
+def _pull(values: NDArray[np.float32], way: _Way) -> tuple[NDArray[np.float32], tuple[Finding, ...]]:
     """(I, J, K, c) components on the new grid."""
-    findings = covering(of, onto, volume_map, name)
-    carried = np.full((*onto.shape, values.shape[3]), np.nan, np.float32)
-    look: Interpolator = interpolator(values, mode)
-    for part in preimages(of, volume_map, onto, gradients=rule is not Rule.VALUE):
+    findings = covering(way.of, way.onto, way.volume_map, way.name)
+    carried = np.full((*way.onto.shape, values.shape[3]), np.nan, np.float32)
+    look, joints = interpolator(values, way.mode), Joints()
+    ruled = way.rule is not Rule.VALUE
+    for part in preimages(way.of, way.volume_map, way.onto, gradients=ruled, reach_mm=way.reach_mm):
         found = look(part.at)
-        if rule is not Rule.VALUE:
-            found = _ruled(rule, found, part.gradients, part.of_voxel)
+        if ruled:
+            found = _ruled(way.rule, found, part.gradients, part.of_voxel)
         carried[part.slab][part.known] = found
+        joints.add(part)
     carried.setflags(write=False)
-    return carried, findings
+    return carried, findings + joints.findings(way.name, way.reach_mm)
 
 
 def _ruled(rule: Rule, found: Floats, gradients: Floats, of_voxel: NDArray[np.int64]) -> Floats:

@@ -6,11 +6,21 @@ import numpy as np
 from numpy.typing import NDArray
 
 from volmap.carry.fields import tets_at_centres
-from volmap.carry.preimages import covering, preimages
+from volmap.carry.preimages import Joints, covering, preimages
 from volmap.carry.settings import LabelMode
 from volmap.kernels.nearest import likeliest_labels, nearest_labels
 from volmap.kernels.partial_volumes import partial_volumes
-from volmap.types import Finding, Grid, LabelShares, LabelVolume, Level, TetMesh, VolumeMap
+from volmap.types import (
+    Finding,
+    Grid,
+    InputError,
+    LabelShares,
+    LabelVolume,
+    Level,
+    MapChain,
+    TetMesh,
+    VolumeMap,
+)
 
 LABEL_SENTENCES: dict[str, str] = {
     "nearest": "each voxel has the label of the source voxel that its centre's exact preimage falls in",
@@ -27,7 +37,12 @@ LABEL_SENTENCES: dict[str, str] = {
 
 
 def pull_labels(
-    volume: LabelVolume, volume_map: VolumeMap, onto: Grid, *, mode: LabelMode = "nearest"
+    volume: LabelVolume,
+    volume_map: VolumeMap | MapChain,
+    onto: Grid,
+    *,
+    mode: LabelMode = "nearest",
+    reach_mm: float = 0.0,
 ) -> tuple[LabelVolume, tuple[Finding, ...]]:
     """Labels on another grid, one a voxel.
 
@@ -42,6 +57,8 @@ def pull_labels(
         'nearest': of the voxel that the preimage of the centre falls in.  'one-hot': the label with the
         largest trilinear indicator at that preimage (`kernels.nearest.likeliest_labels` tells the ties).
         'shares': the label that fills most of the voxel (`LabelShares.largest`).
+    reach_mm : float
+        As in `preimages.preimages`.
 
     Returns
     -------
@@ -55,15 +72,18 @@ def pull_labels(
     findings = covering(volume.grid, onto, volume_map, volume.name)
     labels = np.zeros(onto.shape, np.uint16)
     look = likeliest_labels if mode == "one-hot" else nearest_labels
-    for part in preimages(volume.grid, volume_map, onto):
+    joints = Joints()
+    for part in preimages(volume.grid, volume_map, onto, reach_mm=reach_mm):
         labels[part.slab][part.known] = look(volume.labels, part.at)
+        joints.add(part)
     labels.setflags(write=False)
     carried = LabelVolume(onto, labels, volume.names, volume.name, volume.codes)
+    findings += joints.findings(volume.name, reach_mm)
     return carried, findings + _losses(volume, carried.present, volume_map.mesh)
 
 
 def label_shares(
-    volume: LabelVolume, volume_map: VolumeMap, onto: Grid
+    volume: LabelVolume, volume_map: VolumeMap | MapChain, onto: Grid
 ) -> tuple[LabelShares, tuple[Finding, ...]]:
     """How much of each voxel each label fills.
 
@@ -77,7 +97,18 @@ def label_shares(
     LabelShares
         With all labels of `volume`.
     findings : tuple of Finding
+
+    Raises
+    ------
+    InputError
+        A chain of several maps: their composition is affine on no mesh at hand.
     """
+    if len(volume_map.maps) > 1:
+        raise InputError(
+            "exact shares go through one map at a time",
+            where=volume.name,
+            remedy="carry the labels leg by leg, or by --labels one-hot or nearest",
+        )
     findings = covering(volume.grid, onto, volume_map, volume.name)
     image_mesh = volume_map.image_mesh
     whole = np.empty(onto.shape, np.uint16)

@@ -14,6 +14,11 @@ from volmap.kernels.trilinear import sample
 
 Floats = NDArray[np.float64]
 Interpolator = Callable[[Floats], Floats]
+IMAGE_SENTENCES = {
+    "linear": "trilinear between voxel centres",
+    "cubic": "cubic B-splines through the values at voxel centres, mirrored at the outermost of them; a NaN "
+    "counts as the nearest value",
+}
 _FEWEST = 10_000  # places a thread is woken for
 
 

@@ -10,10 +10,11 @@ from typing import Any
 import numpy as np
 
 from volmap.carry.intensity_volumes import pull_image, pull_tensors, pull_vectors
-from volmap.carry.label_volumes import label_shares, pull_labels
+from volmap.carry.label_volumes import LABEL_SENTENCES, label_shares, pull_labels
 from volmap.carry.outside import outside_findings
 from volmap.carry.points import MovedPoints, move_points
 from volmap.carry.settings import AS_USUAL, CarrySettings
+from volmap.carry.splines import IMAGE_SENTENCES
 from volmap.types import (
     Finding,
     Grid,
@@ -29,7 +30,7 @@ from volmap.types import (
     VectorVolume,
     VolumeMap,
 )
-from volmap.types.quantities import rules_of_rank
+from volmap.types.quantities import require_rule, rules_of_rank
 
 
 @dataclass(frozen=True)
@@ -121,9 +122,11 @@ def _carry_labels(
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
+    facts = {"labels": LABEL_SENTENCES[settings.labels]}
     if settings.labels == "shares":
-        return Carried(*label_shares(thing, directed, onto))
-    return Carried(*pull_labels(thing, directed, onto, mode=settings.labels))
+        return Carried(*label_shares(thing, directed, onto), facts)
+    labels = pull_labels(thing, directed, onto, mode=settings.labels, reach_mm=settings.reach)
+    return Carried(*labels, facts)
 
 
 @carry.register
@@ -136,8 +139,9 @@ def _carry_image(
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
-    rule = settings.rules.of_all or Rule.VALUE
-    return Carried(*pull_image(thing, directed, onto, mode=settings.image, rule=rule))
+    rule = require_rule(settings.rules.of_all or Rule.VALUE, 0, thing.name)
+    image = pull_image(thing, directed, onto, mode=settings.image, rule=rule, reach_mm=settings.reach)
+    return Carried(*image, _numbers(rule, 0, settings.image, thing.unit))
 
 
 @carry.register
@@ -150,8 +154,9 @@ def _carry_vectors(
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
-    rule = _stated(settings.rules.of_all, thing.name)
-    return Carried(*pull_vectors(thing, directed, onto, mode=settings.image, rule=rule))
+    rule = _stated(settings.rules.of_all, thing.name, 1)
+    moved = pull_vectors(thing, directed, onto, mode=settings.image, rule=rule, reach_mm=settings.reach)
+    return Carried(*moved, _numbers(rule, 1, settings.image, thing.unit))
 
 
 @carry.register
@@ -164,8 +169,9 @@ def _carry_tensors(
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
-    rule = _stated(settings.rules.of_all, thing.name)
-    return Carried(*pull_tensors(thing, directed, onto, mode=settings.image, rule=rule))
+    rule = _stated(settings.rules.of_all, thing.name, 2)
+    moved = pull_tensors(thing, directed, onto, mode=settings.image, rule=rule, reach_mm=settings.reach)
+    return Carried(*moved, _numbers(rule, 2, settings.image, thing.unit))
 
 
 def _directed(volume_map: VolumeMap, reverse: bool) -> VolumeMap:
@@ -182,16 +188,27 @@ def _required(onto: Grid | None, where: str) -> Grid:
     return onto
 
 
-def _stated(rule: Rule | None, where: str) -> Rule:
+def _numbers(rule: Rule, rank: int, mode: str, unit: str) -> dict[str, str]:
+    """What was done to the numbers of a volume."""
+    unit = unit or "as in the file that was carried, which does not say"
+    return {
+        "interpolation": f"{IMAGE_SENTENCES[mode]}, at the exact preimage of each voxel centre",
+        "numbers": f"{rule.value}: {rule.sentence(rank)}",
+        "unit_of_numbers": unit,
+        "not_defined": "NaN: outside the carried body, beyond the volume, or beside a NaN in it",
+    }
+
+
+def _stated(rule: Rule | None, where: str, rank: int) -> Rule:
     """Vectors and tensors change when they are carried: how is for the user to say."""
     if rule is None:
         raise UnsaidError(
             "needs a rule to be carried by",
             where=where,
-            expected=" or ".join(r.value for r in rules_of_rank(1)),
+            expected=" or ".join(r.value for r in rules_of_rank(rank)),
             remedy="say for instance --rule turn, which keeps lengths and eigenvalues",
         )
-    return rule
+    return require_rule(rule, rank, where)
 
 
 def _landmark_findings(thing: Landmarks, moved: MovedPoints) -> tuple[Finding, ...]:
