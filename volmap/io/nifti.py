@@ -8,11 +8,12 @@ from __future__ import annotations
 
 import gzip
 import os
+from collections.abc import Callable, Iterable
 from pathlib import Path
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import DTypeLike, NDArray
 
 from volmap.io.atomic import whole_file
 from volmap.io.nifti_header import DISPVECT, NiftiHeader, files_of, opened, read_header, read_voxels
@@ -27,6 +28,7 @@ from volmap.types.notice import short_caution
 from volmap.types.volumes import ImageVolume, LabelVolume
 
 PathLike = str | os.PathLike[str]
+Choice = Callable[[NiftiHeader], tuple[range, tuple[Finding, ...]]]
 _SCANNER = 1  # NIFTI_XFORM_SCANNER_ANAT
 _PACKING = 4  # gzip level
 _OF_SEVERAL_PARTS = {  # intent codes of nifti1.h whose values are parts of one thing
@@ -120,7 +122,8 @@ def write_labels(path: PathLike, volume: LabelVolume, *, overwrite: bool = False
         The place is taken or cannot be written.
     """
     dtype = np.uint8 if int(volume.labels.max(initial=0)) < 256 else np.uint16
-    _write(path, volume.labels.astype(dtype), volume.grid, intent=0, overwrite=overwrite)
+    shape = volume.grid.shape
+    write_frames(path, [volume.labels], volume.grid, dimensions=shape, dtype=dtype, overwrite=overwrite)
 
 
 def write_image(path: PathLike, volume: ImageVolume, *, overwrite: bool = False) -> None:
@@ -131,7 +134,8 @@ def write_image(path: PathLike, volume: ImageVolume, *, overwrite: bool = False)
     InputError
         The place is taken or cannot be written.
     """
-    _write(path, volume.values, volume.grid, intent=0, overwrite=overwrite)
+    shape = volume.grid.shape
+    write_frames(path, [volume.values], volume.grid, dimensions=shape, dtype=np.float32, overwrite=overwrite)
 
 
 def write_field(path: PathLike, field: GridField, *, overwrite: bool = False) -> None:
@@ -142,8 +146,15 @@ def write_field(path: PathLike, field: GridField, *, overwrite: bool = False) ->
     InputError
         The place is taken or cannot be written.
     """
-    voxels = field.displacement.reshape((*field.grid.shape, 1, 3))
-    _write(path, voxels, field.grid, intent=DISPVECT, overwrite=overwrite)
+    write_frames(
+        path,
+        (field.displacement[..., c] for c in range(3)),
+        field.grid,
+        dimensions=(*field.grid.shape, 1, 3),
+        dtype=np.float32,
+        intent=DISPVECT,
+        overwrite=overwrite,
+    )
 
 
 def read_stack(path: PathLike, reading: Reading = AS_IT_IS) -> Stack:
@@ -154,19 +165,43 @@ def read_stack(path: PathLike, reading: Reading = AS_IT_IS) -> Stack:
     InputError
         Not readable as NIfTI, vectors, several frames and none chosen, or no such frame.
     """
+    header, stored, findings = read_frames(path, lambda header: _frames(header, reading))
+    values = scaled(stored, header.slope, header.inter)
+    return Stack(header.name, values, header.affine, header.findings + findings)
+
+
+def read_frames(path: PathLike, choose: Choice) -> tuple[NiftiHeader, NDArray[Any], tuple[Finding, ...]]:
+    """A file's header and the stored numbers, not scaled, of some of its frames.
+
+    Parameters
+    ----------
+    path : path
+        A .nii, or either file of a .hdr and .img pair.
+    choose : function
+        From the header: which frames, and what to say about it; or refuses the file.
+
+    Returns
+    -------
+    header : NiftiHeader
+    stored : (I, J, K, F) array
+    findings : tuple of Finding
+        Those of `choose`.
+
+    Raises
+    ------
+    InputError
+        Not readable as NIfTI, or refused by `choose`.
+    """
     first, second = files_of(path)
-    findings: tuple[Finding, ...] = ()
-    frames: range | None = None
     with opened(first) as (stream, file):
         header = read_header(stream, file)
-        frames, findings = _frames(header, reading)
+        frames, findings = choose(header)
         if not header.apart:
             stored = read_voxels(header, stream, file, at=stream.tell(), frames=frames)
     if header.apart:
         with opened(second or first) as (stream, file):
             stored = read_voxels(header, stream, file, at=0, frames=frames)
-    values = scaled(stored, header.slope, header.inter)
-    return Stack(header.name, values, header.affine, header.findings + findings)
+    return header, stored, findings
 
 
 def _frames(header: NiftiHeader, reading: Reading) -> tuple[range, tuple[Finding, ...]]:
@@ -192,36 +227,68 @@ def _frames(header: NiftiHeader, reading: Reading) -> tuple[range, tuple[Finding
     return frames_wanted(header.n_frames, reading, header.name)
 
 
-def _write(path: PathLike, voxels: NDArray[Any], grid: Grid, *, intent: int, overwrite: bool) -> None:
-    name = Path(path).name
+def write_frames(
+    path: PathLike,
+    frames: Iterable[NDArray[Any]],
+    grid: Grid,
+    *,
+    dimensions: tuple[int, ...],
+    dtype: DTypeLike,
+    intent: int = 0,
+    intent_p1: float = 0.0,
+    overwrite: bool = False,
+) -> None:
+    """Write numbers frame by frame, so that one frame at a time is in memory.
+
+    Parameters
+    ----------
+    path : path
+    frames : iterable of (I, J, K) arrays
+        As many as there are places along the dimensions after the third, in the order they are stored in.
+    grid : Grid
+    dimensions : tuple of int
+        As in the header, the grid's shape first.
+    dtype : dtype
+    intent, intent_p1 : int, float
+        What the numbers are, in codes of nifti1.h.
+    overwrite : bool
+
+    Raises
+    ------
+    InputError
+        The place is taken or cannot be written, or the name is none for NIfTI.
+    """
+    name, kind = Path(path).name, np.dtype(dtype).newbyteorder("<")
     if not name.endswith((".nii", ".nii.gz")):
         raise InputError("is no name for a NIfTI file", where=shown_name(path), expected=".nii or .nii.gz")
-    header = _header(voxels, grid, intent)
+    header = _header(dimensions, kind, grid, (intent, intent_p1))
     with whole_file(path, overwrite=overwrite) as temporary, temporary.open("wb") as raw:
         if not name.endswith(".gz"):
-            _put(raw, header, voxels)
+            _put(raw, header, frames, kind)
             return
         with gzip.GzipFile(filename="", mode="wb", fileobj=raw, mtime=0, compresslevel=_PACKING) as stream:
-            _put(stream, header, voxels)
+            _put(stream, header, frames, kind)
 
 
-def _put(stream: Any, header: bytes, voxels: NDArray[Any]) -> None:
+def _put(stream: Any, header: bytes, frames: Iterable[NDArray[Any]], dtype: np.dtype[Any]) -> None:
     stream.write(header)
-    little = voxels.astype(voxels.dtype.newbyteorder("<"), copy=False)
-    stream.write(little.tobytes(order="F"))
+    for frame in frames:
+        stream.write(frame.astype(dtype, copy=False).tobytes(order="F"))
 
 
-def _header(voxels: NDArray[Any], grid: Grid, intent: int) -> bytes:
+def _header(
+    dimensions: tuple[int, ...], dtype: np.dtype[Any], grid: Grid, intent: tuple[int, float]
+) -> bytes:
     """The header block and four empty extension bytes."""
     import nibabel as nib
 
-    kind: Any = nib.Nifti1Header if max(voxels.shape) <= 32767 else nib.Nifti2Header
+    kind: Any = nib.Nifti1Header if max(dimensions) <= 32767 else nib.Nifti2Header
     header = kind(endianness="<")
-    header.set_data_dtype(voxels.dtype.newbyteorder("<"))
-    header.set_data_shape(voxels.shape)
+    header.set_data_dtype(dtype)
+    header.set_data_shape(dimensions)
     header.set_xyzt_units("mm")
     header["scl_slope"], header["scl_inter"] = 1.0, 0.0
-    header["intent_code"] = intent
+    header["intent_code"], header["intent_p1"] = intent
     header["descrip"] = short_caution().encode("ascii", "replace")[:79]
     header["vox_offset"] = 352 if kind is nib.Nifti1Header else 544
     if kind is nib.Nifti1Header:

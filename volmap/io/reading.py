@@ -6,7 +6,8 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Literal
 
-VolumeKind = Literal["labels", "image", "either"]
+VolumeKind = Literal["labels", "image", "vectors", "tensors", "either"]
+Axes = Literal["world", "lps", "voxels"]
 
 
 @dataclass(frozen=True)
@@ -22,11 +23,15 @@ class Reading:
     threshold : float, optional
         A probability or a share at and above which a voxel belongs to the label, in the file's own numbers:
         of 1 in most files, of 100 or 255 in some.
+    axes : 'world', 'lps' or 'voxels', optional
+        What the components of vectors and tensors run along: the world's axes, RAS+ (also when nothing is
+        said, which a finding then tells), those of DICOM, or the voxel axes i, j, k.
     """
 
     names: Path | None = None
     frame: int | None = None
     threshold: float | None = None
+    axes: Axes | None = None
 
 
 AS_IT_IS = Reading()

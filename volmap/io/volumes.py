@@ -12,8 +12,12 @@ from dataclasses import replace
 from volmap.io import nifti, nrrd
 from volmap.io.dicom import volumes as dicom
 from volmap.io.dicom.opening import is_dicom
+from volmap.io.nifti_components import kind_by_intent, read_components
+from volmap.io.opening import shown_name
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.io.stacks import Stack, could_be_labels, image_volume, label_volume
+from volmap.types.component_volumes import TensorVolume, VectorVolume
+from volmap.types.errors import InputError
 from volmap.types.findings import Finding
 from volmap.types.volumes import ImageVolume, LabelVolume
 
@@ -83,26 +87,40 @@ def read_image_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tup
 
 def read_volume_with_findings(
     path: PathLike, reading: Reading = AS_IT_IS, *, kind: VolumeKind = "either"
-) -> tuple[LabelVolume | ImageVolume, Findings]:
-    """A volume of either kind, read once.
+) -> tuple[LabelVolume | ImageVolume | VectorVolume | TensorVolume, Findings]:
+    """A volume of any kind, read once.
 
     Parameters
     ----------
     path : path
     reading : Reading
-    kind : 'labels', 'image' or 'either'
-        'either' decides by what the file is, or by its values.
+    kind : 'labels', 'image', 'vectors', 'tensors' or 'either'
+        'either' decides by what the file says it is, or by its values.
 
     Raises
     ------
     InputError
-        As `read_labels` and `read_image`.
+        As `read_labels`, `read_image` and `nifti_components.read_components`.
     """
+    if kind in ("vectors", "tensors"):
+        _require_nifti(path, kind)
+        return read_components(path, kind, reading)
     if is_dicom(path):
         return dicom.read_volume_with_findings(path, reading, kind=kind)
     if kind == "image":
         return read_image_with_findings(path, reading)
+    by_intent = kind_by_intent(path) if kind == "either" and not nrrd.is_nrrd(path) else None
+    if by_intent is not None:
+        return read_components(path, by_intent, reading)
     stack = _stack(path, reading)
     if kind == "labels" or reading.threshold is not None or could_be_labels(stack.values[..., 0]):
         return label_volume(stack, path, reading)
     return image_volume(stack), stack.findings
+
+
+def _require_nifti(path: PathLike, kind: str) -> None:
+    if is_dicom(path) or nrrd.is_nrrd(path):
+        raise InputError(
+            f"{kind} are read from NIfTI only", where=shown_name(path), expected=".nii or .nii.gz",
+            remedy="write them as NIfTI of intent 1007 (vectors) or 1005 (symmetric matrices)", refused=True,
+        )  # fmt: skip

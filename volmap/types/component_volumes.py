@@ -8,6 +8,7 @@ from typing import ClassVar
 import numpy as np
 from numpy.typing import NDArray
 
+from volmap.types.errors import InputError
 from volmap.types.frozen import Frozen
 from volmap.types.grid import Grid
 from volmap.types.volumes import digest
@@ -21,7 +22,7 @@ class VectorVolume(Frozen):
     ----------
     grid : Grid
     values : (I, J, K, 3) float32
-        Components along x, y, z of the world, RAS+.  NaN where not defined.
+        Components along x, y, z of the world, RAS+.  All NaN where not defined.
     unit : str
     name : str
     """
@@ -32,7 +33,7 @@ class VectorVolume(Frozen):
     name: str = "vectors"
 
     def __post_init__(self) -> None:
-        self._own("values", np.float32, (*self.grid.shape, 3))
+        _require_whole(self._own("values", np.float32, (*self.grid.shape, 3)), self.name)
 
     @property
     def sha256(self) -> str:
@@ -48,8 +49,8 @@ class TensorVolume(Frozen):
     ----------
     grid : Grid
     values : (I, J, K, 6) float32
-        xx, yx, yy, zx, zy, zz, the lower triangle row by row, in the world's axes, RAS+.  NaN where not
-        defined.
+        xx, yx, yy, zx, zy, zz, the lower triangle row by row, in the world's axes, RAS+.  All NaN where
+        not defined.
     unit : str
     name : str
     """
@@ -63,9 +64,19 @@ class TensorVolume(Frozen):
     name: str = "tensors"
 
     def __post_init__(self) -> None:
-        self._own("values", np.float32, (*self.grid.shape, 6))
+        _require_whole(self._own("values", np.float32, (*self.grid.shape, 6)), self.name)
 
     @property
     def sha256(self) -> str:
         """Digest of the components and the affine."""
         return digest(self.values.astype("<f4"), self.grid.affine)
+
+
+def _require_whole(values: NDArray[np.float32], name: str) -> None:
+    """Refuse infinite components, and voxels that have some components only."""
+    for plane in values:  # nothing of the grid's size is made
+        if np.isinf(plane).any():
+            raise InputError("holds infinite components", where=name, refused=True)
+        holes = np.isnan(plane)
+        if (holes.any(axis=-1) != holes.all(axis=-1)).any():
+            raise InputError("holds voxels with some components only", where=name, refused=True)
