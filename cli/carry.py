@@ -7,6 +7,7 @@ _y_ and _z_, symmetric tensors as _xx_ to _zz_.  What becomes of their numbers i
 from __future__ import annotations
 
 import argparse
+from dataclasses import replace
 from pathlib import Path
 
 from .console import Console
@@ -38,10 +39,11 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--as",
         dest="kind",
-        choices=("labels", "image"),
+        choices=("labels", "image", "vectors", "tensors"),
         default="either",
-        help="what a volume holds: labels (nearest voxel) or an image (trilinear); default: by its values",
+        help="what a volume holds; default: by its header, or by its values (labels or an image)",
     )
+    volume_arguments(parser)
     parser.add_argument(
         "--belongs-to",
         choices=("source", "target"),
@@ -63,6 +65,35 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--overwrite", action="store_true", help="replace a file that stands there")
 
 
+def volume_arguments(parser: argparse.ArgumentParser) -> None:
+    """How volumes are carried."""
+    parser.add_argument(
+        "--labels",
+        choices=("nearest", "one-hot", "shares"),
+        default="nearest",
+        help="of a label volume: the nearest voxel's label (default), the one with the largest trilinear "
+        "indicator, or the one that fills most, with exact shares of all labels in OUT_shares.nii.gz",
+    )
+    parser.add_argument(
+        "--image",
+        choices=("linear", "cubic"),
+        default="linear",
+        help="of images, vectors and tensors: trilinear (default) or cubic B-splines",
+    )
+    parser.add_argument(
+        "--onto",
+        type=Path,
+        metavar="FILE",
+        help="voxels a carried volume shall have, in the world it arrives in; default: that scan's",
+    )
+    parser.add_argument(
+        "--axes",
+        choices=("world", "lps", "voxels"),
+        help="axes the components of vectors and tensors run along: the world's, RAS+ (default), those of "
+        "DICOM, or the voxel axes",
+    )
+
+
 def run(options: argparse.Namespace, console: Console) -> int:
     """Carry one thing."""
     from volmap import pipeline
@@ -75,12 +106,18 @@ def run(options: argparse.Namespace, console: Console) -> int:
         options.thing,
         options.through,
         options.out,
-        CarrySettings(bends=not options.vertices_only, rules=rules_of(options)),
+        CarrySettings(
+            bends=not options.vertices_only,
+            rules=rules_of(options),
+            labels=options.labels,
+            image=options.image,
+        ),
         reverse=options.reverse,
         kind=options.kind,
         belongs_to=options.belongs_to,
         frame_uid=options.frame_uid,
-        reading=reading_of(options),
+        onto=options.onto,
+        reading=replace(reading_of(options), axes=options.axes),
         progress=console.progress,
         overwrite=options.overwrite,
     )

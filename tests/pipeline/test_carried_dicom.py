@@ -56,5 +56,5 @@ def test_the_frame_of_the_users_own_images_is_used_and_only_for_dicom(small_pair
 def test_an_image_is_not_written_as_dicom(small_pair, tmp_path, capsys):
     out = tmp_path / "a.dcm"
     assert carry(small_pair.source, small_pair, out, "--as", "image") == 3
-    assert "an image is not written as DICOM" in capsys.readouterr().err
+    assert "only labels are written as DICOM" in capsys.readouterr().err
     assert not list(tmp_path.iterdir())

@@ -170,6 +170,19 @@ def read_stack(path: PathLike, reading: Reading = AS_IT_IS) -> Stack:
     return Stack(header.name, values, header.affine, header.findings + findings)
 
 
+def read_grid(path: PathLike) -> Grid:
+    """The voxel grid alone, of the header.
+
+    Raises
+    ------
+    InputError
+        Not readable as NIfTI.
+    """
+    with opened(files_of(path)[0]) as (stream, file):
+        header = read_header(stream, file)
+    return Grid((header.shape[0], header.shape[1], header.shape[2]), header.affine)
+
+
 def read_frames(path: PathLike, choose: Choice) -> tuple[NiftiHeader, NDArray[Any], tuple[Finding, ...]]:
     """A file's header and the stored numbers, not scaled, of some of its frames.
 

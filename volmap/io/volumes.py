@@ -19,6 +19,7 @@ from volmap.io.stacks import Stack, could_be_labels, image_volume, label_volume
 from volmap.types.component_volumes import TensorVolume, VectorVolume
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding
+from volmap.types.grid import Grid
 from volmap.types.volumes import ImageVolume, LabelVolume
 
 PathLike = str | os.PathLike[str]
@@ -50,6 +51,22 @@ def read_image(path: PathLike, reading: Reading = AS_IT_IS) -> ImageVolume:
         Not readable, or not one number a voxel.
     """
     return read_image_with_findings(path, reading)[0]
+
+
+def read_grid(path: PathLike) -> Grid:
+    """Only the voxel grid of a volume, whatever it holds.
+
+    Raises
+    ------
+    InputError
+        Not readable.
+    """
+    if is_dicom(path):
+        return dicom.read_volume_with_findings(path, AS_IT_IS)[0].grid
+    if nrrd.is_nrrd(path):
+        stack = nrrd.read_stack(path, Reading(frame=0))
+        return Grid(stack.shape, stack.affine)
+    return nifti.read_grid(path)
 
 
 def read_labels_with_findings(path: PathLike, reading: Reading = AS_IT_IS) -> tuple[LabelVolume, Findings]:

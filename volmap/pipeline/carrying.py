@@ -10,7 +10,7 @@ from volmap import carry as carrying
 from volmap.io.atomic import require_place, whole_file
 from volmap.io.json_documents import json_text
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
-from volmap.io.volumes import read_volume_with_findings
+from volmap.io.volumes import read_grid, read_volume_with_findings
 from volmap.pipeline.belonging import Side, require_belonging
 from volmap.pipeline.carried_sidecar import carried_sidecar, sidecar_place
 from volmap.pipeline.field_ways import FieldWay, is_field_file, read_field_way
@@ -23,15 +23,20 @@ from volmap.pipeline.pointwise_files import (
     require_holding,
     write_pointwise,
 )
-from volmap.pipeline.volume_files import DICOM, holds_volume, require_out, write_volume
+from volmap.pipeline.volume_files import (
+    DICOM,
+    facts_beside,
+    holds_volume,
+    how_taken,
+    require_meant,
+    require_out,
+    write_volume,
+)
 from volmap.pipeline.ways import Way, read_way
 from volmap.types import (
     Finding,
     Grid,
-    ImageVolume,
     InputError,
-    LabelVolume,
-    Level,
     Progress,
     Rules,
     silent,
@@ -48,6 +53,7 @@ def carry_file(
     kind: VolumeKind = "either",
     belongs_to: Side | None = None,
     frame_uid: str | None = None,
+    onto: Path | None = None,
     reading: Reading = AS_IT_IS,
     overwrite: bool = False,
     progress: Progress = silent,
@@ -65,13 +71,16 @@ def carry_file(
         By default with a reach of one voxel.
     reverse : bool
         From TARGET to SOURCE; through several maps, from the end of the last to the start of the first.
-    kind : 'labels', 'image' or 'either'
-        What a volume holds; 'either' decides by its values.
+    kind : 'labels', 'image', 'vectors', 'tensors' or 'either'
+        What a volume holds; 'either' decides by its header, or by its values.
     belongs_to : 'source' or 'target', optional
         Whose world the user says the thing lies in, where neither its digest nor its voxel grid tells.
     frame_uid : str, optional
         Frame of Reference UID of the user's images of the scan the thing arrives in, for labels that are
         written as DICOM (.dcm); a new one otherwise.
+    onto : Path, optional
+        A volume whose voxels a carried volume shall have, in the world of the scan it arrives in; by default
+        that scan's.
     reading : Reading
         What the thing's file leaves open.
     overwrite : bool
@@ -89,18 +98,17 @@ def carry_file(
     progress("read", 0, 0, thing.name)
     loaded, findings = _loaded(thing, kind, reading, settings.rules)
     loaded, left_out = without_personal(loaded, told_name(thing))
+    require_meant(loaded, onto, reading)
     way = _read_through(through, loaded, reverse=reverse, progress=progress)
     require_holding(out, loaded)
-    if isinstance(loaded, LabelVolume | ImageVolume):
-        require_out(out, loaded)
+    require_out(out, loaded, settings, overwrite=overwrite)
     progress("carry", 0, 0, thing.name)
     belonging = require_belonging(loaded, *way.ends, name=told_name(thing), belongs_to=belongs_to)
     settings = settings.of_scan(way.voxel_mm)
-    carried = way.carry(loaded, settings)
+    carried = way.carry(loaded, settings, onto=None if onto is None else read_grid(onto))
     findings = (*findings, *left_out, *way.findings, *belonging, *carried.findings)
-    told = carried_sidecar(
-        thing, out, way.told, settings, findings, facts=carried.facts, belongs_to=belongs_to
-    )
+    facts = {**carried.facts, **facts_beside(out, carried.thing, onto)}
+    told = carried_sidecar(thing, out, way.told, settings, findings, facts=facts, belongs_to=belongs_to)
     with whole_file(sidecar_place(out), overwrite=overwrite) as place:  # both stand, or neither
         place.write_text(json_text(told), encoding="utf-8")
         if not write_pointwise(out, carried.thing, overwrite=overwrite):
@@ -118,12 +126,6 @@ def _read_through(
     fields = [place for place in places if is_field_file(place)]
     volume = isinstance(getattr(loaded, "grid", None), Grid)
     if not fields:
-        if len(places) > 1 and volume:
-            raise InputError(
-                "volumes are carried through one map at a time",
-                where=loaded.name,
-                remedy="carry it leg by leg",
-            )
         return read_way(places, reverse=reverse, progress=progress)
     if len(places) > 1:
         raise InputError(
@@ -162,15 +164,4 @@ def _loaded(path: Path, kind: VolumeKind, reading: Reading, rules: Rules) -> tup
     volume, findings = read_volume_with_findings(path, reading, kind=kind)
     if kind != "either":
         return volume, findings
-    return volume, (*findings, _how_taken(volume))
-
-
-def _how_taken(volume: LabelVolume | ImageVolume) -> Finding:
-    """What a volume was taken for, which decides how it is sampled."""
-    if isinstance(volume, LabelVolume):
-        sentence = f"its {len(volume.present)} whole numbers were taken for labels (nearest voxel)"
-        return Finding(
-            Level.NOTE, "carried-as-labels", volume.name, sentence, "say --as image if they are not"
-        )
-    sentence = "its values are no labels (whole, 0 to 65535, at most 256 of them): an image (trilinear)"
-    return Finding(Level.NOTE, "carried-as-image", volume.name, sentence)
+    return volume, (*findings, how_taken(volume))

@@ -63,8 +63,22 @@ class FieldWay:
         """One voxel of the field."""
         return self.field.grid.voxel_mm
 
-    def carry(self, thing: Any, settings: carrying.CarrySettings) -> carrying.Carried:
-        """A thing in its new place, with a note that it was the field that carried it."""
+    def carry(
+        self, thing: Any, settings: carrying.CarrySettings, *, onto: Grid | None = None
+    ) -> carrying.Carried:
+        """A thing in its new place, with a note that it was the field that carried it.
+
+        Raises
+        ------
+        InputError
+            Voxels other than the field's are asked for, or as `carry_by_field`.
+        """
+        if onto is not None:
+            raise InputError(
+                "a field carries volumes onto its own voxels",
+                where=self.name,
+                remedy="carry it through the map folder, or leave out --onto",
+            )
         carried = carrying.carry_by_field(thing, self.field, settings=settings)
         note = Finding(Level.NOTE, "sampled-field", self.name, self.how)
         return carrying.Carried(carried.thing, (note, *carried.findings), carried.facts)

@@ -13,6 +13,7 @@ from volmap.mapfolder import MapFolder, read_map_folder
 from volmap.pipeline.belonging import KnownScan
 from volmap.types import (
     Finding,
+    Grid,
     InputError,
     LabelVolume,
     Level,
@@ -126,9 +127,11 @@ class Way:
         """One voxel of the scan in which things start."""
         return self.start.grid.voxel_mm
 
-    def carry(self, thing: Any, settings: carrying.CarrySettings) -> carrying.Carried:
-        """A thing of `start`, carried to `end`."""
-        return carrying.carry(thing, self.map, onto=self.end.grid, settings=settings)
+    def carry(
+        self, thing: Any, settings: carrying.CarrySettings, *, onto: Grid | None = None
+    ) -> carrying.Carried:
+        """A thing of `start`, carried to `end`; a volume onto the voxels of that scan, or onto others."""
+        return carrying.carry(thing, self.map, onto=onto or self.end.grid, settings=settings)
 
     @property
     def told(self) -> dict[str, Any]:

@@ -86,6 +86,10 @@ class LabelShares(Frozen):
         """The labels that fill anything, ascending."""
         return tuple(v for v in np.union1d(np.unique(self.whole), np.unique(self.label)).tolist() if v)
 
+    def name_of(self, label: int) -> str:
+        """Name of a label, in words."""
+        return self.names.get(label, f"label {label}")
+
     def of_label(self, label: int) -> NDArray[np.float32]:
         """(I, J, K) the part of each voxel that one label fills."""
         filled = (self.whole == label).astype(np.float32) if label else np.zeros(self.grid.shape, np.float32)
