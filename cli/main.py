@@ -14,7 +14,10 @@ from textwrap import fill
 from .console import Console
 from .usage import UsageError
 
-VERBS = ("screen", "mesh", "map", "certify", "carry", "export", "measure", "report", "phantom", "demo")
+VERBS = (
+    *("screen", "mesh", "map", "certify", "carry", "export", "measure"),
+    *("report", "phantom", "demo", "guide"),
+)
 DONE, REFUSED, USAGE, UNREADABLE, INTERRUPTED = 0, 1, 2, 3, 130
 
 
