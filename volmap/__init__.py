@@ -16,6 +16,7 @@ from types import ModuleType
 from typing import Any
 
 _HOME = {
+    "CarrySettings": "carry",
     "Certificate": "types",
     "Finding": "types",
     "Grid": "types",
@@ -28,12 +29,17 @@ _HOME = {
     "MapFolder": "mapfolder",
     "MapJob": "pipeline",
     "MapSettings": "mapping",
+    "Measurements": "types",
+    "MeshFields": "types",
     "MeshSettings": "mesh",
+    "Polylines": "types",
+    "Quantity": "types",
+    "Reading": "io.reading",
+    "Rule": "types",
+    "Rules": "types",
     "Surface": "types",
     "TetMesh": "types",
     "VolumeMap": "types",
-    "CarrySettings": "carry",
-    "Reading": "io.reading",
     "carry": "carry",
     "certify_folder": "pipeline",
     "map_pair": "pipeline",
@@ -43,13 +49,19 @@ _HOME = {
     "read_labels": "io.volumes",
     "read_landmarks": "io.landmarks",
     "read_map_folder": "mapfolder",
+    "read_measurements": "io.measurements",
+    "read_mesh_fields": "io.mesh_fields",
     "read_pairs": "io.landmarks",
+    "read_polylines": "io.polylines",
     "report_of": "pipeline",
     "screen": "screen",
     "write_image": "io.nifti",
     "write_labels": "io.nifti",
     "write_landmarks": "io.landmarks",
     "write_map": "pipeline",
+    "write_measurements": "io.measurements",
+    "write_mesh_fields": "io.mesh_fields",
+    "write_polylines": "io.polylines",
 }
 __all__ = sorted(_HOME)
 

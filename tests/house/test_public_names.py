@@ -36,6 +36,10 @@ def test_the_python_of_the_readme_runs(small_pair, tmp_path, monkeypatch, capsys
     copyfile(small_pair.source, tmp_path / "visit0_labels.nii.gz")
     copyfile(small_pair.target, tmp_path / "visit1_labels.nii.gz")
     (tmp_path / "beads.csv").write_text("name,x_mm,y_mm,z_mm\none,0,-6,-8\n", encoding="utf-8")
+    (tmp_path / "flow.csv").write_text(
+        "name,x_mm,y_mm,z_mm,flow_x_mm_per_s,flow_y_mm_per_s,flow_z_mm_per_s\none,0,-6,-8,1,0,0\n",
+        encoding="utf-8",
+    )
     monkeypatch.chdir(tmp_path)
     names = {}
     exec(code, names)
