@@ -1,11 +1,14 @@
 """Meshes with data in files: what each array is taken for, what must be said, what reads back."""
 
+import time
+
 import meshio
 import numpy as np
 import pytest
 
 from volmap.io.mesh_fields import read_mesh_fields, write_mesh_fields
-from volmap.types import InputError, Rule, Rules, UnsaidError
+from volmap.types import InputError, MeshFields, Rule, Rules, Surface, UnsaidError
+from volmap.types.notice import short_caution
 
 pv = pytest.importorskip("pyvista")
 POINTS = np.array([[0.0, 0, 0], [3, 0, 0], [0, 3, 0], [0, 0, 3], [3, 3, 3]])
@@ -119,3 +122,17 @@ def test_a_surface_with_data_needs_a_format_that_holds_them(tmp_path):
         write_mesh_fields(tmp_path / "out.stl", fields)
     write_mesh_fields(tmp_path / "out.vtp", fields)
     np.testing.assert_array_equal(pv.read(tmp_path / "out.vtp")["heat"], np.arange(4.0))
+
+
+@pytest.mark.parametrize("name", ["a.stl", "a.ply"])
+def test_bare_triangles_hold_the_caution_and_no_day(tmp_path, name):
+    triangles = np.array([[0, 2, 1], [0, 1, 3], [0, 3, 2], [1, 2, 3]])
+    points = np.array([[0.0, 0, 0], [1, 0, 0], [0, 1, 0], [0, 0, 1.25]])
+    body = Surface(points, triangles, np.tile([1, 0], (4, 1)))
+    write_mesh_fields(tmp_path / name, MeshFields(body))
+    raw = (tmp_path / name).read_bytes()
+    assert short_caution().encode() in raw[:300]
+    assert time.strftime("%Y").encode() not in raw[:300]
+    found = pv.read(tmp_path / name)  # another reader takes the header as it is
+    assert found.n_cells == 4
+    assert found.volume == pytest.approx(1.25 / 6, rel=1e-6)

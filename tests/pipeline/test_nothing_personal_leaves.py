@@ -20,6 +20,7 @@ import zlib
 import nibabel as nib
 import nrrd
 import numpy as np
+import pyarrow.parquet
 import pydicom
 import pytest
 import pyvista
@@ -172,6 +173,7 @@ def _plant(inputs):
         "guides.csv": "name,x_mm,y_mm,z_mm,to_x_mm,to_y_mm,to_z_mm\none,0,-6,-8,1.5,-6.36,-9.48\n",
         "measured.csv": "name,x_mm,y_mm,z_mm,t1_ms,Patient name,birthdate,Date,site\n"
         f"one,0,-6,-8,900,{MARK},{BIRTH},{SCANNED},shell\n",
+        "lines.csv": "line,x_mm,y_mm,z_mm\none,0,-6,-8\none,2,8,6\n",
         "measured.csv.json": f'{{"patient": "{MARK}"}}',
         "labels.tsv": f"index\tname\tpatient\n1\tshell\t{MARK}\n2\tcore\t{BIRTH}\n",
     }
@@ -194,10 +196,18 @@ def _looks(out):
 def _uses(out):
     """Calls that take the map."""
     calls = [["certify", str(out / "map")], ["report", str(out / "map"), "--target-image", SERIES]]
+    for name in ("measures.csv", "measures.parquet"):
+        regions = ["--regions", "after.dcm", "--belongs-to", "target"]
+        calls.append(["measure", str(out / "map"), "--out", str(out / name), *regions])
     things = {
         "points.csv": ("points.csv", []),
         "measured.csv": ("measured.csv", ["--rule", "value"]),
         "mesh.vtu": ("carried.vtu", []),
+        "lines.csv": ("lines.csv", []),
+        "lines.csv ": ("lines.vtp", []),
+        "closed.ply": ("closed.vtp", []),
+        "closed.stl": ("closed.ply", []),
+        "closed.stl ": ("closed.stl", []),
         "before.nii.gz": ("carried.nii.gz", ["--as", "labels"]),
         "before.nrrd": ("carried_from_nrrd.dcm", ["--as", "labels"]),
         "after.dcm": ("carried_back.nii.gz", ["--reverse"]),
@@ -205,7 +215,8 @@ def _uses(out):
         SERIES: ("image_back.nii.gz", ["--reverse", "--belongs-to", "target"]),
     }
     for thing, (name, options) in things.items():
-        calls.append(["carry", thing, "--through", str(out / "map"), "--out", str(out / name), *options])
+        through = ["--through", str(out / "map"), "--out", str(out / name)]
+        calls.append(["carry", thing.strip(), *through, *options])
     for kind, name in {"registration": "field.dcm", "segmentation": "labels.dcm"}.items():
         calls.append(["export", str(out / "map"), "--as", kind, "--out", str(out / name)])
     for kind in ("surfaces", "solid"):
@@ -274,6 +285,9 @@ def unpacked(path):
         for name in mesh.field_data:
             yield name.encode() + " ".join(map(str, np.ravel(mesh.field_data[name]))).encode()
         yield " ".join([*mesh.point_data, *mesh.cell_data]).encode()
+    if path.suffix == ".parquet":
+        table = pyarrow.parquet.read_table(path)
+        yield f"{table.schema.to_string(show_field_metadata=True)} {table.to_pydict()}".encode()
     for text in re.findall(rb"[A-Za-z0-9+/]{40,}={0,2}", raw):
         plain = base64.b64decode(text + b"=" * (-len(text) % 4))
         yield plain
@@ -318,6 +332,7 @@ def test_the_search_finds_what_is_there(tmp_path):
     points = np.eye(3)
     write_gifti_surface(tmp_path / "a.surf.gii", points, np.array([[0, 1, 2]]), name=MARK, description="x")
     _write_mesh(tmp_path / "b.vtu")
+    pyarrow.parquet.write_table(pyarrow.table({"a": [MARK] * 99}), tmp_path / "f.parquet", compression="zstd")
     (tmp_path / "c.gz").write_bytes(gzip.compress(MARK.encode(), mtime=0))
     (tmp_path / "d.html").write_bytes(
         base64.b64encode(f"{MARK} and more than forty letters in base64".encode())

@@ -20,6 +20,7 @@ from volmap.io.vtk_xml import write_mesh, write_surface
 from volmap.types.errors import InputError, UnsaidError
 from volmap.types.findings import Finding, Level
 from volmap.types.mesh_fields import MeshFields
+from volmap.types.notice import short_caution
 from volmap.types.quantities import Quantity, Rule, Rules
 from volmap.types.surface import Surface
 from volmap.types.tetmesh import TetMesh
@@ -184,3 +185,14 @@ def _write_triangles(path: PathLike, body: TetMesh | Surface, *, overwrite: bool
     mesh = meshio.Mesh(np.array(body.points), [("triangle", np.array(body.triangles))])
     with whole_file(path, overwrite=overwrite) as temporary:
         importlib.import_module(f"meshio.{kind}").write(os.fspath(temporary), mesh, binary=True)
+        temporary.write_bytes(_signed(temporary.read_bytes(), kind))
+
+
+def _signed(raw: bytes, kind: str) -> bytes:
+    """The caution where meshio puts its own name, and the day of writing in a PLY."""
+    caution = short_caution().encode("ascii", "replace")
+    if kind == "stl":
+        return caution[:79].ljust(80) + raw[80:]
+    header, end, body = raw.partition(b"end_header\n")
+    lines = [line for line in header.splitlines(keepends=True) if not line.startswith(b"comment")]
+    return b"".join([*lines, b"comment " + caution + b"\n", end, body])
