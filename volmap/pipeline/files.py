@@ -33,6 +33,7 @@ from volmap.types import (
     ImageVolume,
     InputError,
     LabelVolume,
+    LandmarkPairs,
     Level,
     Progress,
     silent,
@@ -170,6 +171,7 @@ def map_files(
     source_reading: Reading = AS_IT_IS,
     target_reading: Reading = AS_IT_IS,
     guides: Path | None = None,
+    pairs: LandmarkPairs | None = None,
     boundary: Path | None = None,
     boundary_tolerance_mm: float | None = None,
     source_image: Path | None = None,
@@ -179,8 +181,8 @@ def map_files(
 ) -> MapFolder:
     """Map one label file onto another and write the map folder.
 
-    A boundary is kept within `boundary_tolerance_mm` of where its `image_mm` sends it (default: a quarter of
-    a voxel, the mean of both scans).
+    Guides and checks come as a file or as `pairs`.  A boundary is kept within `boundary_tolerance_mm` of
+    where its `image_mm` sends it (default: a quarter of a voxel, the mean of both scans).
 
     Raises
     ------
@@ -192,7 +194,7 @@ def map_files(
     a, findings_a = read_labels_with_findings(source, source_reading)
     b, findings_b = read_labels_with_findings(target, target_reading)
     a, b = _told_apart(a, b)
-    pairs = read_pairs(guides) if guides is not None else None
+    pairs = read_pairs(guides) if guides is not None else pairs
     given = _given_boundary(boundary, boundary_tolerance_mm, a, b)
     images = [_picture(source_image, a), _picture(target_image, b)]
     days = days_apart(source, target)
@@ -204,7 +206,7 @@ def map_files(
         b,
         job,
         pairs=pairs,
-        pairs_name=guides.name if guides else "",
+        pairs_name=guides.name if guides else "landmarks",
         given=given,
         notes=notes,
         progress=progress,
