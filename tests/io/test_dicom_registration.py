@@ -162,6 +162,14 @@ def test_a_stated_frame_is_used_and_said(tmp_path):
     assert "Frame of reference of SOURCE: new; of TARGET: as the user stated it." in told
 
 
+def test_one_frame_for_both_scans_is_refused(tmp_path):
+    same = [uids_of_scan(sha * 64, frame_uid="1.2.840.99999.7") for sha in "ab"]
+    with pytest.raises(InputError, match="one frame of reference"):
+        write_registration(tmp_path / "x.dcm", backward(GRIDS["axial"]), registered=same[0], source=same[1],
+                           check_voxel=(5, 5, 5))  # fmt: skip
+    assert not list(tmp_path.iterdir())
+
+
 @pytest.mark.parametrize("bad", ["", "1", "1..2", "1.02", "1.2.a", "1." * 40 + "1", " 1.2"])
 def test_what_is_no_uid_is_refused(bad):
     with pytest.raises(InputError, match="is not a UID"):

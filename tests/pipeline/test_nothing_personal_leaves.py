@@ -209,6 +209,7 @@ def _uses(out):
         "closed.stl": ("closed.ply", []),
         "closed.stl ": ("closed.stl", []),
         "before.nii.gz": ("carried.nii.gz", ["--as", "labels"]),
+        "before.nii.gz ": ("parts.dcm", ["--as", "labels", "--labels", "shares"]),
         "before.nrrd": ("carried_from_nrrd.dcm", ["--as", "labels"]),
         "after.dcm": ("carried_back.nii.gz", ["--reverse"]),
         "after.hdr": ("carried_back_from_pair.nii", ["--reverse", "--as", "labels"]),

@@ -91,7 +91,7 @@ def write_registration(
     ------
     InputError
         The place is taken or cannot be written, axes that are not orthogonal, a field too large for one
-        attribute.
+        attribute, one frame of reference for both.
     """
     if field.displacement.nbytes > _LARGEST_BYTES:
         raise InputError(
@@ -100,6 +100,14 @@ def write_registration(
             found=f"{field.displacement.nbytes} bytes",
             expected=f"at most {_LARGEST_BYTES}",
             remedy="map scans with fewer voxels",
+        )
+    if registered.frame == source.frame:
+        raise InputError(
+            "both scans have one frame of reference, so nothing would say which images are to be moved",
+            where=source.frame,
+            expected="two different ones",
+            remedy="leave the frames out (new ones are made), or give one scan's images a frame of their own",
+            refused=True,
         )
     grid = laid(field.grid, where="the field")
     check = _checked(field, grid, check_voxel)
