@@ -26,6 +26,36 @@ TABLES = {
     "no name": f"{POINTS},1,2,3\n".encode(),
     "a number of pages": f"{POINTS}a,1{'0' * 5000},2,3\n".encode(),
 }
+MEASURED = "name,x_mm,y_mm,z_mm,t1_ms,flow_x_ml,flow_y_ml,flow_z_ml\na,1,2,3,900,1,0,0\n"
+MEASUREMENTS = {
+    "header alone": MEASURED.splitlines()[0].encode() + b"\n",
+    "a component missing": MEASURED.replace(",flow_y_ml", ",flow_y").encode(),
+    "a unit missing": MEASURED.replace("t1_ms", "t1_").encode(),
+    "twice": MEASURED.replace("t1_ms", "flow_x_ml").encode(),
+    "short row": f"{MEASURED}b,1,2,3\n".encode(),
+    "long row": f"{MEASURED}b,1,2,3,4,5,6,7,8,9\n".encode(),
+    "a word": f"{MEASURED}b,1,2,3,old,1,0,0\n".encode(),
+    "no place": f"{MEASURED}b,1,,3,900,1,0,0\n".encode(),
+    "infinite": f"{MEASURED}b,1,2,3,inf,1,0,0\n".encode(),
+    "latin": f"{MEASURED}\xe9,1,2,3,900,1,0,0\n".encode("latin-1"),
+    "zero bytes": MEASURED.encode() + bytes(64),
+    "packed": pack(MEASURED.encode()),
+    "a quote unclosed": f'{MEASURED}"b,1,2,3,900,1,0,0\nc,1,2,3,900,1,0,0\n'.encode(),
+    "a number of pages": f"{MEASURED}b,1{'0' * 5000},2,3,900,1,0,0\n".encode(),
+    "a line of megabytes": f"{MEASURED}{'b' * 2**23},1,2,3,900,1,0,0\n".encode(),
+}
+LINE = "line,x_mm,y_mm,z_mm\na,1,2,3\na,2,2,3\n"
+LINES = {
+    "header alone": LINE.splitlines()[0].encode() + b"\n",
+    "one point": f"{LINE}b,1,2,3\n".encode(),
+    "in two places": f"{LINE}b,1,2,3\nb,2,2,3\na,3,2,3\n".encode(),
+    "no line": f"{LINE},1,2,3\n".encode(),
+    "NaN": f"{LINE}a,1,nan,3\n".encode(),
+    "a word": f"{LINE}a,1,two,3\n".encode(),
+    "a column more": f"{LINE}a,1,2,3,4\n".encode(),
+    "another header": LINE.replace("z_mm", "depth_mm").encode(),
+    "zero bytes": LINE.encode() + bytes(64),
+}
 NAMES = {
     "empty": b"",
     "no columns": b"1\tliver\n",
@@ -55,6 +85,16 @@ def table_cases(source, target, through):
         )
         for name, data in TABLES.items()
     ]
+    said = ["--rule", "t1=value", "--rule", "flow=turn"]
+    for kind, made, rules in (("measurements", MEASUREMENTS, said), ("lines", LINES, [])):
+        cases += [
+            Case(
+                f"{kind}/{name}",
+                {"x.csv": data},
+                ["carry", f"{HERE}/x.csv", "--through", through, "--out", f"{HERE}/y.csv", "--quiet", *rules],
+            )
+            for name, data in made.items()
+        ]
     cases += [
         Case(
             f"guides/{name}",

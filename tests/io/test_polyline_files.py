@@ -5,7 +5,7 @@ import csv
 import numpy as np
 import pytest
 
-from volmap.io.polylines import read_polylines, write_polylines
+from volmap.io.polylines import holds_lines, read_polylines, write_polylines
 from volmap.types import InputError, Polylines
 
 HEAD = "line,x_mm,y_mm,z_mm\n"
@@ -46,15 +46,17 @@ def test_vtp_reads_back_and_pyvista_reads_it_too(tmp_path, lines):
     )
 
 
+@pytest.mark.parametrize("ending", ["vtp", "vtk"])
 @pytest.mark.parametrize("binary", [True, False])
-def test_lines_of_another_program(tmp_path, binary):
+def test_lines_of_another_program(tmp_path, binary, ending):
     """Written by VTK: lines that share points, beside a triangle and data, which are named as left out."""
     pv = pytest.importorskip("pyvista")
     points = np.array([[0, 0, 0], [1, 0, 0], [1, 2, 0], [0, 0, 5.0]])
     made = pv.PolyData(points, lines=[3, 0, 1, 2, 2, 3, 0], faces=[3, 0, 1, 2])
     made.point_data["heat"] = np.arange(4.0)
-    made.save(tmp_path / "l.vtp", binary=binary)
-    lines, findings = read_polylines(tmp_path / "l.vtp")
+    made.save(tmp_path / f"l.{ending}", binary=binary)
+    assert not holds_lines(tmp_path / f"l.{ending}")  # with a polygon it goes as a mesh unless asked for
+    lines, findings = read_polylines(tmp_path / f"l.{ending}")
     np.testing.assert_array_equal(lines.points, points[[0, 1, 2, 3, 0]])
     assert lines.starts.tolist() == [0, 3, 5]
     np.testing.assert_allclose(lines.lengths_mm, [3, 5])

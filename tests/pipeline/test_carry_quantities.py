@@ -90,6 +90,12 @@ def test_what_was_not_said_is_a_matter_of_usage(table, small_pair, capsys, optio
     assert sorted(here.parent.iterdir()) == before
 
 
+def test_a_rule_for_a_quantity_of_a_volume_is_told_to_have_nothing_to_act_on(tmp_path, small_pair, capsys):
+    said = ["--rule", "flow=flux"]
+    assert carry(small_pair.source, tmp_path / "out.nii.gz", small_pair.folder, *said) == 2
+    assert "holds no quantity 'flow'" in capsys.readouterr().err
+
+
 def test_a_rule_for_landmarks_is_told_to_have_nothing_to_act_on(tmp_path, small_pair, capsys):
     (tmp_path / "marks.csv").write_text("name,x_mm,y_mm,z_mm\na,1,2,3\n", encoding="utf-8")
     status = carry(tmp_path / "marks.csv", tmp_path / "out.csv", small_pair.folder, "--rule", "flow=flux")
@@ -143,6 +149,11 @@ def test_a_mesh_with_data_through_files(tmp_path, small_pair, capsys):
     np.testing.assert_array_equal(read["label"], volume_map.mesh.labels)
     assert carry(tmp_path / "here.vtu", tmp_path / "x.vtp", small_pair.folder, *said) == 3
     assert "is no name for what comes out" in capsys.readouterr().err
+    assert carry(there, tmp_path / "home.vtu", small_pair.folder, "--reverse") == 0
+    assert "document beside it, which says how it was carried before (dose: density, edge" in (
+        capsys.readouterr().out
+    )
+    np.testing.assert_allclose(pv.read(tmp_path / "home.vtu")["dose"], made["dose"], rtol=1e-9)
     left = ["--leave-out", "edge"]
     assert carry(tmp_path / "here.vtu", tmp_path / "few.vtu", small_pair.folder, *left) == 0
     assert sorted(pv.read(tmp_path / "few.vtu").array_names) == [

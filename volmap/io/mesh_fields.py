@@ -8,7 +8,8 @@ component and bytes are labels or colours.
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -32,7 +33,9 @@ _RANK = {1: 0, 3: 1, 6: 2, 9: 2}
 PathLike = str | os.PathLike[str]
 
 
-def read_mesh_fields(path: PathLike, rules: Rules) -> tuple[MeshFields, tuple[Finding, ...]]:
+def read_mesh_fields(
+    path: PathLike, rules: Rules, *, earlier: Mapping[str, Rule] | None = None
+) -> tuple[MeshFields, tuple[Finding, ...]]:
     """A mesh or surface of any format of `read_mesh_file`, and what is to become of its data.
 
     Parameters
@@ -41,6 +44,8 @@ def read_mesh_fields(path: PathLike, rules: Rules) -> tuple[MeshFields, tuple[Fi
     rules : Rules
         Vectors and tensors need one.  A scalar without keeps its value, and a finding says so.  An array of
         several components that is no vector is kept when its own rule is `value`.
+    earlier : mapping of str to Rule, optional
+        By which it was carried before; holds where `rules` say nothing.
 
     Raises
     ------
@@ -57,6 +62,10 @@ def read_mesh_fields(path: PathLike, rules: Rules) -> tuple[MeshFields, tuple[Fi
     ]
     rules.require_known({**data[0], **data[1]}, file.name)
     findings = list(file.findings)
+    taken = {k: rule for k, rule in (earlier or {}).items() if _unsaid(k, rules, data)}
+    if taken:
+        rules = replace(rules, of_each={**taken, **rules.of_each})
+        findings.append(rules_as_before(taken, file.name))
     if normals & {*file.point_data, *file.cell_data}:
         sentence = "its normals were left out: they follow from the triangles"
         findings.append(Finding(Level.NOTE, "normals-left-out", file.name, sentence))
@@ -126,6 +135,22 @@ def require_fitting(path: PathLike, fields: MeshFields) -> None:
             expected="a name that ends in .vtp",
             remedy="change the ending, or leave the arrays out (--leave-out)",
         )  # fmt: skip
+
+
+def rules_as_before(taken: Mapping[str, Rule], where: str) -> Finding:
+    """Rules of the document beside a file that nobody overruled."""
+    said = ", ".join(f"{name}: {rule.value}" for name, rule in taken.items())
+    sentence = f"rules were taken from the document beside it, which says how it was carried before ({said})"
+    return Finding(Level.NOTE, "rules-as-before", where, sentence)
+
+
+def _unsaid(name: str, rules: Rules, data: Sequence[Mapping[str, NDArray[Any]]]) -> bool:
+    """Whether an array is there, and the user says nothing of it."""
+    for arrays in data:
+        if name in arrays:
+            rank = _RANK.get(arrays[name].reshape(len(arrays[name]), -1).shape[1])
+            return name not in rules.left_out and (rank is None or rules.of(name, rank) is None)
+    return False
 
 
 def _sorted(

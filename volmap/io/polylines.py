@@ -1,7 +1,7 @@
-"""Polylines: CSV with ``line,x_mm,y_mm,z_mm``, one point a row in order, or the lines of a .vtp.
+"""Polylines: CSV with ``line,x_mm,y_mm,z_mm``, one point a row in order, or the lines of a .vtp or .vtk.
 
-Coordinates are world millimetres, RAS+.  In CSV the rows of one line follow each other; the lines of a .vtp
-are called 1, 2, 3 and so on, and keep that order.
+Coordinates are world millimetres, RAS+.  In CSV the rows of one line follow each other; the lines of
+the other two are called 1, 2, 3 and so on, and keep that order.
 """
 
 from __future__ import annotations
@@ -12,8 +12,9 @@ import numpy as np
 
 from volmap.io.csv_columns import read_columns, read_header, write_columns
 from volmap.io.opening import shown_name
+from volmap.io.vtk_legacy import read_legacy
 from volmap.io.vtk_xml import coordinates, write_lines
-from volmap.io.vtk_xml_reading import read_piece
+from volmap.io.vtk_xml_reading import VtkPiece, read_piece
 from volmap.types.errors import InputError
 from volmap.types.findings import Finding, Level
 from volmap.types.polylines import Polylines
@@ -30,8 +31,8 @@ def read_polylines(path: PathLike) -> tuple[Polylines, tuple[Finding, ...]]:
     InputError
         Damaged, another header, a line of one point, rows of a line that do not follow each other.
     """
-    if os.fspath(path).lower().endswith(".vtp"):
-        return _from_vtp(path)
+    if os.fspath(path).lower().endswith((".vtp", ".vtk")):
+        return _from_polygons(path)
     return _from_csv(path), ()
 
 
@@ -46,15 +47,22 @@ def write_polylines(path: PathLike, lines: Polylines, *, overwrite: bool = False
 
 
 def holds_lines(path: PathLike) -> bool:
-    """Whether a .vtp holds lines and no triangles.
+    """Whether a .vtp or .vtk holds lines and no polygons.
 
     Raises
     ------
     InputError
         Damaged.
     """
-    counts = read_piece(path, "PolyData").counts
-    return bool(counts.get("NumberOfLines", 0)) and not counts.get("NumberOfPolys", 0)
+    kind, piece = _piece(path)
+    counts = piece.counts
+    return kind == "PolyData" and bool(counts.get("NumberOfLines", 0)) and not counts.get("NumberOfPolys", 0)
+
+
+def _piece(path: PathLike) -> tuple[str, VtkPiece]:
+    if os.fspath(path).lower().endswith(".vtk"):
+        return read_legacy(path)
+    return "PolyData", read_piece(path, "PolyData")
 
 
 def _from_csv(path: PathLike) -> Polylines:
@@ -85,9 +93,9 @@ def _from_csv(path: PathLike) -> Polylines:
     return _made(own, points, np.append(starts, len(names)), where)
 
 
-def _from_vtp(path: PathLike) -> tuple[Polylines, tuple[Finding, ...]]:
+def _from_polygons(path: PathLike) -> tuple[Polylines, tuple[Finding, ...]]:
     where = shown_name(path)
-    piece = read_piece(path, "PolyData")
+    _, piece = _piece(path)
     points = coordinates(piece, where)
     arrays = piece.sections.get("Lines", {})
     flat, ends = (arrays.get(name, np.empty(0, np.int64)) for name in ("connectivity", "offsets"))

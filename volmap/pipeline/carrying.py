@@ -161,6 +161,7 @@ def _endings(thing: Path) -> tuple[str, ...]:
 def _loaded(path: Path, kind: VolumeKind, reading: Reading, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
     if path.suffix.lower() in ENDINGS:
         return read_pointwise(path, rules)
+    rules.require_known((), path.name)
     volume, findings = read_volume_with_findings(path, reading, kind=kind)
     if kind != "either":
         return volume, findings

@@ -11,14 +11,21 @@ from volmap.io.csv_columns import read_header
 from volmap.io.json_documents import read_json
 from volmap.io.landmarks import OPTIONAL_COLUMNS, POINT_COLUMNS, read_landmarks, write_landmarks
 from volmap.io.measurements import quantity_columns, read_measurements, write_measurements
-from volmap.io.mesh_fields import SURFACE_OUT, read_mesh_fields, require_fitting, write_mesh_fields
+from volmap.io.mesh_fields import (
+    SURFACE_OUT,
+    read_mesh_fields,
+    require_fitting,
+    rules_as_before,
+    write_mesh_fields,
+)
 from volmap.io.meshes import MESH_ENDINGS
 from volmap.io.opening import shown_name
 from volmap.io.polylines import LINE_COLUMNS, holds_lines, read_polylines, write_polylines
 from volmap.pipeline.places import require_name
-from volmap.types import Finding, Landmarks, Level, Measurements, MeshFields, Polylines, Rule, Rules
+from volmap.types import Finding, Landmarks, Measurements, MeshFields, Polylines, Rule, Rules
 
-_OUT = {".csv": (".csv", ".vtp"), ".vtu": (".vtu",), ".vtp": (".csv", *SURFACE_OUT)}
+_OUT = {".csv": (".csv", ".vtp"), ".vtu": (".vtu",), ".vtp": (".csv", *SURFACE_OUT),
+        ".vtk": (".csv", ".vtu", *SURFACE_OUT)}  # fmt: skip
 ENDINGS = tuple(dict.fromkeys((".csv", *MESH_ENDINGS)))
 
 
@@ -43,10 +50,10 @@ def read_pointwise(path: Path, rules: Rules) -> tuple[Any, tuple[Finding, ...]]:
         A file that cannot be read, or quantities nobody says a rule for.
     """
     if path.suffix.lower() != ".csv":
-        if path.suffix.lower() == ".vtp" and holds_lines(path):
+        if path.suffix.lower() in (".vtp", ".vtk") and holds_lines(path):
             rules.require_known((), shown_name(path))
             return read_polylines(path)
-        return read_mesh_fields(path, rules)
+        return read_mesh_fields(path, rules, earlier=_rules_beside(path))
     header = read_header(path)
     if header[0] == LINE_COLUMNS[0]:
         rules.require_known((), shown_name(path))
@@ -102,10 +109,7 @@ def _with_earlier(rules: Rules, path: Path) -> tuple[Rules, tuple[Finding, ...]]
     taken = {g.name: earlier[g.name] for g in groups if g.name in earlier and not rules.of(g.name, g.rank)}
     if not taken:
         return rules, ()
-    said = ", ".join(f"{name}: {rule.value}" for name, rule in taken.items())
-    sentence = f"rules were taken from the document beside it, which says how it was carried before ({said})"
-    finding = Finding(Level.NOTE, "rules-as-before", shown_name(path), sentence)
-    return replace(rules, of_each={**taken, **rules.of_each}), (finding,)
+    return replace(rules, of_each={**taken, **rules.of_each}), (rules_as_before(taken, shown_name(path)),)
 
 
 def _rules_beside(path: Path) -> Mapping[str, Rule]:
