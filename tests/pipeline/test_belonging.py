@@ -183,9 +183,10 @@ def test_labels_on_a_shared_grid_are_looked_up_like_points():
 
 def test_a_picture_with_whole_numbers_is_known_either_way():
     whole = ImageVolume(FINE, A.labels.astype(np.float32))
-    assert digests_of(whole) == digests_of(A) == {A.sha256, whole.sha256}
+    assert set(digests_of(whole)) == set(digests_of(A)) == {A.sha256, whole.sha256}
+    assert next(digests_of(A)) == A.sha256
     holes = np.full(FINE.shape, np.nan, np.float32)
-    assert digests_of(ImageVolume(FINE, holes)) == {ImageVolume(FINE, holes).sha256}
+    assert list(digests_of(ImageVolume(FINE, holes))) == [ImageVolume(FINE, holes).sha256]
 
 
 @pytest.fixture(scope="module")

@@ -6,6 +6,7 @@ speaks against it is refused, and a thing that says nothing has to be vouched fo
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any, Literal
 
@@ -92,12 +93,12 @@ def require_belonging(
 def _of_volume(
     thing: Any, grid: Grid, start: KnownScan, end: KnownScan, name: str, belongs_to: Side | None
 ) -> tuple[Finding, ...]:
-    found = digests_of(thing)
-    if found & start.digests:
-        return ()
-    if found & end.digests:
-        what = f"is a volume of {end.name} (its digest says so), but would be carried from {start.name}"
-        raise _wrong_way(what, name, start)
+    for found in digests_of(thing):
+        if found in start.digests:
+            return ()
+        if found in end.digests:
+            what = f"is a volume of {end.name} (its digest says so), but would be carried from {start.name}"
+            raise _wrong_way(what, name, start)
     here, there = (s.grid is not None and s.grid.same_place(grid) for s in (start, end))
     if here and not there:
         sentence = f"is not known by its digest, and was taken for a volume of {start.name}: same voxel grid"
@@ -128,18 +129,18 @@ def _of_volume(
     )
 
 
-def digests_of(thing: Any) -> frozenset[str]:
-    """Digests of a volume as labels and as an image: a file of whole numbers may be read as either."""
-    known = {str(thing.sha256)} if hasattr(thing, "sha256") else set()
+def digests_of(thing: Any) -> Iterator[str]:
+    """Digests of a volume, its own first: a file of whole numbers may be read as labels or as an image."""
+    if hasattr(thing, "sha256"):
+        yield str(thing.sha256)
     if isinstance(thing, LabelVolume):
-        known.add(digest(thing.labels.astype("<f4"), thing.grid.affine))
+        yield digest(thing.labels.astype("<f4"), thing.grid.affine)
     if isinstance(thing, ImageVolume):
         values = np.asarray(thing.values)
         with np.errstate(invalid="ignore"):
             whole = values.astype("<u2")
         if np.array_equal(whole, values):
-            known.add(digest(whole, thing.grid.affine))
-    return frozenset(known)
+            yield digest(whole, thing.grid.affine)
 
 
 def _some_labelled(thing: Any) -> NDArray[np.float64]:
