@@ -1,10 +1,11 @@
 """Measures for statistics: volumes of regions and their change, volume ratio, stretches, reliability."""
 
+from volmap.measure.inner_residual import mending_divergence
 from volmap.measure.regions import Region, drawn_regions, label_regions
 from volmap.measure.reliability import REASONS, Reliability, reliability
 from volmap.measure.residual import Residual, Ways, boundary_residual
 from volmap.measure.single import point_table, tet_table
-from volmap.measure.summaries import ChangeUncertainty, change_mm3, long_form, region_table
+from volmap.measure.summaries import ChangeUncertainty, change_mm3, long_form, mended_mm3, region_table
 from volmap.measure.uncertainty import VolumeUncertainty, volume_uncertainty
 
 __all__ = [
@@ -20,6 +21,8 @@ __all__ = [
     "drawn_regions",
     "label_regions",
     "long_form",
+    "mended_mm3",
+    "mending_divergence",
     "point_table",
     "region_table",
     "reliability",

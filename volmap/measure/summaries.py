@@ -23,10 +23,9 @@ BY_RESIDUAL = (
     "boundary residual: how far the map's surface of the label lies from the scan's own surface, in both "
     "scans; not in it: errors of the segmentations themselves, and what voxels cannot show"
 )
-BY_ORDERS = (
-    "two orders: the region's change by the solve on one mesh and by that on the other, each on its own, as "
-    "their difference; not in it: what neither scan shows, and errors of the segmentations"
-)
+BY_BOUNDARY = "boundary residual: what the smoothest displacement that mends the labels' surfaces does to it"
+BY_ORDERS = "two orders: its change by the solve on one mesh less that on the other, each on its own"
+NOT_IN_IT = "not in it: what neither scan shows inside, and errors of the segmentations"
 
 
 @dataclass(frozen=True)
@@ -37,12 +36,14 @@ class ChangeUncertainty:
     ----------
     source, target : VolumeUncertainty, optional
         Of the label's volume in each world, from its boundary residual.
-    orders_mm3 : float
-        Change by one solve less change by the other, for a region that is no label; NaN when not known.
+    boundary_mm3, orders_mm3 : float
+        For a region that is no label, NaN when not known: change of its change when the labels' surfaces are
+        mended (see `inner_residual`), and its change by one solve less that by the other.
     """
 
     source: VolumeUncertainty | None = None
     target: VolumeUncertainty | None = None
+    boundary_mm3: float = float("nan")
     orders_mm3: float = float("nan")
 
 
@@ -143,6 +144,22 @@ def _both_volumes(volume_map: VolumeMap, region: Region) -> tuple[float, float]:
     return float(here.sum()), float((here * volume_map.volume_ratio[region.tets]).sum())
 
 
+def mended_mm3(volume_map: VolumeMap, region: Region, source: Floats, target: Floats) -> float:
+    """By how much the change of a drawn region changes when the labels' surfaces are mended.
+
+    Parameters
+    ----------
+    volume_map : VolumeMap
+    region : Region
+        Stays as drawn: what is mended is where the map sends it.
+    source, target : (m,) float64
+        `inner_residual.mending_divergence` in both worlds.
+    """
+    gain = (target - source)[region.tets]
+    there = region.source_mm3 * volume_map.volume_ratio[region.tets]
+    return float((gain * (there if "source" in region.drawn_mm3 else region.source_mm3)).sum())
+
+
 def change_mm3(volume_map: VolumeMap, region: Region) -> float:
     """Volume in TARGET less volume in SOURCE."""
     here, there = _both_volumes(volume_map, region)
@@ -151,7 +168,9 @@ def change_mm3(volume_map: VolumeMap, region: Region) -> float:
 
 def _change(volume_map: VolumeMap, region: Region, uncertainty: ChangeUncertainty) -> list[_Cell]:
     here, there = _both_volumes(volume_map, region)
-    standard, percent, bound, source = _uncertainty(here, there, uncertainty)
+    standard, percent, bound, source = _uncertainty(
+        here, there, uncertainty, drawn_in_source="source" in region.drawn_mm3
+    )
     own = [np.nan if u is None else u.difference_mm3 for u in (uncertainty.source, uncertainty.target)]
     apart = "What the scan's own surface of the label holds more than the map's solid, in {}; to first order."
     return [
@@ -168,21 +187,27 @@ def _change(volume_map: VolumeMap, region: Region, uncertainty: ChangeUncertaint
     ]
 
 
-def _uncertainty(here: float, there: float, known: ChangeUncertainty) -> tuple[float, float, float, str]:
+def _uncertainty(
+    here: float, there: float, known: ChangeUncertainty, *, drawn_in_source: bool
+) -> tuple[float, float, float, str]:
     """Standard uncertainty of the change in mm3 and in %, its bound, and where they come from.
 
     Errors of the two scans are taken as independent: their squares add up; bounds add up as they are.  The
-    change in % is 100 (there / here - 1), and its error follows to first order.
+    change in % is 100 (there / here - 1), and its error follows to first order.  A region that is no label is
+    as large as it was drawn, where it was drawn; the error is that of its other volume.
     """
     if known.source is not None and known.target is not None:
         a, b = known.source.standard_mm3, known.target.standard_mm3
         relative = _percent(float(np.hypot(b, a * there / here)) if here else np.nan, here)
         bound = known.source.bound_mm3 + known.target.bound_mm3
         return float(np.hypot(a, b)), relative, bound, BY_RESIDUAL
-    if np.isfinite(known.orders_mm3):
-        apart = abs(known.orders_mm3)
-        return apart, _percent(apart, here), np.nan, BY_ORDERS
-    return np.nan, np.nan, np.nan, "not assessed"
+    parts = {BY_BOUNDARY: known.boundary_mm3, BY_ORDERS: known.orders_mm3}
+    parts = {words: value for words, value in parts.items() if np.isfinite(value)}
+    if not parts:
+        return np.nan, np.nan, np.nan, "not assessed"
+    apart = float(np.linalg.norm(list(parts.values())))
+    relative = _percent(apart if drawn_in_source else apart * there / here, here)
+    return apart, relative, np.nan, "; ".join((*parts, NOT_IN_IT))
 
 
 def _percent(part: float, whole: float) -> float:

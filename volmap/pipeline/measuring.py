@@ -225,7 +225,7 @@ def _regions(
         uncertainties = [_of_label(region, residuals, _voxel_mm(folder)) for region in regions]
     else:
         regions = measuring.drawn_regions(folder.map, drawn, side=side)
-        uncertainties = _of_drawn(folder, drawn, side)
+        uncertainties = _of_drawn(folder, drawn, side, regions=regions, residuals=residuals)
     if not regions:
         raise InputError("holds no region", where=drawn.name if drawn else "", remedy="give a label volume")
     return measuring.region_table(folder.map, regions, reliable=reliable, uncertainties=uncertainties, **told)
@@ -242,17 +242,29 @@ def _of_label(
     return ChangeUncertainty(source=found[0], target=found[1])
 
 
-def _of_drawn(folder: MapFolder, drawn: LabelVolume, side: Side) -> list[ChangeUncertainty]:
-    """Each region's change by one solve less that by the other."""
+def _of_drawn(
+    folder: MapFolder,
+    drawn: LabelVolume,
+    side: Side,
+    *,
+    regions: Sequence[Region],
+    residuals: dict[str, dict[int, Residual]],
+) -> list[ChangeUncertainty]:
+    """What mended boundaries would do to each region's change, and how far the two solves differ in it."""
+    nothing = [float("nan")] * len(regions)
+    orders, boundary = nothing, nothing
     both = _on_their_own(folder)
-    if both is None:
-        return [ChangeUncertainty()] * len(drawn.present)
-    here, there = both[0], both[1].reversed()
-    first, second = (
-        [measuring.change_mm3(m, region) for region in measuring.drawn_regions(m, drawn, side=side)]
-        for m in (here, there)
-    )
-    return [ChangeUncertainty(orders_mm3=a - b) for a, b in zip(first, second, strict=True)]
+    if both is not None:
+        first, second = (
+            [measuring.change_mm3(m, region) for region in measuring.drawn_regions(m, drawn, side=side)]
+            for m in (both[0], both[1].reversed())
+        )
+        orders = [a - b for a, b in zip(first, second, strict=True)]
+    bodies = {"source": folder.map.mesh, "target": folder.map.image_mesh}
+    here, there = (measuring.mending_divergence(bodies[s], residuals[s]) for s in ("source", "target"))
+    if here is not None and there is not None:
+        boundary = [measuring.mended_mm3(folder.map, region, here, there) for region in regions]
+    return [ChangeUncertainty(boundary_mm3=a, orders_mm3=b) for a, b in zip(boundary, orders, strict=True)]
 
 
 def _about(folder: MapFolder, reliable: Reliability, drawn: LabelVolume | None, side: Side) -> dict[str, Any]:
