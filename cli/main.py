@@ -15,7 +15,7 @@ from .console import Console
 from .usage import UsageError
 
 VERBS = (
-    *("screen", "mesh", "map", "certify", "carry", "export", "measure"),
+    *("screen", "mesh", "map", "certify", "carry", "loop", "export", "measure"),
     *("report", "study", "phantom", "demo", "guide"),
 )
 DONE, REFUSED, USAGE, UNREADABLE, INTERRUPTED = 0, 1, 2, 3, 130

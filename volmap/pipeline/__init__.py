@@ -12,6 +12,8 @@ from volmap.pipeline.files import (
     report_folder,
     screen_files,
 )
+from volmap.pipeline.loops import MEANING as LOOP_MEANING
+from volmap.pipeline.loops import Loop, loop_folders
 from volmap.pipeline.machine import use_threads
 from volmap.pipeline.measuring import Measured, measure_files, measure_folder
 from volmap.pipeline.opinion import SecondOpinion, certify_folder, evidence_of
@@ -20,7 +22,9 @@ from volmap.pipeline.reporting import affine_baseline, report_of, write_map
 from volmap.pipeline.shapes import export_solid, export_surfaces
 
 __all__ = [
+    "LOOP_MEANING",
     "Exported",
+    "Loop",
     "MapJob",
     "MapSettings",
     "Measured",
@@ -35,6 +39,7 @@ __all__ = [
     "export_segmentation",
     "export_solid",
     "export_surfaces",
+    "loop_folders",
     "map_files",
     "map_pair",
     "measure_files",
