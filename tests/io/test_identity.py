@@ -101,6 +101,21 @@ def test_empty_fields_are_not_listed(tmp_path: Path) -> None:
         assert "private" not in told.fields
 
 
+def test_a_damaged_field_counts_as_held(tmp_path: Path) -> None:
+    """Neither a type that does not exist nor an empty one of that type may hide a field, or stop the list."""
+    ds = slices(PLACES["axial"], np.zeros((1, 4, 5), np.int16))[0]
+    ds.PatientAddress, ds.OtherPatientNames = MARK, ""
+    pydicom.dcmwrite(tmp_path / "x", ds, enforce_file_format=True)
+    data = (tmp_path / "x").read_bytes()
+    for tag in (b"\x10\x00\x40\x10LO", b"\x10\x00\x01\x10PN"):
+        assert data.count(tag) == 1
+        data = data.replace(tag, tag[:4] + b"S\x01")
+    (tmp_path / "x").write_bytes(data)
+    assert {"PatientAddress", "OtherPatientNames", "PatientName"} <= set(
+        identifying_fields(tmp_path / "x").fields["person"]
+    )
+
+
 def test_pydicom_walks_to_the_same_fields() -> None:
     """A slow twin: pydicom's walk over decoded elements of its packaged CT, types of PS3.5 6.2 alone."""
     path = Path(str(get_testdata_file("CT_small.dcm", download=False)))

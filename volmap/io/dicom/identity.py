@@ -60,33 +60,32 @@ def _add_pixel_fields(ds: Any, found: dict[str, set[str]], where: str) -> None:
 
 def _walked(ds: Any) -> Iterator[tuple[str, str]]:
     """(kind, name) of every identifying field that is not empty, those inside sequences too."""
-    from pydicom.datadict import dictionary_VR, keyword_for_tag
+    from pydicom.datadict import keyword_for_tag
 
     for tag in list(ds.keys()):
-        raw = ds.get_item(tag)
+        as_stored, type_of_value = _stored(ds, tag)
         if tag.is_private:
-            if raw.value:
+            if _says_something(as_stored):
                 yield "private", f"({tag.group:04X},xxxx)"
             continue
-        keyword = keyword_for_tag(tag) or f"({tag.group:04X},{tag.element:04X})"
-        try:
-            kind_of_value = raw.VR or dictionary_VR(tag)
-        except KeyError:
-            kind_of_value = "UN"
-        if kind_of_value == "SQ" or _is_sequence(tag):
+        if type_of_value == "SQ":
             yield from _inside(ds, tag)
-        kind = kind_by_field().get(keyword) or kind_by_type().get(kind_of_value)
-        if kind is not None and _says_something(raw.value) and not _standard(kind, keyword, raw.value):
+        keyword = keyword_for_tag(tag) or f"({tag.group:04X},{tag.element:04X})"
+        kind = kind_by_field().get(keyword) or kind_by_type().get(type_of_value)
+        if kind is not None and _says_something(as_stored) and not _standard(kind, keyword, as_stored):
             yield kind, keyword
 
 
-def _is_sequence(tag: Any) -> bool:
-    from pydicom.datadict import dictionary_VR
+def _stored(ds: Any, tag: Any) -> tuple[Any, str]:
+    """A field's value, not decoded, and its type by the dictionary, else by the file; "?" if damaged."""
+    from pydicom.datadict import dictionary_has_tag, dictionary_VR
 
     try:
-        return bool(dictionary_VR(tag) == "SQ")
-    except KeyError:
-        return False
+        raw = ds.get_item(tag)
+        as_stored, told = raw.value, str(raw.VR or "UN")
+    except Exception:  # pydicom decodes some after all, and meets damaged ones in any way at all
+        as_stored, told = b"?", "UN"
+    return as_stored, dictionary_VR(tag) if dictionary_has_tag(tag) else told
 
 
 def _inside(ds: Any, tag: Any) -> Iterator[tuple[str, str]]:
