@@ -1,4 +1,4 @@
-"""Carry points or measurements (.csv), labels or an image (NIfTI, NRRD, DICOM) or a mesh (.vtu) by a map.
+"""Carry points, measurements, lines (.csv), labels, images (NIfTI, NRRD, DICOM), meshes or surfaces by a map.
 
 Measurements stand beside name,x_mm,y_mm,z_mm in columns <quantity>_<unit>; vectors as <quantity>_x_<unit>,
 _y_ and _z_, symmetric tensors as _xx_ to _zz_.  What becomes of their numbers is for you to say (--rule).

@@ -111,3 +111,41 @@ def test_missing_values_stay_missing(affine):
         carried.thing.quantities[0].values, [np.nan, 2 / np.linalg.det(AFFINE)], rtol=1e-13
     )
     assert not carried.findings
+
+
+def test_a_twist_through_finer_and_finer_maps(known):
+    """Closed forms (test_rules): J = 1, stretches (sqrt(4 + a^2 r^2) +- a r) / 2, a vertical fibre tilts.
+
+    Rate: the gradient of linear interpolation is first-order, so halving edges halves the error.
+    """
+    rate = 0.7
+    points = np.random.default_rng(4).uniform(-0.69, 0.69, (400, 3))
+    n = len(points)
+    thing = Measurements(
+        tuple(map(str, range(n))),
+        points,
+        (
+            Quantity("fibre", "1", np.tile([0.0, 0, 1], (n, 1)), Rule.TURN),
+            Quantity("dose", "Gy", np.ones(n), Rule.DENSITY),
+            Quantity("metric", "1", np.tile(np.eye(3), (n, 1, 1)), Rule.LINE),
+        ),
+    )
+    slope = rate * np.hypot(points[:, 0], points[:, 1])
+    root = np.sqrt(4 + slope**2)
+    stretches = np.stack([((root - slope) / 2) ** 2, np.ones(n), ((root + slope) / 2) ** 2], axis=1)
+    errors = []
+    for cells in (6, 12, 24):
+        volume_map = known.mapped(known.box(cells, -0.7, 0.7), lambda x: known.twist(x, rate))
+        fibre, dose, metric = (q.values for q in carry(thing, volume_map).thing.quantities)
+        errors.append(
+            [
+                np.sqrt(np.mean((fibre[:, 2] - 2 / root) ** 2)),
+                np.sqrt(np.mean((dose - 1) ** 2)),
+                np.sqrt(np.mean((np.linalg.eigvalsh(metric) - stretches) ** 2)),
+            ]
+        )
+    coarse, middle, fine = np.array(errors)
+    assert (middle < coarse / 1.7).all()
+    assert (fine < middle / 1.7).all()
+    assert fine.max() < 0.02
+    np.testing.assert_allclose(np.linalg.norm(fibre, axis=1), 1, atol=1e-14)

@@ -4,6 +4,7 @@ import csv
 
 import numpy as np
 import pytest
+from pyarrow import parquet
 
 from volmap.io.csv_columns import read_columns, write_columns
 from volmap.io.measurements import quantity_columns, read_measurements, write_measurements
@@ -134,6 +135,31 @@ def test_written_tables_read_back_and_python_reads_them_too(tmp_path):
     assert rows[2]["t1_ms"] == ""
     with pytest.raises(InputError, match="exists already"):
         write_measurements(tmp_path / "t.csv", measured)
+
+
+def test_parquet_for_statistics(tmp_path):
+    """Read by pyarrow's own reader: numbers to the bit, missing values as nulls, units and rules kept."""
+    measured = Measurements(
+        ("a", "b"),
+        np.array([[1 / 3, 2, 3], [4, 5, 6.0]]),
+        (
+            Quantity("t1", "ms", np.array([np.nan, 900.5]), Rule.VALUE),
+            Quantity("flow", "mm_per_s", np.ones((2, 3)), Rule.FLUX),
+        ),
+        {"site": ("left", "ä")},
+    )
+    write_measurements(tmp_path / "t.parquet", measured)
+    table = parquet.read_table(tmp_path / "t.parquet")
+    assert table.column_names == [
+        "name", "x_mm", "y_mm", "z_mm", "t1_ms", *(f"flow_{c}_mm_per_s" for c in "xyz"), "site",
+    ]  # fmt: skip
+    assert table["t1_ms"].to_pylist() == [None, 900.5]
+    assert table["x_mm"].to_pylist() == [1 / 3, 4]
+    assert table["site"].to_pylist() == ["left", "ä"]
+    assert table.schema.field("flow_y_mm_per_s").metadata == {b"unit": b"mm_per_s", b"rule": b"flux"}
+    assert b"research use only" in table.schema.metadata[b"notice"]
+    write_measurements(tmp_path / "again.parquet", measured)
+    assert (tmp_path / "again.parquet").read_bytes() == (tmp_path / "t.parquet").read_bytes()
 
 
 def test_windows_lines_marks_blanks_and_empty_lines_are_read(tmp_path):

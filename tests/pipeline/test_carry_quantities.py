@@ -5,6 +5,7 @@ import json
 
 import numpy as np
 import pytest
+from pyarrow import parquet
 from volmap_cli.main import main
 
 from volmap.io.polylines import read_polylines, write_polylines
@@ -51,6 +52,9 @@ def test_numbers_follow_the_rules_that_were_said(table, small_pair, capsys):
         expected = [*weights[tet] @ volume_map.images[tets[tet]], row[3], row[4] / J, *F @ row[5:] / J]
         np.testing.assert_allclose(carried, expected, atol=1e-9)
     assert there.read_text(encoding="utf-8").startswith(HEADER)
+    assert carry(here, here.with_name("there.parquet"), small_pair.folder, *RULES) == 0
+    table = parquet.read_table(here.with_name("there.parquet"))
+    assert table["dose_Gy"].to_pylist() == found[:, 4].tolist()
     assert there.read_text(encoding="utf-8").count(",left\n") == 20
     capsys.readouterr()
 

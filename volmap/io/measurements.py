@@ -16,11 +16,12 @@ from __future__ import annotations
 import os
 import re
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.io.csv_columns import read_columns, read_header, write_columns
+from volmap.io.csv_columns import read_columns, read_header, write_columns, write_parquet_columns
 from volmap.io.opening import shown_name
 from volmap.types.errors import InputError
 from volmap.types.measurements import Measurements
@@ -93,13 +94,28 @@ def read_measurements(path: str | os.PathLike[str], rules: Rules) -> Measurement
 def write_measurements(
     path: str | os.PathLike[str], measured: Measurements, *, overwrite: bool = False
 ) -> None:
-    """Write places and quantities; numbers in the shortest form that reads back to the same number."""
-    columns: dict[str, object] = {"name": measured.names}
+    """Write places and quantities as CSV, or as Parquet for statistics when the name ends in .parquet.
+
+    In CSV numbers have the shortest form that reads back to the same number.  Parquet keeps unit and rule of
+    each column and the caution in its metadata.
+
+    Raises
+    ------
+    InputError
+        The place is taken or cannot be written.
+    """
+    columns: dict[str, Any] = {"name": measured.names}
     columns |= {c: measured.points[:, i] for i, c in enumerate(PLACE[1:])}
+    told = {c: {"unit": "mm", "frame": "RAS+"} for c in PLACE[1:]}
     for quantity in measured.quantities:
         names = headings(quantity.name, quantity.unit, quantity.rank)
         columns |= dict(zip(names, _components(quantity.values), strict=True))
-    write_columns(path, columns | dict(measured.texts), overwrite=overwrite)
+        told |= {key: {"unit": quantity.unit, "rule": quantity.rule.value} for key in names}
+    columns |= dict(measured.texts)
+    if os.fspath(path).lower().endswith(".parquet"):
+        write_parquet_columns(path, columns, told, overwrite=overwrite)
+    else:
+        write_columns(path, columns, overwrite=overwrite)
 
 
 def headings(name: str, unit: str, rank: int) -> tuple[str, ...]:

@@ -24,7 +24,7 @@ from volmap.io.polylines import LINE_COLUMNS, holds_lines, read_polylines, write
 from volmap.pipeline.places import require_name
 from volmap.types import Finding, Landmarks, Measurements, MeshFields, Polylines, Rule, Rules
 
-_OUT = {".csv": (".csv", ".vtp"), ".vtu": (".vtu",), ".vtp": (".csv", *SURFACE_OUT),
+_OUT = {".csv": (".csv", ".vtp", ".parquet"), ".vtu": (".vtu",), ".vtp": (".csv", *SURFACE_OUT),
         ".vtk": (".csv", ".vtu", *SURFACE_OUT)}  # fmt: skip
 ENDINGS = tuple(dict.fromkeys((".csv", *MESH_ENDINGS)))
 
@@ -76,7 +76,9 @@ def require_holding(out: Path, thing: Any) -> None:
         require_fitting(out, thing)
     elif isinstance(thing, Polylines):
         require_name(out, (".csv", ".vtp"))
-    elif isinstance(thing, Landmarks | Measurements):
+    elif isinstance(thing, Measurements):
+        require_name(out, (".csv", ".parquet"))
+    elif isinstance(thing, Landmarks):
         require_name(out, (".csv",))
 
 
