@@ -4,10 +4,14 @@ Truth: the label volume itself, voxel for voxel in world space, as an independen
 reading of the bits by hand (PS3.5, 8.2) place them; PS3.3's tables for what must be in the object.
 """
 
+from tempfile import TemporaryDirectory
+
 import numpy as np
 import pydicom
 import pytest
 from dicom_standard import BY_HAND, faults, faults_by_hand
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 from pydicom import config
 from scipy.spatial.transform import Rotation
 
@@ -312,3 +316,27 @@ def test_others_descriptions_do_not_renumber(tmp_path):
     ds.ManufacturerModelName = "somebody's"
     ds.save_as(path)
     assert read_segmentation(path)[0].present == (1, 2, 3)
+
+
+@settings(max_examples=40, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(st.data())
+def test_any_grid_comes_back_with_its_digest(data):
+    # Law, as above, for grids of any turn, hand, voxel and shape, one plane thick among them.
+    shape = tuple(data.draw(st.integers(1, 6)) for _ in range(3))
+    turn = Rotation.random(random_state=data.draw(st.integers(0, 2**32 - 1))).as_matrix()
+    spacing = np.array([data.draw(st.floats(0.05, 20)) for _ in range(3)])
+    matrix = np.eye(4)
+    matrix[:3, :3] = turn * spacing * [1, 1, data.draw(st.sampled_from([-1, 1]))]
+    matrix[:3, 3] = [data.draw(st.floats(-900, 900)) for _ in range(3)]
+    values = data.draw(st.lists(st.integers(1, 65535), min_size=1, max_size=4, unique=True))
+    labels = np.random.default_rng(1).choice([0, *values], size=shape).astype(np.uint16)
+    labels.flat[0] = values[0]
+    given_labels = LabelVolume(Grid(shape, matrix.astype(np.float32).astype(float)), labels)
+    coding = data.draw(st.sampled_from(["binary", "labelmap"]))
+    with TemporaryDirectory() as place:
+        write_segmentation(f"{place}/x.dcm", given_labels, scan=SCAN, coding=coding)
+        found, _ = read_segmentation(f"{place}/x.dcm")
+    assert np.array_equal(found.labels, given_labels.labels)
+    assert found.grid.same_place(given_labels.grid, 1e-8)
+    if shape[2] > 1 or given_labels.grid.handedness == "right":  # one plane alone has no hand
+        assert found.sha256 == given_labels.sha256
