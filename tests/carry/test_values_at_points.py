@@ -1,5 +1,6 @@
 """The gradient of the map at moved points, and values carried there, through one map and through a chain."""
 
+import numba
 import numpy as np
 import pytest
 
@@ -88,3 +89,26 @@ def test_mass_of_a_body_is_kept(sheared):
         move_points(sheared.reversed(), sheared.images[mesh.tets].mean(1)),
     )
     np.testing.assert_allclose(back, density, rtol=1e-12)
+
+
+@pytest.mark.parametrize("rule", ["density", "turn", "flux"])
+def test_threads_change_no_bit(sheared, rule):
+    """Law: the same bytes whatever the number of threads, and however many are asked for at once."""
+    n = 40_000
+    points = np.random.default_rng(6).uniform(-0.75, 0.75, (n, 3))
+    values = np.random.default_rng(7).normal(size=(n, *(() if rule == "density" else (3,))))
+    found = []
+    threads = numba.get_num_threads()
+    try:
+        for count in (1, numba.config.NUMBA_NUM_THREADS):
+            numba.set_num_threads(count)
+            moved = move_points(sheared, points)
+            found.append((moved.points, carried_values(rule, values, sheared, moved)))
+    finally:
+        numba.set_num_threads(threads)
+    some = move_points(sheared, points[20_000:20_777])
+    found.append((some.points, carried_values(rule, values[20_000:20_777], sheared, some)))
+    for one, more in zip(found[0], found[1], strict=True):
+        assert one.tobytes() == more.tobytes()
+    for one, few in zip(found[0], found[2], strict=True):
+        assert one[20_000:20_777].tobytes() == few.tobytes()

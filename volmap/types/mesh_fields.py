@@ -41,6 +41,11 @@ class MeshFields(Frozen):
     kept_at_cells: Mapping[str, NDArray[Any]] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
+        for name in ("kept_at_points", "kept_at_cells"):
+            arrays = {k: np.array(v) for k, v in getattr(self, name).items()}
+            for array in arrays.values():
+                array.setflags(write=False)
+            object.__setattr__(self, name, arrays)
         for quantities, kept, n in (
             (self.at_points, self.kept_at_points, len(self.body.points)),
             (self.at_cells, self.kept_at_cells, len(self.cells)),
