@@ -17,9 +17,10 @@ from dicom_standard import faults
 from volmap_cli.main import main
 
 from volmap import pipeline
+from volmap.io.volumes import read_labels
 from volmap.mapfolder import read_map_folder
 from volmap.pipeline import exporting
-from volmap.types import Grid, InputError, Verdict
+from volmap.types import Code, Grid, InputError, LabelCodes, Verdict
 
 LPS = np.array([-1.0, -1.0, 1.0])
 INNER_MM = np.array([[-8.0, 2.0, 1.0], [6.0, 2.0, 3.0], [0.0, -6.0, -8.0], [2.0, 8.0, 6.0]])
@@ -199,6 +200,16 @@ def test_a_map_whose_certificate_fails_says_so_when_it_leaves(folder, tmp_path, 
     monkeypatch.setattr(exporting, "read_map_folder", lambda _: failed)
     (finding,) = exporting.export_segmentation(tmp_path, tmp_path / "x.dcm").findings
     assert "certificate fails (inverted_tets)" in finding.sentence
+
+
+def test_codes_of_source_go_with_its_carried_labels(folder, tmp_path, monkeypatch):
+    liver = LabelCodes(Code("91723000", "SCT", "Anatomical Structure"), Code("10200004", "SCT", "Liver"))
+    coded = replace(folder, source=replace(folder.source, codes={2: liver}))
+    monkeypatch.setattr(exporting, "read_map_folder", lambda _: coded)
+    exporting.export_segmentation(tmp_path, tmp_path / "x.dcm")
+    found = read_labels(tmp_path / "x.dcm")
+    assert dict(found.codes) == {2: liver}
+    assert found.sha256 == folder.carried.sha256
 
 
 def test_a_folder_that_is_none_cannot_be_exported(tmp_path):
