@@ -237,6 +237,57 @@ def test_a_deflated_bomb_is_refused_before_it_is_unpacked(tmp_path: Path) -> Non
         read_image(tmp_path / "bomb.dcm")
 
 
+@pytest.mark.parametrize(
+    ("name", "marker", "at", "n_bytes"),
+    [("jpeg_ls_lossless", b"\xff\xf7", 5, 2), ("jp2klossless", b"\xff\x4f\xff\x51", 8, 4)],
+)
+def test_a_packed_frame_that_says_it_is_huge_is_not_unpacked(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, name: str, marker: bytes, at: int, n_bytes: int
+) -> None:
+    """The decoders would take 1.6 GB and 12 s for these (measured); the frame's own header is read first."""
+    asked = []
+    told_by_pydicom = pydicom.pixels.decoders.base.Decoder.iter_array
+    monkeypatch.setattr(
+        pydicom.pixels.decoders.base.Decoder,
+        "iter_array",
+        lambda *a, **k: asked.append(1) or told_by_pydicom(*a, **k),
+    )
+    read_image(PACKAGED / f"MR_small_{name}.dcm")
+    assert asked == [1]
+    data = bytearray((PACKAGED / f"MR_small_{name}.dcm").read_bytes())
+    assert data.count(marker) == 1
+    first = data.index(marker) + at
+    told = [data[first + k * n_bytes : first + (k + 1) * n_bytes] for k in range(2)]
+    assert told == [(64).to_bytes(n_bytes, "big")] * 2  # the test changes what it means to change
+    for k in range(2):
+        data[first + k * n_bytes : first + (k + 1) * n_bytes] = (20000).to_bytes(n_bytes, "big")
+    (tmp_path / "x").write_bytes(data)
+    with pytest.raises(InputError, match="cannot be unpacked"):
+        read_image(tmp_path / "x")
+    assert asked == [1]
+
+
+def test_sizes_in_packed_frames_are_read_as_they_are() -> None:
+    """JPEG, JPEG-LS and JPEG 2000 that pydicom ships: each frame is as large as its object says."""
+    from pydicom.encaps import generate_frames
+
+    from volmap.io.dicom.codestreams import packed_size
+
+    seen = set()
+    damaged = "JPEG2000-embedded-sequence-delimiter.dcm"  # other bytes stand in place of its width
+    for file in sorted(PACKAGED.glob("*.dcm")):
+        if file.name == damaged:
+            continue
+        ds = pydicom.dcmread(file, force=True)
+        syntax = getattr(getattr(ds, "file_meta", None), "TransferSyntaxUID", None)
+        if syntax is not None and syntax.is_encapsulated and "RLE" not in syntax.name and "PixelData" in ds:
+            n = int(ds.get("NumberOfFrames", 1))
+            sizes = {packed_size(frame) for frame in generate_frames(ds.PixelData, number_of_frames=n)}
+            assert sizes == {(ds.Rows, ds.Columns)}, file.name
+            seen.add(syntax.name)
+    assert len(seen) >= 5
+
+
 def test_claims_of_an_element_take_no_memory(tmp_path: Path) -> None:
     """A length of 4 GB in a short file reads as cut short (a plain read would ask for all of it)."""
     import resource

@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from volmap.io.dicom.codestreams import packed_size
 from volmap.io.dicom.fields import required, text, value, whole
 from volmap.types.errors import InputError
 
@@ -19,6 +20,7 @@ _MOST_VOXELS = 2**31
 _UNCOMPRESSED = (
     "1.2.840.10008.1.2", "1.2.840.10008.1.2.1", "1.2.840.10008.1.2.1.99", "1.2.840.10008.1.2.2",
 )  # fmt: skip
+_SIZED_BY_THE_OBJECT = ("1.2.840.10008.1.2.5",)  # run lengths
 _WITHOUT_IMAGES = ("SR", "PR", "KO", "REG", "FID", "RTSTRUCT", "RTPLAN", "RTRECORD", "DOC", "ECG", "PLAN")
 
 
@@ -148,6 +150,7 @@ def _decoded(ds: Any, layout: PixelLayout, where: str) -> Iterator[NDArray[Any]]
         )  # fmt: skip
     n = 0
     try:
+        _require_told_size(ds, layout, decoder.is_encapsulated)
         for frame, _ in decoder.iter_array(ds, raw=True, indices=range(layout.n_frames)):
             if frame.shape != layout.shape:
                 raise ValueError("another shape than claimed")
@@ -160,3 +163,14 @@ def _decoded(ds: Any, layout: PixelLayout, where: str) -> Iterator[NDArray[Any]]
             "the pixels cannot be unpacked", where=f"{where}, frame {n + 1}",
             found=f"damaged data for {uid.name}", remedy="copy or export it again",
         ) from fault  # fmt: skip
+
+
+def _require_told_size(ds: Any, layout: PixelLayout, encapsulated: bool) -> None:
+    """Raise for a packed frame that says it is of another size than the object says."""
+    from pydicom.encaps import generate_frames
+
+    if not encapsulated or layout.syntax in _SIZED_BY_THE_OBJECT:
+        return
+    for frame in generate_frames(ds[layout.keyword].value, number_of_frames=layout.n_frames):
+        if packed_size(frame) != layout.shape:
+            raise ValueError("a frame says it is of another size")
