@@ -267,6 +267,7 @@ def test_a_packed_frame_that_says_it_is_huge_is_not_unpacked(
     assert asked == [1]
 
 
+@pytest.mark.filterwarnings("ignore:Expected explicit VR")
 def test_sizes_in_packed_frames_are_read_as_they_are() -> None:
     """JPEG, JPEG-LS and JPEG 2000 that pydicom ships: each frame is as large as its object says."""
     from pydicom.encaps import generate_frames

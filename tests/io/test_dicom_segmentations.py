@@ -129,6 +129,35 @@ def test_names_and_codes_are_kept(tmp_path: Path) -> None:
     assert not [f for f in findings if f.code == "names_from_segments"]
 
 
+@pytest.mark.parametrize(
+    ("name", "number", "label", "kept"),
+    [
+        ("Zeiss^Anna", "4711", "Anna Zeiss, lobe 1", False),
+        ("Zeiss^Anna", "4711", "ZEISS_ANNA", False),
+        ("Zeiss^Anna", "4711", "lobe 4711", False),
+        ("Zeiss^Anna", "4711", "lobe of Zeiss", True),  # one word alone may be anatomy, as Peyer or Lisfranc
+        ("Zeiss^Anna", "1", "part 1", True),  # too short to tell anybody
+        ("Liver", "Liver", "Liver", True),  # what its code means
+        ("", "", "part 1", True),
+    ],
+)
+def test_a_label_that_names_the_patient_is_left_out(
+    tmp_path: Path, name: str, number: str, label: str, kept: bool
+) -> None:
+    """Ours: names that leave must not be the patient's (PS3.15, E.1: Patient's Name, Patient ID)."""
+    labels = some_labels(SHAPE, 1, seed=1)
+    written = segmentation(PLACES["axial"], labels, "BINARY")
+    written.PatientName, written.PatientID = name, number
+    written.SegmentSequence[0].SegmentLabel = label
+    if label == "Liver":
+        written.SegmentSequence[0].SegmentedPropertyTypeCodeSequence[0].CodeMeaning = "Liver"
+    written.save_as(tmp_path / "s.dcm")
+    volume, findings = read_labels_with_findings(tmp_path / "s.dcm")
+    assert volume.names[1] == (label if kept else "Spleen")
+    assert ("names_left_out" in {f.code for f in findings}) == (not kept)
+    assert label not in " ".join(f.line for f in findings)
+
+
 def test_label_map_of_sixteen_bits_and_another_background(tmp_path: Path) -> None:
     """LABELMAP: a pixel is its Segment Number, 8 or 16 bits (C.8.20.2); Pixel Padding Value is outside."""
     labels = some_labels(SHAPE, 3, seed=9)

@@ -285,6 +285,12 @@ def _said_of(volume: LabelVolume, segments: dict[int, Segment], table: Path | No
     if empty:
         sentence = f"segments without a voxel: {_few(empty)}"
         yield Finding(Level.NOTE, "segments_empty", where, sentence)
+    if table is None and any(s.told_person for s in segments.values()):
+        numbers = _few(sorted(n for n, s in segments.items() if s.told_person))
+        sentence = (
+            f"Segment Labels that hold the patient's name or number are left out: of segments {numbers}"
+        )
+        yield Finding(Level.WARN, "names_left_out", where, sentence, "name labels by --names FILE")
     if table is None and any(s.label for s in segments.values()):
         sentence = "labels are named by the file's Segment Labels: free text that goes into what is written"
         yield Finding(
