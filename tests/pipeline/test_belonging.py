@@ -3,7 +3,6 @@
 import json
 from dataclasses import replace
 
-import nibabel
 import numpy as np
 import pytest
 
@@ -189,65 +188,36 @@ def test_a_picture_with_whole_numbers_is_known_either_way():
     assert list(digests_of(ImageVolume(FINE, holes))) == [ImageVolume(FINE, holes).sha256]
 
 
-@pytest.fixture(scope="module")
-def pictured(small_pair, small_job, without_report, tmp_path_factory):
-    """The small pair mapped with an image of its first scan, finer than the labels."""
-    root = tmp_path_factory.mktemp("pictured")
-    for seed, name in enumerate(("known", "other")):
-        values = np.random.default_rng(seed).normal(size=(70, 70, 70)).astype(np.float32)
-        affine = np.diag([0.8, 0.8, 0.8, 1.0])
-        affine[:3, 3] = -28
-        picture = nibabel.Nifti1Image(values, affine)
-        picture.header.set_xyzt_units("mm")
-        nibabel.save(picture, root / f"{name}.nii.gz")
-    job = replace(small_job, both_orders=False)
-    without_report(
-        pipeline.map_files,
-        small_pair.source,
-        small_pair.target,
-        root / "map",
-        job,
-        source_image=root / "known.nii.gz",
-    )
-    return root
-
-
-def test_an_image_named_when_mapping_is_known_later(pictured):
-    settings = json.loads((pictured / "map" / "certificate.json").read_text(encoding="utf-8"))["settings"]
-    digest = read_image(pictured / "known.nii.gz").sha256
-    assert settings["images"] == {"source": {"name": "known.nii.gz", "sha256": digest}}
-    assert pipeline.certify_folder(pictured / "map").disagreements == ()
-    found = pipeline.carry_file(
-        pictured / "known.nii.gz", pictured / "map", pictured / "there.nii.gz", kind="image"
-    )
+def test_an_image_named_when_mapping_is_known_later(third_visit, tmp_path):
+    certificate = json.loads((third_visit.across / "certificate.json").read_text(encoding="utf-8"))
+    digest = read_image(third_visit.known).sha256
+    assert certificate["settings"]["images"] == {"source": {"name": "known.nii.gz", "sha256": digest}}
+    assert pipeline.certify_folder(third_visit.across).disagreements == ()
+    carry = dict(thing=third_visit.known, through=third_visit.across, kind="image")
+    found = pipeline.carry_file(out=tmp_path / "there.nii.gz", **carry)
     assert not {f.code for f in found} & {"told-by-grid", "vouched-for", "either-scan"}
-    with pytest.raises(
-        InputError, match=r"known\.nii\.gz: is a volume of before\.nii\.gz .* leave out --rev"
-    ):
-        pipeline.carry_file(
-            pictured / "known.nii.gz", pictured / "map", pictured / "back.nii.gz", kind="image", reverse=True
-        )
-    assert not list(pictured.glob("back*"))
+    words = r"known\.nii\.gz: is a volume of before\.nii\.gz .* leave out --reverse"
+    with pytest.raises(InputError, match=words):
+        pipeline.carry_file(out=tmp_path / "back.nii.gz", reverse=True, **carry)
+    assert not list(tmp_path.glob("back*"))
 
 
-def test_another_image_needs_the_users_word_and_the_output_keeps_it(pictured):
-    carry = dict(
-        thing=pictured / "other.nii.gz", through=pictured / "map", out=pictured / "o.nii.gz", kind="image"
-    )
+def test_another_image_needs_the_users_word_and_the_output_keeps_it(third_visit, tmp_path):
+    carry = dict(thing=third_visit.other, through=third_visit.across, out=tmp_path / "o.nii.gz", kind="image")
     with pytest.raises(InputError, match=r"other\.nii\.gz: nothing tells that it belongs to before\.nii\.gz"):
         pipeline.carry_file(**carry)
-    assert not list(pictured.glob("o.nii*"))
+    assert not list(tmp_path.iterdir())
     found = pipeline.carry_file(**carry, belongs_to="source")
     assert "vouched-for" in {f.code for f in found}
-    told = json.loads((pictured / "o.nii.gz.json").read_text(encoding="utf-8"))
+    told = json.loads((tmp_path / "o.nii.gz.json").read_text(encoding="utf-8"))
     assert told["belongs_to"] == "before.nii.gz, on the word of the user"
     assert "vouched-for" in {f["code"] for f in told["findings"]}
     assert told["from"]["name"] == "before.nii.gz"
     assert told["through"] == [
         {
-            "map": "map",
+            "map": "map 0 2",
             "from": "before.nii.gz",
-            "to": "nachher ü.nii.gz",
+            "to": "third.nii.gz",
             "direction": "from SOURCE to TARGET",
         }
     ]

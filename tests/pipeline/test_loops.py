@@ -3,14 +3,11 @@
 import csv
 import json
 import shutil
-from dataclasses import replace
 
 import nibabel
 import numpy as np
 import pytest
 from volmap_cli.main import main
-from volmap_phantoms.broken import body
-from volmap_phantoms.writer import save_labels
 
 from volmap import pipeline
 from volmap.carry import move_points
@@ -19,14 +16,9 @@ from volmap.types import InputError
 
 
 @pytest.fixture(scope="module")
-def triangle(small_pair, small_job, without_report, tmp_path_factory):
-    """Three visits of one body that grows evenly, and the maps 0 to 1, 1 to 2 and 0 to 2."""
-    root = tmp_path_factory.mktemp("loop")
-    save_labels(body(-1), root / "third.nii.gz")
-    job = replace(small_job, both_orders=False)
-    for name, source in (("map 1 2", small_pair.target), ("map 0 2", small_pair.source)):
-        without_report(pipeline.map_files, source, root / "third.nii.gz", root / name, job)
-    return [small_pair.folder, root / "map 1 2", root / "map 0 2"]
+def triangle(small_pair, third_visit):
+    """Three visits of one body that grows evenly, and the maps 0 to 1, 2 to 1 and 0 to 2."""
+    return [small_pair.folder, third_visit.back, third_visit.across]
 
 
 @pytest.fixture(scope="module")
@@ -37,8 +29,11 @@ def told(triangle, tmp_path_factory):
 
 def test_a_loop_is_turned_where_needed_and_small(told):
     loop, _ = told
-    assert [(f.code, f.where) for f in loop.findings] == [("turned-map", "map 0 2")]
-    assert [leg.turned for leg in loop.way.legs] == [False, False, True]
+    assert [(f.code, f.where) for f in loop.findings] == [
+        ("turned-map", "karte 2 zurück"),
+        ("turned-map", "map 0 2"),
+    ]
+    assert [leg.turned for leg in loop.way.legs] == [False, True, True]
     # truth: the bodies are one body scaled and moved (`broken.body`), so exact maps close the loop; each map
     # of 1.65 mm voxels is known to about half a voxel inside (beads of the small pair)
     assert 0 < loop.error.mean_mm < 1.0
@@ -60,10 +55,10 @@ def test_the_numbers_are_those_of_the_table(told, triangle):
     error = numbers(["loop_error"], even)[:, 0]
     assert loop.error.mean_mm == pytest.approx(error.mean(), rel=1e-12)
     assert loop.error.p95_mm == pytest.approx(np.percentile(error, 95), rel=1e-12)
-    some = even[::2000]
+    some = even[::400]
     here, home = numbers("xyz", some), numbers(["home_x", "home_y", "home_z"], some)
     places = here
-    for folder, turned in zip(triangle, (False, False, True), strict=True):
+    for folder, turned in zip(triangle, (False, True, True), strict=True):
         step = read_map_folder(folder).map
         places = move_points(step.reversed() if turned else step, places, reach_mm=1.0).points
     np.testing.assert_allclose(places, home, atol=1e-9)

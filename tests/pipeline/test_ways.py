@@ -2,12 +2,9 @@
 
 import csv
 from dataclasses import dataclass, replace
-from pathlib import Path
 
 import numpy as np
 import pytest
-from volmap_phantoms.broken import body
-from volmap_phantoms.writer import save_labels
 
 from volmap import pipeline
 from volmap.carry import move_points
@@ -88,17 +85,7 @@ def test_scans_of_one_name_are_told_apart_by_their_digests():
         joined_way([legs[0], Leg("CD", renamed)])
 
 
-@pytest.fixture(scope="module")
-def later(small_pair, small_job, without_report, tmp_path_factory) -> Path:
-    """The second scan of the small pair mapped to a third one, asked for the other way round."""
-    root = tmp_path_factory.mktemp("later")
-    save_labels(body(-1), root / "later.nii.gz")
-    job = replace(small_job, both_orders=False)
-    without_report(pipeline.map_files, root / "later.nii.gz", small_pair.target, root / "karte 2 zurück", job)
-    return root / "karte 2 zurück"
-
-
-def test_points_through_two_folders(tmp_path, small_pair, later):
+def test_points_through_two_folders(tmp_path, small_pair, third_visit):
     """Law: from file to file through both maps is one map after the other, to the bit of the file."""
     points = np.random.default_rng(6).uniform(-7, 7, (50, 3))
     rows = [
@@ -107,7 +94,7 @@ def test_points_through_two_folders(tmp_path, small_pair, later):
     ]
     with (tmp_path / "here.csv").open("w", newline="", encoding="utf-8") as stream:
         csv.writer(stream).writerows(rows)
-    folders = [small_pair.folder, later]
+    folders = [small_pair.folder, third_visit.back]
     findings = pipeline.carry_file(tmp_path / "here.csv", folders, tmp_path / "there.csv")
     assert [(f.code, f.where) for f in findings] == [("turned-map", "karte 2 zurück")]
     first, second = (read_map_folder(f).map for f in folders)
@@ -123,9 +110,9 @@ def test_points_through_two_folders(tmp_path, small_pair, later):
     assert np.abs(home - points).max() < 1e-9
 
 
-def test_a_way_knows_where_it_starts_and_ends(small_pair, later):
-    way = read_way([small_pair.folder, later], reverse=True)
-    assert way.start.name == "later.nii.gz"
+def test_a_way_knows_where_it_starts_and_ends(small_pair, third_visit):
+    way = read_way([small_pair.folder, third_visit.back], reverse=True)
+    assert way.start.name == "third.nii.gz"
     assert way.end.name == small_pair.source.name
     assert way.map.source_sha256 == way.start.sha256
     assert way.map.target_sha256 == way.end.sha256
