@@ -77,8 +77,8 @@ def _run(options: argparse.Namespace, console: Console) -> int:
 
 def _teller(console: Console) -> Callable[[Entry], None]:
     def told(entry: Entry) -> None:
-        verdict = entry.told.get("verdict", "")
-        detail = f": {entry.sentence}" if entry.sentence else (f" ({verdict})" if verdict else "")
+        verdict = f" ({entry.verdict})" if entry.verdict else ""
+        detail = f": {entry.sentence}" if entry.sentence else verdict
         console.progress(entry.state, 0, 0, f"{entry.job}{detail}")
 
     return told
@@ -120,14 +120,19 @@ def _stands(options: argparse.Namespace, console: Console, counts: dict[str, dic
 
 
 def _exclude(options: argparse.Namespace, console: Console) -> int:
+    from volmap.study.begin import STUDY_FILE
     from volmap.study.ledger import driving, reading
+    from volmap.study.study_file import read_study
+    from volmap.study.tables import write_tables
 
     if not options.job:
         raise UsageError("exclude needs --job, as volmap study status names it")
     with reading(options.folder):
         pass  # a folder without a ledger stays as it is
+    study = read_study(options.folder / STUDY_FILE)
     with driving(options.folder) as ledger:
         ledger.exclude(options.job, options.reason or "")
+        write_tables(study, ledger)
     console.say(f"{options.job}: " + ("excluded" if options.reason else "taken back in"))
     console.result({"job": options.job, "reason": options.reason or ""})
     console.end()

@@ -17,13 +17,13 @@ def test_begin_status_exclude(tmp_path, capsys):
     assert "holds no ledger" in capsys.readouterr().err
     with driving(tmp_path) as ledger:
         ledger.plan([Entry("map a v0 v1", "map", "a", "k", State.WAITING)])
-        ledger.settle("map a v0 v1", State.DONE, told={"verdict": "warn"})
+        ledger.settle("map a v0 v1", State.REFUSED, sentence="torn", verdict="")
     assert main(["study", "exclude", str(tmp_path), "--job", "map a v0 v1", "--reason", "wrong visit"]) == 0
     capsys.readouterr()
-    assert main(["study", "status", str(tmp_path), "--json"]) == 0
+    assert main(["study", "status", str(tmp_path), "--json"]) == 1
     told = json.loads(capsys.readouterr().out)
-    assert told["counts"] == {"map": {"done": 1}}
-    assert told["verdicts"] == {"warn": 1}
+    assert told["counts"] == {"map": {"refused": 1}}
+    assert told["troubles"] == [{"job": "map a v0 v1", "state": "refused", "sentence": "torn"}]
     assert told["excluded"] == {"map a v0 v1": "wrong visit"}
 
 

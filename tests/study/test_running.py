@@ -7,16 +7,24 @@ import sys
 import time
 
 import numpy as np
+import pandas
 import pytest
 
 from volmap.io.nifti import write_labels
 from volmap.mapfolder import read_certificate
-from volmap.study.ledger import State, reading
+from volmap.study.ledger import State, driving, reading
 from volmap.study.run import Crew, run_study
 from volmap.study.study_file import read_study
+from volmap.study.tables import write_tables
 from volmap.types import Grid, LabelVolume
 
-HEAD = 'schema = "volmap-study/1"\nname = "rigs"\n[settings]\nedge_mm = 5.0\none_order = true\n'
+HEAD = """schema = "volmap-study/1"
+name = "rigs"
+names = "names.tsv"
+[settings]
+edge_mm = 5.0
+one_order = true
+"""
 
 
 def _ball(axes_mm, core_mm, *, hole=False):
@@ -69,6 +77,7 @@ def _written(folder):
             else:
                 write_labels(folder / file, body)
     (folder / "study.toml").write_text(text)
+    (folder / "names.tsv").write_text("index\tname\n1\tshell\n2\tcore\n")
     (folder / "driver.py").write_text(DRIVER)
 
 
@@ -120,14 +129,15 @@ def test_bad_scans_stop_nobody_and_are_named(study):
     with reading(folder) as ledger:
         rows = {e.job: e for e in ledger.entries()}
         trouble = {job: sentence for job, _, sentence in ledger.troubles()}
+        told = {job: ledger.told(job) for job in rows}
     assert set(trouble) == {"scan torn v1", "map holed v0 v1"}
     assert "torn_v1.nii.gz" in trouble["scan torn v1"]
     assert "no map without tearing" in trouble["map holed v0 v1"]
     assert rows["map torn v0 v1"].sentence == "stands on scan torn v1, which is refused"
     for job in ("map good v0 v1", "map good v0 v2"):
         certificate = read_certificate(folder / rows[job].output)
-        assert rows[job].told["verdict"] == certificate.verdict
-        assert rows[job].told["source"] == certificate.source["sha256"]
+        assert rows[job].verdict == certificate.verdict
+        assert told[job]["source"] == certificate.source["sha256"]
 
 
 def test_nothing_is_done_twice_and_a_changed_scan_redoes_what_stands_on_it(study):
@@ -138,3 +148,32 @@ def test_nothing_is_done_twice_and_a_changed_scan_redoes_what_stands_on_it(study
     _, redone = _run(folder)
     assert {e.job for e in redone if e.state is State.DONE} == {"scan good v2", "map good v0 v2"}
     assert [e.state for e in redone if e.job == "map good v0 v2"] == [State.RUNNING, State.DONE]
+
+
+def test_tables_hold_every_map_and_say_which_may_be_used(study):
+    """pandas reads what a statistics package would; volumes are those of the voxels themselves."""
+    folder = study[0]
+    maps = pandas.read_csv(folder / "tables" / "maps.csv", keep_default_na=False)
+    assert maps["state"].tolist() == ["done", "done", "refused", "blocked"]
+    assert maps["used"].tolist() == [True, True, False, False]
+    assert "no map without tearing" in maps["reason"][2]
+    regions = pandas.read_parquet(folder / "tables" / "regions.parquet")
+    assert regions["target_visit"].tolist() == ["v1", "v1", "v2", "v2"]
+    assert regions["target_day_days"].tolist() == [1, 1, 2, 2]
+    inside = BODIES["good", "v1"]
+    for region, label in zip(regions["name"][:2], (1, 2), strict=True):
+        assert region == inside.names[label]
+        voxels = (inside.labels == label).sum() * 1.5**3
+        assert regions["volume_target_voxels_mm3"][label - 1] == pytest.approx(voxels)
+
+
+def test_an_exclusion_is_in_the_tables(study):
+    folder = study[0]
+    with driving(folder) as ledger:
+        ledger.exclude("map good v0 v1", "wrong visit")
+        write_tables(read_study(folder / "study.toml"), ledger)
+        maps = pandas.read_csv(folder / "tables" / "maps.csv", keep_default_na=False)
+        ledger.exclude("map good v0 v1", "")
+    assert (maps["used"][0], maps["reason"][0]) == (False, "wrong visit")
+    regions = pandas.read_parquet(folder / "tables" / "regions.parquet")
+    assert regions["used"].tolist() == [False, False, True, True]

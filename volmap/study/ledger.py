@@ -14,7 +14,7 @@ import sqlite3
 import time
 from collections.abc import Iterable, Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from enum import StrEnum
 from pathlib import Path
 from typing import Any
@@ -57,8 +57,8 @@ class Entry:
         Why it was refused, or what is remarkable.
     output : str
         Where its result lies, relative to the study folder.
-    told : dict
-        What is known of the result: verdict, gates, volumes.
+    verdict : str
+        Of a map's certificate.
     seconds, peak_mb : float
     attempts : int
     """
@@ -70,7 +70,7 @@ class Entry:
     state: State
     sentence: str = ""
     output: str = ""
-    told: dict[str, Any] = field(default_factory=dict)
+    verdict: str = ""
     seconds: float = 0.0
     peak_mb: float = 0.0
     attempts: int = 0
@@ -80,10 +80,11 @@ _TABLES = """
 create table if not exists ledger (version integer not null);
 create table if not exists job (
     job text primary key, kind text not null, subject text not null, key text not null, state text not null,
-    sentence text not null default '', output text not null default '', told text not null default '{}',
+    sentence text not null default '', output text not null default '', verdict text not null default '',
     seconds real not null default 0, peak_mb real not null default 0, attempts integer not null default 0,
     place integer not null);
-create index if not exists job_state on job (kind, state);
+create index if not exists job_state on job (kind, state, verdict);
+create table if not exists told (job text primary key, told text not null);
 create table if not exists attempt (
     job text not null, number integer not null, began real not null, ended real, state text not null,
     sentence text not null default '', primary key (job, number));
@@ -135,7 +136,8 @@ class Ledger:
             base.execute("create temporary table if not exists wanted (job text primary key)")
             base.execute("delete from wanted")
             base.executemany("insert into wanted values (?)", wanted)
-            base.execute("delete from job where job not in (select job from wanted)")
+            for table in ("job", "told"):
+                base.execute(f"delete from {table} where job not in (select job from wanted)")
             base.execute("update attempt set state = 'died', ended = began where state = 'running'")
 
     def begin(self, job: str) -> None:
@@ -156,16 +158,29 @@ class Ledger:
         state: State,
         *,
         sentence: str = "",
+        verdict: str = "",
         told: dict[str, Any] | None = None,
         seconds: float = 0.0,
         peak_mb: float = 0.0,
     ) -> None:
-        """A job has ended, one way or another; WAITING sends it back to the queue."""
+        """A job has ended, one way or another.
+
+        Parameters
+        ----------
+        job : str
+        state : State
+        sentence, verdict : str
+        told : dict
+            Plain values of the result (`told` gives them back).
+        seconds, peak_mb : float
+        """
         with self._base as base:
             base.execute(
-                "update job set state = ?, sentence = ?, told = ?, seconds = ?, peak_mb = ? where job = ?",
-                (state, sentence, json.dumps(told or {}, sort_keys=True), seconds, peak_mb, job),
+                "update job set state = ?, sentence = ?, verdict = ?, seconds = ?, peak_mb = ? where job = ?",
+                (state, sentence, verdict, seconds, peak_mb, job),
             )
+            text = json.dumps(told or {}, sort_keys=True)
+            base.execute("insert or replace into told values (?, ?)", (job, text))
             base.execute(
                 "update attempt set state = ?, sentence = ?, ended = ? where job = ? and state = 'running'",
                 (state, sentence, time.time(), job),
@@ -173,15 +188,20 @@ class Ledger:
 
     def entries(self, kind: str = "") -> list[Entry]:
         """The jobs in the order of the plan, all or of one kind."""
-        columns = "job, kind, subject, key, state, sentence, output, told, seconds, peak_mb, attempts"
+        columns = "job, kind, subject, key, state, sentence, output, verdict, seconds, peak_mb, attempts"
         where = "where kind = ?" if kind else ""
         rows = self._base.execute(
             f"select {columns} from job {where} order by place", (kind,) if kind else ()
         )
         return [
-            Entry(job, of_kind, subject, key, State(state), sentence, output, json.loads(told), *numbers)
-            for job, of_kind, subject, key, state, sentence, output, told, *numbers in rows
+            Entry(job, of_kind, subject, key, State(state), *rest)
+            for job, of_kind, subject, key, state, *rest in rows
         ]
+
+    def told(self, job: str) -> dict[str, Any]:
+        """What a job's result holds; empty when it has none."""
+        row = self._base.execute("select told from told where job = ?", (job,)).fetchone()
+        return dict(json.loads(row[0])) if row else {}
 
     def counts(self) -> dict[str, dict[str, int]]:
         """How many jobs of each kind are in each state."""
@@ -196,8 +216,8 @@ class Ledger:
         """How many finished maps have each verdict."""
         return dict(
             self._base.execute(
-                "select json_extract(told, '$.verdict') as verdict, count(*) from job "
-                "where kind = 'map' and state = ? group by verdict order by verdict",
+                "select verdict, count(*) from job where kind = 'map' and state = ? "
+                "group by verdict order by verdict",
                 (State.DONE,),
             )
         )

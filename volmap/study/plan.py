@@ -77,12 +77,12 @@ def jobs_of(study: Study, file_digest: FileDigest, *, version: str) -> tuple[Job
     """
     digests = _Digests(study, file_digest, version)
     scans = [_scan_job(study, s, v, digests) for s in study.subjects for v in s.visits]
-    pairs = [_pair_job(study, a, b, digests) for a, b in _pairs(study)]
+    pairs = [_pair_job(study, a, b, digests) for a, b in scan_pairs(study)]
     return (*scans, *pairs)
 
 
-def _pairs(study: Study) -> list[tuple[tuple[str, Visit], tuple[str, Visit]]]:
-    """Which scan is mapped onto which, in order."""
+def scan_pairs(study: Study) -> list[tuple[tuple[str, Visit], tuple[str, Visit]]]:
+    """Which scan, of subject and visit, is mapped onto which; in order."""
     found = []
     for subject in study.subjects:
         found += [((subject.name, a), (subject.name, b)) for a, b in pairs_within(subject, study.within)]

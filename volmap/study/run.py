@@ -13,6 +13,7 @@ from typing import Any
 from volmap.study.design import Study
 from volmap.study.ledger import Entry, Ledger, State, driving
 from volmap.study.plan import Job, jobs_of
+from volmap.study.tables import write_tables
 from volmap.study.work import Result, perform
 from volmap.types import InputError
 
@@ -63,6 +64,7 @@ def run_study(study: Study, crew: Crew, *, told: Told = lambda entry: None) -> d
         if queue.open:
             with _client(study, crew) as client:
                 _work_off(queue, client)
+        write_tables(study, ledger)
         return ledger.counts()
 
 
@@ -115,14 +117,20 @@ class _Queue:
         """A job has ended."""
         sentence = sentence or result.refused
         self._ledger.settle(
-            name, state, sentence=sentence, told=result.told, seconds=result.seconds, peak_mb=result.peak_mb
+            name,
+            state,
+            sentence=sentence,
+            verdict=result.verdict,
+            told=result.told,
+            seconds=result.seconds,
+            peak_mb=result.peak_mb,
         )
         self._states[name] = state
         self._tell(name, result, sentence)
 
     def _tell(self, name: str, result: Result, sentence: str) -> None:
         entry = _entry(self._jobs[name], self._states[name])
-        self._told(replace(entry, sentence=sentence, told=result.told, seconds=result.seconds))
+        self._told(replace(entry, sentence=sentence, verdict=result.verdict, seconds=result.seconds))
 
 
 def _work_off(queue: _Queue, client: Any) -> None:

@@ -11,13 +11,14 @@ from typing import Any
 import numpy as np
 
 from volmap import pipeline
+from volmap.io.json_documents import plain
 from volmap.io.landmarks import read_landmarks
 from volmap.io.reading import Reading
 from volmap.mapfolder import CERTIFICATE, read_certificate
 from volmap.pipeline.machine import peak_mb
 from volmap.study.design import Visit
 from volmap.study.plan import PairJob, ScanJob
-from volmap.types import Certificate, InputError, LandmarkPairs
+from volmap.types import Certificate, InputError, LandmarkPairs, Table
 
 
 @dataclass(frozen=True)
@@ -28,12 +29,15 @@ class Result:
     ----------
     refused : str
         Why its data cannot be used, in one sentence; empty when it was done.
+    verdict : str
+        Of a map's certificate.
     told : dict
         Plain values for the ledger.
     seconds, peak_mb : float
     """
 
     refused: str = ""
+    verdict: str = ""
     told: dict[str, Any] = field(default_factory=dict)
     seconds: float = 0.0
     peak_mb: float = 0.0
@@ -53,7 +57,7 @@ def perform(job: ScanJob | PairJob, folder: Path) -> Result:
         told, refused = _done(job, folder), ""
     except InputError as fault:
         told, refused = {}, fault.sentence
-    return Result(refused, told, round(time.perf_counter() - begin, 3), peak_mb())
+    return Result(refused, told.get("verdict", ""), told, round(time.perf_counter() - begin, 3), peak_mb())
 
 
 @singledispatch
@@ -88,7 +92,17 @@ def _mapped(job: PairJob, folder: Path) -> dict[str, Any]:
             source_image=source.image,
             target_image=target.image,
         )
-    return certified(read_certificate(place))
+    return certified(read_certificate(place)) | {
+        "regions": _plain_table(pipeline.measure_folder(place).table)
+    }
+
+
+def _plain_table(table: Table) -> dict[str, Any]:
+    """Columns with their values, as JSON can keep them."""
+    columns = [
+        {"name": c.name, "unit": c.unit, "meaning": c.meaning, "values": c.values} for c in table.columns
+    ]
+    return dict(plain({"columns": columns}))
 
 
 def _map_job(job: PairJob) -> pipeline.MapJob:
