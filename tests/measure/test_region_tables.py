@@ -85,6 +85,7 @@ def test_volumes_of_labels_are_those_of_the_tets_and_of_the_voxels():
             assert found[f"volume_{key}_mm3"] == pytest.approx(float(exact), rel=1e-12)
         assert found["volume_source_voxels_mm3"] == 480.0  # 6 x 10 x 8 voxels of 1 mm3
         assert found["volume_target_voxels_mm3"] == 960.0
+        assert found["volume_change_voxels_percent"] == 100.0
         # law: the mean of J weighted by volume in SOURCE is the ratio of the volumes
         ratio = found["volume_target_mm3"] / found["volume_source_mm3"]
         assert found["volume_ratio_mean_1"] == pytest.approx(ratio, rel=1e-12)

@@ -171,11 +171,15 @@ def _change(volume_map: VolumeMap, region: Region, uncertainty: ChangeUncertaint
     standard, percent, bound, source = _uncertainty(
         here, there, uncertainty, drawn_in_source="source" in region.drawn_mm3
     )
+    before, after = (region.drawn_mm3.get(side, np.nan) for side in ("source", "target"))
+    drawn = after - before
     own = [np.nan if u is None else u.difference_mm3 for u in (uncertainty.source, uncertainty.target)]
     apart = "What the scan's own surface of the label holds more than the map's solid, in {}; to first order."
     return [
         _Cell("volume_change", "mm3", there - here, "Volume in TARGET less volume in SOURCE."),
         _Cell("volume_change", "percent", _percent(there - here, here), "The same in % of SOURCE."),
+        _Cell("volume_change_voxels", "mm3", drawn, "The change by voxels as drawn; empty unless in both."),
+        _Cell("volume_change_voxels", "percent", _percent(drawn, before), "The same in % of SOURCE."),
         _Cell("volume_change_uncertainty", "mm3", standard, "Standard uncertainty of the change."),
         _Cell("volume_change_uncertainty", "percent", percent, "The same, of the change in %."),
         _Cell("volume_change_bound", "mm3", bound, "What the same residual could do at most."),
