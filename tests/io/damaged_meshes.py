@@ -6,7 +6,7 @@ import re
 
 import numpy as np
 from damaged_case import HERE, Case, cut, put
-from sound_files import CUBE, TETS, mesh_bytes
+from sound_files import CUBE, SIDES, TETS, mesh_bytes
 
 
 def text_changes(data, changes):
@@ -52,6 +52,33 @@ def mesh_cases(folder, through):
         return ["carry", f"{HERE}/{name}", "--through", through, "--out", f"{HERE}/out.vtu", "--quiet"]
 
     return [Case(f"vtu/{name}", {"x.vtu": data}, carried("x.vtu")) for name, data in vtu_damages(own).items()]
+
+
+def carried_surface_cases(folder, through):
+    """Surfaces and lines in VTP, which `carry` takes."""
+    from volmap.io.polylines import write_polylines
+    from volmap.io.vtk_xml import write_surface
+    from volmap.types import Polylines, Surface
+
+    write_surface(folder / "s.vtp", Surface(3 * CUBE, SIDES, np.tile([1, 0], (12, 1))))
+    write_polylines(folder / "l.vtp", Polylines(("a", "b"), 3 * CUBE, np.array([0, 4, 8])))
+    cases = []
+    for kind, name in (("vtp", "s.vtp"), ("vtp lines", "l.vtp")):
+        data = (folder / name).read_bytes()
+        made = {f"cut at {share}": cut(data, share) for share in (0, 0.02, 0.4, 0.8, 0.99)}
+        made |= text_changes(
+            data,
+            {
+                "another kind": (b'type="PolyData"', b'type="UnstructuredGrid"'),
+                "points": (b'NumberOfPoints="8"', b'NumberOfPoints="9"'),
+                "points huge": (b'NumberOfPoints="8"', b'NumberOfPoints="9999999999"'),
+                "type": (b'type="Float64"', b'type="Float16"'),
+                "offset": (b'offset="0"', b'offset="77777"'),
+            },
+        )
+        command = ["carry", f"{HERE}/x.vtp", "--through", through, "--out", f"{HERE}/out.vtp", "--quiet"]
+        cases += [Case(f"{kind}/{damage}", {"x.vtp": spoilt}, command) for damage, spoilt in made.items()]
+    return cases
 
 
 def surface_cases(folder):

@@ -10,7 +10,13 @@ import nibabel as nib
 import numpy as np
 from damaged_case import HERE, Case, flipped, screened
 from damaged_dicom import segmentation_cases, series_cases
-from damaged_meshes import boundary_cases, legacy_cases, mesh_cases, surface_cases
+from damaged_meshes import (
+    boundary_cases,
+    carried_surface_cases,
+    legacy_cases,
+    mesh_cases,
+    surface_cases,
+)
 from damaged_tables import map_folder_cases, table_cases
 from damaged_volumes import nifti_cases, nrrd_cases, pair_cases
 from sound_files import dicom_segmentation_bytes, nifti_bytes, nrrd_bytes, pack
@@ -55,6 +61,7 @@ def all_cases(folder, *, source, target, through, flips=60):
         *series_cases(folder, source, target),
         *mesh_cases(folder, through),
         *surface_cases(folder),
+        *carried_surface_cases(folder, through),
         *legacy_cases(),
         *boundary_cases(folder, source, target),
         *table_cases(source, target, through),
