@@ -11,12 +11,12 @@ HERE = "{here}"  # the case's own folder, in arguments
 
 @dataclass
 class Case:
-    """One command on damaged files."""
+    """One command on damaged files, and how it may end: 3 not readable; 1 read and refused; 0 done."""
 
     name: str
     files: dict[str, bytes]
     arguments: list[str]
-    certain: bool = True
+    statuses: tuple[int, ...] = (3,)
     folders: list[str] = field(default_factory=list)
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import json
+
 from damaged_case import HERE, Case, cut
 from sound_files import map_folder_bytes, pack
 
@@ -96,7 +98,6 @@ MEASURED = {
     "two units": f"{POINTS[:-1]},flow_x_mm,flow_y_mm,flow_z_cm\na,1,2,3,4,5,6\n".encode(),
     "a column twice": f"{POINTS[:-1]},heat_K,heat_K\na,1,2,3,4,5\n".encode(),
     "no rows": f"{POINTS[:-1]},heat_K\n".encode(),
-    "a name twice": f"{POINTS[:-1]},heat_K\na,1,2,3,4\na,1,2,3,4\n".encode(),
 }
 GATES = {
     "empty": b"",
@@ -203,3 +204,69 @@ def map_folder_cases(folder):
         )
         for name, held in made.items()
     ]
+
+
+def changed_document(data, keys, value):
+    """The document with one of its values replaced."""
+    document = json.loads(data)
+    inner = document
+    for key in keys[:-1]:
+        inner = inner[key]
+    inner[keys[-1]] = value
+    return json.dumps(document).encode()
+
+
+def field_cases(folder):
+    """A field of a map folder taken alone, with the document beside it."""
+    files = map_folder_bytes(folder)
+    field, told = files["forward.nii.gz"], files["forward.json"]
+    unreadable = {
+        "no document": (field, None),
+        "document cut": (field, cut(told, 0.6)),
+        "document empty": (field, b""),
+        "document of another kind": (field, b"[]"),
+        "document deep": (field, b'{"a":' * 50_000),
+        "another schema": (field, changed_document(told, ["schema"], "volmap-steps/1")),
+        "no direction": (field, changed_document(told, ["direction"], "sideways")),
+        "no scan": (field, changed_document(told, ["grid_space"], None)),
+        "a scan without digest": (field, changed_document(told, ["points_into", "sha256"], 7)),
+        "a role that does not fit": (field, changed_document(told, ["grid_space", "role"], "TARGET")),
+        "a grid of words": (
+            field,
+            changed_document(told, ["grid_space", "grid"], {"shape": "a", "affine": "b"}),
+        ),
+        "field cut": (cut(field, 0.7), told),
+        "field empty": (b"", told),
+        "labels for a field": (files["source_labels.nii.gz"], told),
+        "no NIfTI": (b"x" * 600, told),
+    }
+    refused = {
+        "the other field": (files["backward.nii.gz"], told),
+        "no check point": (field, changed_document(told, ["check_point"], None)),
+        "a check point of words": (field, changed_document(told, ["check_point", "u_mm"], ["a", "b", "c"])),
+        "a check point of two": (field, changed_document(told, ["check_point", "x_mm"], [1.0, 2.0])),
+        "a check point outside": (field, changed_document(told, ["check_point", "voxel"], [900, 1, 1])),
+        "a check point elsewhere": (field, changed_document(told, ["check_point", "voxel"], [1, 1, 1])),
+        "a check point without a voxel": (field, changed_document(told, ["check_point", "voxel"], "here")),
+        "a check point of another sign": (
+            field,
+            changed_document(told, ["check_point", "u_mm"], [-1.3, 0, 1.0]),
+        ),
+        "another grid": (field, changed_document(told, ["grid_space", "grid", "shape"], [4, 4, 4])),
+    }
+    cases = []
+    for made, statuses in ((unreadable, (3,)), (refused, (1,))):
+        for name, (data, document) in made.items():
+            held = {"x.nii.gz": data, "p.csv": b"name,x_mm,y_mm,z_mm\na,-2,-0.5,0\n"}
+            held |= {} if document is None else {"x.json": document}
+            command = [
+                "carry",
+                f"{HERE}/p.csv",
+                "--through",
+                f"{HERE}/x.nii.gz",
+                "--out",
+                f"{HERE}/o.csv",
+                "--quiet",
+            ]
+            cases.append(Case(f"field/{name}", held, command, statuses=statuses))
+    return cases

@@ -194,9 +194,23 @@ def _require_document(document: Mapping[str, Any], where: str) -> None:
 
 
 def _grid(told: Mapping[str, Any]) -> Grid | None:
-    """The grid a document names, or None when it names none that is one."""
+    """The grid a document names, or None when it names none.
+
+    Raises
+    ------
+    InputError
+        It names one that is none.
+    """
     grid = told.get("grid")
-    try:
-        return Grid(tuple(grid["shape"]), np.array(grid["affine"], np.float64))  # type: ignore[index]
-    except (TypeError, KeyError, ValueError):
+    if grid is None:
         return None
+    try:
+        return Grid(tuple(grid["shape"]), np.array(grid["affine"], np.float64))
+    except (TypeError, KeyError, ValueError, OverflowError) as fault:
+        raise InputError(
+            "the grid in its document is not as written",
+            where=str(told.get("name")),
+            found=str(grid)[:80],
+            expected="shape and affine",
+            remedy="use the files as `volmap map` wrote them",
+        ) from fault
