@@ -15,6 +15,7 @@ import time
 from pathlib import Path
 
 MEMORY, SECONDS = 2**30, 5
+os.environ["ARROW_DEFAULT_MEMORY_POOL"] = "system"  # its own pool reserves a gigabyte of addresses at once
 
 
 def imported() -> None:
@@ -23,8 +24,13 @@ def imported() -> None:
         "volmap.pipeline", "volmap_cli.main", "volmap.io.dicom.volumes", "volmap.io.nrrd",
         "nibabel", "nrrd", "pydicom", "pydicom.pixels", "meshio", "meshio.stl", "meshio.ply", "meshio.off",
         "meshio.obj", "meshio.vtk._main", "volmap.io.vtk_xml", "vtkmodules.vtkIOXML",
+        "pyarrow.csv", "pyarrow.compute", "multiprocessing.synchronize",
     ):  # fmt: skip
         __import__(name)
+    from volmap_cli.main import VERBS
+
+    for verb in VERBS:
+        __import__(f"volmap_cli.{verb}")
 
 
 def held(folder: Path) -> list[str]:

@@ -76,29 +76,6 @@ NAMES = {
 }
 
 
-LINES = "line,x_mm,y_mm,z_mm\n"
-POLYLINES = {
-    "header alone": LINES.encode(),
-    "a column missing": b"line,x_mm,y_mm\na,1,2\na,3,4\n",
-    "a column more": f"{LINES[:-1]},w\na,1,2,3,4\na,2,3,4,5\n".encode(),
-    "one point": f"{LINES}a,1,2,3\n".encode(),
-    "torn apart": f"{LINES}a,1,2,3\na,2,3,4\nb,1,1,1\nb,2,2,2\na,3,4,5\n".encode(),
-    "NaN": f"{LINES}a,1,2,3\na,nan,3,4\n".encode(),
-    "a word": f"{LINES}a,1,2,3\na,x,3,4\n".encode(),
-    "short row": f"{LINES}a,1,2,3\na,2,3\n".encode(),
-    "no name": f"{LINES},1,2,3\n,2,3,4\n".encode(),
-    "zero bytes": f"{LINES}a,1,2,3\na,2,3,4\n".encode() + bytes(64),
-}
-MEASURED = {
-    "a word": f"{POINTS[:-1]},heat_K\na,1,2,3,warm\n".encode(),
-    "infinite": f"{POINTS[:-1]},heat_K\na,1,2,3,inf\n".encode(),
-    "short row": f"{POINTS[:-1]},heat_K\na,1,2,3\n".encode(),
-    "half a vector": f"{POINTS[:-1]},flow_x_mm,flow_y_mm\na,1,2,3,4,5\n".encode(),
-    "half a tensor": f"{POINTS[:-1]},e_xx_1,e_yy_1\na,1,2,3,4,5\n".encode(),
-    "two units": f"{POINTS[:-1]},flow_x_mm,flow_y_mm,flow_z_cm\na,1,2,3,4,5,6\n".encode(),
-    "a column twice": f"{POINTS[:-1]},heat_K,heat_K\na,1,2,3,4,5\n".encode(),
-    "no rows": f"{POINTS[:-1]},heat_K\n".encode(),
-}
 GATES = {
     "empty": b"",
     "no TOML": b"schema = volmap",
@@ -138,24 +115,6 @@ def table_cases(source, target, through):
         )
         for name in ("empty", "header alone", "short row", "a column missing", "zero bytes", "latin")
     ]
-    for kind, tables, rule in (("polylines", POLYLINES, ()), ("measurements", MEASURED, ("--rule", "value"))):
-        cases += [
-            Case(
-                f"{kind}/{name}",
-                {"x.csv": data},
-                [
-                    "carry",
-                    f"{HERE}/x.csv",
-                    "--through",
-                    through,
-                    "--out",
-                    f"{HERE}/out.csv",
-                    "--quiet",
-                    *rule,
-                ],
-            )
-            for name, data in tables.items()
-        ]
     cases += [
         Case(
             f"gates/{name}",
