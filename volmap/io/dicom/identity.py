@@ -133,9 +133,11 @@ def days_apart(first: Path, second: Path) -> tuple[int, str] | None:
         A file that cannot be read.
     """
     with odd_values(shown_name(first)):
-        heads = [next(headers(path)) for path in (first, second)]
+        heads = [next(headers(path), None) for path in (first, second)]
+        if heads[0] is None or heads[1] is None:
+            return None
         for keyword, others in (("AcquisitionDate", ("AcquisitionDateTime",)), ("StudyDate", ())):
-            days = [_day(ds, (keyword, *others), where) for where, ds in heads]
+            days = [_day(ds, (keyword, *others), where) for where, ds in filter(None, heads)]
             if days[0] is not None and days[1] is not None:
                 return (days[1] - days[0]).days, keyword
     return None
