@@ -79,10 +79,13 @@ def test_voxels_lie_where_highdicom_places_its_frames(tmp_path: Path, place: str
 
 @pytest.mark.parametrize("place", PLACES)
 def test_grid_is_the_one_that_was_written(tmp_path: Path, place: str) -> None:
-    """All planes written: also which voxel is the first, and the handedness, come back."""
+    """All planes written: the first voxel is that of the first frame, so the order of a file is kept."""
     labels = some_labels(SHAPE, 2, seed=5)
     segmentation(PLACES[place], labels, "LABELMAP", omit_empty_frames=False).save_as(tmp_path / "s.dcm")
     volume = read_labels(tmp_path / "s.dcm")
+    first = pydicom.dcmread(tmp_path / "s.dcm").PerFrameFunctionalGroupsSequence[0].PlanePositionSequence[0]
+    origin = to_ras(np.array(first.ImagePositionPatient, float))
+    np.testing.assert_allclose(volume.grid.affine[:3, 3], origin, atol=1e-5)
     twin = hd.seg.segread(tmp_path / "s.dcm").get_volume(combine_segments=True)
     found = np.moveaxis(np.asarray(volume.labels), (0, 1, 2), (2, 1, 0))
     affine = np.diag([-1.0, -1.0, 1.0, 1.0]) @ volume.grid.affine[:, [2, 1, 0, 3]]
