@@ -113,6 +113,13 @@ def test_what_is_refused_and_in_which_words(thing, options, words):
     assert words in caught.value.sentence
 
 
+def test_a_volume_of_a_scan_the_way_passes_through_is_refused():
+    middle = KnownScan("M", FINE, frozenset({labels(FINE, 7).sha256}))
+    assert codes(labels(FINE, 8), between=[middle]) == [(NOTE, "told-by-grid")]
+    with pytest.raises(InputError, match=r"is a volume of M .* name only the maps that lead on from M"):
+        codes(labels(FINE, 7), between=[middle])
+
+
 def test_in_reverse_the_remedies_turn_round():
     start, end = turned(END, "target"), turned(START, "source")
     assert codes(B, start, end) == []

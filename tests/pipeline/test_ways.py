@@ -114,5 +114,6 @@ def test_a_way_knows_where_it_starts_and_ends(small_pair, third_visit):
     way = read_way([small_pair.folder, third_visit.back], reverse=True)
     assert way.start.name == "third.nii.gz"
     assert way.end.name == small_pair.source.name
+    assert [scan.name for scan in way.between] == [small_pair.target.name]
     assert way.map.source_sha256 == way.start.sha256
     assert way.map.target_sha256 == way.end.sha256

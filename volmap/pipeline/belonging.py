@@ -6,7 +6,7 @@ speaks against it is refused, and a thing that says nothing has to be vouched fo
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any, Literal
 
@@ -50,7 +50,13 @@ class KnownScan:
 
 
 def require_belonging(
-    thing: Any, start: KnownScan, end: KnownScan, *, name: str, belongs_to: Side | None = None
+    thing: Any,
+    start: KnownScan,
+    end: KnownScan,
+    *,
+    name: str,
+    belongs_to: Side | None = None,
+    between: Sequence[KnownScan] = (),
 ) -> tuple[Finding, ...]:
     """Refuse a thing that does not belong to the scan it is carried from, or that nobody vouches for.
 
@@ -64,6 +70,8 @@ def require_belonging(
         Of its file, for messages.
     belongs_to : 'source' or 'target', optional
         Whose world the user says it lies in.
+    between : sequence of KnownScan
+        The scans that the way only passes through.
 
     Returns
     -------
@@ -83,6 +91,8 @@ def require_belonging(
         )
     grid = getattr(thing, "grid", None)
     if isinstance(grid, Grid):
+        if _known_as(thing, start, end, between, name):
+            return ()
         return _of_volume(thing, grid, start, end, name, belongs_to)
     points = getattr(thing, "points", None)
     if points is not None:
@@ -90,15 +100,25 @@ def require_belonging(
     return ()
 
 
+def _known_as(thing: Any, start: KnownScan, end: KnownScan, between: Sequence[KnownScan], name: str) -> bool:
+    """True when its digest says that it belongs to the start; refused when it says another scan."""
+    for found in digests_of(thing):
+        if found in start.digests:
+            return True
+        for scan in (end, *between):
+            if found not in scan.digests:
+                continue
+            what = f"is a volume of {scan.name} (its digest says so), but would be carried from {start.name}"
+            if scan is end:
+                raise _wrong_way(what, name, start)
+            remedy = f"name only the maps that lead on from {scan.name}"
+            raise InputError(what, where=name, remedy=remedy, refused=True)
+    return False
+
+
 def _of_volume(
     thing: Any, grid: Grid, start: KnownScan, end: KnownScan, name: str, belongs_to: Side | None
 ) -> tuple[Finding, ...]:
-    for found in digests_of(thing):
-        if found in start.digests:
-            return ()
-        if found in end.digests:
-            what = f"is a volume of {end.name} (its digest says so), but would be carried from {start.name}"
-            raise _wrong_way(what, name, start)
     here, there = (s.grid is not None and s.grid.same_place(grid) for s in (start, end))
     if here and not there:
         sentence = f"is not known by its digest, and was taken for a volume of {start.name}: same voxel grid"

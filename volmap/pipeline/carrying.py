@@ -39,6 +39,7 @@ from volmap.types import (
     InputError,
     Progress,
     Rules,
+    UnsaidError,
     silent,
 )
 
@@ -103,7 +104,9 @@ def carry_file(
     require_holding(out, loaded)
     require_out(out, loaded, settings, overwrite=overwrite)
     progress("carry", 0, 0, thing.name)
-    belonging = require_belonging(loaded, *way.ends, name=told_name(thing), belongs_to=belongs_to)
+    belonging = require_belonging(
+        loaded, *way.ends, name=told_name(thing), belongs_to=belongs_to, between=way.between
+    )
     settings = settings.of_scan(way.voxel_mm)
     carried = way.carry(loaded, settings, onto=None if onto is None else read_grid(onto))
     findings = (*findings, *left_out, *way.findings, *belonging, *carried.findings)
@@ -136,7 +139,7 @@ def _read_through(
     way = read_field_way(fields[0], pulls=volume)
     if reverse:
         start = way.ends[0]
-        raise InputError(
+        raise UnsaidError(
             f"a field runs one way: for this kind of thing from {start.name}",
             where=way.name,
             remedy=f"to carry it the other way {start.turn}, without --reverse",

@@ -46,6 +46,11 @@ class FieldWay:
         here, there = (self._known(key) for key in ("grid_space", "points_into"))
         return (there, here) if self.pulls else (here, there)
 
+    @property
+    def between(self) -> tuple[KnownScan, ...]:
+        """None: a field leads straight from one scan to the other."""
+        return ()
+
     def _known(self, key: str) -> KnownScan:
         told = self.document[key]
         side: Side = "source" if told["role"] == "SOURCE" else "target"

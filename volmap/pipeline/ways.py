@@ -102,6 +102,11 @@ class Way:
         return replace(start, side="source"), replace(end, side="target")
 
     @property
+    def between(self) -> tuple[KnownScan, ...]:
+        """What is known of the scans it only passes through."""
+        return tuple(leg.known(at_end=True) for leg in self.legs[:-1])
+
+    @property
     def start(self) -> LabelVolume:
         """The labels of the scan in which things start."""
         return self.legs[0].start
