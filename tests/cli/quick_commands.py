@@ -20,6 +20,7 @@ def of_verb(verb, pair, out):
             "--out",
             str(out / "there.csv"),
         ],
+        "loop": ["loop", str(pair.folder), str(pair.folder), "--out", str(out / "round é.csv")],
         "measure": ["measure", str(pair.folder), "--out", str(out / "t é.csv")],
         "report": ["report", str(pair.folder)],
         "phantom": ["phantom", "--list"],

@@ -11,7 +11,7 @@ from volmap_cli.main import main
 
 from volmap.types.notice import caution
 
-VERBS = ("screen", "mesh", "map", "certify", "carry", "measure", "report", "phantom", "demo")
+VERBS = ("screen", "mesh", "map", "certify", "carry", "loop", "measure", "report", "phantom", "demo")
 
 
 @pytest.mark.parametrize("verb", VERBS)
