@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+import base64
 import re
+import struct
+import zlib
 
 import numpy as np
 from damaged_case import HERE, Case, cut, put
@@ -40,6 +43,21 @@ def vtu_damages(data):
     return made
 
 
+def packed_bomb(blocks=48, megabytes=32):
+    """A VTU whose points unpack to a gigabyte and a half of zeros, in as many blocks as the format wants."""
+    block = zlib.compress(bytes(megabytes * 2**20), 9)
+    head = struct.pack(f"<{3 + blocks}I", blocks, megabytes * 2**20, 0, *[len(block)] * blocks)
+    coded = base64.b64encode(head) + base64.b64encode(block * blocks)
+    return (
+        b'<VTKFile type="UnstructuredGrid" byte_order="LittleEndian" header_type="UInt32" '
+        b'compressor="vtkZLibDataCompressor"><UnstructuredGrid>'
+        b'<Piece NumberOfPoints="67108864" NumberOfCells="0"><Points>'
+        b'<DataArray type="Float64" Name="Points" NumberOfComponents="3" format="binary">'
+        + coded
+        + b"</DataArray></Points></Piece></UnstructuredGrid></VTKFile>"
+    )
+
+
 def mesh_cases(folder, through):
 
     from volmap.io.vtk_xml import write_mesh
@@ -51,7 +69,8 @@ def mesh_cases(folder, through):
     def carried(name):
         return ["carry", f"{HERE}/{name}", "--through", through, "--out", f"{HERE}/out.vtu", "--quiet"]
 
-    return [Case(f"vtu/{name}", {"x.vtu": data}, carried("x.vtu")) for name, data in vtu_damages(own).items()]
+    damages = vtu_damages(own) | {"bomb": packed_bomb()}
+    return [Case(f"vtu/{name}", {"x.vtu": data}, carried("x.vtu")) for name, data in damages.items()]
 
 
 def carried_surface_cases(folder, through):

@@ -80,6 +80,7 @@ def dicom_series_bytes(folder):
 
 def mesh_bytes(folder, ending, *, tets=False, images=False, **how):
     kind, cells = ("tetra", TETS) if tets else ("triangle", SIDES)
+    cells = cells.astype(np.int32) if ending == ".ply" else cells  # all that PLY can hold
     mesh = meshio.Mesh(20 * CUBE, [(kind, cells)])
     if tets:
         mesh.cell_data["label"] = [np.ones(len(cells), np.int64)]

@@ -73,6 +73,11 @@ def read_piece(path: str | os.PathLike[str], kind: str) -> VtkPiece:
             found=str(fault),
             remedy="write or copy the file again",
         ) from fault
+    except MemoryError as fault:
+        raise InputError(
+            "what is packed in it does not fit into the memory of this machine", where=where,
+            remedy="check what wrote it, or write a smaller one",
+        ) from fault  # fmt: skip
 
 
 def _piece(data: bytes, kind: str, where: str) -> VtkPiece:
@@ -179,13 +184,13 @@ def _from_text(text: str, dtype: np.dtype[Any]) -> NDArray[Any]:
         raise _DamageError("text where numbers should be") from fault
 
 
-def _from_bytes(data: bytes, dtype: np.dtype[Any]) -> NDArray[Any]:
+def _from_bytes(data: bytes | memoryview, dtype: np.dtype[Any]) -> NDArray[Any]:
     if len(data) % dtype.itemsize:
         raise _DamageError("part of a number")
     return np.frombuffer(data, dtype)
 
 
-def _block(data: bytes | memoryview, source: _Source, *, raw: bool) -> bytes:
+def _block(data: bytes | memoryview, source: _Source, *, raw: bool) -> bytes | memoryview:
     """The bytes of one array from the data that begin with its header."""
     words = 3 if source.packed else 1
     head = _header(data, words, source, raw)
@@ -225,13 +230,13 @@ def _taken(data: bytes | memoryview, start: int, n: int, raw: bool) -> bytes:
     return part[:n]
 
 
-def _unpacked(data: bytes, head: list[int]) -> bytes:
+def _unpacked(data: bytes, head: list[int]) -> bytes | memoryview:
     """Undo the packing block by block; head = [blocks, size, size of the last or 0, packed sizes...]."""
-    parts, start = [], 0
-    for i, packed in enumerate(head[3:]):
-        size = head[2] if i == head[0] - 1 and head[2] else head[1]
-        if size > packed * _DEFLATE_AT_BEST:
-            raise _DamageError("a packed block that cannot hold what it claims")
+    sizes = [head[2] if i == head[0] - 1 and head[2] else head[1] for i in range(head[0])]
+    if any(size > packed * _DEFLATE_AT_BEST for size, packed in zip(sizes, head[3:], strict=True)):
+        raise _DamageError("a packed block that cannot hold what it claims")
+    whole, start, at = np.empty(sum(sizes), np.uint8).data, 0, 0  # the memory for all, before any work
+    for size, packed in zip(sizes, head[3:], strict=True):
         unpacker = zlib.decompressobj()
         try:
             part = unpacker.decompress(data[start : start + packed], size + 1)
@@ -239,9 +244,9 @@ def _unpacked(data: bytes, head: list[int]) -> bytes:
             raise _DamageError("packed data that do not unpack") from fault
         if len(part) != size or not unpacker.eof:
             raise _DamageError("a packed block of the wrong length")
-        parts.append(part)
-        start += packed
-    return b"".join(parts)
+        whole[at : at + size] = part
+        start, at = start + packed, at + size
+    return whole
 
 
 def _count(text: str) -> int:

@@ -29,7 +29,7 @@ from volmap.types import (
 from volmap.types.notice import caution
 
 DICOM = (".dcm",)
-COMING_IN = (*NIFTI, *DICOM, ".hdr", ".img", ".nrrd", ".nhdr")
+COMING_IN = (*NIFTI, *DICOM, ".hdr", ".img", ".hdr.gz", ".img.gz", ".nrrd", ".nhdr")
 _OF_NUMBERS = (ImageVolume, VectorVolume, TensorVolume)
 
 
