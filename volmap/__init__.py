@@ -49,6 +49,7 @@ _HOME = {
     "export_surfaces": "pipeline",
     "loop_error": "carry",
     "map_pair": "pipeline",
+    "measure_map": "pipeline",
     "mend": "screen",
     "mesh": "mesh",
     "read_image": "io.volumes",
@@ -66,6 +67,7 @@ _HOME = {
     "write_landmarks": "io.landmarks",
     "write_map": "pipeline",
     "write_measurements": "io.measurements",
+    "write_table": "io.tables",
     "write_mesh_fields": "io.mesh_fields",
     "write_polylines": "io.polylines",
 }

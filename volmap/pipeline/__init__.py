@@ -15,7 +15,7 @@ from volmap.pipeline.files import (
 from volmap.pipeline.loops import MEANING as LOOP_MEANING
 from volmap.pipeline.loops import Loop, loop_folders
 from volmap.pipeline.machine import use_threads
-from volmap.pipeline.measuring import Measured, measure_files, measure_folder
+from volmap.pipeline.measuring import Measured, measure_files, measure_folder, measure_map
 from volmap.pipeline.opinion import SecondOpinion, certify_folder, evidence_of
 from volmap.pipeline.pair import MapJob, map_pair
 from volmap.pipeline.reporting import affine_baseline, report_of, write_map
@@ -44,6 +44,7 @@ __all__ = [
     "map_pair",
     "measure_files",
     "measure_folder",
+    "measure_map",
     "mend_file",
     "mesh_file",
     "report_folder",

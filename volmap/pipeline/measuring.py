@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Literal
 
@@ -87,6 +87,35 @@ def measure_folder(
     progress("read", 0, 0, path.absolute().name)
     folder = read_map_folder(path)
     drawn, side, findings = _drawn(folder, regions, belongs_to, reading)
+    measured = measure_map(folder, drawn=drawn, side=side, each=each, long=long, progress=progress)
+    return replace(measured, findings=(*findings, *measured.findings))
+
+
+def measure_map(
+    folder: MapFolder,
+    *,
+    drawn: LabelVolume | None = None,
+    side: Side = "source",
+    each: Each = "region",
+    long: bool = False,
+    progress: Progress = silent,
+) -> Measured:
+    """As `measure_folder`, of a map folder in memory, just made or read back.
+
+    Parameters
+    ----------
+    folder : MapFolder
+    drawn : LabelVolume, optional
+        Regions, on any grid in the world of `side`; the labels of the map when None.
+    side : 'source' or 'target'
+    each, long, progress
+        As in `measure_folder`.
+
+    Raises
+    ------
+    InputError
+        No region in `drawn`.
+    """
     progress("measure", 0, 3, "reliability")
     residuals = _residuals(folder)
     reliable = _reliability(folder, residuals)
@@ -104,7 +133,7 @@ def measure_folder(
         table = measuring.long_form(table) if long else table
     progress("measure", 2, 3, "mask")
     mask = reliable.on_grid(folder.map.mesh, folder.source.grid)
-    return Measured(table, mask, verdict, (*findings, *_warnings(reliable, verdict)))
+    return Measured(table, mask, verdict, tuple(_warnings(reliable, verdict)))
 
 
 def measure_files(
