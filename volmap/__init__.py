@@ -23,6 +23,7 @@ _HOME = {
     "GridField": "types",
     "ImageVolume": "types",
     "InputError": "types",
+    "LabelShares": "types",
     "LabelVolume": "types",
     "LandmarkPairs": "types",
     "Landmarks": "types",
@@ -39,7 +40,9 @@ _HOME = {
     "Rule": "types",
     "Rules": "types",
     "Surface": "types",
+    "TensorVolume": "types",
     "TetMesh": "types",
+    "VectorVolume": "types",
     "VolumeMap": "types",
     "carry": "carry",
     "certify_folder": "pipeline",
@@ -52,6 +55,7 @@ _HOME = {
     "measure_map": "pipeline",
     "mend": "screen",
     "mesh": "mesh",
+    "read_components": "io.nifti_components",
     "read_image": "io.volumes",
     "read_labels": "io.volumes",
     "read_landmarks": "io.landmarks",
@@ -70,6 +74,9 @@ _HOME = {
     "write_table": "io.tables",
     "write_mesh_fields": "io.mesh_fields",
     "write_polylines": "io.polylines",
+    "write_shares": "io.nifti_components",
+    "write_tensors": "io.nifti_components",
+    "write_vectors": "io.nifti_components",
 }
 __all__ = sorted(_HOME)
 

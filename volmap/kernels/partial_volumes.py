@@ -55,6 +55,9 @@ _TOUCHING = 1e-11
 # A voxel and a tet that share less than this, as a barycentric coordinate, share nothing.
 _NOTHING = 1e-13
 
+# Ranges of no more than one voxel and this many are cut where that leaves fewest pieces.
+_FEW = 3
+
 _UNSEEN, _MIXED = -2, -1  # states of a voxel; from 0 on: the one label seen in it so far
 _AT_HULL, _CENTRE_INSIDE = 1, 2  # bits of a voxel's place in the mesh
 _SLAB = 16
@@ -201,7 +204,12 @@ def _visit(  # type: ignore[no-untyped-def]
     cutting = shares.shape[0] > 0
     gradient, half, at, away = np.empty((4, 3)), np.empty(4), np.empty(4), np.empty(3)
     back, box, centre = np.empty((3, 3)), np.empty((3, 3)), np.empty(3)
-    ends, order = np.empty((2, 3), np.int64), np.empty(4, np.int64)
+    ends, order, height, piece = (
+        np.empty((2, 3), np.int64),
+        np.empty(4, np.int64),
+        np.empty(4),
+        np.empty((4, 3)),
+    )
     stack, spare, corners = np.empty((_ROOM, 4, 3)), np.empty((_ROOM, 4, 3)), np.empty((6, 3))
     for p in range(first, last):
         for m in range(start[begin + p], start[begin + p + 1]):
@@ -225,10 +233,12 @@ def _visit(  # type: ignore[no-untyped-def]
                         for e in range(3):
                             centre[d] += back[d, e] * away[e]
                     if cutting:
-                        n = _in_tet(gradient, half, at, order, corners, stack, spare)
+                        n = _in_tet(gradient, half, at, height, order, corners, stack, spare)
                         for q in range(n):
                             _to_origin(stack[q], centre, back, spare[0])
-                            _share_out(codes, order, corners, ends, spare, per_volume, shares[now])
+                            _share_out(
+                                codes, height, order, corners, ends, piece, spare, per_volume, shares[now]
+                            )
                         continue
                     place[p, j, k] |= where
                     for d in range(3):
@@ -241,13 +251,18 @@ def _visit(  # type: ignore[no-untyped-def]
 @kernel
 def _cut_tets(first, last, points, tets, codes, shares):  # type: ignore[no-untyped-def]
     """Volume of each tet in the voxels of each code."""
-    ends, order = np.empty((2, 3), np.int64), np.empty(4, np.int64)
+    ends, order, height, piece = (
+        np.empty((2, 3), np.int64),
+        np.empty(4, np.int64),
+        np.empty(4),
+        np.empty((4, 3)),
+    )
     stack, corners = np.empty((_ROOM, 4, 3)), np.empty((6, 3))
     for t in range(first, last):
         for v in range(4):
             for d in range(3):
                 stack[0, v, d] = points[tets[t, v], d]
-        _share_out(codes, order, corners, ends, stack, 1.0 / 6.0, shares[t])
+        _share_out(codes, height, order, corners, ends, piece, stack, 1.0 / 6.0, shares[t])
 
 
 @inner_kernel
@@ -298,7 +313,7 @@ def _where(gradient, half, away, at_hull, t, at):  # type: ignore[no-untyped-def
 
 
 @inner_kernel
-def _in_tet(gradient, half, at, order, corners, stack, spare):  # type: ignore[no-untyped-def]
+def _in_tet(gradient, half, at, height, order, corners, stack, spare):  # type: ignore[no-untyped-def]
     """Cut a voxel with a tet: pieces on `stack`, from the voxel's centre; returns their number."""
     n = 5
     for q in range(n):
@@ -310,7 +325,11 @@ def _in_tet(gradient, half, at, order, corners, stack, spare):  # type: ignore[n
             continue
         left = 0
         for q in range(n):
-            left = _keep(stack[q], gradient[r], at[r], 1.0, order, corners, spare, left)
+            for v in range(4):
+                height[v] = at[r]
+                for d in range(3):
+                    height[v] += gradient[r, d] * stack[q, v, d]
+            left = _keep(stack[q], height, order, corners, spare, left)
         n = left
         for q in range(n):
             for v in range(4):
@@ -330,24 +349,24 @@ def _to_origin(piece, centre, back, moved):  # type: ignore[no-untyped-def]
 
 
 @inner_kernel
-def _share_out(codes, order, corners, ends, stack, per_volume, shares):  # type: ignore[no-untyped-def]
+def _share_out(codes, height, order, corners, ends, piece, stack, per_volume, shares):  # type: ignore[no-untyped-def]
     """Cut the piece on `stack` between source voxels until each part lies in voxels of one label; add up."""
-    normal, piece, waiting = np.zeros(3), np.empty((4, 3)), 1
+    waiting = 1
     while waiting > 0:
         waiting -= 1
         for v in range(4):
             for d in range(3):
                 piece[v, d] = stack[waiting, v, d]
-        axis = _range(piece, ends)
+        _range(piece, ends)
         found = _only(codes, ends)
         if found >= 0:
             shares[found] += _six_volumes(piece) * per_volume
             continue
-        height = -0.5 - (ends[0, axis] + ends[1, axis]) // 2
-        normal[axis] = 1.0
-        waiting = _keep(piece, normal, height, 1.0, order, corners, stack, waiting)
-        waiting = _keep(piece, normal, height, -1.0, order, corners, stack, waiting)
-        normal[axis] = 0.0
+        axis, plane = _cut_between(codes, ends)
+        for side in range(2):
+            for v in range(4):
+                height[v] = piece[v, axis] - plane if side else plane - piece[v, axis]
+            waiting = _keep(piece, height, order, corners, stack, waiting)
 
 
 @inner_kernel
@@ -369,18 +388,41 @@ def _only(codes, ends):  # type: ignore[no-untyped-def]
 
 
 @inner_kernel
+def _cut_between(codes, ends):  # type: ignore[no-untyped-def]
+    """Axis and place of the plane that leaves most voxels of a range on sides of one label, else the middle.
+
+    Long ranges are halved without trying all planes.
+    """
+    axis, most = 0, 0
+    for d in range(3):
+        if ends[1, d] - ends[0, d] > ends[1, axis] - ends[0, axis]:
+            axis = d
+    plane = (ends[0, axis] + ends[1, axis]) // 2
+    if ends[1, axis] - ends[0, axis] > _FEW:
+        return axis, plane + 0.5
+    for d in range(3):
+        bottom, top = ends[0, d], ends[1, d]
+        for p in range(bottom, top):
+            ends[1, d] = p
+            alike = p + 1 - bottom if _only(codes, ends) >= 0 else 0
+            ends[0, d], ends[1, d] = p + 1, top
+            alike += top - p if _only(codes, ends) >= 0 else 0
+            ends[0, d] = bottom
+            share = alike * 1000 // (top + 1 - bottom)  # of the voxels of the range
+            if share > most:
+                axis, plane, most = d, p, share
+    return axis, plane + 0.5
+
+
+@inner_kernel
 def _range(piece, ends):  # type: ignore[no-untyped-def]
-    """First and last voxel that a piece meets along each axis; returns the axis with the most of them."""
-    axis = 0
+    """First and last voxel that a piece meets along each axis."""
     for d in range(3):
         least = most = piece[0, d]
         for v in range(1, 4):
             least, most = min(least, piece[v, d]), max(most, piece[v, d])
         ends[0, d] = np.floor(least + 0.5 + _TOUCHING)
         ends[1, d] = max(ends[0, d], np.int64(np.ceil(most - 0.5 - _TOUCHING)))
-        if ends[1, d] - ends[0, d] > ends[1, axis] - ends[0, axis]:
-            axis = d
-    return axis
 
 
 @inner_kernel
@@ -396,30 +438,30 @@ def _six_volumes(piece):  # type: ignore[no-untyped-def]
 
 
 @inner_kernel
-def _keep(piece, normal, offset, sign, order, corners, stack, n):  # type: ignore[no-untyped-def]
-    """Put on a stack of n tets what of a tet lies on one side of a plane; returns how many it holds.
+def _keep(piece, height, order, corners, stack, n):  # type: ignore[no-untyped-def]
+    """Put on a stack of n tets what of a tet lies where its corners' heights say above 0; returns its size.
 
-    The side is where ``sign * (normal . x + offset) > 0``.
+    What is thinner than `_NOTHING` is left out: it is rounding, of planes that pass through corners.
     """
-    kept, others = 0, 3
+    kept, others, highest = 0, 3, 0.0
     for v in range(4):
-        if sign * _height(piece[v], normal, offset) > 0.0:
+        if height[v] > 0.0:
             order[kept] = v
             kept += 1
+            highest = max(highest, height[v])
         else:
             order[others] = v
             others -= 1
-    if kept == 0:
+    if highest < _NOTHING:
         return n
     if kept == 4:
         for v in range(4):
             for d in range(3):
                 stack[n, v, d] = piece[v, d]
         return n + 1
-    for c in range(6):
+    for c in range(4 if kept == 1 else 6):
         u, v = order[_ENDS[kept - 1, c, 0]], order[_ENDS[kept - 1, c, 1]]
-        here, there = _height(piece[u], normal, offset), _height(piece[v], normal, offset)
-        share = 0.0 if u == v else here / (here - there)
+        share = 0.0 if u == v else height[u] / (height[u] - height[v])
         for d in range(3):
             corners[c, d] = piece[u, d] + share * (piece[v, d] - piece[u, d])
     for q in range(1 if kept == 1 else 3):
@@ -429,12 +471,3 @@ def _keep(piece, normal, offset, sign, order, corners, stack, n):  # type: ignor
                 stack[n, v, d] = corners[c, d]
         n += 1
     return n
-
-
-@inner_kernel
-def _height(point, normal, offset):  # type: ignore[no-untyped-def]
-    """How far a point lies beyond a plane, in lengths of the normal."""
-    total = offset
-    for d in range(3):
-        total += normal[d] * point[d]
-    return total
