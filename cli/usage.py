@@ -11,24 +11,7 @@ class UsageError(Exception):
     """Options that do not go together, or name nothing; the sentence says what would be right."""
 
 
-def positive_mm(text: str) -> float:
-    """A length above 0, for argparse.
-
-    Raises
-    ------
-    argparse.ArgumentTypeError
-        No number, not finite, or not above 0.
-    """
-    try:
-        value = float(text)
-    except ValueError:
-        value = math.nan
-    if not 0.0 < value < math.inf:
-        raise argparse.ArgumentTypeError(f"{text!r} is not a length above 0 mm")
-    return value
-
-
-def positive_number(text: str) -> float:
+def positive_number(text: str, *, what: str = "a number above 0") -> float:
     """A number above 0, for argparse.
 
     Raises
@@ -41,8 +24,13 @@ def positive_number(text: str) -> float:
     except ValueError:
         value = math.nan
     if not 0.0 < value < math.inf:
-        raise argparse.ArgumentTypeError(f"{text!r} is not a number above 0")
+        raise argparse.ArgumentTypeError(f"{text!r} is not {what}")
     return value
+
+
+def positive_mm(text: str) -> float:
+    """A length above 0, for argparse; raises as `positive_number`."""
+    return positive_number(text, what="a length above 0 mm")
 
 
 def whole_number(least: int) -> Callable[[str], int]:
