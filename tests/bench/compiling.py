@@ -1,9 +1,12 @@
-"""What compiling costs: ``python tests/bench/compiling.py [--edge MM] [--rows N]``.
+"""What compiling costs: ``python tests/bench/compiling.py [--processes N] [--edge MM] [--rows N]``.
 
 Runs ``volmap map A B --out m`` (gel-column, few tets) in a fresh process with an empty cache of compiled
-kernels, then once more in another process with the cache the first one left.  Seconds are those of the
-processor of the main thread, where all compiling happens, so that other work on the machine hardly enters;
-they come from numba's own events.  The result is printed and stored in ``tests/bench/compiling.json``.
+kernels, then once more in another process with the cache the first one left.  The first run compiles in as
+many processes as it has cores (``--processes``) before it begins: told are its wall time and the processor
+time of all of them.  What this process compiles comes from numba's own events, in processor seconds of the
+main thread, so that other work on the machine hardly enters; with one process that is every kernel, and the
+share of each family (`volmap.kernels.first_use`) is printed.  The result is printed and stored in
+``tests/bench/compiling.json``.
 """
 
 from __future__ import annotations
@@ -92,6 +95,12 @@ def yardstick() -> float:
     return time.thread_time() - begin
 
 
+def _processor_s() -> float:
+    """Processor seconds of this process and of those it has waited for."""
+    spent = os.times()
+    return spent.user + spent.system + spent.children_user + spent.children_system
+
+
 def child(out: Path, arguments: list[str]) -> None:
     """Run the command in this process and write what compiling cost it."""
     begin = time.process_time()
@@ -103,7 +112,21 @@ def child(out: Path, arguments: list[str]) -> None:
     from numba.core.dispatcher import Dispatcher
     from volmap_cli.main import main
 
+    from volmap.kernels import first_use
+
     yardsticks = [yardstick()]
+    begin_wall, begin_processor = time.perf_counter(), _processor_s()
+    missing = first_use.not_compiled_yet()
+    shares = {}
+    if int(numba.get_num_threads()) == 1:
+        for number in missing:
+            before = _processor_s()
+            first_use.compile_families([number])
+            shares[str(number)] = _processor_s() - before
+    elif missing:
+        first_use.compile_on_all_cores(missing)
+    before_all = {"wall_s": time.perf_counter() - begin_wall, "processor_s": _processor_s() - begin_processor}
+    compiled_before = ledger.compiled
     begin = time.process_time()
     status = main(arguments)
     spent = time.process_time() - begin
@@ -123,6 +146,8 @@ def child(out: Path, arguments: list[str]) -> None:
         "yardstick_s": yardsticks,
         "import_numba_s": imported,
         "command_cpu_s": spent,
+        "before_all": before_all | {"families_s": shares},
+        "compiled_when_called_s": ledger.compiled - compiled_before,
         "compiling_s": ledger.compiled,
         "loading_or_storing_s": ledger.bracketed - ledger.compiled,
         "functions_compiled": len(ledger.count),
@@ -138,9 +163,9 @@ def child(out: Path, arguments: list[str]) -> None:
     out.write_text(json.dumps(document))
 
 
-def _run(folder: Path, name: str, arguments: list[str]) -> dict:
+def _run(folder: Path, name: str, arguments: list[str], processes: int) -> dict:
     out = folder / f"{name}.json"
-    environment = os.environ | {"NUMBA_CACHE_DIR": str(folder / "cache"), "NUMBA_NUM_THREADS": "1"}
+    environment = os.environ | {"NUMBA_CACHE_DIR": str(folder / "cache"), "NUMBA_NUM_THREADS": str(processes)}
     command = [sys.executable, __file__, "--child", str(out), *arguments, "--out", str(folder / name)]
     with (folder / f"{name}.log").open("w") as log:
         subprocess.run(command, env=environment, check=False, stdout=log, stderr=log)
@@ -149,7 +174,7 @@ def _run(folder: Path, name: str, arguments: list[str]) -> dict:
     return json.loads(out.read_text())
 
 
-def measure(edge_mm: float) -> dict:
+def measure(edge_mm: float, processes: int) -> dict:
     """Both runs on a small pair."""
     with tempfile.TemporaryDirectory() as temporary:
         folder = Path(temporary)
@@ -169,10 +194,14 @@ def measure(edge_mm: float) -> dict:
         )
         scans = [str(folder / "scans" / f"visit{i}_labels.nii.gz") for i in (0, 1)]
         arguments = ["map", *scans, "--edge", str(edge_mm)]
-        first, second = (_run(folder, name, arguments) for name in ("first", "second"))
+        first, second = (_run(folder, name, arguments, processes) for name in ("first", "second"))
         held = [f for f in (folder / "cache").rglob("*") if f.is_file()]
         size_mb = sum(f.stat().st_size for f in held) / 1e6
-    return {"processor": platform.processor() or platform.machine(), "cache_mb": size_mb} | {
+    return {
+        "processes": processes,
+        "processor": platform.processor() or platform.machine(),
+        "cache_mb": size_mb,
+    } | {
         "first": first,
         "second": second | {"dearest": second["dearest"][:10]},
     }
@@ -182,8 +211,11 @@ def show(result: dict, rows: int) -> None:
     """Print both runs and the dearest functions."""
     for name in ("first", "second"):
         run = result[name]
+        ahead = run["before_all"]
         print(
-            f"{name:>6}: compiling {run['compiling_s']:.2f} s, "
+            f"{name:>6}: compiling before all {ahead['wall_s']:.2f} s wall, {ahead['processor_s']:.2f} s of "
+            f"all processes; when called {run['compiled_when_called_s']:.2f} s; "
+            f"in the main process {run['compiling_s']:.2f} s, "
             f"loading or storing {run['loading_or_storing_s']:.2f} s, "
             f"yardstick {sum(run['yardstick_s']) / 2:.3f} s, "
             f"import numba {run['import_numba_s']:.2f} s, whole command {run['command_cpu_s']:.2f} s; "
@@ -192,6 +224,9 @@ def show(result: dict, rows: int) -> None:
         )
     print(f"cache: {result['cache_mb']:.1f} MB; {result['first']['own_functions']} kernels of our own")
     print("compiled more than once:", result["first"]["own_more_than_once"])
+    seconds = result["first"]["before_all"]["families_s"]
+    for number, spent in seconds.items():
+        print(f"family {number}: {spent:6.2f} s, {100 * spent / sum(seconds.values()):3.0f} %")
     for row in result["first"]["dearest"][:rows]:
         print(f"{row['own_s']:8.3f} s  {row['times']:3d} x  {row['function']}")
 
@@ -202,8 +237,9 @@ if __name__ == "__main__":
         sys.exit()
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--edge", type=float, default=6.0, help="mesh edge, mm")
+    parser.add_argument("--processes", type=int, default=len(os.sched_getaffinity(0)))
     parser.add_argument("--rows", type=int, default=40, help="functions to print")
     options = parser.parse_args()
-    measured = measure(options.edge)
+    measured = measure(options.edge, options.processes)
     show(measured, options.rows)
     (HERE / "compiling.json").write_text(json.dumps(measured, indent=1) + "\n")

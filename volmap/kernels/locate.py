@@ -5,11 +5,10 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from volmap.kernels.barycentric import INSIDE, barycentric_rows, plain
-from volmap.kernels.compiled import kernel
+from volmap.kernels.compiled import inner_kernel, kernel
 from volmap.kernels.threads import on_threads
 
 Floats = NDArray[np.float64]
@@ -147,7 +146,7 @@ def _blend(
         found[part][tet[part] < 0] = np.nan
 
 
-@njit(cache=True, inline="always")
+@inner_kernel
 def _box_range(points, tets, t, origin, width, counts, first, last):  # type: ignore[no-untyped-def]
     """First and last box, along each axis, that the tet's own box meets."""
     for d in range(3):
@@ -159,7 +158,7 @@ def _box_range(points, tets, t, origin, width, counts, first, last):  # type: ig
         last[d] = min(max(int(np.floor((high + slack - origin[d]) / width)), 0), counts[d] - 1)
 
 
-@njit(cache=True, inline="always")
+@inner_kernel
 def _misses(rows, t, x, y, z, half):  # type: ignore[no-untyped-def]
     """True when the box of that centre lies wholly beyond one face of the tet."""
     rest, gx, gy, gz = 1.0, 0.0, 0.0, 0.0
@@ -233,7 +232,7 @@ def _search(  # type: ignore[no-untyped-def]
             barycentric[q, 0] = rest
 
 
-@njit(cache=True, inline="always")
+@inner_kernel
 def _coordinate(rows, t, r, x, y, z):  # type: ignore[no-untyped-def]
     """Barycentric coordinate ``1 + r`` of a place in tet t."""
     return (
@@ -243,7 +242,7 @@ def _coordinate(rows, t, r, x, y, z):  # type: ignore[no-untyped-def]
     )
 
 
-@njit(cache=True, inline="always")
+@inner_kernel
 def _smallest(rows, t, x, y, z):  # type: ignore[no-untyped-def]
     """Smallest of the four coordinates of a place in tet t; NaN in a tet without volume."""
     a = _coordinate(rows, t, 0, x, y, z)

@@ -12,11 +12,10 @@ from collections.abc import Iterator
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from volmap.kernels.barycentric import INSIDE, barycentric_rows, plain
-from volmap.kernels.compiled import kernel
+from volmap.kernels.compiled import inner_kernel, kernel
 from volmap.kernels.threads import on_threads
 
 # Planes given out at a time by `values_by_slab`.
@@ -172,7 +171,7 @@ def tets_by_plane(low, high, n_planes):  # type: ignore[no-untyped-def]
     return start, members
 
 
-@njit(cache=True, inline="always")
+@inner_kernel
 def _enter(rows, t, i, line, edge):  # type: ignore[no-untyped-def]
     """Cut tet t with plane i.
 
@@ -191,7 +190,7 @@ def _enter(rows, t, i, line, edge):  # type: ignore[no-untyped-def]
         edge[r, 0], edge[r, 1] = (INSIDE - line[r, 0]) * scale, -line[r, 1] * scale
 
 
-@njit(cache=True, inline="always")
+@inner_kernel
 def _run(line, edge, j, low, high):  # type: ignore[no-untyped-def]
     """First and last k of a row between low and high at which no coordinate is below INSIDE."""
     first, last = float(low), float(high)

@@ -22,7 +22,7 @@ from volmap.io.volumes import read_image, read_labels_with_findings
 from volmap.io.vtk_xml import write_mesh
 from volmap.mapfolder import CERTIFICATE, REPORT, MapFolder, read_certificate, read_map_folder
 from volmap.mesh import MeshResult, MeshSettings
-from volmap.pipeline.machine import announce_compiling
+from volmap.pipeline.machine import compile_at_first_use
 from volmap.pipeline.pair import MapJob, map_pair
 from volmap.pipeline.places import NIFTI, require_name
 from volmap.pipeline.reporting import report_of, write_map
@@ -150,7 +150,7 @@ def mesh_file(
     """
     require_name(out, (".vtu",))
     require_place(out, overwrite=overwrite, folder=False)
-    announce_compiling(progress)
+    compile_at_first_use(progress, "mesh")
     if path.suffix.lower() in MESH_ENDINGS:
         points, triangles = read_closed_surface(path)
         result = meshing.mesh_surface(points, triangles, settings, name=path.name)

@@ -10,16 +10,18 @@ import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 
-from volmap.kernels.first_use import not_compiled_yet
+from volmap.kernels.first_use import compile_on_all_cores, not_compiled_yet
 from volmap.types import InputError, Progress
 
 PACKAGES = ("volmap", "numpy", "scipy", "numba", "scikit-image", "nibabel", "vtk")
 
 
-def announce_compiling(progress: Progress) -> None:
-    """Say so when kernels have to be compiled first."""
-    if not_compiled_yet():
-        progress("compile", 0, 0, "compiling the kernels, once per machine (about a minute)")
+def compile_at_first_use(progress: Progress, *stages: str) -> None:
+    """Compile what 'mesh' and 'map' need, on all cores, where this machine has not done so; say so."""
+    missing = not_compiled_yet(stages)
+    if missing:
+        progress("compile", 0, 0, "compiling the kernels, once per machine (about half a minute)")
+        compile_on_all_cores(missing)
 
 
 class Stopwatch:

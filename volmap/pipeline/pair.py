@@ -16,7 +16,7 @@ from volmap.mapfolder import MapFolder
 from volmap.mapping import Bodies, Coupling, MapSettings, MirrorTrial, Solved, couple, map_mesh
 from volmap.mesh import MeshLevels, MeshResult, MeshSettings
 from volmap.pipeline.at_once import on_both
-from volmap.pipeline.machine import Stopwatch, announce_compiling, peak_mb, use_threads, versions
+from volmap.pipeline.machine import Stopwatch, compile_at_first_use, peak_mb, use_threads, versions
 from volmap.pipeline.mirroring import mirror_compared, mirror_document, mirror_findings
 from volmap.pipeline.opinion import evidence_of
 from volmap.pipeline.told import distortion_of, mesh_document, scan_document, sidecars_of
@@ -128,7 +128,7 @@ def map_pair(
         elsewhere.
     """
     job = job or MapJob()
-    announce_compiling(progress)
+    compile_at_first_use(progress, "mesh", "map")
     watch = Stopwatch()
     table = certifying.read_gate_table(job.gates)
     with watch.measuring("screen"):
