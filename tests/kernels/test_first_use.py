@@ -23,7 +23,7 @@ job = pipeline.MapJob(mesh=pipeline.MeshSettings(wanted_tets=4000))
 pipeline.map_files(Path(sys.argv[1]), Path(sys.argv[2]), Path(sys.argv[3]), job)
 called = set()
 for kernel in gc.get_objects():
-    if isinstance(kernel, Dispatcher) and kernel.targetoptions.get("cache") is None:
+    if isinstance(kernel, Dispatcher):
         function = kernel.py_func
         if function.__module__.startswith("volmap.") and hasattr(kernel._cache, "_cache_file"):
             called |= {(f"{function.__module__}.{function.__qualname__}", s) for s in kernel.signatures}
