@@ -330,5 +330,5 @@ def _warnings(reliable: Reliability, verdict: Verdict) -> Sequence[Finding]:
         found.append(Finding(Level.WARN, "failed-map", "the map", sentence, remedy))
     if not reliable.tets.all():
         sentence = f"{int((~reliable.tets).sum())} of {len(reliable.tets)} tets are not reliable"
-        found.append(Finding(Level.NOTE, "not-reliable", "the map", sentence, "volmap guide measures"))
+        found.append(Finding(Level.NOTE, "not-reliable", "the map", sentence, "see volmap guide measures"))
     return found
