@@ -101,6 +101,6 @@ def digest(voxels: NDArray[np.generic], affine: NDArray[np.float64]) -> str:
     """SHA-256 of shape, voxels (first index fastest) and affine (as float32, which is what NIfTI-1 keeps)."""
     h = hashlib.sha256()
     h.update(np.array(voxels.shape, "<i8").tobytes())
-    h.update(np.asfortranarray(voxels).tobytes(order="F"))
+    h.update(np.ascontiguousarray(voxels.T).data)
     h.update((affine.astype("<f4") + np.float32(0.0)).tobytes())
     return h.hexdigest()
