@@ -202,6 +202,7 @@ def _uses(out):
     things = {
         "points.csv": ("points.csv", []),
         "measured.csv": ("measured.csv", ["--rule", "value"]),
+        "measured.csv ": ("measured.parquet", ["--rule", "value"]),
         "mesh.vtu": ("carried.vtu", []),
         "lines.csv": ("lines.csv", []),
         "lines.csv ": ("lines.vtp", []),
