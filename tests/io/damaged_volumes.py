@@ -7,7 +7,7 @@ import zlib
 
 import nibabel as nib
 import numpy as np
-from damaged_case import Case, cut, put, screened, zeros_packed
+from damaged_case import HERE, Case, cut, put, screened, zeros_packed
 from sound_files import nifti_bytes, nrrd_bytes, pack, pair_bytes
 
 # offsets of the official nifti1.h and nifti2.h
@@ -203,4 +203,32 @@ def nrrd_cases(folder):
         "huge": (line(header, "sizes", "9000 9000 9000"), voxels),
     }
     cases += [Case(f"nhdr/{k}", {"x.nhdr": h, "x.raw": v}, screened("x.nhdr")) for k, (h, v) in apart.items()]
+    return cases
+
+
+def component_cases(through):
+    """Vectors and tensors: cut short, more or fewer components than claimed, fields, damaged numbers."""
+    grid = np.diag([2.0, 2, 2, 1])
+    cases = []
+    for kind, intent, n in (("vectors", 1007, 3), ("tensors", 1005, 6)):
+        image = nib.Nifti1Image(np.ones((8, 7, 6, 1, n), np.float32), grid)
+        image.header["intent_code"] = intent
+        image.header.set_xyzt_units("mm")
+        sound = image.to_bytes()
+        unreadable = {f"cut at {share}": cut(sound, share) for share in (0.02, 0.3, 0.99)}
+        unreadable["one byte less"] = sound[:-1]
+        unreadable["one component more"] = put(sound, 50, "<h", n + 1)
+        unreadable["one component less"] = put(sound, 50, "<h", n - 1)
+        unreadable["affine NaN"] = put(sound, 280, "<f", np.nan)
+        refused = {
+            "infinite": put(sound, 356, "<f", np.inf),
+            "half defined": put(sound, 356, "<f", np.nan),
+            "a field": put(sound, 68, "<h", 1006),
+            "of another kind": put(sound, 68, "<h", 1005 if n == 3 else 1007),
+        }
+        for told, status in ((unreadable, (3, 1)), (refused, (1,))):
+            for name, data in told.items():
+                arguments = ["carry", f"{HERE}/x.nii", "--through", through, "--out", f"{HERE}/out.nii"]
+                arguments += ["--as", kind, "--rule", "turn", "--belongs-to", "source", "--quiet"]
+                cases.append(Case(f"{kind}/{name}", {"x.nii": data}, arguments, statuses=status))
     return cases

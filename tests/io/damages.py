@@ -18,7 +18,7 @@ from damaged_meshes import (
     surface_cases,
 )
 from damaged_tables import field_cases, map_folder_cases, table_cases
-from damaged_volumes import nifti_cases, nrrd_cases, pair_cases
+from damaged_volumes import component_cases, nifti_cases, nrrd_cases, pair_cases
 from sound_files import dicom_segmentation_bytes, nifti_bytes, nrrd_bytes, pack
 
 SEED = 20240229
@@ -56,6 +56,7 @@ def all_cases(folder, *, source, target, through, flips=60):
     cases = [
         *nifti_cases(),
         *pair_cases(),
+        *component_cases(through),
         *nrrd_cases(folder),
         *segmentation_cases(folder),
         *series_cases(folder, source, target),

@@ -72,7 +72,7 @@ def test_three_hundred_of_them_over_all_readers_are_unreadable(outcomes):
     assert sum(counted.values()) >= LEAST
     readers = (
         "nifti1 nifti2 pair nrrd nhdr segmentation series vtu vtk stl ply off obj boundary landmarks guides "
-        "names vtp lines measurements gates field"
+        "names vtp lines measurements gates field vectors tensors"
     )
     readers = {*readers.split(), "nifti1 packed", "map folder", "vtk text", "vtp lines"}
     assert readers <= set(counted)

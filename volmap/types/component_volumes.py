@@ -76,7 +76,12 @@ def _require_whole(values: NDArray[np.float32], name: str) -> None:
     """Refuse infinite components, and voxels that have some components only."""
     for plane in values:  # nothing of the grid's size is made
         if np.isinf(plane).any():
-            raise InputError("holds infinite components", where=name, refused=True)
+            raise InputError("holds infinite components", where=name, remedy=_NO_VALUE, refused=True)
         holes = np.isnan(plane)
         if (holes.any(axis=-1) != holes.all(axis=-1)).any():
-            raise InputError("holds voxels with some components only", where=name, refused=True)
+            raise InputError(
+                "holds voxels with some components only", where=name, remedy=_NO_VALUE, refused=True
+            )
+
+
+_NO_VALUE = "write NaN for all components where there is no value"
