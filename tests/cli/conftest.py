@@ -29,7 +29,7 @@ def no_work(monkeypatch):
 
     for module, names in (
         (files, ("read_labels_with_findings", "map_pair")),
-        (carrying, ("read_volume_with_findings", "read_landmarks", "read_way")),
+        (carrying, ("read_volume_with_findings", "read_pointwise", "read_way")),
     ):
         for name in names:
             monkeypatch.setattr(module, name, worked)

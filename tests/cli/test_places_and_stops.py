@@ -141,7 +141,7 @@ def test_ctrl_c_leaves_nothing(stage, small_pair, tmp_path):
         (
             ["carry", "M/forward.nii.gz", "--through", "M", "--out", "x.nii"],
             1,
-            ["more than one volume", "frame"],
+            ["is a displacement field", "not a thing to carry"],
         ),
         (["mesh", "gone.stl", "--out", "x.vtu"], 3, ["gone.stl", "no such file"]),
         (["phantom", "gel-column", "--voxel", "5000", "--out", "x"], 3, ["0.3 to 10 mm"]),
