@@ -70,14 +70,12 @@ def volume_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--labels",
         choices=("nearest", "one-hot", "shares"),
-        default="nearest",
         help="of a label volume: the nearest voxel's label (default), the one with the largest trilinear "
         "indicator, or the one that fills most, with exact shares of all labels in OUT_shares.nii.gz",
     )
     parser.add_argument(
         "--image",
         choices=("linear", "cubic"),
-        default="linear",
         help="of images, vectors and tensors: trilinear (default) or cubic B-splines",
     )
     parser.add_argument(

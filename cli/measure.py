@@ -47,6 +47,8 @@ def run(options: argparse.Namespace, console: Console) -> int:
         raise UsageError(f"--each {options.each} goes with neither --regions nor --long")
     if options.belongs_to and not options.regions:
         raise UsageError("--belongs-to says where --regions were drawn, and none are given")
+    if not options.regions and any(v is not None for v in (options.names, options.frame, options.threshold)):
+        raise UsageError("--names, --frame and --threshold say how --regions are read, and none are given")
     from volmap import pipeline
     from volmap.types import Verdict
 

@@ -74,11 +74,6 @@ def test_onto_other_voxels(tmp_path, small_pair):
     assert "not-covered" not in {f.code for f in findings}
     told = json.loads((tmp_path / "finer.nii.gz.json").read_text(encoding="utf-8"))
     assert told["voxel_grid"] == "of fine.nii.gz, as the user asked"
-    (tmp_path / "p.csv").write_text("name,x_mm,y_mm,z_mm\na,0,0,0\n", encoding="utf-8")
-    with pytest.raises(InputError, match="only a volume"):
-        pipeline.carry_file(
-            tmp_path / "p.csv", small_pair.folder, tmp_path / "q.csv", onto=tmp_path / "fine.nii.gz"
-        )
 
 
 @pytest.mark.parametrize("reverse", [False, True])

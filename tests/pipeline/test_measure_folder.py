@@ -99,6 +99,10 @@ def test_the_scans_own_labels_are_known_by_their_digest(small_pair):
     labels = pipeline.measure_folder(small_pair.folder).table
     # drawn with voxels or as the map's tets: the same label to what voxels make of a boundary
     assert measured.table["volume_target_mm3"] == pytest.approx(labels["volume_target_mm3"], rel=0.05)
+    # law: no word of the user makes one scan's own labels those of the other
+    with pytest.raises(InputError, match="its digest says so") as refused:
+        pipeline.measure_folder(small_pair.folder, regions=small_pair.target, belongs_to="source")
+    assert refused.value.refused
 
 
 def test_a_failed_map_says_so_in_every_row_and_ends_with_1(small_pair, tmp_path, capsys):
@@ -145,6 +149,9 @@ def test_long_rows(small_pair, tmp_path):
     [
         (["--each", "tet", "--long"], "--each tet goes with neither"),
         (["--belongs-to", "source"], "none are given"),
+        (["--threshold", "0.5"], "none are given"),
+        (["--frame", "0"], "none are given"),
+        (["--names", "names.tsv"], "none are given"),
     ],
 )
 def test_options_that_do_not_go_together(small_pair, tmp_path, capsys, options, said):

@@ -114,12 +114,12 @@ def _places(field: GridField) -> tuple[NDArray[np.bool_], Floats]:
 
 
 def _labels(volume: LabelVolume, field: GridField, settings: CarrySettings) -> Carried:
-    if settings.labels == "shares":
+    if settings.label_mode == "shares":
         raise _needs_the_map("how much of each voxel a label fills", volume.name)
     known, places = _places(field)
     index = volume.grid.to_index(places)
     labels = np.zeros(field.grid.shape, np.uint16)
-    look = likeliest_labels if settings.labels == "one-hot" else nearest_labels
+    look = likeliest_labels if settings.label_mode == "one-hot" else nearest_labels
     labels[known] = look(volume.labels, index)
     labels.setflags(write=False)
     carried = LabelVolume(field.grid, labels, volume.names, volume.name, volume.codes)
@@ -134,7 +134,7 @@ def _image(volume: ImageVolume, field: GridField, settings: CarrySettings) -> Ca
     known, places = _places(field)
     index = volume.grid.to_index(places)
     values = np.full(field.grid.shape, np.nan, np.float32)
-    values[known] = interpolator(volume.values[..., None], settings.image)(index)[:, 0]
+    values[known] = interpolator(volume.values[..., None], settings.image_mode)(index)[:, 0]
     values.setflags(write=False)
     return Carried(ImageVolume(field.grid, values, volume.unit, volume.name), _covered(volume, index))
 

@@ -22,10 +22,10 @@ class CarrySettings:
         Points up to this far outside the body are carried with the nearest tet's affine map, and named in a
         finding.  Points farther out: landmarks and measurements are left out and named; a mesh or surface is
         refused.  None: a voxel of the scan a file is carried from (`Grid.voxel_mm`), else `REACH_MM`.
-    labels : 'nearest', 'one-hot' or 'shares'
-        How label volumes are carried (see `label_volumes.LABEL_SENTENCES`).
-    image : 'linear' or 'cubic'
-        How values between voxel centres are found (see `splines.interpolator`).
+    labels : 'nearest', 'one-hot' or 'shares', optional
+        How label volumes are carried (see `label_volumes.LABEL_SENTENCES`); nearest where nobody said.
+    image : 'linear' or 'cubic', optional
+        How values between voxel centres are found (see `splines.interpolator`); linear where nobody said.
     bends : bool
         Give polylines a point more wherever their image bends, so that it is exact between their points too.
     rules : Rules
@@ -34,8 +34,8 @@ class CarrySettings:
     """
 
     reach_mm: float | None = None
-    labels: LabelMode = "nearest"
-    image: ImageMode = "linear"
+    labels: LabelMode | None = None
+    image: ImageMode | None = None
     bends: bool = True
     rules: Rules = field(default_factory=Rules)
 
@@ -43,6 +43,16 @@ class CarrySettings:
     def reach(self) -> float:
         """`reach_mm`, or what it is where nobody said, mm."""
         return REACH_MM if self.reach_mm is None else self.reach_mm
+
+    @property
+    def label_mode(self) -> LabelMode:
+        """`labels`, or what it is where nobody said."""
+        return self.labels or "nearest"
+
+    @property
+    def image_mode(self) -> ImageMode:
+        """`image`, or what it is where nobody said."""
+        return self.image or "linear"
 
     def of_scan(self, voxel_mm: float) -> CarrySettings:
         """The same settings, with a reach of one voxel where none was said."""

@@ -122,10 +122,10 @@ def _carry_labels(
     settings: CarrySettings = AS_USUAL,
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
-    facts = {"labels": LABEL_SENTENCES[settings.labels]}
-    if settings.labels == "shares":
+    facts = {"labels": LABEL_SENTENCES[settings.label_mode]}
+    if settings.label_mode == "shares":
         return Carried(*label_shares(thing, directed, onto), facts)
-    labels = pull_labels(thing, directed, onto, mode=settings.labels, reach_mm=settings.reach)
+    labels = pull_labels(thing, directed, onto, mode=settings.label_mode, reach_mm=settings.reach)
     return Carried(*labels, facts)
 
 
@@ -140,8 +140,8 @@ def _carry_image(
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
     rule = require_rule(settings.rules.of_all or Rule.VALUE, 0, thing.name)
-    image = pull_image(thing, directed, onto, mode=settings.image, rule=rule, reach_mm=settings.reach)
-    return Carried(*image, _numbers(rule, 0, settings.image, thing.unit))
+    image = pull_image(thing, directed, onto, mode=settings.image_mode, rule=rule, reach_mm=settings.reach)
+    return Carried(*image, _numbers(rule, 0, settings.image_mode, thing.unit))
 
 
 @carry.register
@@ -155,8 +155,8 @@ def _carry_vectors(
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
     rule = _stated(settings.rules.of_all, thing.name, 1)
-    moved = pull_vectors(thing, directed, onto, mode=settings.image, rule=rule, reach_mm=settings.reach)
-    return Carried(*moved, _numbers(rule, 1, settings.image, thing.unit))
+    moved = pull_vectors(thing, directed, onto, mode=settings.image_mode, rule=rule, reach_mm=settings.reach)
+    return Carried(*moved, _numbers(rule, 1, settings.image_mode, thing.unit))
 
 
 @carry.register
@@ -170,8 +170,8 @@ def _carry_tensors(
 ) -> Carried:
     directed, onto = _directed(volume_map, reverse), _required(onto, thing.name)
     rule = _stated(settings.rules.of_all, thing.name, 2)
-    moved = pull_tensors(thing, directed, onto, mode=settings.image, rule=rule, reach_mm=settings.reach)
-    return Carried(*moved, _numbers(rule, 2, settings.image, thing.unit))
+    moved = pull_tensors(thing, directed, onto, mode=settings.image_mode, rule=rule, reach_mm=settings.reach)
+    return Carried(*moved, _numbers(rule, 2, settings.image_mode, thing.unit))
 
 
 def _directed(volume_map: VolumeMap, reverse: bool) -> VolumeMap:

@@ -28,11 +28,11 @@ from volmap.pipeline.volume_files import (
     facts_beside,
     holds_volume,
     how_taken,
-    require_meant,
     require_out,
     write_volume,
 )
 from volmap.pipeline.ways import Way, read_way
+from volmap.pipeline.without_effect import require_effect
 from volmap.types import (
     Finding,
     Grid,
@@ -90,8 +90,8 @@ def carry_file(
     Raises
     ------
     InputError
-        A file that cannot be read, belongs to another scan or does not lie on the body, or a place that is
-        taken.
+        A file that cannot be read, belongs to another scan or does not lie on the body, a place that is
+        taken, or something said that has no effect on this kind of thing.
     """
     require_name(out, _endings(thing))
     for place in (out, sidecar_place(out)):
@@ -99,7 +99,15 @@ def carry_file(
     progress("read", 0, 0, thing.name)
     loaded, findings = _loaded(thing, kind, reading, settings.rules)
     loaded, left_out = without_personal(loaded, told_name(thing))
-    require_meant(loaded, onto, reading)
+    require_effect(
+        loaded,
+        name=told_name(thing),
+        kind=kind,
+        settings=settings,
+        reading=reading,
+        onto=onto,
+        frame_uid=frame_uid,
+    )
     way = _read_through(through, loaded, reverse=reverse, progress=progress)
     require_holding(out, loaded)
     require_out(out, loaded, settings, overwrite=overwrite)

@@ -14,7 +14,7 @@ from volmap.io.json_documents import read_json
 from volmap.io.nifti import read_field
 from volmap.pipeline.belonging import KnownScan, Side
 from volmap.pipeline.places import NIFTI
-from volmap.types import Finding, Grid, GridField, InputError, Level
+from volmap.types import Finding, Grid, GridField, InputError, Level, UnsaidError
 
 SCHEMA = "volmap-field/1"
 
@@ -79,7 +79,7 @@ class FieldWay:
             Voxels other than the field's are asked for, or as `carry_by_field`.
         """
         if onto is not None:
-            raise InputError(
+            raise UnsaidError(
                 "a field carries volumes onto its own voxels",
                 where=self.name,
                 remedy="carry it through the map folder, or leave out --onto",

@@ -82,7 +82,8 @@ def measure_folder(
     Raises
     ------
     InputError
-        No map folder, regions that cannot be read, or that lie on neither scan's grid, or on both.
+        No map folder, regions that cannot be read, that lie on neither scan's grid, or on both, or that are
+        the labels of the scan they were not said to belong to.
     """
     progress("read", 0, 0, path.absolute().name)
     folder = read_map_folder(path)
@@ -174,8 +175,33 @@ def _drawn(
     if path is None:
         return None, "source", ()
     volume, findings = read_labels_with_findings(path, reading)
-    side = belongs_to or _side_of(folder, volume)
-    return volume, side, findings
+    if belongs_to is None:
+        return volume, _side_of(folder, volume), findings
+    return volume, belongs_to, (*findings, *_against(folder, volume, belongs_to))
+
+
+def _against(folder: MapFolder, volume: LabelVolume, said: Side) -> tuple[Finding, ...]:
+    """What speaks against the word of the user: voxels of the other scan; its digest is refused.
+
+    Raises
+    ------
+    InputError
+    """
+    own, other = (folder.source, folder.target) if said == "source" else (folder.target, folder.source)
+    found = set(digests_of(volume))
+    if other.sha256 in found and own.sha256 not in found:
+        raise InputError(
+            f"is the volume of {other.name} (its digest says so), and was said to belong to {own.name}",
+            where=volume.name,
+            remedy="leave out --belongs-to",
+            refused=True,
+        )
+    if own.sha256 in found or own.grid.same_place(volume.grid) or not other.grid.same_place(volume.grid):
+        return ()
+    sentence = (
+        f"has the voxel grid of {other.name}, and was measured in {own.name} because --belongs-to says so"
+    )
+    return (Finding(Level.WARN, "vouched-for", volume.name, sentence),)
 
 
 def _side_of(folder: MapFolder, volume: LabelVolume) -> Side:

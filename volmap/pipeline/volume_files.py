@@ -14,7 +14,6 @@ from volmap.io.dicom.uids import uids_of_scan
 from volmap.io.json_documents import json_text
 from volmap.io.nifti import write_image, write_labels
 from volmap.io.nifti_components import write_shares, write_tensors, write_vectors
-from volmap.io.reading import Reading
 from volmap.pipeline.places import NIFTI
 from volmap.types import (
     Finding,
@@ -78,26 +77,9 @@ def require_out(out: Path, thing: Any, settings: CarrySettings, *, overwrite: bo
             expected="a name that ends in .nii or .nii.gz",
             remedy="name a NIfTI file",
         )
-    if isinstance(thing, LabelVolume) and settings.labels == "shares":
+    if isinstance(thing, LabelVolume) and settings.label_mode == "shares":
         for place in (shares_place(out), _beside(shares_place(out))):
             require_place(place, overwrite=overwrite, folder=False)
-
-
-def require_meant(thing: Any, onto: Path | None, reading: Reading) -> None:
-    """Refuse what a user says of another kind of thing: it would have no effect.
-
-    Raises
-    ------
-    InputError
-    """
-    if onto is not None and not hasattr(thing, "grid"):
-        raise InputError("only a volume is carried onto voxels", where=onto.name, remedy="leave out --onto")
-    if reading.axes is not None and not isinstance(thing, VectorVolume | TensorVolume):
-        raise InputError(
-            "only vectors and tensors have components along axes",
-            found=f"--axes {reading.axes}",
-            remedy="leave out --axes, or say --as vectors or --as tensors",
-        )
 
 
 def facts_beside(out: Path, thing: Any, onto: Path | None) -> dict[str, Any]:
