@@ -1,6 +1,7 @@
 """Planted mistakes of direction: each is caught, and named in one sentence."""
 
 from dataclasses import replace
+from itertools import permutations, product
 
 import numpy as np
 import pytest
@@ -74,6 +75,42 @@ def test_turned_and_swapped_vectors_are_named(field, document, volume_map, rule,
     assert fault.startswith("f.nii.gz: the vector at voxel")
     assert fault.endswith(named)
     assert field_mistake(wrong, field).endswith(named)
+
+
+MOTIONS = {  # displacements that are 0, or the same along two axes, where the body is deepest
+    "turn about the middle": lambda x: np.cross([0.1, -0.2, 0.3], x),
+    "growth from the middle": lambda x: 0.2 * x,
+    "bulge along z": lambda x: np.stack([0 * x[:, 0], 0.1 * x[:, 0], 0.3 - x[:, 2] ** 2], axis=1),
+}
+TURNINGS = [
+    (order, signs)
+    for order in permutations(range(3))
+    for signs in product((1.0, -1.0), repeat=3)
+    if (order, signs) != ((0, 1, 2), (1.0, 1.0, 1.0))
+]
+
+
+@pytest.mark.parametrize("motion", MOTIONS.values(), ids=MOTIONS)
+def test_the_check_point_tells_every_turning_and_swapping(motion):
+    """Law: any of the 47 turnings and swappings that changes a field changes its check point, though the
+    motion is nothing, or alike along two axes, at the middle."""
+    affine = np.diag([0.1, 0.1, 0.1, 1.0])
+    affine[:3, 3] = -0.7
+    middle = Grid((15, 15, 15), affine)
+    places = middle.to_world(np.indices(middle.shape).reshape(3, -1).T.astype(float))
+    displacement = motion(places).reshape(*middle.shape, 3).astype(np.float32)
+    displacement[0, 0, 0] = np.nan
+    field = GridField(middle, displacement)
+    said = {"check_point": check_point(field)}
+    i, j, k = said["check_point"]["voxel"]
+    assert min(i, j, k, 14 - i, 14 - j, 14 - k) >= 3  # half as deep as the deepest
+    assert direction_proof(field, said, name="f").faults == ()
+    alike = motion is MOTIONS["bulge along z"]  # nothing moves along x there, so its sign tells nothing
+    for order, signs in TURNINGS:
+        if alike and order == (0, 1, 2) and signs == (-1.0, 1.0, 1.0):
+            continue
+        wrong = changed(field, lambda u: u[..., list(order)] * np.float32(signs))  # noqa: B023
+        assert direction_proof(wrong, said, name="f").faults, (order, signs)
 
 
 def test_a_field_that_agrees_with_its_own_document_but_not_with_the_map(field, volume_map):

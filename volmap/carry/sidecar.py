@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage
 
+from volmap.carry.direction_proof import TOLERANCE_MM
 from volmap.carry.sampling import N_RANDOM, FieldError, RoundTrip, field_error
 from volmap.types import Grid, GridField, InputError, VolumeMap
 from volmap.types.notice import caution
@@ -123,15 +124,22 @@ def _pair(paired: RoundTrip, here: str, there: str) -> dict[str, Any]:
     return _without_nan(asdict(paired)) | {"how": how}
 
 
+_PLAIN_MM = 1.0  # a component that is off by this is seen in any viewer
+
+
 def check_point(field: GridField) -> dict[str, Any] | None:
-    """A voxel as deep inside the support as there is, with its numbers; None for an empty field.
+    """A voxel deep inside the support that tells mistakes best, with its numbers; None for an empty field.
+
+    Where a component is 0, nobody sees its sign turned; where two are equal, nobody sees them swapped.  So of
+    the voxels at least half as deep as the deepest, that one is taken whose vector is farthest from its
+    turnings and swappings: of equal ones the deepest, then the first.
 
     Returns
     -------
     dict
         ``voxel`` (i, j, k from 0), ``x_mm``, ``u_mm`` (as stored, float32) and ``y_mm``.
     """
-    voxel = _deepest(field.support)
+    voxel = _most_telling(field)
     if voxel is None:
         return None
     x = field.grid.to_world(np.array([voxel], np.float64))[0]
@@ -139,15 +147,28 @@ def check_point(field: GridField) -> dict[str, Any] | None:
     return {"voxel": list(voxel), "x_mm": x.tolist(), "u_mm": u.tolist(), "y_mm": (x + u).tolist()}
 
 
-def _deepest(support: NDArray[np.uint8]) -> tuple[int, int, int] | None:
-    """The first of the voxels with the most steps to an undefined one (or past the border)."""
-    if not support.any():
+def _most_telling(field: GridField) -> tuple[int, int, int] | None:
+    """Depth is counted in steps to an undefined voxel (or past the border)."""
+    if not field.support.any():
         return None
-    box = ndimage.find_objects(support)[0]
-    steps = ndimage.distance_transform_cdt(np.pad(support[box], 1), "chessboard")
-    place = np.unravel_index(int(steps.argmax()), steps.shape)
-    i, j, k = (int(p) - 1 + s.start for p, s in zip(place, box, strict=True))
+    box = ndimage.find_objects(field.support)[0]
+    steps = ndimage.distance_transform_cdt(np.pad(field.support[box], 1), "chessboard")[1:-1, 1:-1, 1:-1]
+    places = np.argwhere(2 * steps >= steps.max())
+    depths = steps[tuple(places.T)]
+    told = _told_by(field.displacement[box][tuple(places.T)].astype(np.float64))
+    best = np.lexsort((-depths, -told))[0]
+    i, j, k = (int(p) + s.start for p, s in zip(places[best], box, strict=True))
     return i, j, k
+
+
+def _told_by(vectors: NDArray[np.float64]) -> NDArray[np.float64]:
+    """(n,) Product of how far the nearest turning and the two nearest swappings are, in clearly seen steps.
+
+    Each between what is within the tolerance, which counts alike however small, and what is plain to see.
+    """
+    a, b, c = np.sort(np.abs(vectors), axis=1).T
+    apart = np.stack([2 * a, b - a, c - b])
+    return np.asarray(np.clip(apart, TOLERANCE_MM, _PLAIN_MM).prod(axis=0))
 
 
 def _check_names(field: GridField, exact: VolumeMap, paired_file: str) -> None:
