@@ -43,7 +43,7 @@ def require_table_name(path: str | os.PathLike[str]) -> None:
 
 
 def sidecar_place(path: str | os.PathLike[str]) -> Path:
-    """Where the words of a table go: its own name and .json."""
+    """Where the words of a file go: its whole name and .json ("x.csv" and "x.nii.gz" do not collide)."""
     return Path(path).with_name(Path(path).name + ".json")
 
 

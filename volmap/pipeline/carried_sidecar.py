@@ -14,11 +14,6 @@ from volmap.types import Finding
 from volmap.types.notice import caution
 
 
-def sidecar_place(out: Path) -> Path:
-    """Beside `out`, its whole name and ``.json``: "x.csv" and "x.nii.gz" of one carry do not collide."""
-    return out.with_name(out.name + ".json")
-
-
 def carried_sidecar(
     thing: Path,
     out: Path,

@@ -10,9 +10,10 @@ from volmap import carry as carrying
 from volmap.io.atomic import require_place, whole_file
 from volmap.io.json_documents import json_text
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
+from volmap.io.tables import sidecar_place
 from volmap.io.volumes import read_grid, read_volume_with_findings
 from volmap.pipeline.belonging import Side, require_belonging
-from volmap.pipeline.carried_sidecar import carried_sidecar, sidecar_place
+from volmap.pipeline.carried_sidecar import carried_sidecar
 from volmap.pipeline.field_ways import FieldWay, is_field_file, read_field_way
 from volmap.pipeline.personal_columns import without_personal
 from volmap.pipeline.places import NIFTI, require_name, told_name
