@@ -93,6 +93,20 @@ def test_regions_on_neither_grid_must_be_vouched_for(small_pair, tmp_path):
     assert measured.table["drawn_in"] == ("target",)
 
 
+def test_regions_that_are_empty_or_cut_short_write_nothing(small_pair, tmp_path, capsys):
+    grid = read_map_folder(small_pair.folder).source.grid
+    write_labels(tmp_path / "none.nii.gz", LabelVolume(grid, np.zeros(grid.shape, np.uint16)))
+    (tmp_path / "cut.nii.gz").write_bytes(small_pair.source.read_bytes()[:400])
+    for name, status, said in (("none.nii.gz", 1, "holds no region"), ("cut.nii.gz", 3, "cut short")):
+        command = ["measure", str(small_pair.folder), "--regions", str(tmp_path / name), "--quiet"]
+        command += ["--out", str(tmp_path / "t.csv"), "--belongs-to", "source"]
+        assert main(command) == status
+        told = capsys.readouterr().err
+        assert said in told
+        assert told.count("\n") == 1
+    assert sorted(p.name for p in tmp_path.iterdir()) == ["cut.nii.gz", "none.nii.gz"]
+
+
 def test_the_scans_own_labels_are_known_by_their_digest(small_pair):
     measured = pipeline.measure_folder(small_pair.folder, regions=small_pair.target)
     assert set(measured.table["drawn_in"]) == {"target"}

@@ -282,7 +282,13 @@ def _regions(
         regions = measuring.drawn_regions(folder.map, drawn, side=side)
         uncertainties = _of_drawn(folder, drawn, side, regions=regions, residuals=residuals)
     if not regions:
-        raise InputError("holds no region", where=drawn.name if drawn else "", remedy="give a label volume")
+        raise InputError(
+            "holds no region",
+            where=drawn.name if drawn is not None else "",
+            expected="voxels above 0",
+            remedy="draw one, or leave out --regions to measure the labels",
+            refused=True,
+        )
     return measuring.region_table(folder.map, regions, reliable=reliable, uncertainties=uncertainties, **told)
 
 
