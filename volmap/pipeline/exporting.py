@@ -15,6 +15,7 @@ from volmap.io.dicom.registration import CheckedPoint, write_registration
 from volmap.io.dicom.segmentation_writing import Coding, write_segmentation
 from volmap.io.dicom.uids import ScanUids, uids_of_scan
 from volmap.io.json_documents import json_text
+from volmap.io.tables import sidecar_place
 from volmap.mapfolder import MapFolder, read_map_folder
 from volmap.pipeline.places import require_name
 from volmap.types import Finding, Grid, InputError, LabelVolume, Level, Progress, Verdict, silent
@@ -60,7 +61,7 @@ def export_registration(
     through : Path
         Map folder.
     out : Path
-        Ends in .dcm; the document takes .json instead.
+        Ends in .dcm; the document adds .json.
     bring : 'source' or 'target'
         Whose images are brought into the other's frame of reference.  The field lies on the other's grid.
     frames : (str, str), optional
@@ -156,7 +157,7 @@ def export_segmentation(
 
 def _places(out: Path, overwrite: bool) -> Path:
     """The document's place; both are free, or this raises."""
-    beside = out.with_suffix(".json")
+    beside = sidecar_place(out)
     for place in (out, beside):
         require_place(place, overwrite=overwrite, folder=False)
     return beside
