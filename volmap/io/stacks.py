@@ -189,7 +189,7 @@ def could_be_labels(values: NDArray[Any]) -> bool:
         return False
     if not values.size or values.min() < 0 or values.max() > 65535:
         return False
-    return bool(np.count_nonzero(np.bincount(values.astype(np.uint16).ravel())) <= _MOST_LABELS)
+    return bool(np.count_nonzero(np.bincount(values.astype(np.uint16).ravel(order="K"))) <= _MOST_LABELS)
 
 
 def whole_labels(values: NDArray[Any], name: str) -> NDArray[np.uint16]:

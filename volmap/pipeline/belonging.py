@@ -154,7 +154,7 @@ def digests_of(thing: Any) -> Iterator[str]:
     if hasattr(thing, "sha256"):
         yield str(thing.sha256)
     if isinstance(thing, LabelVolume):
-        yield digest(thing.labels.astype("<f4"), thing.grid.affine)
+        yield digest(np.asfortranarray(thing.labels).astype("<f4"), thing.grid.affine)
     if isinstance(thing, ImageVolume):
         values = np.asarray(thing.values)
         with np.errstate(invalid="ignore"):

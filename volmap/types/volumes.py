@@ -65,7 +65,7 @@ class LabelVolume(Frozen):
         """Name of a label, in words."""
         return "outside" if label == 0 else self.names.get(label, f"label {label}")
 
-    @property
+    @cached_property
     def sha256(self) -> str:
         """Digest of the voxels and the affine, independent of how a file stores them."""
         return digest(self.labels.astype("<u2"), self.grid.affine)
@@ -91,7 +91,7 @@ class ImageVolume(Frozen):
     def __post_init__(self) -> None:
         self._own("values", np.float32, self.grid.shape)
 
-    @property
+    @cached_property
     def sha256(self) -> str:
         """Digest of the voxels and the affine."""
         return digest(self.values.astype("<f4"), self.grid.affine)
