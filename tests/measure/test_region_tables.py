@@ -160,6 +160,19 @@ def test_uncertainties_of_both_scans_add_as_squares_and_their_bounds_as_they_are
     assert found["volume_change_uncertainty_percent"] == pytest.approx(np.std(drawn), rel=0.02)
 
 
+def test_offsets_that_are_known_are_covered_though_they_point_in_opposite_ways():
+    # closed form: with the scans' own surfaces the volumes are here - 3 and there + 4, so the change is off
+    # by 7 (as squares it would be 5), and the change in % by 4 / here + 3 there / here^2 to first order
+    volume_map = random_map()
+    known = ChangeUncertainty(VolumeUncertainty(-3.0, 3.0, 3.0), VolumeUncertainty(4.0, 4.0, 4.0))
+    table = table_of(volume_map, measure.label_regions(volume_map, *scans()), uncertainties=[known] * 2)
+    found = row(table, 1)
+    here, there = found["volume_source_mm3"], found["volume_target_mm3"]
+    assert found["volume_change_uncertainty_mm3"] == found["volume_change_bound_mm3"] == 7.0
+    off = 100 * (4 / here + 3 * there / here**2)
+    assert found["volume_change_uncertainty_percent"] == pytest.approx(off, rel=1e-12)
+
+
 def affine_grid(shape, spacing, origin, turn=0.0):
     c, s = np.cos(turn), np.sin(turn)
     axes = np.array([[c, -s, 0], [s, c, 0], [0, 0, 1]]) @ np.diag(spacing)

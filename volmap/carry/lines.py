@@ -7,7 +7,7 @@ from dataclasses import replace
 import numpy as np
 from numpy.typing import NDArray
 
-from volmap.carry.outside import outside_findings
+from volmap.carry.outside import nothing_left, outside_findings
 from volmap.carry.points import MovedPoints, move_points
 from volmap.carry.settings import AS_USUAL, CarrySettings
 from volmap.carry.things import Carried, carry
@@ -84,6 +84,8 @@ def _findings(lines: Polylines, moved: MovedPoints, whole: NDArray[np.bool_]) ->
     line = lines.line_of_point
     names = [f"{lines.names[i]} point {p - lines.starts[i] + 1}" for p, i in enumerate(line.tolist())]
     findings = outside_findings(moved, names, "lines")
+    if not whole.any():
+        raise nothing_left("lines", f"points outside in all {len(lines.names)} lines")
     if not whole.all():
         lost = [name for name, keep in zip(lines.names, whole, strict=True) if not keep]
         sentence = (

@@ -7,7 +7,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from volmap.carry.points import MovedPoints
-from volmap.types import Finding, Level
+from volmap.types import Finding, InputError, Level
 
 _NAMED = 10  # points that are named one by one
 _FATES = {
@@ -26,8 +26,17 @@ def outside_findings(moved: MovedPoints, names: Sequence[str], where: str) -> tu
         One a point.
     where : str
         What the points are.
+
+    Raises
+    ------
+    InputError
+        No point at all was carried.
     """
     findings = []
+    if len(names) and not moved.carried.any():
+        raise nothing_left(
+            where, f"the nearest of {len(names)} points {moved.outside_mm.min():.2f} mm outside"
+        )
     for chosen, code in ((moved.extrapolated, "outside-carried"), (~moved.carried, "outside-left-out")):
         which = np.flatnonzero(chosen)
         if len(which):
@@ -43,3 +52,14 @@ def outside_findings(moved: MovedPoints, names: Sequence[str], where: str) -> tu
             remedy = "check that the points belong to this scan and lie in the segmented body"
             findings.append(Finding(Level.WARN, code, where, sentence, remedy))
     return tuple(findings)
+
+
+def nothing_left(where: str, found: str) -> InputError:
+    """The refusal of a thing of which nothing lies in the body."""
+    return InputError(
+        "nothing of it lies in the body, so there is nothing to carry",
+        where=where,
+        found=found,
+        remedy="check the direction, and that it belongs to this scan",
+        refused=True,
+    )

@@ -202,15 +202,18 @@ def _uncertainty(
 ) -> tuple[float, float, float, str]:
     """Standard uncertainty of the change in mm3 and in %, its bound, and where they come from.
 
-    Errors of the two scans are taken as independent: their squares add up; bounds add up as they are.  The
-    change in % is 100 (there / here - 1), and its error follows to first order.  A region that is no label is
-    as large as it was drawn, where it was drawn; the error is that of its other volume.
+    Errors of the two scans are taken as independent: their squares add up; bounds add up as they are.  What
+    is known of the change, the one difference less the other, is covered in any case (they may point in
+    opposite ways).  The change in % is 100 (there / here - 1), and its error follows to first order.  A region
+    that is no label is as large as it was drawn, where it was drawn; the error is that of its other volume.
     """
     if known.source is not None and known.target is not None:
         a, b = known.source.standard_mm3, known.target.standard_mm3
-        relative = _percent(float(np.hypot(b, a * there / here)) if here else np.nan, here)
+        before, after = known.source.difference_mm3, known.target.difference_mm3
+        ratio = there / here if here else np.nan
+        relative = _percent(max(float(np.hypot(b, a * ratio)), abs(after - before * ratio)), here)
         bound = known.source.bound_mm3 + known.target.bound_mm3
-        return float(np.hypot(a, b)), relative, bound, BY_RESIDUAL
+        return max(float(np.hypot(a, b)), abs(after - before)), relative, bound, BY_RESIDUAL
     parts = {BY_BOUNDARY: known.boundary_mm3, BY_ORDERS: known.orders_mm3}
     parts = {words: value for words, value in parts.items() if np.isfinite(value)}
     if not parts:
