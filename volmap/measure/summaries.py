@@ -204,8 +204,9 @@ def _uncertainty(
 
     Errors of the two scans are taken as independent: their squares add up; bounds add up as they are.  What
     is known of the change, the one difference less the other, is covered in any case (they may point in
-    opposite ways).  The change in % is 100 (there / here - 1), and its error follows to first order.  A region
-    that is no label is as large as it was drawn, where it was drawn; the error is that of its other volume.
+    opposite ways).  The change in % is 100 (there / here - 1), and its error follows to first order.  A
+    region that is no label is as large as it was drawn, where it was drawn; the error is that of its other
+    volume.
     """
     if known.source is not None and known.target is not None:
         a, b = known.source.standard_mm3, known.target.standard_mm3

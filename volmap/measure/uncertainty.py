@@ -15,8 +15,8 @@ scan's own, three numbers follow:
   them, so it is never below the difference, and never above the bound.
 
 One surface is one throw of its kind.  On a sphere of 20 mm radius with Gaussian residuals that hang together
-over 0.5, 2, 5, 10, 20, 40 mm (150 throws each) the volume error of another throw is not above this number in
-82, 73, 64, 62, 53, 52 % of cases, its own error never is: over a length as large as the body it is too small.
+over 0.5, 2, 5, 10, 20, 40 mm (150 throws each) the volume error of another throw stays within this number in
+82, 73, 64, 62, 53, 52 % of cases (its own always does): over lengths as large as the body it is too small.
 
 Parts of the scan's surface that no place of the map's comes near do not show that way, so all is done from
 the scan's surface to the map's as well, and the larger answer counts.
