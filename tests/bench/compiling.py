@@ -19,6 +19,7 @@ import platform
 import subprocess
 import sys
 import tempfile
+import threading
 import time
 from pathlib import Path
 
@@ -43,7 +44,7 @@ class Ledger:
         self._stack: list[list] = []  # name, start, seconds of what it compiled in turn
 
     def listen(self) -> None:
-        """Register with numba."""
+        """Register with numba; the main thread is heard only, as others load kernels while it waits."""
         from numba.core import event
 
         event.register("numba:compiler_lock", _Heard(self._enter, self._leave))
@@ -79,10 +80,12 @@ def _Heard(start, end):  # noqa: N802 - makes a class of numba's, which is impor
 
     class Heard(event.Listener):
         def on_start(self, heard) -> None:
-            start(heard.data)
+            if threading.current_thread() is threading.main_thread():
+                start(heard.data)
 
         def on_end(self, heard) -> None:
-            end(heard.data)
+            if threading.current_thread() is threading.main_thread():
+                end(heard.data)
 
     return Heard()
 

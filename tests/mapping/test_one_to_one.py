@@ -10,6 +10,7 @@ from volmap.kernels.crossings import triangle_crossings
 from volmap.mapping import MapSettings, climbing, map_mesh
 from volmap.mapping.contact import Contact
 from volmap.mesh import MeshSettings, mesh
+from volmap.types import Status
 
 
 @pytest.fixture(scope="module")
@@ -79,3 +80,24 @@ def test_far_parts_do_not_repel(donors):
     assert energy == 0.0
     assert len(ties.stiffness) == 0
     assert not gradient.any()
+
+
+@pytest.mark.slow
+def test_parts_that_start_near_each_other_do_not_hold_the_solve_up(monkeypatch):
+    """Law: where the free solve reaches the boundary and the bodies are apart, so does the one with contact.
+
+    Putamen and pallidum of this pair start so near each other that a barrier of fixed stiffness lets every
+    step end at a contact.
+    """
+    place = files("volmap_shared").joinpath("subcortical")
+    source, target = (
+        mesh(read_labels(str(place / f"donor-{i}.nii.gz")), MeshSettings(wanted_tets=16000)).mesh
+        for i in (10021, 12876)
+    )
+    found = map_mesh(source, target.interfaces, MapSettings()).outcome
+    assert found.status is Status.SETTLED
+    assert found.history[-1].residual_mm < 0.1  # a tenth of a voxel
+    assert len(triangle_crossings(np.array(found.map.images), outer(source))) == 0
+    monkeypatch.setattr(Contact, "stiffen_if_blocked", lambda _: None)
+    soft = map_mesh(source, target.interfaces, MapSettings(most_steps=40)).outcome
+    assert soft.history[-1].residual_mm > 0.3

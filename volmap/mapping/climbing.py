@@ -164,6 +164,8 @@ def step(solver: Climber, state: State) -> tuple[float, Residual]:
     before = solver.objective.differentiate(state.images, pulls)
     taken = solver.objective.descend(state.images, pulls, at=before, forcing=state.forcing)
     state.images = taken.images
+    if solver.contact is not None:
+        solver.contact.stiffen_if_blocked()
     state.levels.append(before.total)
     state.gain = decrease = (before.total - taken.value.total) / max(before.total, NOTHING)
     state.history.append(

@@ -21,6 +21,9 @@ from volmap.types import Surface
 Floats = NDArray[np.float64]
 
 WATCHED_EDGES = 0.25  # how far the watch list looks beyond the barrier, as a share of a mean edge
+BLOCKED = 0.25  # share of a step below which the barrier was too soft: it let parts come too near
+STIFFER = 4.0  # by which it stiffens then, until steps are free again
+STIFFEST = 1e6
 
 
 def _farthest(a: Floats, b: Floats) -> float:
@@ -47,6 +50,8 @@ class Contact:
         self.skin = skin_of(points, outer)
         self.reach_mm = reach_mm
         self.weight = 0.0  # 1/mm2; follows the weight of the boundary matches
+        self.stiffening = 1.0
+        self._allowed = 1.0  # share of the last step on which no two parts met
         a, b = self.skin.edges[:, 0], self.skin.edges[:, 1]
         mean_edge = float(np.linalg.norm(points[a] - points[b], axis=1).mean())
         self._radius_mm = reach_mm + WATCHED_EDGES * mean_edge
@@ -74,9 +79,19 @@ class Contact:
         """The barrier; its gradient is added to `gradient` (n, 3), its convex second derivative returned."""
         pairs = self._near(images)
         normals, stiffness = np.empty((len(pairs.corners), 3)), np.empty(len(pairs.corners))
-        strength = self.weight / len(self.skin.points)
+        strength = self.stiffening * self.weight / len(self.skin.points)
         energy = add_barrier(pairs, self.reach_mm, strength, gradient, normals, stiffness)
         return float(energy), Ties(pairs.corners, pairs.weights, normals, stiffness)
+
+    def stiffen_if_blocked(self) -> None:
+        """Stiffen where contact cut the last step short (after the adaptive stiffness of Li et al.).
+
+        While matches still pull over many times the reach, they press parts together against a barrier that
+        is only as strong as a pull over the reach; each step then ends a little nearer to a contact, and the
+        solve creeps.  Where no step is blocked nothing changes.
+        """
+        if self._allowed < BLOCKED:
+            self.stiffening = min(STIFFER * self.stiffening, STIFFEST)
 
     def crosses(self, images: Floats) -> bool:
         """True when the image of the boundary crosses itself (exact signs)."""
@@ -86,5 +101,7 @@ class Contact:
         """Share in [0, 1] of a step (n, 3) mm on which no two parts meet."""
         listed = self._on_the_list(images, 2 * _farthest(images + step, images))
         if listed is not None:
-            return float(longest_step_of(listed, images, images + step))
-        return longest_step(self.skin, images, images + step)
+            self._allowed = float(longest_step_of(listed, images, images + step))
+        else:
+            self._allowed = longest_step(self.skin, images, images + step)
+        return self._allowed
