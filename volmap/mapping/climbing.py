@@ -26,6 +26,8 @@ LOOSEST, TIGHTEST = 0.1, 0.002  # relative residual of the linear solves: the fo
 A_RUNG = 1.7  # by which a residual grows at most from a rung to the one below, as measured on phantoms
 STALLED_STEPS = 3  # steps in a row that hardly move before it counts as stalled
 PLATEAU = 4  # steps over which the objective, freshly matched, must still fall
+CREEPING = 25  # steps of settling after which friction is what holds a solve up, and is lowered once
+LESS_FRICTION = 0.1  # by this factor
 NOTHING = 1e-9  # an objective this small has nothing left to fall: stretches of some 1e-5
 HARDEST_PULL = (
     3.0  # of a given boundary at the edge of its tolerance, in units of the ladder and 0.02 V^(1/3)
@@ -46,6 +48,7 @@ class State:
     lowering: bool = False  # the weight came from a coarser mesh, whose facets may have asked for too much
     levels: list[float] = field(default_factory=list)  # objective, freshly matched, since weights rose
     settling: bool = False
+    settled_for: int = 0  # steps at the last weights
     idle: int = 0
     beside: Observations | None = None  # pulls beside the boundary's and the guides'
     given_weight: float = 0.0
@@ -212,6 +215,17 @@ def _lower_weight(solver: Climber, state: State, residual: Residual) -> bool:
     return True
 
 
+def _lower_friction_of_creep(solver: Climber, state: State) -> None:
+    """Let a body that still slides back along its boundary go, by less friction from here on.
+
+    Less friction from the first step on would let nearly round bodies turn.
+    """
+    state.settled_for += 1
+    if state.settled_for == CREEPING:
+        solver.matcher.across *= LESS_FRICTION
+        state.levels = []
+
+
 def _at_rest(state: State, decrease: float, settle: float) -> bool:
     """True when a step gains nothing, or when new matches have eaten up the gain of several steps."""
     earlier, recent = state.levels[:-PLATEAU], state.levels[-PLATEAU:]
@@ -243,6 +257,7 @@ def climb(
             on_rung = 0
             continue
         if state.settling:
+            _lower_friction_of_creep(solver, state)
             if _at_rest(state, decrease, settings.settle):
                 return solver.ending(residual, state.images)
         elif on_rung >= settings.steps_a_rung or decrease < 20 * settings.settle:

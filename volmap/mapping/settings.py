@@ -23,7 +23,8 @@ class MapSettings:
         The same as a share of a voxel (cube root of its volume), the mean of both scans.
     across : float
         Share of a boundary match that acts across the normal.  It acts as friction against sliding: it
-        damps steps, and the smaller it is, the fewer of them sliding takes.
+        damps steps, and the smaller it is, the fewer of them sliding takes.  A solve that still slides after
+        many steps goes on with a tenth of it.
     one_to_one : bool
         Keep the image of the outer boundary from crossing itself, at every step.
     contact_voxels : float

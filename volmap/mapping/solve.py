@@ -122,6 +122,7 @@ def _refined(task: _Task, reached: _Reached) -> _Reached:
             settles=settles,
             levels=[],
             settling=False,
+            settled_for=0,
             lowering=True,
             idle=0,
             gain=1.0,
