@@ -30,6 +30,8 @@ def run(options: argparse.Namespace, console: Console) -> int:
     """Measure one loop."""
     if len(options.folders) < 2:
         raise UsageError("a loop needs at least two map folders")
+    if options.overwrite and options.out is None:
+        raise UsageError("--overwrite replaces what --out names, and no --out is given")
     from volmap import pipeline
 
     loop = pipeline.loop_folders(

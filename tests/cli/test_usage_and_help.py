@@ -132,6 +132,7 @@ def test_usage_faults_end_with_2(arguments, capsys, tmp_path, monkeypatch):
         (["phantom", "gelcolumn", "--out", "x"], "'gelcolumn'; there are gel-column"),
         (["phantom", "gel-column"], "--out DIR is missing"),
         (["screen", "a.nii", "b.nii", "--mend", "c.nii"], "--mend takes one FILE"),
+        (["loop", "m", "n", "--overwrite"], "--overwrite replaces what --out names"),
         (["map", "a.nii", "b.nii", "--out", "m", "--threads", "4096"], "threads"),
     ],
 )

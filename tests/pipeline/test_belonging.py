@@ -8,7 +8,7 @@ import pytest
 
 from volmap import pipeline
 from volmap.io.nifti import read_image
-from volmap.pipeline.belonging import KnownScan, digests_of, require_belonging
+from volmap.pipeline.belonging import KnownScan, digests_of, grid_of_the_start, require_belonging
 from volmap.types import Grid, ImageVolume, InputError, LabelVolume, Landmarks, Level, TetMesh
 
 FINE, COARSE, OTHER = (Grid((6, 6, 6), np.diag([mm, mm, mm, 1.0])) for mm in (1.0, 2.0, 3.0))
@@ -45,6 +45,16 @@ def turned(scan, side):
 
 
 NOTE, WARN = Level.NOTE, Level.WARN
+
+
+def test_the_voxels_of_the_scan_it_comes_from_are_not_taken_for_the_others_in_silence():
+    # law: said of the start's voxels alone; nothing tells where both scans have the same, or neither has them
+    (said,) = grid_of_the_start(FINE, START, END, name="onto.nii")
+    assert (said.level, said.code, said.where) == (WARN, "onto-the-start", "onto.nii")
+    assert "the voxel grid of A" in said.sentence
+    assert grid_of_the_start(COARSE, START, END, name="onto.nii") == ()
+    assert grid_of_the_start(OTHER, START, END, name="onto.nii") == ()
+    assert grid_of_the_start(FINE, START, replace(END, grid=FINE), name="onto.nii") == ()
 
 
 @pytest.mark.parametrize(

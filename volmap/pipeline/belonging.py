@@ -100,6 +100,28 @@ def require_belonging(
     return ()
 
 
+def grid_of_the_start(onto: Grid, start: KnownScan, end: KnownScan, *, name: str) -> tuple[Finding, ...]:
+    """Are the voxels that a volume is to arrive on those of the scan it comes from?  May be meant; is said.
+
+    Parameters
+    ----------
+    onto : Grid
+    start, end : KnownScan
+        Where the volume is carried from and to.
+    name : str
+        Of the file of `onto`.
+    """
+    here, there = (scan.grid is not None and scan.grid.same_place(onto) for scan in (start, end))
+    if there or not here:
+        return ()
+    sentence = (
+        f"has the voxel grid of {start.name}, from which the volume comes; it was taken for voxels in the "
+        f"world of {end.name}, where the volume arrives"
+    )
+    remedy = f"check the direction; for the voxels of {end.name} leave out --onto"
+    return (Finding(Level.WARN, "onto-the-start", name, sentence, remedy),)
+
+
 def _known_as(thing: Any, start: KnownScan, end: KnownScan, between: Sequence[KnownScan], name: str) -> bool:
     """True when its digest says that it belongs to the start; refused when it says another scan."""
     for found in digests_of(thing):

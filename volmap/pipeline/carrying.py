@@ -12,7 +12,7 @@ from volmap.io.json_documents import json_text
 from volmap.io.reading import AS_IT_IS, Reading, VolumeKind
 from volmap.io.tables import sidecar_place
 from volmap.io.volumes import read_grid, read_volume_with_findings
-from volmap.pipeline.belonging import Side, require_belonging
+from volmap.pipeline.belonging import Side, grid_of_the_start, require_belonging
 from volmap.pipeline.carried_sidecar import carried_sidecar
 from volmap.pipeline.field_ways import FieldWay, is_field_file, read_field_way
 from volmap.pipeline.personal_columns import without_personal
@@ -117,8 +117,11 @@ def carry_file(
         loaded, *way.ends, name=told_name(thing), belongs_to=belongs_to, between=way.between
     )
     settings = settings.of_scan(way.voxel_mm)
-    carried = way.carry(loaded, settings, onto=None if onto is None else read_grid(onto))
+    new_grid = None if onto is None else read_grid(onto)
+    carried = way.carry(loaded, settings, onto=new_grid)
     findings = (*findings, *left_out, *way.findings, *belonging, *carried.findings)
+    if onto is not None and new_grid is not None:
+        findings += grid_of_the_start(new_grid, *way.ends, name=onto.name)
     facts = {**carried.facts, **facts_beside(out, carried.thing, onto)}
     told = carried_sidecar(thing, out, way.told, settings, findings, facts=facts, belongs_to=belongs_to)
     with whole_file(sidecar_place(out), overwrite=overwrite) as place:  # both stand, or neither
