@@ -29,6 +29,7 @@ from volmap.types.notice import caution
 
 DICOM = (".dcm",)
 COMING_IN = (*NIFTI, *DICOM, ".hdr", ".img", ".hdr.gz", ".img.gz", ".nrrd", ".nhdr")
+_MANY_LABELS = 64  # without a name: common practice, no source
 _OF_NUMBERS = (ImageVolume, VectorVolume, TensorVolume)
 
 
@@ -39,17 +40,20 @@ def holds_volume(thing: Path) -> bool:
 
 def how_taken(volume: LabelVolume | ImageVolume | VectorVolume | TensorVolume) -> Finding:
     """What a volume was taken for, where the user did not say; that decides how it is carried."""
-    remedy = ""
+    remedy, level = "", Level.NOTE
     if isinstance(volume, LabelVolume):
         kind, sentence = "labels", f"its {len(volume.present)} whole numbers were taken for labels"
         remedy = "say --as image if they are not"
+        if len(volume.present) > _MANY_LABELS and not volume.names:
+            level = Level.WARN
+            sentence += ", though they are many and have no names, as grey values of 8 bits would be"
     elif isinstance(volume, ImageVolume):
         kind = "image"
         sentence = "its values are no labels (whole, 0 to 65535, at most 256 of them): an image"
     else:
         kind = "vectors" if isinstance(volume, VectorVolume) else "tensors"
         sentence = f"its header says that it holds {kind.replace('tensors', 'symmetric tensors')}"
-    return Finding(Level.NOTE, f"carried-as-{kind}", volume.name, sentence, remedy)
+    return Finding(level, f"carried-as-{kind}", volume.name, sentence, remedy)
 
 
 def shares_place(out: Path) -> Path:
