@@ -71,8 +71,8 @@ def _run(options: argparse.Namespace, console: Console) -> int:
     from volmap.study.study_file import read_study
 
     study = read_study(options.folder / STUDY_FILE)
-    counts = run_study(study, Crew(options.workers, options.cluster or ""), told=_teller(console))
-    return _stands(options, console, counts)
+    run_study(study, Crew(options.workers, options.cluster or ""), told=_teller(console))
+    return _status(options, console)
 
 
 def _teller(console: Console) -> Callable[[Entry], None]:
@@ -85,20 +85,12 @@ def _teller(console: Console) -> Callable[[Entry], None]:
 
 
 def _status(options: argparse.Namespace, console: Console) -> int:
-    from volmap.study.ledger import reading
-
-    with reading(options.folder) as ledger:
-        counts = ledger.counts()
-    return _stands(options, console, counts)
-
-
-def _stands(options: argparse.Namespace, console: Console, counts: dict[str, dict[str, int]]) -> int:
     """Show where a study stands."""
     from volmap.study.ledger import reading
 
     with reading(options.folder) as ledger:
+        counts, verdicts = ledger.counts(), ledger.verdicts()
         troubles, excluded = ledger.troubles(), ledger.exclusions()
-        verdicts = ledger.verdicts()
     for kind, states in counts.items():
         console.say(f"{kind}s: " + ", ".join(f"{count} {state}" for state, count in states.items()))
     if verdicts:

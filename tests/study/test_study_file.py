@@ -7,6 +7,7 @@ from importlib.resources import files
 import jsonschema
 import pytest
 
+from volmap.kernels.energies import ENERGIES
 from volmap.study.begin import begin_study
 from volmap.study.design import Between, Within
 from volmap.study.study_file import read_study
@@ -99,9 +100,17 @@ def test_a_fault_is_named(study_file, old, new, sentence, in_schema):
         assert not _valid(text)
 
 
+def _schema():
+    return json.loads(files("volmap_shared").joinpath("study.schema.json").read_text(encoding="utf-8"))
+
+
 def _valid(text):
-    schema = json.loads(files("volmap_shared").joinpath("study.schema.json").read_text(encoding="utf-8"))
-    return jsonschema.Draft202012Validator(schema).is_valid(tomllib.loads(text))
+    return jsonschema.Draft202012Validator(_schema()).is_valid(tomllib.loads(text))
+
+
+def test_the_schema_names_the_energies_of_the_library():
+    settings = _schema()["properties"]["settings"]["properties"]
+    assert set(settings["energy"]["enum"]) == set(ENERGIES)
 
 
 def test_the_schema_takes_what_the_program_takes():

@@ -87,7 +87,6 @@ class _Queue:
         self.folder = folder
         self._jobs, self._ledger, self._told = jobs, ledger, told
         self._states = {entry.job: entry.state for entry in ledger.entries()}
-        self._handed: set[str] = set()
 
     @property
     def open(self) -> bool:
@@ -97,11 +96,10 @@ class _Queue:
     def ready(self) -> Iterator[Job]:
         """Jobs that stand on nothing unfinished, each once; those that can never be done are blocked."""
         for name, job in self._jobs.items():
-            if self._states[name] is not State.WAITING or name in self._handed:
+            if self._states[name] is not State.WAITING:
                 continue
             below = [self._states[need] for need in job.needs]
             if all(state is State.DONE for state in below):
-                self._handed.add(name)
                 self._begin(job)
                 yield job
             elif bad := [need for need in job.needs if self._states[need] in _DEAD]:

@@ -11,12 +11,12 @@ from pathlib import Path
 from typing import Any
 
 from volmap.io.opening import all_text, shown_name
+from volmap.kernels.energies import ENERGIES
 from volmap.study.design import Between, Study, StudySettings, Subject, Visit, Within
 from volmap.types import InputError
 
 SCHEMA = "volmap-study/1"
 _NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,63}")
-_ENERGIES = ("soft-tissue", "neo-hookean", "symmetric-dirichlet", "arap", "log-strain", "conformal")
 
 
 def read_study(path: Path) -> Study:
@@ -74,7 +74,7 @@ def _settings(entries: _Entries, folder: Path) -> StudySettings:
     settings = StudySettings(
         edge_mm=entries.positive("edge_mm"),
         uncertainty_mm=entries.positive("uncertainty_mm"),
-        energy=entries.choice("energy", _ENERGIES, usual.energy),
+        energy=entries.choice("energy", tuple(ENERGIES), usual.energy),
         seed=entries.whole("seed", least=0, default=usual.seed),
         threads=entries.whole("threads", least=1, default=usual.threads),
         gates=entries.file("gates", folder),
